@@ -1,0 +1,35 @@
+"""strainkit fit RUN."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+import typer
+
+from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
+
+Order = Annotated[Literal["linear", "cubic"], typer.Option(help="Fit cubic terms for every shape too?")]
+Noise = Annotated[float | None, typer.Option(help="Known stress noise, GPa; estimated from the residuals if not given.")]
+Drop = Annotated[list[str] | None, typer.Option(help="Leave this job out; repeatable; recorded in the result.")]
+
+
+def fit(
+    run: Run,
+    order: Order = "linear",
+    noise: Noise = None,
+    drop: Drop = None,
+    frame: Frame = "ieee",
+    json: Json = False,
+    quiet: Quiet = False,
+) -> None:
+    """Stiffness with error bars and findings (stiffness.json)."""
+    from strainkit.cli.load import fitted
+    from strainkit.fit.result import FITTED
+    from strainkit.present.terminal import fit_text
+
+    result = fitted(run, order, noise, drop, frame)
+    result.save(run, frame)
+    note(f"wrote {run / FITTED}", quiet)
+    deliver(lambda: result.to_dict(frame), lambda: fit_text(result, frame), json)
+    if result.undetermined:
+        raise typer.Exit(4)

@@ -1,0 +1,69 @@
+"""Options that several commands share, and the one place where results and errors leave the program."""
+
+from __future__ import annotations
+
+import os
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+
+__all__ = [
+    "Cell",
+    "Frame",
+    "Json",
+    "Quiet",
+    "ReadAs",
+    "Run",
+    "Symprec",
+    "deliver",
+    "note",
+    "progress",
+]
+
+Cell = Annotated[Path, typer.Argument(help="Structure file: CIF, POSCAR, extended XYZ, or any ASE format with --read-as.")]
+Run = Annotated[Path, typer.Argument(help="Run folder made by strainkit prepare.")]
+ReadAs = Annotated[str | None, typer.Option(help="Format of CELL: cif, poscar, extxyz or an ASE format name.")]
+Symprec = Annotated[float, typer.Option(help="Distance tolerance of the symmetry search, A.", min=1e-8, max=1.0)]
+Frame = Annotated[str, typer.Option(help="Axes of printed tensors: given, ieee or crystal (x||a, z||c*).")]
+Json = Annotated[bool, typer.Option("--json", help="Print one JSON object to standard output.")]
+Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress bar; results are printed all the same.")]
+
+
+def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json: bool) -> None:
+    """Print a result to standard output, as JSON or as text; a reader that closes the pipe early is no error."""
+    from strainkit.run.files import dump_json
+
+    try:
+        sys.stdout.write(dump_json(data()) if as_json else text() + "\n")
+        sys.stdout.flush()
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        raise typer.Exit(0) from None
+
+
+def note(text: str, quiet: bool) -> None:
+    """A remark on standard error."""
+    if not quiet:
+        typer.echo(text, err=True)
+
+
+@contextmanager
+def progress(title: str, quiet: bool) -> Iterator[Callable[[int, int, str], None]]:
+    """A progress bar on standard error when that is a terminal; the yielded call takes (finished, total, label)."""
+    if quiet or not sys.stderr.isatty():
+        yield lambda finished, total, label: None
+        return
+    from rich.console import Console
+    from rich.progress import Progress
+
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task(title, total=None)
+
+        def update(finished: int, total: int, label: str) -> None:
+            bar.update(task, completed=finished, total=total, description=f"{title} {label}")
+
+        yield update

@@ -1,0 +1,45 @@
+"""strainkit prepare CELL --out RUN."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated, Literal
+
+import typer
+
+from strainkit.cli.options import Cell, Json, Quiet, ReadAs, Symprec, deliver, note
+
+
+def prepare(
+    cell: Cell,
+    out: Annotated[Path | None, typer.Option(help="Run folder to make.")] = None,
+    magnitude: Annotated[
+        list[float] | None, typer.Option(help="Largest principal strain, percent; repeatable. [default: 1.0]")
+    ] = None,
+    ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
+    format: Annotated[
+        list[str] | None, typer.Option(help="Cell format; repeatable: poscar, cif, extxyz. [default: poscar, cif]")
+    ] = None,
+    read_as: ReadAs = None,
+    symprec: Symprec = 1e-3,
+    dry_run: Annotated[bool, typer.Option("--dry-run", help="Print the plan and write nothing.")] = False,
+    force: Annotated[bool, typer.Option("--force", help="Move an existing run folder of another set aside.")] = False,
+    json: Json = False,
+    quiet: Quiet = False,
+) -> None:
+    """Strained cells for one relaxed crystal: the fewest jobs that fix every constant."""
+    from strainkit.crystal.read import read_crystal
+    from strainkit.errors import UsageError
+    from strainkit.prepare.runfolder import DEFAULT_FORMATS, plan_run, write_run
+    from strainkit.prepare.writers import cell_formats
+    from strainkit.present.terminal import plan_text
+
+    if out is None and not dry_run:
+        raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
+    formats = list(format or DEFAULT_FORMATS)
+    cell_formats(formats)
+    plan = plan_run(read_crystal(cell, read_as), [m / 100.0 for m in magnitude or [1.0]], ions, symprec)
+    if out is not None and not dry_run:
+        plan, what = write_run(plan, out, formats, force)
+        note(f"{out}: {what}", quiet)
+    deliver(plan.to_dict, lambda: plan_text(plan), json)

@@ -1,0 +1,132 @@
+"""Cartesian frames of a crystal: as given, IEEE 176-1987, and the crystallographers' x along a, z along c*."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from strainkit.crystal.symmetry import Symmetry
+from strainkit.errors import UsageError
+from strainkit.tensors.arrays import FloatArray
+
+__all__ = ["FRAMES", "Frame", "conventional_axes", "crystal_frame", "standard_frame"]
+
+#: names that `--frame` takes
+FRAMES = ("given", "ieee", "crystal")
+
+
+@dataclass(frozen=True)
+class Frame:
+    """A right-handed Cartesian frame.
+
+    Attributes
+    ----------
+    name : str
+        "given", "ieee" or "crystal".
+    rotation : (3, 3)
+        Rows are the frame's axes in the given frame: v_frame = R v_given.
+    axes : str
+        In words, for example "Z||c, X||a, with a, b, c of the cell as given".
+    """
+
+    name: str
+    rotation: FloatArray
+    axes: str
+
+
+def conventional_axes(symmetry: Symmetry) -> tuple[FloatArray, str]:
+    """Conventional a, b, c (rows, angstrom, given frame, metric averaged over the group), and whose they are in words.
+
+    The given cell's when it is a conventional cell of the crystal's system (for monoclinic ones with the unique axis
+    found among its three and renamed b), otherwise those of spglib's standard cell.
+    """
+    if abs(abs(np.linalg.det(symmetry.transformation)) - 1.0) < 1e-6:
+        exact = symmetry.transformation.T @ symmetry.standard_lattice
+        for order, words in enumerate(("a, b, c", "b, c, a", "c, a, b") if symmetry.system == "monoclinic" else ("a, b, c",)):
+            axes = np.roll(exact, -order, axis=0)
+            if _is_conventional(axes, symmetry):
+                return axes, f"a, b, c being {words} of the cell as given"
+    rows = np.linalg.inv(symmetry.transformation).T
+    words = "; ".join(f"{name} = {_combination(row)}" for name, row in zip("abc", rows, strict=True))
+    return symmetry.standard_lattice, f"of the standard cell, {words} of the cell as given"
+
+
+def _combination(row: FloatArray) -> str:
+    terms = ""
+    for value, letter in zip(row, "abc", strict=True):
+        if abs(value) > 1e-6:
+            size = "" if abs(abs(value) - 1) < 1e-6 else f"{abs(value):.4g}"
+            terms += f"{'-' if value < 0 else '+' if terms else ''}{size}{letter}"
+    return terms or "0"
+
+
+def _is_conventional(axes: FloatArray, symmetry: Symmetry) -> bool:
+    """Do these vectors obey the metric of the system, with rotation axes of the right order along them?"""
+    lengths = np.linalg.norm(axes, axis=1)
+    unit = axes / lengths[:, None]
+    bc, ac, ab = unit[1] @ unit[2], unit[0] @ unit[2], unit[0] @ unit[1]
+    order = [int((np.linalg.norm(symmetry.rotations @ axis - axis, axis=1) < 1e-6).sum()) for axis in unit]
+    wanted = {  # cosines of alpha, beta, gamma (None: free), pairs of equal lengths, least orders of the axes
+        "triclinic": ((None, None, None), (), (1, 1, 1)),
+        "monoclinic": ((0.0, None, 0.0), (), (1, 2, 1)),
+        "orthorhombic": ((0.0, 0.0, 0.0), (), (2, 2, 2)),
+        "tetragonal": ((0.0, 0.0, 0.0), ((0, 1),), (1, 1, 4)),
+        "trigonal": ((0.0, 0.0, -0.5), ((0, 1),), (1, 1, 3)),
+        "hexagonal": ((0.0, 0.0, -0.5), ((0, 1),), (1, 1, 6)),
+        "cubic": ((0.0, 0.0, 0.0), ((0, 1), (1, 2)), (2, 2, 2)),
+    }
+    cosines, equal, orders = wanted[symmetry.system]
+    return (
+        all(want is None or abs(got - want) < 1e-6 for got, want in zip((bc, ac, ab), cosines, strict=True))
+        and all(abs(lengths[i] / lengths[j] - 1.0) < 1e-6 for i, j in equal)
+        and all(got >= least for got, least in zip(order, orders, strict=True))
+    )
+
+
+def crystal_frame(name: str, symmetry: Symmetry) -> Frame:
+    """One of the named frames.
+
+    "ieee" follows IEEE 176-1987 (from memory): triclinic Z||c, Y along b*; monoclinic Y||b, Z||c, X along a*;
+    orthorhombic X||a, Y||b, Z||c; tetragonal, trigonal and hexagonal Z||c, X||a; cubic along the cube edges.
+    "crystal" is x||a, z||c*.
+    """
+    if name == "given":
+        return Frame("given", np.eye(3), "the Cartesian frame of the input cell")
+    axes, whose = conventional_axes(symmetry)
+    if name == "crystal":
+        a, b, _ = axes
+        z = np.sign(np.linalg.det(axes)) * np.cross(a, b)
+        return Frame(name, _complete(x=a, z=z), f"X||a, Z||c*; {whose}")
+    if name == "ieee":
+        rotation, words = _ieee(symmetry.system, axes)
+        return Frame(name, rotation, f"{words}; {whose}")
+    raise UsageError(f"unknown frame {name!r}", "--frame", f"Use one of {', '.join(FRAMES)}.")
+
+
+def standard_frame(symmetry: Symmetry) -> FloatArray:
+    """Rows (3, 3) of the IEEE axes of spglib's standard cell: the same physical axes however the cell was given."""
+    return _ieee(symmetry.system, symmetry.standard_lattice)[0]
+
+
+def _ieee(system: str, axes: FloatArray) -> tuple[FloatArray, str]:
+    a, b, c = axes
+    match system:
+        case "triclinic":
+            return _complete(y=np.sign(np.linalg.det(axes)) * np.cross(c, a), z=c), "Z||c, Y||b*"
+        case "monoclinic":
+            return _complete(y=b, z=c), "Y||b, Z||c, X||a*"
+        case "orthorhombic" | "cubic":
+            return _complete(x=a, z=c), "X||a, Y||b, Z||c"
+        case _:
+            return _complete(x=a, z=c), "Z||c, X||a"
+
+
+def _complete(x: FloatArray | None = None, y: FloatArray | None = None, *, z: FloatArray) -> FloatArray:
+    """Right-handed orthonormal rows from Z and one of X and Y (made exactly perpendicular to Z)."""
+    z = z / np.linalg.norm(z)
+    other = x if x is not None else y
+    assert other is not None
+    other = other - (other @ z) * z
+    other = other / np.linalg.norm(other)
+    return np.array([other, np.cross(z, other), z] if x is not None else [np.cross(other, z), other, z])

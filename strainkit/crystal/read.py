@@ -1,0 +1,99 @@
+"""Cells in: CIF, POSCAR, extended XYZ by content or name, and every format ASE reads when it is named."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from strainkit.crystal.cif import crystal_from_cif
+from strainkit.crystal.crystal import Crystal
+from strainkit.errors import InputError, StrainkitError
+
+__all__ = ["read_crystal"]
+
+#: file-name endings whose meaning is beyond doubt -> ASE format
+_ENDINGS = {
+    ".vasp": "vasp",
+    ".poscar": "vasp",
+    ".extxyz": "extxyz",
+    ".xyz": "extxyz",
+    ".traj": "traj",
+    ".cell": "castep-cell",
+    ".gen": "gen",
+    ".xsf": "xsf",
+    ".res": "res",
+}
+_NAMES = {"POSCAR": "vasp", "CONTCAR": "vasp"}
+
+
+def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
+    """Read one crystal.
+
+    Parameters
+    ----------
+    path : path
+        Structure file. The last frame counts where there are several.
+    format : str, optional
+        "cif", "poscar", "extxyz" or the name of any ASE format; guessed from content and name when left out.
+
+    Returns
+    -------
+    Crystal
+        In the file's own setting and orientation, nothing standardised.
+
+    Raises
+    ------
+    InputError
+        With the file's name and the remedy.
+    """
+    path = Path(path)
+    if path.is_dir():
+        raise InputError("a folder, not a structure file", path, "Name the file inside it.")
+    try:
+        raw = path.read_bytes()
+    except OSError as error:
+        raise InputError(error.strerror or "cannot be read", path, "Check the path and its permissions.") from None
+    if not raw.strip():
+        raise InputError("the file is empty", path)
+    text = raw.decode("utf-8", errors="replace")
+    format = {"poscar": "vasp"}.get(format, format) if format else _guess(path, text)
+    if format == "cif":
+        return crystal_from_cif(text, path)
+    return _through_ase(path, format)
+
+
+def _guess(path: Path, text: str) -> str:
+    head = text.splitlines()[:2]
+    if any(line.lower().startswith("_cell_length_a") for line in map(str.strip, text.splitlines())):
+        return "cif"
+    if len(head) == 2 and head[0].strip().isdigit() and "lattice=" in head[1].lower():
+        return "extxyz"
+    for name, format in _NAMES.items():
+        if path.name.upper().startswith(name):
+            return format
+    if path.suffix.lower() == ".cif":
+        return "cif"
+    if path.suffix.lower() in _ENDINGS:
+        return _ENDINGS[path.suffix.lower()]
+    raise InputError(
+        "cannot tell what kind of file this is", path, "Name its format with --read-as (cif, poscar, extxyz, any ASE one)."
+    )
+
+
+def _through_ase(path: Path, format: str) -> Crystal:
+    from ase import Atoms
+    from ase.io import read
+    from ase.io.formats import UnknownFileTypeError
+
+    try:
+        atoms = read(path, format=format, index=-1)
+    except UnknownFileTypeError:
+        raise InputError(f"unknown format {format!r}", path, "Use cif, poscar, extxyz or a format name of ASE.") from None
+    except StrainkitError:
+        raise
+    except (Exception, StopIteration) as error:
+        reason = " ".join(str(error).split())[:200] or type(error).__name__
+        raise InputError(f"not readable as {format}: {reason}", path) from None
+    if not isinstance(atoms, Atoms):
+        raise InputError(f"no structure found when read as {format}", path)
+    stem = path.parent.name if path.name.upper() in _NAMES else path.name.split(".")[0]
+    return Crystal.from_atoms(atoms, name=stem or "crystal", source=str(path))

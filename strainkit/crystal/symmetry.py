@@ -1,0 +1,201 @@
+"""Symmetry of the reference cell, through spglib: the only module that talks to it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from strainkit.crystal.crystal import Crystal
+from strainkit.errors import InputError
+from strainkit.findings import Finding, finding
+from strainkit.tensors.arrays import FloatArray, IntArray
+from strainkit.tensors.invariants import invariant_matrices
+
+__all__ = ["DEFAULT_SYMPREC", "LAUE_CLASSES", "Symmetry", "find_symmetry", "tolerance_ladder"]
+
+#: default distance tolerance of the symmetry search, angstrom
+DEFAULT_SYMPREC = 1e-3
+
+#: Laue class -> (crystal system, point groups)
+LAUE_CLASSES: dict[str, tuple[str, tuple[str, ...]]] = {
+    "-1": ("triclinic", ("1", "-1")),
+    "2/m": ("monoclinic", ("2", "m", "2/m")),
+    "mmm": ("orthorhombic", ("222", "mm2", "mmm")),
+    "4/m": ("tetragonal", ("4", "-4", "4/m")),
+    "4/mmm": ("tetragonal", ("422", "4mm", "-42m", "4/mmm")),
+    "-3": ("trigonal", ("3", "-3")),
+    "-3m": ("trigonal", ("32", "3m", "-3m")),
+    "6/m": ("hexagonal", ("6", "-6", "6/m")),
+    "6/mmm": ("hexagonal", ("622", "6mm", "-62m", "-6m2", "6/mmm")),
+    "m-3": ("cubic", ("23", "m-3")),
+    "m-3m": ("cubic", ("432", "-43m", "m-3m")),
+}
+
+
+@dataclass(frozen=True)
+class Symmetry:
+    """Space group of a crystal and its rotations in the crystal's own Cartesian frame.
+
+    Attributes
+    ----------
+    space_group, number, point_group, laue_class, system
+        International symbol and number, point group, Laue class, crystal system.
+    rotations : (m, 3, 3)
+        Cartesian proper rotations of the Laue class in the given frame: improper operations count by their proper part.
+        Exactly orthogonal (the metric is averaged over the group).
+    standard_lattice : (3, 3)
+        Conventional standard cell, rows, angstrom, metric averaged over the group, turned into the given frame.
+    transformation : (3, 3)
+        P with (a b c)_standard = (a b c)_given P^-1, columns being basis vectors (spglib's convention).
+    tolerance : float
+        Distance tolerance of the search, angstrom.
+    deviation : float
+        Largest distance between an atom and the symmetry image of another one, angstrom.
+    """
+
+    space_group: str
+    number: int
+    point_group: str
+    laue_class: str
+    system: str
+    rotations: FloatArray
+    standard_lattice: FloatArray
+    transformation: FloatArray
+    tolerance: float
+    deviation: float
+
+    @cached_property
+    def invariants(self) -> FloatArray:
+        """Orthonormal basis (n, 6, 6) of the stiffness matrices (Mandel, given frame) that the crystal allows."""
+        return invariant_matrices(self.rotations)
+
+
+@contextmanager
+def _spglib_raises() -> Iterator[None]:
+    """spglib 2.8 still hides its errors by default; ask for exceptions here and put the switch back afterwards."""
+    import spglib
+
+    before = getattr(spglib.error, "OLD_ERROR_HANDLING", None)
+    if before is not None:
+        spglib.error.OLD_ERROR_HANDLING = False
+    try:
+        yield
+    finally:
+        if before is not None:
+            spglib.error.OLD_ERROR_HANDLING = before
+
+
+def _species(crystal: Crystal) -> IntArray:
+    """Integer kind of every atom: element, and the signed moment where there is one (never too much symmetry)."""
+    moments = crystal.magnetic_moments
+    if moments is None:
+        return crystal.numbers
+    pairs = np.column_stack([crystal.numbers, np.round(moments, 2)])
+    return np.unique(pairs, axis=0, return_inverse=True)[1].ravel() + 1
+
+
+def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetry:
+    """Space group of a crystal.
+
+    Parameters
+    ----------
+    crystal : Crystal
+    symprec : float
+        Distance tolerance, angstrom.
+
+    Raises
+    ------
+    InputError
+        When spglib finds no group (atoms on top of each other, a tolerance larger than the crystal).
+    """
+    import spglib
+
+    kinds = _species(crystal)
+    cell = (crystal.lattice.tolist(), crystal.positions.tolist(), kinds.tolist())
+    where = crystal.source or crystal.name
+    try:
+        with _spglib_raises():
+            data = spglib.get_symmetry_dataset(cell, symprec=symprec)
+            if data is None:
+                raise spglib.SpglibError("no symmetry found")
+            standard = spglib.get_symmetry_from_database(data.hall_number) or {}
+    except spglib.SpglibError as error:
+        raise InputError(
+            f"no symmetry found at a tolerance of {symprec:g} A ({error})", where, "Try another --symprec, check the atoms."
+        ) from None
+    point_group = data.pointgroup.strip()
+    laue_class, system = next((lc, sy) for lc, (sy, groups) in LAUE_CLASSES.items() if point_group in groups)
+    operations = np.unique(standard["rotations"], axis=0)
+    lattice, rotations = _cartesian(np.linalg.inv(data.transformation_matrix).T @ crystal.lattice, operations)
+    return Symmetry(
+        space_group=data.international,
+        number=int(data.number),
+        point_group=point_group,
+        laue_class=laue_class,
+        system=system,
+        rotations=rotations,
+        standard_lattice=lattice,
+        transformation=data.transformation_matrix,
+        tolerance=symprec,
+        deviation=_deviation(crystal, kinds, data.rotations, data.translations),
+    )
+
+
+def _cartesian(lattice: FloatArray, operations: IntArray) -> tuple[FloatArray, FloatArray]:
+    """Lattice with the group's exact metric, and the group's distinct proper rotations, both in the given frame."""
+    metric = np.mean([w.T @ (lattice @ lattice.T) @ w for w in operations.astype(float)], axis=0)
+    inverse = np.linalg.inv(lattice)
+    values, vectors = np.linalg.eigh(inverse @ metric @ inverse.T)
+    exact = lattice @ (vectors * np.sqrt(values)) @ vectors.T
+    columns = exact.T
+    cartesian = columns @ operations @ np.linalg.inv(columns)
+    proper = cartesian * np.round(np.linalg.det(cartesian))[:, None, None]
+    distinct: list[FloatArray] = []
+    for rotation in proper:
+        if not any(np.abs(rotation - other).max() < 1e-6 for other in distinct):
+            distinct.append(rotation)
+    return exact, np.array(distinct)
+
+
+def _deviation(crystal: Crystal, kinds: IntArray, rotations: IntArray, translations: FloatArray) -> float:
+    """Largest distance from a symmetry image of an atom to the nearest atom of its kind, angstrom."""
+    from scipy.spatial import cKDTree
+
+    worst = 0.0
+    for kind in np.unique(kinds):
+        mine = crystal.positions[kinds == kind] % 1.0 % 1.0
+        tree = cKDTree(mine, boxsize=1.0)
+        images = (np.einsum("gij,nj->gni", rotations, mine) + translations[:, None, :]).reshape(-1, 3) % 1.0 % 1.0
+        # the nearest in fractional space can differ from the nearest in real space only when atoms nearly coincide
+        _, nearest = tree.query(images)
+        away = images - mine[nearest]
+        away -= np.round(away)
+        worst = max(worst, float(np.linalg.norm(away @ crystal.lattice, axis=1).max()))
+    return worst
+
+
+def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float, str, str]], list[Finding]]:
+    """Space group at a tenth, one and ten times the tolerance, and a finding where it changes.
+
+    Returns
+    -------
+    rungs : list of (tolerance in angstrom, space group, Laue class)
+        A rung where the search fails is left out.
+    findings : list of Finding
+    """
+    rungs: list[tuple[float, str, str]] = []
+    for factor in (0.1, 1.0, 10.0):
+        try:
+            found = find_symmetry(crystal, symprec * factor)
+        except InputError:
+            continue
+        rungs.append((symprec * factor, found.space_group, found.laue_class))
+    findings = []
+    if len({group for _, group, _ in rungs}) > 1:
+        text = ", ".join(f"{group} at {tolerance:g} A" for tolerance, group, _ in rungs)
+        findings.append(finding("symmetry-depends-on-tolerance", crystal.source or crystal.name, text))
+    return rungs, findings

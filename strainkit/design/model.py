@@ -1,0 +1,240 @@
+"""The one linear model that links returned stresses to the stiffness, for planning and for fitting alike.
+
+For a job at Green-Lagrange strain eta = t e (unit shape e, signed magnitude t) the second Piola-Kirchhoff stress is
+
+    S = S0 + t C:e + t^2 q_e + t^3 c_e
+
+S0 is the reference stress that the crystal allows; C is the sum of constants times invariant matrices; q_e, free for
+every shape, holds the even (quadratic) response; c_e is there at order "cubic" only. Let H+- be all rotations g of the
+Laue group with g e = +e or -e: q_e is invariant under H+-, c_e takes the sign of g. A shape whose negative is an image
+of itself therefore needs one job only: its odd part carries the stiffness. Rows are components of S (Mandel) in
+the space that the job's own residual symmetry allows; the others are exact zeros or ties in a program that symmetrises.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+
+from strainkit.errors import UsageError
+from strainkit.tensors.arrays import FloatArray, IntArray
+from strainkit.tensors.invariants import invariant_vectors
+from strainkit.tensors.leastsquares import factorise
+from strainkit.tensors.rotations import rotation6
+from strainkit.tensors.sixvectors import from_mandel, to_mandel
+
+__all__ = ["LinearModel", "Order", "Shape", "build_model"]
+
+Order = Literal["linear", "cubic"]
+
+#: strains below this (largest principal value) are the reference
+ZERO_STRAIN = 1e-9
+#: how close two strains must be, relative to their size, to be of one shape
+SAME_SHAPE = 1e-5
+
+
+@dataclass(frozen=True)
+class Shape:
+    """A unit strain tensor and what its symmetry allows.
+
+    Attributes
+    ----------
+    unit : (6,)
+        Mandel vector whose largest absolute principal value is one, given frame.
+    allowed : (6, d)
+        Stresses that the residual symmetry of the strained cell allows (orthonormal columns, Mandel).
+    even, odd : (6, d_even), (6, d_odd)
+        Responses even and odd in the magnitude that H+- allows.
+    residual_order : int
+        Number of the Laue group's rotations that the strained cell keeps.
+    has_image : bool
+        A rotation of the crystal maps the shape to its negative.
+    """
+
+    unit: FloatArray
+    allowed: FloatArray
+    even: FloatArray
+    odd: FloatArray
+    residual_order: int
+    has_image: bool
+
+    @classmethod
+    def of(cls, unit: FloatArray, rotations: FloatArray) -> Shape:
+        """Shape of a Mandel vector (6,) in a crystal with the proper Laue rotations (m, 3, 3)."""
+        turned = rotation6(rotations) @ unit
+        size = SAME_SHAPE * np.linalg.norm(unit)
+        same = np.abs(turned - unit).max(axis=1) < size
+        opposite = np.abs(turned + unit).max(axis=1) < size
+        both = same | opposite
+        allowed = invariant_vectors(rotations[same])
+        if not opposite.any():
+            return cls(unit, allowed, allowed, allowed, int(same.sum()), False)
+        signs = np.where(same, 1.0, -1.0)[both]
+        even, odd = invariant_vectors(rotations[both]), invariant_vectors(rotations[both], signs)
+        return cls(unit, allowed, even, odd, int(same.sum()), True)
+
+
+@dataclass(frozen=True)
+class LinearModel:
+    """Design matrix of a list of jobs.
+
+    Attributes
+    ----------
+    matrix : (rows, parameters)
+        Square roots of the job weights are multiplied in.
+    job_of_row : (rows,)
+        Index of the job that each row belongs to.
+    projections : tuple of (6, d)
+        Columns that turn a job's Mandel stress into its rows, one a job.
+    weights : (jobs,)
+        Weight of each job's rows: inverse variance in units of the common one.
+    reference, constants, even, cubic : slice
+        Column blocks: reference stress, constants, even terms, cubic terms.
+    reference_basis : (6, a)
+        Orthonormal stresses that the unstrained crystal allows.
+    even_basis : (rows, e)
+        Orthonormal basis of everything that an arbitrary even response can add to the data; what is orthogonal to it
+        is odd and knows the stiffness only.
+    shapes : tuple of Shape
+    shape_of_job : (jobs,)
+        Index of the shape, -1 for the reference.
+    signed_magnitudes : (jobs,)
+        t of each job.
+    """
+
+    matrix: FloatArray
+    job_of_row: IntArray
+    projections: tuple[FloatArray, ...]
+    weights: FloatArray
+    reference: slice
+    constants: slice
+    even: slice
+    cubic: slice
+    reference_basis: FloatArray
+    even_basis: FloatArray
+    shapes: tuple[Shape, ...]
+    shape_of_job: IntArray
+    signed_magnitudes: FloatArray
+
+    def rows(self, stresses: FloatArray) -> FloatArray:
+        """Data vector (rows,) of Mandel second Piola-Kirchhoff stresses (jobs, 6)."""
+        parts = [w**0.5 * (p.T @ s) for p, s, w in zip(self.projections, stresses, self.weights, strict=True)]
+        return np.concatenate(parts) if parts else np.zeros(0)
+
+    @property
+    def odd_degrees_of_freedom(self) -> int:
+        """Spare degrees of freedom of the odd part: rows, less even nuisance, less constants and cubic terms found."""
+        return int(len(self.matrix) - self.even_basis.shape[1] - factorise(self.odd_matrix).rank)
+
+    @property
+    def odd_matrix(self) -> FloatArray:
+        """Columns of the constants and cubic terms with every even response projected out."""
+        return self.odd_part(self.matrix[:, np.r_[self.constants, self.cubic]])
+
+    def odd_part(self, values: FloatArray) -> FloatArray:
+        """What is left of rows (rows, ...) after every even response is projected out."""
+        return values - self.even_basis @ (self.even_basis.T @ values)
+
+
+def _place(strain: FloatArray, shapes: list[Shape], rotations: FloatArray) -> tuple[int, float, FloatArray]:
+    """Shape index, signed magnitude and the 6x6 rotation that carries the shape onto this strain (Mandel, (6,))."""
+    magnitude = float(np.abs(np.linalg.eigvalsh(from_mandel(strain))).max())
+    unit = strain / magnitude
+    q = rotation6(rotations)
+    for index, shape in enumerate(shapes):
+        images = q @ shape.unit
+        for sign in (1.0, -1.0):
+            away = np.abs(sign * images - unit).max(axis=1)
+            nearest = int(away.argmin())
+            if away[nearest] < SAME_SHAPE * np.linalg.norm(unit):
+                return index, sign * magnitude, q[nearest]
+    shapes.append(Shape.of(unit, rotations))
+    return len(shapes) - 1, magnitude, np.eye(6)
+
+
+def build_model(
+    strains: FloatArray,
+    rotations: FloatArray,
+    matrices: FloatArray,
+    order: Order = "linear",
+    weights: FloatArray | None = None,
+) -> LinearModel:
+    """Linear model of a list of jobs.
+
+    Parameters
+    ----------
+    strains : (jobs, 3, 3)
+        Green-Lagrange strains in the given frame; zero for the reference.
+    rotations : (m, 3, 3)
+        Proper rotations of the Laue group, given frame.
+    matrices : (n, 6, 6)
+        Mandel matrices of the independent constants, given frame.
+    order : "linear" or "cubic"
+        Whether cubic terms are fitted.
+    weights : (jobs,), optional
+        Inverse variances in units of the common one; ones when left out.
+    """
+    if order not in ("linear", "cubic"):
+        raise UsageError(f"unknown order {order!r}", "--order", "Use linear or cubic.")
+    vectors = to_mandel(strains)
+    weights = np.ones(len(vectors)) if weights is None else np.asarray(weights, dtype=float)
+    shapes: list[Shape] = []
+    free = invariant_vectors(rotations)
+    placed: list[tuple[int, float, FloatArray]] = []
+    for vector in vectors:
+        at_rest = np.linalg.norm(vector) < ZERO_STRAIN
+        placed.append((-1, 0.0, np.eye(6)) if at_rest else _place(vector, shapes, rotations))
+    n, a = len(matrices), free.shape[1]
+    even_start = a + n
+    cubic_start = even_start + sum(s.even.shape[1] for s in shapes)
+    width = cubic_start + (sum(s.odd.shape[1] for s in shapes) if order == "cubic" else 0)
+    even_at = even_start + np.cumsum([0, *(s.even.shape[1] for s in shapes)])
+    odd_at = cubic_start + np.cumsum([0, *(s.odd.shape[1] for s in shapes)])
+    largest = max((abs(t) for _, t, _ in placed), default=0.0) or 1.0
+
+    blocks, projections, nuisance = [], [], []
+    for vector, (index, t, turn), weight in zip(vectors, placed, weights, strict=True):
+        shape = shapes[index] if index >= 0 else None
+        allowed = turn @ shape.allowed if shape else free
+        block = np.zeros((allowed.shape[1], width))
+        block[:, :a] = allowed.T @ free
+        block[:, a:even_start] = (allowed.T @ (matrices @ vector).T) if n else 0.0
+        even = free
+        if shape:
+            even = turn @ shape.even
+            block[:, even_at[index] : even_at[index + 1]] = allowed.T @ even * (t / largest) ** 2
+            if order == "cubic":
+                block[:, odd_at[index] : odd_at[index + 1]] = allowed.T @ turn @ shape.odd * (t / largest) ** 3
+        blocks.append(weight**0.5 * block)
+        nuisance.append(((index, round(abs(t), 10)), weight**0.5 * allowed.T @ even))
+        projections.append(allowed)
+    sizes = [len(block) for block in blocks]
+    return LinearModel(
+        matrix=np.vstack(blocks) if blocks else np.zeros((0, width)),
+        job_of_row=np.repeat(np.arange(len(blocks)), sizes),
+        projections=tuple(projections),
+        weights=weights,
+        reference=slice(0, a),
+        constants=slice(a, even_start),
+        even=slice(even_start, cubic_start),
+        cubic=slice(cubic_start, width),
+        reference_basis=free,
+        even_basis=_even_basis(nuisance, sizes),
+        shapes=tuple(shapes),
+        shape_of_job=np.array([index for index, _, _ in placed], dtype=np.int64),
+        signed_magnitudes=np.array([t for _, t, _ in placed]),
+    )
+
+
+def _even_basis(nuisance: list[tuple[tuple[int, float], FloatArray]], sizes: list[int]) -> FloatArray:
+    """Orthonormal basis of the data that free even responses, one for every shape and magnitude, can produce."""
+    starts = np.cumsum([0, *sizes])
+    groups: dict[tuple[int, float], FloatArray] = {}
+    for row, (key, block) in enumerate(nuisance):
+        columns = groups.setdefault(key, np.zeros((starts[-1], block.shape[1])))
+        columns[starts[row] : starts[row + 1]] = block
+    # groups touch different rows, so each is made orthonormal on its own
+    bases = [np.linalg.qr(columns)[0] for columns in groups.values() if columns.shape[1]]
+    return np.hstack(bases) if bases else np.zeros((starts[-1], 0))

@@ -1,0 +1,1 @@
+"""Local engines through ASE calculators: run a strain set on this machine, relax a reference cell."""

@@ -1,0 +1,68 @@
+"""Findings: what strainkit cannot be sure of, by name, with the number that made it doubt.
+
+A finding's code never changes meaning. `CODES` is the documented list; a code that is not in it is an error.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import asdict, dataclass
+from typing import Any, Literal
+
+from strainkit.errors import StrainkitError
+
+__all__ = ["CODES", "Finding", "Severity", "finding", "worst"]
+
+Severity = Literal["info", "warning", "error"]
+
+#: code -> (severity, meaning)
+CODES: dict[str, tuple[Severity, str]] = {
+    # the cell
+    "deuterium": ("info", "deuterium is treated as hydrogen"),
+    "no-symmetry-in-file": ("warning", "the CIF names no space group and lists no operations"),
+    "symmetry-depends-on-tolerance": ("warning", "ten times more or less tolerance gives another space group"),
+    # the strain set
+    "few-spare-degrees": ("warning", "fewer than three spare degrees of freedom to estimate the noise from"),
+    # what came back
+    "unreadable-output": ("error", "a job's output cannot be parsed"),
+    "job-unfinished": ("error", "a job's output has no end-of-job mark or no stress"),
+    "job-unconverged": ("error", "a job's electronic steps or ions did not converge"),
+    "job-broken": ("error", "a job's output holds impossible numbers"),
+    "cell-mismatch": ("error", "a job's output is of another cell or crystal than planned"),
+    # the fit
+    "undetermined-constants": ("error", "the usable jobs do not determine some constants"),
+    "jobs-not-used": ("warning", "some planned jobs are missing, unusable or dropped"),
+    "lone-partner": ("warning", "a strained job whose opposite is not there, and no rotation maps it to its opposite"),
+    "no-error-estimate": ("warning", "no spare degrees of freedom to estimate the noise from"),
+    "not-positive-definite": ("error", "the stiffness has an eigenvalue that is not positive"),
+    "residual-stress": ("warning", "the reference stress exceeds 5 % of the smallest diagonal constant"),
+    "reference-stress-unknown": ("warning", "no usable job determines the reference stress"),
+}
+
+
+@dataclass(frozen=True)
+class Finding:
+    """One doubt: a documented code, how much it matters, where, and the number in words."""
+
+    code: str
+    severity: Severity
+    where: str
+    message: str
+
+    def to_dict(self) -> dict[str, Any]:
+        """JSON-ready dictionary with the four fields."""
+        return asdict(self)
+
+
+def finding(code: str, where: str, message: str) -> Finding:
+    """Make a finding of a documented code; its severity is the documented one."""
+    if code not in CODES:
+        raise StrainkitError(f"finding code {code!r} is not documented", "strainkit.findings")
+    return Finding(code, CODES[code][0], where, message)
+
+
+def worst(findings: Iterable[Finding]) -> Severity | None:
+    """The highest severity among the findings, None when there are none."""
+    order: tuple[Severity, ...] = ("info", "warning", "error")
+    present = {f.severity for f in findings}
+    return max(present, key=order.index) if present else None

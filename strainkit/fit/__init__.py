@@ -1,0 +1,1 @@
+"""Regression of the stiffness from a stress table, with errors and findings."""

@@ -1,0 +1,86 @@
+"""What a fit must say about itself."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from strainkit.design.strainset import StrainJob
+from strainkit.findings import Finding, finding
+from strainkit.fit.regression import Regression
+from strainkit.run.plan import Plan
+from strainkit.tensors.prestress import stress_strain_coefficients
+from strainkit.tensors.sixvectors import from_mandel
+
+__all__ = ["judge"]
+
+#: residual stress above this part of the smallest diagonal constant is a warning
+NOTABLE_STRESS = 0.05
+
+
+def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
+    """Findings about a fit of the given jobs."""
+    findings: list[Finding] = []
+    names = plan.basis.names
+    lost = [name for name, known in zip(names, regression.determined, strict=True) if not known]
+    if lost:
+        findings.append(finding("undetermined-constants", ", ".join(lost), "the usable jobs do not determine these"))
+    used = {job.label for job in jobs}
+    absent = [job.label for job in plan.jobs if job.label not in used]
+    if absent:
+        findings.append(finding("jobs-not-used", ", ".join(absent), f"{len(absent)} of {len(plan.jobs)} jobs not used"))
+    findings += _lone_partners(regression, jobs)
+    if regression.noise is None:
+        findings.append(
+            finding("no-error-estimate", "fit", "no spare degrees of freedom: no error estimate from these data (--noise)")
+        )
+    if not lost:
+        findings += _mechanical(plan, regression)
+    return findings
+
+
+def _lone_partners(regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
+    """Jobs whose opposite is not there, so that the even response swallows them."""
+    model = regression.model
+    t, shape = model.signed_magnitudes, model.shape_of_job
+    alone = []
+    for index, job in enumerate(jobs):
+        if shape[index] < 0 or model.shapes[shape[index]].has_image:
+            continue
+        same = shape == shape[index]
+        if not (same & (np.abs(t + t[index]) < 1e-6 * abs(t[index]))).any():
+            alone.append(job.label)
+    if not alone:
+        return []
+    return [finding("lone-partner", ", ".join(alone), "the job of opposite strain is not there, so this one adds little")]
+
+
+def _mechanical(plan: Plan, regression: Regression) -> list[Finding]:
+    """Stability and residual stress."""
+    findings = []
+    stiffness = plan.basis.stiffness(regression.values)
+    stress = from_mandel(np.nan_to_num(regression.reference_stress))
+    b = stress_strain_coefficients(stiffness, stress)
+    smallest = float(np.linalg.eigvalsh(0.5 * (b + b.T))[0])
+    if smallest <= 0:
+        findings.append(
+            finding("not-positive-definite", "stiffness", f"smallest eigenvalue {smallest:.3g} GPa: the crystal is not stable")
+        )
+    if np.isnan(regression.reference_stress).any():
+        findings.append(
+            finding("reference-stress-unknown", "reference", "the reference job is missing: residual stress unknown")
+        )
+        return findings
+    largest = float(np.abs(np.linalg.eigvalsh(stress)).max())
+    softest = float(np.diag(stiffness).min())
+    if softest > 0 and largest > NOTABLE_STRESS * softest:
+        findings.append(
+            finding(
+                "residual-stress",
+                "reference",
+                f"the reference cell carries a stress of {largest:.3g} GPa, {100 * largest / softest:.0f} % of the "
+                "smallest diagonal constant: relax it further, or raise the cutoff",
+            )
+        )
+    return findings

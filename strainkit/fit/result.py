@@ -1,0 +1,202 @@
+"""The fitted stiffness of a run, with its errors, findings and JSON."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from strainkit.collect.table import StressTable
+from strainkit.crystal.frames import Frame
+from strainkit.design.model import Order
+from strainkit.errors import NoTensorError
+from strainkit.findings import Finding
+from strainkit.fit.judge import judge
+from strainkit.fit.regression import Regression, regress
+from strainkit.run.files import atomic_write, dump_json
+from strainkit.run.plan import Plan
+from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.prestress import stress_strain_coefficients
+from strainkit.tensors.rotations import rotate_matrix
+from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt, stress_to_voigt
+from strainkit.tensors.stiffness import Stiffness
+
+__all__ = ["FITTED", "Fit", "fit_run"]
+
+FITTED = "stiffness.json"
+_KIND = "strainkit/stiffness"
+
+
+@dataclass(frozen=True)
+class Fit:
+    """Stiffness of one crystal from one stress table.
+
+    Attributes
+    ----------
+    plan : Plan
+    regression : Regression
+        Everything in the given frame.
+    order : "linear" or "cubic"
+    jobs_used, dropped : tuple of str
+        Labels.
+    findings : tuple of Finding
+    """
+
+    plan: Plan
+    regression: Regression
+    order: Order
+    jobs_used: tuple[str, ...]
+    dropped: tuple[str, ...]
+    findings: tuple[Finding, ...]
+
+    @property
+    def undetermined(self) -> tuple[str, ...]:
+        """Names of the constants that the usable jobs do not determine."""
+        names = self.plan.basis.names
+        return tuple(n for n, known in zip(names, self.regression.determined, strict=True) if not known)
+
+    @property
+    def stiffness(self) -> Stiffness:
+        """Thermodynamic stiffness C in the given frame, with covariance.
+
+        Raises
+        ------
+        NoTensorError
+            When some constants are undetermined.
+        """
+        if self.undetermined:
+            raise NoTensorError(f"undetermined constants: {', '.join(self.undetermined)}", self.plan.crystal.name)
+        r, basis = self.regression, self.plan.basis
+        spread = basis.matrices.reshape(len(basis.names), 36)
+        covariance = None if r.covariance is None else spread.T @ r.covariance @ spread
+        return Stiffness(basis.stiffness(r.values), covariance, r.degrees_of_freedom)
+
+    @property
+    def reference_stress(self) -> FloatArray:
+        """Fitted reference stress (3, 3), GPa, positive in tension, given frame; NaN when unknown."""
+        return from_mandel(self.regression.reference_stress)
+
+    @property
+    def effective(self) -> Stiffness:
+        """Symmetric part of the stress-strain coefficients B, given frame: what stability and moduli are made of.
+
+        Equal to C for a crystal without residual stress; the errors are those of C.
+        """
+        plain = self.stiffness
+        stress = np.nan_to_num(self.reference_stress)
+        b = stress_strain_coefficients(plain.mandel, stress)
+        return Stiffness(0.5 * (b + b.T), plain.covariance, plain.degrees_of_freedom)
+
+    def intervals(self) -> FloatArray:
+        """95 % intervals of the constants (n, 2), GPa; NaN without an error estimate."""
+        from scipy.stats import norm, t
+
+        r = self.regression
+        if r.covariance is None:
+            return np.full((len(r.values), 2), np.nan)
+        dof = r.degrees_of_freedom
+        reach = float(norm.ppf(0.975) if dof is None else t.ppf(0.975, dof)) * np.sqrt(np.diag(r.covariance))
+        return np.column_stack([r.values - reach, r.values + reach])
+
+    def to_dict(self, frame: str = "ieee") -> dict[str, Any]:
+        """JSON-ready result, tensors in the named frame."""
+        r, plan = self.regression, self.plan
+        chosen = plan.frames[frame]
+        errors = np.full(len(r.values), np.nan) if r.covariance is None else np.sqrt(np.diag(r.covariance))
+        constants = [
+            {"name": name, "value_GPa": value, "standard_error_GPa": error, "interval95_GPa": interval}
+            for name, value, error, interval in zip(plan.basis.names, r.values, errors, self.intervals(), strict=True)
+        ]
+        stiffness, spread, coefficients = self._matrices(chosen)
+        return {
+            "schema": f"{_KIND}/1",
+            "name": plan.crystal.name,
+            "laue_class": plan.symmetry.laue_class,
+            "frame": chosen.name,
+            "frame_axes": chosen.axes,
+            "frame_rotation": chosen.rotation,
+            "measure": "Green-Lagrange strain, second Piola-Kirchhoff stress",
+            "ions": plan.ions,
+            "order": self.order,
+            "stress_strain_GPa": coefficients,
+            "stiffness_GPa": stiffness,
+            "standard_error_GPa": spread,
+            "constants": constants,
+            "residual_stress_GPa": stress_to_voigt(chosen.rotation @ self.reference_stress @ chosen.rotation.T),
+            "degrees_of_freedom": r.degrees_of_freedom,
+            "noise_GPa": r.noise,
+            "even_noise_GPa": r.even_noise,
+            "forbidden_component_noise_GPa": r.forbidden_noise,
+            "jobs_used": list(self.jobs_used),
+            "jobs_dropped": list(self.dropped),
+            "undetermined": list(self.undetermined),
+            "findings": [f.to_dict() for f in self.findings],
+        }
+
+    def _matrices(self, frame: Frame) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Voigt stiffness, standard errors and B (6, 6) in a frame; NaN for elements that undetermined constants reach."""
+        r, basis = self.regression, self.plan.basis
+        turned = rotate_matrix(frame.rotation, basis.matrices)
+        unknown = (np.abs(turned[~r.determined]) > 1e-7).any(axis=0)
+        mandel = np.tensordot(np.nan_to_num(r.values), turned, axes=1)
+        variance = np.full((6, 6), np.nan)
+        if r.covariance is not None:
+            flat = turned.reshape(len(turned), 36)
+            variance = np.einsum("ap,ab,bp->p", flat, np.nan_to_num(r.covariance), flat).reshape(6, 6)
+        stress = frame.rotation @ np.nan_to_num(self.reference_stress) @ frame.rotation.T
+        b = stress_strain_coefficients(mandel, stress)
+        error = np.sqrt(np.clip(variance, 0.0, None))
+        hidden = np.where(unknown, np.nan, 1.0)
+        stiffness, spread, coefficients = (stiffness_to_voigt(m * hidden) for m in (mandel, error, b))
+        return stiffness, spread, coefficients
+
+    def save(self, run: Path, frame: str = "ieee") -> None:
+        """Write stiffness.json into the run folder."""
+        atomic_write(run / FITTED, dump_json(self.to_dict(frame)))
+
+
+def fit_run(
+    plan: Plan,
+    table: StressTable,
+    order: Order = "linear",
+    noise: float | None = None,
+    drop: tuple[str, ...] = (),
+) -> Fit:
+    """Fit the stiffness of a run from its stress table.
+
+    Parameters
+    ----------
+    plan : Plan
+    table : StressTable
+    order : "linear" or "cubic"
+        Whether cubic terms are fitted for every shape; chosen before looking at the data.
+    noise : float, optional
+        Known stress noise, GPa (standard deviation of one Mandel component).
+    drop : tuple of str
+        Labels of jobs to leave out; recorded in the result.
+
+    Raises
+    ------
+    NoTensorError
+        When no constant is determined by the usable jobs.
+    """
+    usable = {r.label: r for r in table.usable if r.label not in drop and r.stress is not None}
+    jobs = [job for job in plan.jobs if job.label in usable]
+    if not any(job.shape for job in jobs):
+        raise NoTensorError(
+            f"none of the {len(plan.jobs) - 1} strained jobs is usable", plan.crystal.name, "See: strainkit progress RUN"
+        )
+    regression = regress(
+        np.array([job.gradient for job in jobs]),
+        np.array([usable[job.label].stress for job in jobs]),
+        plan.symmetry.rotations,
+        plan.basis.matrices,
+        order,
+        noise,
+    )
+    if not regression.determined.any():
+        raise NoTensorError("the usable jobs determine no constant", plan.crystal.name, "See: strainkit progress RUN")
+    used = tuple(job.label for job in jobs)
+    return Fit(plan, regression, order, used, tuple(drop), tuple(judge(plan, regression, jobs)))

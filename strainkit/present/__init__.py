@@ -1,0 +1,1 @@
+"""Terminal tables, figures, the report and comparisons."""

@@ -1,0 +1,14 @@
+"""Array types shared by the whole package."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["BoolArray", "FloatArray", "IntArray"]
+
+FloatArray = NDArray[np.floating[Any]]
+BoolArray = NDArray[np.bool_]
+IntArray = NDArray[np.signedinteger[Any]]
