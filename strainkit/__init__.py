@@ -1,3 +1,76 @@
-"""strainkit: from one relaxed crystal to the fewest strained cells, and from their stresses to a stiffness tensor."""
+"""strainkit: from one relaxed crystal to the fewest strained cells, and from their stresses to a stiffness tensor.
+
+The whole job from a notebook::
+
+    crystal = strainkit.read_crystal("cell.cif")
+    plan, _ = strainkit.write_run(strainkit.plan_run(crystal, [0.01]), Path("run"))
+    strainkit.evaluate_run(Path("run"), plan, strainkit.Engine("gfn1-xtb"))
+    fit = strainkit.fit_run(plan, strainkit.collect_run(Path("run"), plan))
+    fit.stiffness, strainkit.averages(fit.effective)
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from strainkit.collect.gather import collect_run
+    from strainkit.crystal.crystal import Crystal
+    from strainkit.crystal.read import read_crystal
+    from strainkit.crystal.symmetry import find_symmetry
+    from strainkit.derive.averages import averages
+    from strainkit.errors import StrainkitError
+    from strainkit.evaluate.engines import Engine
+    from strainkit.evaluate.reference import relax_reference
+    from strainkit.evaluate.runset import evaluate_run
+    from strainkit.findings import Finding
+    from strainkit.fit.result import fit_run
+    from strainkit.prepare.runfolder import plan_run, write_run
+    from strainkit.run.plan import load_plan
+    from strainkit.tensors.stiffness import Stiffness
 
 __version__ = "0.1.0"
+
+__all__ = [
+    "Crystal",
+    "Engine",
+    "Finding",
+    "Stiffness",
+    "StrainkitError",
+    "averages",
+    "collect_run",
+    "evaluate_run",
+    "find_symmetry",
+    "fit_run",
+    "load_plan",
+    "plan_run",
+    "read_crystal",
+    "relax_reference",
+    "write_run",
+]
+
+_HOME = {
+    "Crystal": "crystal.crystal",
+    "Engine": "evaluate.engines",
+    "Finding": "findings",
+    "Stiffness": "tensors.stiffness",
+    "StrainkitError": "errors",
+    "averages": "derive.averages",
+    "collect_run": "collect.gather",
+    "evaluate_run": "evaluate.runset",
+    "find_symmetry": "crystal.symmetry",
+    "fit_run": "fit.result",
+    "load_plan": "run.plan",
+    "plan_run": "prepare.runfolder",
+    "read_crystal": "crystal.read",
+    "relax_reference": "evaluate.reference",
+    "write_run": "prepare.runfolder",
+}
+
+
+def __getattr__(name: str) -> Any:
+    """Import a public name when it is first used, so that the command line starts quickly."""
+    if name in _HOME:
+        return getattr(import_module(f"strainkit.{_HOME[name]}"), name)
+    raise AttributeError(f"module 'strainkit' has no attribute {name!r}")

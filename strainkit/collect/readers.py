@@ -7,6 +7,7 @@ a job ended, so that is done here, before a number is believed.
 from __future__ import annotations
 
 import re
+import warnings
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -155,7 +156,7 @@ READERS: tuple[Reader, ...] = (
     ),
     Reader(
         "FHI-aims",
-        _has(b"FHI-aims"),
+        lambda head: b"FHI-aims" in head or _has(b"| Number of atoms ", b"| Number of spin channels ")(head),
         "aims-output",
         re.compile(r"Have a nice day\."),
         ((re.compile(r"Self-consistency cycle not converged"), "unconverged", _NOT_CONVERGED),),
@@ -204,7 +205,9 @@ def read_returned(path: Path, reader: Reader) -> Returned:
         problems.append(("unfinished", f"the {reader.program} output has no end-of-job mark"))
     problems += [(status, message) for mark, status, message in reader.bad_marks if mark.search(text)]
     try:
-        atoms = read(path, format=reader.ase_format, index=-1)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # remarks of ASE's readers to their developers
+            atoms = read(path, format=reader.ase_format, index=-1)
         if not isinstance(atoms, Atoms):
             raise ValueError("no structure in it")
         if reader.amend:

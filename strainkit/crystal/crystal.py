@@ -26,6 +26,16 @@ def formula_of(symbols: list[str]) -> str:
     return "".join(f"{s}{counts[s] if counts[s] > 1 else ''}" for s in order)
 
 
+def _refuse_flat(lattice: FloatArray, atoms: int, where: str) -> None:
+    volume = abs(float(np.linalg.det(lattice)))
+    if not volume > 1e-3 * atoms:
+        raise InputError(
+            f"the cell has a volume of {volume:.3g} A^3 for {atoms} atoms",
+            where,
+            "Check the lattice vectors: a crystal needs three that are not in one plane.",
+        )
+
+
 @dataclass(frozen=True)
 class Crystal:
     """A relaxed cell.
@@ -70,12 +80,7 @@ class Crystal:
             raise InputError(f"{len(numbers)} elements for {len(positions)} positions", where)
         if not np.isfinite(positions).all():
             raise InputError("some coordinates are not finite numbers", where)
-        if abs(np.linalg.det(lattice)) < 1e-3 * len(numbers):
-            raise InputError(
-                f"the cell has a volume of {abs(np.linalg.det(lattice)):.3g} A^3 for {len(numbers)} atoms",
-                where,
-                "Check the lattice vectors: a crystal needs three that are not in one plane.",
-            )
+        _refuse_flat(lattice, len(numbers), where)
         object.__setattr__(self, "lattice", lattice)
         object.__setattr__(self, "positions", positions)
         object.__setattr__(self, "numbers", numbers)
@@ -137,6 +142,7 @@ class Crystal:
         where = source or name
         if not bool(np.all(atoms.pbc)):
             raise InputError("the structure is not periodic in all three directions", where)
+        _refuse_flat(atoms.cell.array, len(atoms), where)
         if atoms.constraints:
             raise InputError("some atoms carry constraints", where, "Remove them: every atom must be free to follow a strain.")
         shares = [s for site in dict(atoms.info.get("occupancy") or {}).values() for s in dict(site).values()]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from pathlib import Path
 
 from strainkit.crystal.cif import crystal_from_cif
@@ -85,7 +86,9 @@ def _through_ase(path: Path, format: str) -> Crystal:
     from ase.io.formats import UnknownFileTypeError
 
     try:
-        atoms = read(path, format=format, index=-1)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # remarks of ASE's readers to their developers
+            atoms = read(path, format=format, index=-1)
     except UnknownFileTypeError:
         raise InputError(f"unknown format {format!r}", path, "Use cif, poscar, extxyz or a format name of ASE.") from None
     except StrainkitError:

@@ -89,7 +89,7 @@ def _fewest_pairs(key: bytes) -> tuple[tuple[tuple[float, ...], ...], ...]:
     invariants = invariant_matrices(rotations)
     count = invariant_vectors(rotations).shape[1]
     best, continuous = best_continuous(invariants, count)
-    for largest in (1, 2, 3, 4):
+    for largest in (1, 2, 3, 4, 5):
         candidates = reflection_strains(smallest_directions(largest).astype(float))
         value, chosen = _exchange(candidates, rotations, invariants, count)
         if value <= best * (1.0 + TIDY_COST):

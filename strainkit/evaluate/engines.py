@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import ast
 import importlib
+import inspect
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -84,7 +85,20 @@ class Engine:
             calculator = factory(**{**start, **self.settings})
         except Exception as error:  # whatever the calculator thinks of its arguments
             raise InputError(f"the engine {self.name} refuses its settings ({error})", "--set") from None
+        self._refuse_unknown(factory, calculator)
         missing = {"energy", "forces", "stress"} - set(getattr(calculator, "implemented_properties", ()))
         if missing:
             raise InputError(f"the engine {self.name} gives no {', '.join(sorted(missing))}", "--engine")
         return calculator
+
+    def _refuse_unknown(self, factory: Any, calculator: Any) -> None:
+        """Many calculators swallow a misspelt setting: compare with their defaults and their signature."""
+        defaults = getattr(calculator, "default_parameters", None)
+        if not defaults:
+            return
+        known = {*defaults, *inspect.signature(factory).parameters}
+        unknown = sorted(set(self.settings) - known)
+        if unknown:
+            raise InputError(
+                f"the engine {self.name} has no setting {unknown[0]!r}", "--set", f"It knows {', '.join(sorted(defaults))}."
+            )

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any
 
@@ -48,6 +51,17 @@ class Outcome:
     converged: bool
 
 
+@contextmanager
+def scratch_folder(calculator: Any) -> Iterator[None]:
+    """Let a calculator that writes files do so in a folder of its own, so that parallel jobs do not meet."""
+    if not hasattr(calculator, "directory"):
+        yield
+        return
+    with tempfile.TemporaryDirectory(prefix="strainkit-") as folder:
+        calculator.directory = folder
+        yield
+
+
 def evaluate_cell(crystal: Crystal, engine: Engine, relax: bool, fmax: float = DEFAULT_FMAX) -> Outcome:
     """Energy, forces and stress of a cell, its ions relaxed first if asked.
 
@@ -65,13 +79,14 @@ def evaluate_cell(crystal: Crystal, engine: Engine, relax: bool, fmax: float = D
     """
     atoms = crystal.to_atoms()
     atoms.calc = engine.calculator()
-    try:
-        steps, converged = _relax(atoms, fmax) if relax else (0, True)
-        energy = float(atoms.get_potential_energy(force_consistent="free_energy" in atoms.calc.implemented_properties))
-        forces = np.array(atoms.get_forces(apply_constraint=False))
-        stress = np.array(atoms.get_stress(voigt=False, apply_constraint=False))
-    except Exception as error:  # engines fail in their own ways
-        raise InputError(f"the engine {engine.name} failed: {' '.join(str(error).split())}", crystal.name) from None
+    with scratch_folder(atoms.calc):
+        try:
+            steps, converged = _relax(atoms, fmax) if relax else (0, True)
+            energy = float(atoms.get_potential_energy(force_consistent="free_energy" in atoms.calc.implemented_properties))
+            forces = np.array(atoms.get_forces(apply_constraint=False))
+            stress = np.array(atoms.get_stress(voigt=False, apply_constraint=False))
+        except Exception as error:  # engines fail in their own ways
+            raise InputError(f"the engine {engine.name} failed: {' '.join(str(error).split())}", crystal.name) from None
     if not (np.isfinite(stress).all() and np.isfinite(forces).all() and np.isfinite(energy)):
         raise InputError(f"the engine {engine.name} returned numbers that are not finite", crystal.name)
     moved = Crystal.from_atoms(atoms, crystal.name, crystal.source)

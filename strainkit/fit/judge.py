@@ -11,7 +11,7 @@ from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
 from strainkit.run.plan import Plan
 from strainkit.tensors.prestress import stress_strain_coefficients
-from strainkit.tensors.sixvectors import from_mandel
+from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt
 
 __all__ = ["judge"]
 
@@ -73,7 +73,7 @@ def _mechanical(plan: Plan, regression: Regression) -> list[Finding]:
         )
         return findings
     largest = float(np.abs(np.linalg.eigvalsh(stress)).max())
-    softest = float(np.diag(stiffness).min())
+    softest = float(np.diag(stiffness_to_voigt(stiffness)).min())
     if softest > 0 and largest > NOTABLE_STRESS * softest:
         findings.append(
             finding(

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from collections import Counter
 
-import numpy as np
-
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.symmetry import Symmetry
@@ -109,11 +107,9 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         paragraph(f"6x6 in GPa, frame {chosen.name}: {chosen.axes}", "  "),
         columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
         "",
-        "  stress noise "
-        + ("unknown" if noise is None else f"{noise:.3g} GPa ({source})")
-        + "; reference stress "
-        + " ".join(plain(x) for x in np.asarray(stress, dtype=float))
-        + " GPa",
+        f"  stress noise      {'unknown' if noise is None else f'{noise:.3g} GPa, {source}'}",
+        f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
+        "",
         paragraph(BLIND_SPOT, "  "),
         "",
         findings_text(fit.findings),

@@ -1,0 +1,202 @@
+"""A user's mistakes: one clear message, the documented exit code, nothing overwritten, never a traceback."""
+
+from __future__ import annotations
+
+import json
+
+import pytest
+from support.files import DRY_ICE, SILICON, write
+
+
+@pytest.fixture
+def cell(tmp_path):
+    return write(tmp_path, "POSCAR", SILICON)
+
+
+@pytest.fixture
+def run(cli, cell, tmp_path):
+    folder = tmp_path / "run"
+    assert cli("prepare", cell, "--out", folder).code == 0
+    return folder
+
+
+def snapshot(folder):
+    return {p.relative_to(folder): p.read_bytes() for p in sorted(folder.rglob("*")) if p.is_file()}
+
+
+@pytest.mark.parametrize(
+    ("content", "code", "message"),
+    [
+        (None, 3, "No such file"),
+        ("", 3, "the file is empty"),
+        ("data_x\n_cell_length_a", 3, "not a readable CIF"),
+        (DRY_ICE.replace("0.1185 1", "0.1185 0.5"), 3, "partly occupied sites: O1 (0.5)"),
+    ],
+)
+@pytest.mark.parametrize("command", ["inspect", "prepare", "relax"])
+def test_unusable_cell(cli, tmp_path, content, code, message, command):
+    path = tmp_path / "cell.cif"
+    if content is not None:
+        path.write_text(content)
+    extra = {"inspect": [], "prepare": ["--out", tmp_path / "run"], "relax": ["--engine", "lj", "--out", tmp_path / "r.cif"]}
+    result = cli(command, path, *extra[command])
+    assert result.code == code
+    assert message in result.err
+    assert str(path) in result.err
+    assert result.out == ""
+    assert not (tmp_path / "run").exists()
+
+
+def test_a_folder_in_place_of_a_file(cli, tmp_path):
+    result = cli("prepare", tmp_path, "--out", tmp_path / "run")
+    assert result.code == 3
+    assert "a folder, not a structure file" in result.err
+
+
+def test_prepare_without_a_place(cli, cell):
+    result = cli("prepare", cell)
+    assert result.code == 2
+    assert "--out" in result.err
+
+
+def test_dry_run_writes_nothing(cli, cell, tmp_path):
+    result = cli("prepare", cell, "--out", tmp_path / "run", "--dry-run", "--json")
+    assert result.code == 0
+    assert result.json["strained_jobs"] == 2
+    assert not (tmp_path / "run").exists()
+
+
+def test_same_set_again_changes_nothing(cli, cell, run):
+    before = snapshot(run)
+    result = cli("prepare", cell, "--out", run)
+    assert result.code == 0
+    assert "this very set already" in result.err
+    assert snapshot(run) == before
+
+
+def test_another_set_is_refused_and_with_force_moved_aside(cli, cell, run):
+    before = snapshot(run)
+    result = cli("prepare", cell, "--out", run, "--magnitude", 0.5)
+    assert result.code == 3
+    assert "another set" in result.err
+    assert snapshot(run) == before
+    result = cli("prepare", cell, "--out", run, "--magnitude", 0.5, "--force")
+    assert result.code == 0
+    assert snapshot(run.with_name("run.old-1")) == before
+    assert (run / "jobs" / "s1-plus-0.5").is_dir()
+
+
+@pytest.mark.parametrize("force", [[], ["--force"]])
+def test_a_place_that_is_something_else_is_never_touched(cli, cell, tmp_path, force):
+    mine = tmp_path / "mine"
+    mine.mkdir()
+    (mine / "thesis.txt").write_text("years of work")
+    assert cli("prepare", cell, "--out", mine, *force).code == 3
+    assert snapshot(mine) == {(mine / "thesis.txt").relative_to(mine): b"years of work"}
+    target = write(tmp_path, "file", "a file")
+    assert cli("prepare", cell, "--out", target, *force).code == 3
+    assert target.read_text() == "a file"
+
+
+@pytest.mark.parametrize("magnitude", ["0", "-1", "50", "nan"])
+def test_impossible_magnitude(cli, cell, tmp_path, magnitude):
+    result = cli("prepare", cell, "--out", tmp_path / "run", "--magnitude", magnitude)
+    assert result.code == 2
+    assert "out of range" in result.err
+    assert not (tmp_path / "run").exists()
+
+
+def test_unknown_words(cli, cell, run, tmp_path):
+    assert cli("prepare", cell, "--out", tmp_path / "x", "--format", "nonsense").code == 2
+    assert cli("evaluate", run, "--engine", "nonsense").code == 2
+    assert cli("evaluate", run, "--engine", "no_module:Thing").code == 3
+    assert cli("relax", cell, "--engine", "tersoff", "--out", tmp_path / "x.unknown").code == 2
+    assert cli("nonsense").code == 2
+    assert cli("fit", run, "--frame", "lab").code == 2
+    assert cli("fit", run, "--drop", "nothing").code == 2
+    assert cli("fit", run, "--noise", "-1").code == 2
+
+
+def test_relax_does_not_overwrite(cli, cell, tmp_path):
+    out = write(tmp_path, "out.cif", "precious")
+    assert cli("relax", cell, "--engine", "tersoff", "--out", out).code == 3
+    assert out.read_text() == "precious"
+    assert cli("relax", cell, "--engine", "tersoff", "--out", out, "--force").code == 0
+    assert "data_" in out.read_text()
+
+
+@pytest.mark.parametrize("command", ["progress", "collect", "fit", "derive"])
+def test_not_a_run_folder(cli, tmp_path, command):
+    result = cli(command, tmp_path)
+    assert result.code == 3
+    assert "not a run folder" in result.err
+
+
+@pytest.mark.parametrize(
+    "damage",
+    ["", "{", '{"schema": "other/1"}', '{"schema": "strainkit/strain-set/9"}', '{"schema": "strainkit/strain-set/1"}', "[]"],
+)
+def test_damaged_manifest(cli, run, damage):
+    (run / "strain-set.json").write_text(damage)
+    result = cli("collect", run)
+    assert result.code == 3
+    assert "strain-set.json" in result.err
+
+
+def test_a_label_that_leaves_the_run_folder_is_refused(cli, run):
+    data = json.loads((run / "strain-set.json").read_text())
+    data["jobs"][1]["label"] = "../../elsewhere"
+    (run / "strain-set.json").write_text(json.dumps(data))
+    result = cli("collect", run)
+    assert result.code == 3
+    assert "not a plain file name" in result.err
+
+
+def test_before_anything_came_back(cli, run):
+    assert cli("progress", run).code == 4
+    assert cli("fit", run).code == 3
+    result = cli("collect", run, "--json")
+    assert result.code == 4
+    assert result.json["usable"] == 0
+    assert {r["status"] for r in result.json["records"]} == {"missing"}
+    result = cli("fit", run)
+    assert result.code == 5
+    assert "none of the 2 strained jobs is usable" in result.err
+
+
+def test_partial_set_is_fitted_as_far_as_it_goes(cli, run):
+    assert cli("evaluate", run, "--engine", "tersoff", "--workers", 1).code == 0
+    (run / "jobs" / "s1-minus-1" / "returned.extxyz").unlink()
+    assert cli("collect", run).code == 4
+    result = cli("fit", run, "--json")
+    assert result.code in (4, 5)
+    assert (run / "stiffness.json").exists() == (result.code == 4)
+
+
+def test_results_go_to_stdout_and_chatter_to_stderr(cli, cell, run):
+    for arguments in (
+        ["inspect", cell],
+        ["evaluate", run, "--engine", "tersoff", "--workers", 1],
+        ["progress", run],
+        ["collect", run],
+        ["fit", run],
+        ["derive", run],
+    ):
+        result = cli(*arguments, "--json")
+        assert result.code == 0, result.err
+        assert result.json["schema"].startswith("strainkit/")
+        quiet = cli(*arguments, "--quiet")
+        assert quiet.code == 0
+        assert quiet.err == ""
+        assert quiet.out.strip()
+        assert max(map(len, quiet.out.splitlines())) <= 80
+
+
+def test_json_never_holds_nan(cli, run):
+    cli("evaluate", run, "--engine", "tersoff", "--workers", 1)
+    (run / "jobs" / "reference" / "returned.extxyz").unlink()
+    cli("collect", run)
+    result = cli("fit", run, "--json")
+    assert "NaN" not in result.out
+    assert result.json["residual_stress_GPa"] == [None] * 6
+    assert "reference-stress-unknown" in [f["code"] for f in result.json["findings"]]
