@@ -17,6 +17,13 @@ def prepare(
         list[float] | None, typer.Option(help="Largest principal strain, percent; repeatable. [default: 1.0]")
     ] = None,
     ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
+    atoms: Annotated[
+        Literal["auto", "rigid", "affine"],
+        typer.Option(help="Molecules moved as bodies, atoms moved with the lattice, or as the crystal asks."),
+    ] = "auto",
+    symmetrize: Annotated[
+        bool, typer.Option("--symmetrize", help="Move atoms and cell onto the group found at --symprec first.")
+    ] = False,
     format: Annotated[
         list[str] | None, typer.Option(help="Cell format; repeatable: poscar, cif, extxyz. [default: poscar, cif]")
     ] = None,
@@ -38,7 +45,8 @@ def prepare(
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     formats = list(format or DEFAULT_FORMATS)
     cell_formats(formats)
-    plan = plan_run(read_crystal(cell, read_as), [m / 100.0 for m in magnitude or [1.0]], ions, symprec)
+    sizes = [m / 100.0 for m in magnitude or [1.0]]
+    plan = plan_run(read_crystal(cell, read_as), sizes, ions, symprec, atoms, symmetrize)
     if out is not None and not dry_run:
         plan, what = write_run(plan, out, formats, force)
         note(f"{out}: {what}", quiet)

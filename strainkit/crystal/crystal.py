@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -15,7 +16,7 @@ from strainkit.tensors.arrays import FloatArray, IntArray
 if TYPE_CHECKING:
     from ase import Atoms
 
-__all__ = ["Crystal", "formula_of"]
+__all__ = ["Crystal", "formula_of", "lengths_angles"]
 
 
 def formula_of(symbols: list[str]) -> str:
@@ -24,6 +25,13 @@ def formula_of(symbols: list[str]) -> str:
     first = [s for s in ("C", "H") if s in counts] if "C" in counts else []
     order = first + sorted(s for s in counts if s not in first)
     return "".join(f"{s}{counts[s] if counts[s] > 1 else ''}" for s in order)
+
+
+def lengths_angles(lattice: FloatArray) -> tuple[float, ...]:
+    """a, b, c in angstrom and alpha, beta, gamma in degrees of a lattice (3, 3) with vectors as rows."""
+    lengths = np.linalg.norm(lattice, axis=1)
+    cosines = [lattice[i] @ lattice[j] / lengths[i] / lengths[j] for i, j in ((1, 2), (0, 2), (0, 1))]
+    return (*map(float, lengths), *map(float, np.degrees(np.arccos(cosines))))
 
 
 def _refuse_flat(lattice: FloatArray, atoms: int, where: str) -> None:
@@ -94,6 +102,14 @@ class Crystal:
 
         return [chemical_symbols[number] for number in self.numbers]
 
+    def sites(self, atoms: Iterable[int], most: int = 6) -> str:
+        """Names of some atoms for messages: site labels where the file has them, else element and number in the file."""
+        symbols = self.symbols
+        names = [f"{symbols[i]} (atom {i + 1})" if self.labels[i] == symbols[i] else self.labels[i] for i in atoms]
+        distinct = list(dict.fromkeys(names))
+        rest = f" and {len(distinct) - most} more" if len(distinct) > most else ""
+        return ", ".join(distinct[:most]) + rest
+
     @property
     def formula(self) -> str:
         """Formula of the whole cell in Hill order."""
@@ -116,9 +132,7 @@ class Crystal:
     @property
     def cell_lengths_angles(self) -> tuple[float, ...]:
         """a, b, c in angstrom and alpha, beta, gamma in degrees."""
-        lengths = np.linalg.norm(self.lattice, axis=1)
-        cosines = [self.lattice[i] @ self.lattice[j] / lengths[i] / lengths[j] for i, j in ((1, 2), (0, 2), (0, 1))]
-        return (*map(float, lengths), *map(float, np.degrees(np.arccos(cosines))))
+        return lengths_angles(self.lattice)
 
     def deformed(self, gradient: FloatArray) -> Crystal:
         """The same atoms, moved affinely, in the lattice L F^T for a deformation gradient F (3, 3)."""

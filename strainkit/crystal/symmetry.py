@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 
@@ -15,7 +16,7 @@ from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_matrices
 
-__all__ = ["DEFAULT_SYMPREC", "LAUE_CLASSES", "Symmetry", "find_symmetry", "tolerance_ladder"]
+__all__ = ["DEFAULT_SYMPREC", "LAUE_CLASSES", "Symmetry", "find_symmetry", "mean_lattice", "operations", "tolerance_ladder"]
 
 #: default distance tolerance of the symmetry search, angstrom
 DEFAULT_SYMPREC = 1e-3
@@ -112,25 +113,11 @@ def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetr
     InputError
         When spglib finds no group (atoms on top of each other, a tolerance larger than the crystal).
     """
-    import spglib
-
-    kinds = _species(crystal)
-    cell = (crystal.lattice.tolist(), crystal.positions.tolist(), kinds.tolist())
-    where = crystal.source or crystal.name
-    try:
-        with _spglib_raises():
-            data = spglib.get_symmetry_dataset(cell, symprec=symprec)
-            if data is None:
-                raise spglib.SpglibError("no symmetry found")
-            standard = spglib.get_symmetry_from_database(data.hall_number) or {}
-    except spglib.SpglibError as error:
-        raise InputError(
-            f"no symmetry found at a tolerance of {symprec:g} A ({error})", where, "Try another --symprec, check the atoms."
-        ) from None
+    data, kinds = _dataset(crystal, symprec)
+    standard = _standard_operations(data.hall_number)
     point_group = data.pointgroup.strip()
     laue_class, system = next((lc, sy) for lc, (sy, groups) in LAUE_CLASSES.items() if point_group in groups)
-    operations = np.unique(standard["rotations"], axis=0)
-    lattice, rotations = _cartesian(np.linalg.inv(data.transformation_matrix).T @ crystal.lattice, operations)
+    lattice, rotations = _cartesian(np.linalg.inv(data.transformation_matrix).T @ crystal.lattice, standard)
     return Symmetry(
         space_group=data.international,
         number=int(data.number),
@@ -141,16 +128,94 @@ def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetr
         standard_lattice=lattice,
         transformation=data.transformation_matrix,
         tolerance=symprec,
-        deviation=_deviation(crystal, kinds, data.rotations, data.translations),
+        deviation=_deviation(crystal, kinds, *_exact_operations(data)),
     )
+
+
+def operations(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> tuple[IntArray, FloatArray, IntArray]:
+    """Symmetry operations in the basis of the cell as given, the lattice translations of a supercell among them.
+
+    Returns
+    -------
+    rotations : (m, 3, 3)
+        x' = W x + w on columns of fractional coordinates.
+    translations : (m, 3)
+    kinds : (n,)
+        Integer of every atom that the operations preserve (element and magnetic moment).
+    """
+    data, kinds = _dataset(crystal, symprec)
+    return (*_exact_operations(data), kinds)
+
+
+def _dataset(crystal: Crystal, symprec: float) -> tuple[Any, IntArray]:
+    """spglib's dataset of a crystal, and the kinds of its atoms."""
+    import spglib
+
+    kinds = _species(crystal)
+    cell = (crystal.lattice.tolist(), crystal.positions.tolist(), kinds.tolist())
+    where = crystal.source or crystal.name
+    try:
+        with _spglib_raises():
+            data = spglib.get_symmetry_dataset(cell, symprec=symprec)
+            if data is None:
+                raise spglib.SpglibError("no symmetry found")
+    except spglib.SpglibError as error:
+        raise InputError(
+            f"no symmetry found at a tolerance of {symprec:g} A ({error})", where, "Try another --symprec, check the atoms."
+        ) from None
+    return data, kinds
+
+
+def _exact_operations(data: Any) -> tuple[IntArray, FloatArray]:
+    """The tabulated operations brought into the given cell: a closed group, which spglib's own list need not be for supercells.
+
+    With x_standard = P x + p: W = P^-1 R P and w = P^-1 (R p + t + v - p), v running over the standard cell's lattice
+    modulo that of the given one. Operations that do not map the given lattice onto itself are left out.
+    """
+    import spglib
+
+    with _spglib_raises():
+        table = spglib.get_symmetry_from_database(data.hall_number) or {}
+    to_standard = np.round(12.0 * data.transformation_matrix) / 12.0
+    if np.abs(to_standard - data.transformation_matrix).max() > 1e-4:
+        return np.array(data.rotations), np.array(data.translations)
+    back, origin = np.linalg.inv(to_standard), data.origin_shift
+    span = np.arange(int(np.ceil(np.abs(to_standard).sum(axis=1).max())) + 1)
+    steps = np.stack(np.meshgrid(span, span, span, indexing="ij"), axis=-1).reshape(-1, 3) @ back.T % 1.0
+    steps = np.unique(np.round(steps, 6) % 1.0, axis=0)
+    rotations, translations = [], []
+    for rotation, translation in zip(table["rotations"], table["translations"], strict=True):
+        mine = back @ rotation @ to_standard
+        if np.abs(mine - np.round(mine)).max() > 1e-6:
+            continue
+        start = back @ (rotation @ origin + translation - origin)
+        for step in steps:
+            rotations.append(np.round(mine).astype(np.int64))
+            translations.append((start + step) % 1.0)
+    return np.array(rotations), np.array(translations)
+
+
+def _standard_operations(hall_number: int) -> IntArray:
+    """Distinct rotations (m, 3, 3) of a space group in its standard cell."""
+    import spglib
+
+    with _spglib_raises():
+        standard = spglib.get_symmetry_from_database(hall_number) or {}
+    return np.unique(standard["rotations"], axis=0)
+
+
+def mean_lattice(lattice: FloatArray, rotations: IntArray) -> FloatArray:
+    """Lattice (3, 3) whose metric is the mean over a group (m, 3, 3), reached from `lattice` without a rotation."""
+    metric = np.mean([w.T @ (lattice @ lattice.T) @ w for w in rotations.astype(float)], axis=0)
+    inverse = np.linalg.inv(lattice)
+    values, vectors = np.linalg.eigh(inverse @ metric @ inverse.T)
+    mean: FloatArray = lattice @ (vectors * np.sqrt(values)) @ vectors.T
+    return mean
 
 
 def _cartesian(lattice: FloatArray, operations: IntArray) -> tuple[FloatArray, FloatArray]:
     """Lattice with the group's exact metric, and the group's distinct proper rotations, both in the given frame."""
-    metric = np.mean([w.T @ (lattice @ lattice.T) @ w for w in operations.astype(float)], axis=0)
-    inverse = np.linalg.inv(lattice)
-    values, vectors = np.linalg.eigh(inverse @ metric @ inverse.T)
-    exact = lattice @ (vectors * np.sqrt(values)) @ vectors.T
+    exact = mean_lattice(lattice, operations)
     columns = exact.T
     cartesian = columns @ operations @ np.linalg.inv(columns)
     proper = cartesian * np.round(np.linalg.det(cartesian))[:, None, None]
@@ -165,17 +230,16 @@ def _deviation(crystal: Crystal, kinds: IntArray, rotations: IntArray, translati
     """Largest distance from a symmetry image of an atom to the nearest atom of its kind, angstrom."""
     from scipy.spatial import cKDTree
 
-    worst = 0.0
+    ways = np.zeros((len(rotations), len(kinds), 3))
     for kind in np.unique(kinds):
         mine = crystal.positions[kinds == kind] % 1.0 % 1.0
         tree = cKDTree(mine, boxsize=1.0)
-        images = (np.einsum("gij,nj->gni", rotations, mine) + translations[:, None, :]).reshape(-1, 3) % 1.0 % 1.0
+        images = (np.einsum("gij,nj->gni", rotations, mine) + translations[:, None, :]) % 1.0 % 1.0
         # the nearest in fractional space can differ from the nearest in real space only when atoms nearly coincide
-        _, nearest = tree.query(images)
-        away = images - mine[nearest]
-        away -= np.round(away)
-        worst = max(worst, float(np.linalg.norm(away @ crystal.lattice, axis=1).max()))
-    return worst
+        away = images - mine[tree.query(images)[1]]
+        ways[:, kinds == kind] = away - np.round(away)
+    ways -= ways.mean(axis=1, keepdims=True)  # spglib places an operation only within its tolerance
+    return float(np.linalg.norm(ways @ crystal.lattice, axis=-1).max())
 
 
 def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float, str, str]], list[Finding]]:
@@ -187,15 +251,19 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float
         A rung where the search fails is left out.
     findings : list of Finding
     """
-    rungs: list[tuple[float, str, str]] = []
+    found = []
     for factor in (0.1, 1.0, 10.0):
-        try:
-            found = find_symmetry(crystal, symprec * factor)
-        except InputError:
-            continue
-        rungs.append((symprec * factor, found.space_group, found.laue_class))
+        with suppress(InputError):
+            found.append(find_symmetry(crystal, symprec * factor))
+    rungs = [(symmetry.tolerance, symmetry.space_group, symmetry.laue_class) for symmetry in found]
     findings = []
     if len({group for _, group, _ in rungs}) > 1:
         text = ", ".join(f"{group} at {tolerance:g} A" for tolerance, group, _ in rungs)
-        findings.append(finding("symmetry-depends-on-tolerance", crystal.source or crystal.name, text))
+        loosest = found[-1]
+        offer = (
+            f"; if {loosest.space_group} is meant (atoms are up to {loosest.deviation:.2g} A off it), "
+            f"prepare --symmetrize --symprec {loosest.tolerance:g} moves them onto it"
+        )
+        where = crystal.source or crystal.name
+        findings.append(finding("symmetry-depends-on-tolerance", where, text + offer))
     return rungs, findings

@@ -147,7 +147,7 @@ def _one_thread() -> Iterator[None]:
 def _start(run: Path, plan: Plan, job: StrainJob) -> Crystal:
     """The cell to begin with: the plan's, or the last positions of an attempt that did not converge."""
     path = run / job_folder(job.label) / RETURNED
-    cell = plan.crystal.deformed(job.gradient)
+    cell = plan.starting_cell(job)
     if not path.is_file():
         return cell
     left = read_crystal(path, "extxyz")

@@ -8,15 +8,19 @@ import tempfile
 from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path
+from typing import Literal
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import FRAMES, crystal_frame
+from strainkit.crystal.judge import judge_cell, judge_setting
+from strainkit.crystal.molecules import Molecules
+from strainkit.crystal.symmetrize import symmetrize as symmetrized
 from strainkit.crystal.symmetry import DEFAULT_SYMPREC, find_symmetry, tolerance_ladder
 from strainkit.design.strainset import StrainJob, choose_strains, expect
-from strainkit.errors import InputError
+from strainkit.errors import InputError, UsageError
 from strainkit.prepare.writers import CellFormat, cell_formats
 from strainkit.run.files import checksum
-from strainkit.run.plan import MANIFEST, Ions, Plan, job_folder, load_plan
+from strainkit.run.plan import MANIFEST, AtomMoves, Ions, Plan, job_folder, load_plan
 from strainkit.tensors.constants import constant_basis
 
 __all__ = ["DEFAULT_FORMATS", "plan_run", "write_run"]
@@ -29,6 +33,8 @@ def plan_run(
     magnitudes: Sequence[float] = (0.01,),
     ions: Ions = "relaxed",
     symprec: float = DEFAULT_SYMPREC,
+    atoms: AtomMoves | Literal["auto"] = "auto",
+    symmetrize: bool = False,
 ) -> Plan:
     """Choose the strained jobs of a crystal; nothing is written.
 
@@ -41,7 +47,24 @@ def plan_run(
     ions : "relaxed" or "clamped"
     symprec : float
         Distance tolerance of the symmetry search, angstrom.
+    atoms : "auto", "rigid" or "affine"
+        How the atoms of the starting cells move: molecules as bodies, their centres of mass following the strain, or every
+        atom with the lattice. "auto" is rigid when every atom belongs to a molecule and the ions are relaxed.
+    symmetrize : bool
+        Move atoms and cell onto the space group found at the tolerance first.
+
+    Raises
+    ------
+    InputError
+        A cell that cannot be computed (atoms on top of each other), no symmetry, rigid without molecules.
+    UsageError
+        Rigid molecules with clamped ions, strain magnitudes out of range.
     """
+    molecules, problems = judge_cell(crystal)
+    if symmetrize:
+        moved = symmetrized(crystal, symprec)
+        crystal, problems = moved.crystal, [*problems, moved.finding]
+    moves = _atom_moves(atoms, ions, molecules, crystal)
     symmetry = find_symmetry(crystal, symprec)
     frames = {name: crystal_frame(name, symmetry) for name in FRAMES}
     jobs = choose_strains(symmetry, magnitudes)
@@ -56,8 +79,25 @@ def plan_run(
         ions=ions,
         aim="fewest",
         expectation=expectation,
-        findings=(*crystal.remarks, *changes, *doubts),
+        findings=(*crystal.remarks, *problems, *judge_setting(crystal, symmetry), *changes, *doubts),
+        atoms=moves,
+        molecules=molecules,
     )
+
+
+def _atom_moves(atoms: AtomMoves | Literal["auto"], ions: Ions, molecules: Molecules, crystal: Crystal) -> AtomMoves:
+    """The choice between rigid molecules and affine atoms."""
+    if atoms == "auto":
+        return "rigid" if molecules.molecular and ions == "relaxed" else "affine"
+    if atoms == "rigid" and ions == "clamped":
+        raise UsageError(
+            "rigid molecules with clamped ions", "--atoms", "Clamped ions move with the lattice: use --atoms affine or auto."
+        )
+    if atoms == "rigid" and not molecules.movable.any():
+        raise InputError(
+            "there are no molecules to move as bodies", crystal.source or crystal.name, "Use --atoms affine or auto."
+        )
+    return atoms
 
 
 def write_run(plan: Plan, out: Path, formats: Sequence[str] = DEFAULT_FORMATS, force: bool = False) -> tuple[Plan, str]:
@@ -121,7 +161,7 @@ def _files_of(plan: Plan, formats: dict[str, CellFormat]) -> dict[str, str]:
     """Relative path -> text of every file but the manifest."""
     files: dict[str, str] = {}
     for job in plan.jobs:
-        cell = plan.crystal.deformed(job.gradient)
+        cell = plan.starting_cell(job)
         title = _title(plan, job)
         for written in formats.values():
             files[f"{job_folder(job.label)}/{written.file_name}"] = written.write(cell, title)

@@ -6,6 +6,7 @@ from collections import Counter
 
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.derive.averages import AVERAGES, SCHEMES, Averages
 from strainkit.fit.result import Fit
@@ -14,7 +15,7 @@ from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
 from strainkit.tensors.sixvectors import COMPONENTS, strain_to_voigt, stress_to_voigt
 
-__all__ = ["BLIND_SPOT", "averages_text", "cell_text", "fit_text", "plan_text", "table_text"]
+__all__ = ["BLIND_SPOT", "averages_text", "cell_text", "fit_text", "molecules_text", "plan_text", "table_text"]
 
 #: what every fit says about its error bars
 BLIND_SPOT = (
@@ -22,10 +23,11 @@ BLIND_SPOT = (
     "functional, ions that are not fully relaxed."
 )
 
+_MOVES = {"rigid": "molecules moved as bodies", "affine": "atoms moved with the lattice"}
 _NAMES = {"bulk_GPa": "bulk K", "shear_GPa": "shear G", "young_GPa": "Young E", "poisson": "Poisson nu"}
 
 
-def cell_text(crystal: Crystal, symmetry: Symmetry) -> str:
+def cell_text(crystal: Crystal, symmetry: Symmetry, molecules: Molecules | None = None) -> str:
     """What the cell is."""
     a, b, c, alpha, beta, gamma = crystal.cell_lengths_angles
     lines = [
@@ -35,7 +37,19 @@ def cell_text(crystal: Crystal, symmetry: Symmetry) -> str:
         f"  symmetry  {symmetry.space_group} (No. {symmetry.number}), Laue class {symmetry.laue_class}, "
         f"within {symmetry.tolerance:g} A",
     ]
+    if molecules is not None:
+        lines.append(paragraph(molecules_text(molecules), "  "))
     return "\n".join(lines)
+
+
+def molecules_text(molecules: Molecules) -> str:
+    """The molecules of a cell, and what else its bonds make, on one line."""
+    parts: dict[str, list[str]] = {}
+    for kind, formula, count in molecules.counts:
+        parts.setdefault(kind, []).append(f"{count} {formula}")
+    found = f"molecules {', '.join(parts.pop('molecule'))}" if "molecule" in parts else "no molecules"
+    others = [f"{kind if kind == 'unbonded' else kind + 's'} {', '.join(items)}" for kind, items in parts.items()]
+    return "; ".join([found, *others])
 
 
 def plan_text(plan: Plan, jobs: bool = True) -> str:
@@ -43,11 +57,11 @@ def plan_text(plan: Plan, jobs: bool = True) -> str:
     expected = plan.expectation
     names = ", ".join(plan.basis.names)
     lines = [
-        cell_text(plan.crystal, plan.symmetry),
+        cell_text(plan.crystal, plan.symmetry, plan.molecules),
         paragraph(f"IEEE axes: {plan.frames['ieee'].axes}", "  "),
         paragraph(f"{len(plan.basis.names)} independent constants: {names}", "  "),
         "",
-        heading(f"{len(plan.jobs) - 1} strained jobs and the reference, ions {plan.ions}"),
+        heading(f"{len(plan.jobs) - 1} strained jobs and the reference, ions {plan.ions}, {_MOVES[plan.atoms]}"),
     ]
     if jobs:
         rows = [

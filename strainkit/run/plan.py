@@ -6,13 +6,14 @@ import re
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any, Literal, get_args
 
 import numpy as np
 
 from strainkit import __version__
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import FRAMES, Frame
+from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.strainset import Expectation, StrainJob
 from strainkit.errors import InputError
@@ -21,12 +22,13 @@ from strainkit.run.files import atomic_write, dump_json, load_json
 from strainkit.tensors.constants import ConstantBasis, constant_basis
 from strainkit.tensors.sixvectors import strain_to_voigt
 
-__all__ = ["MANIFEST", "Ions", "Plan", "job_folder", "load_plan"]
+__all__ = ["MANIFEST", "AtomMoves", "Ions", "Plan", "job_folder", "load_plan"]
 
 MANIFEST = "strain-set.json"
 _KIND = "strainkit/strain-set"
 
 Ions = Literal["relaxed", "clamped"]
+AtomMoves = Literal["rigid", "affine"]
 
 
 @dataclass(frozen=True)
@@ -51,6 +53,10 @@ class Plan:
         Doubts about the cell and the set.
     files : dict
         Relative path -> SHA-256 of every file that prepare wrote.
+    atoms : "rigid" or "affine"
+        Whether the starting cells move molecules as bodies or every atom with the lattice.
+    molecules : Molecules or None
+        What the bonds of the reference cell make of it; None in a manifest that does not say.
     """
 
     crystal: Crystal
@@ -62,6 +68,18 @@ class Plan:
     expectation: Expectation
     findings: tuple[Finding, ...] = ()
     files: dict[str, str] = field(default_factory=dict)
+    atoms: AtomMoves = "affine"
+    molecules: Molecules | None = None
+
+    def __post_init__(self) -> None:
+        if self.atoms not in get_args(AtomMoves) or (self.atoms == "rigid" and self.molecules is None):
+            raise ValueError(f"atoms {self.atoms!r} without molecules to move")
+
+    def starting_cell(self, job: StrainJob) -> Crystal:
+        """The cell that a job starts from: its lattice is the planned one, its atoms are moved as `atoms` says."""
+        if self.atoms == "rigid" and self.molecules is not None:
+            return self.molecules.deformed(self.crystal, job.gradient)
+        return self.crystal.deformed(job.gradient)
 
     @cached_property
     def basis(self) -> ConstantBasis:
@@ -84,6 +102,8 @@ class Plan:
             "strained_jobs": len(self.jobs) - 1,
             "aim": self.aim,
             "ions": self.ions,
+            "atoms": self.atoms,
+            "molecules": None if self.molecules is None else self.molecules.to_dict(),
             "spare_degrees_of_freedom": expected.spare,
             "expected_standard_error_GPa": expected.standard_errors,
             "assumed_noise_GPa": expected.noise,
@@ -127,7 +147,7 @@ class Plan:
         mine, theirs = self.crystal, other.crystal
         return (
             [job.label for job in self.jobs] == [job.label for job in other.jobs]
-            and self.ions == other.ions
+            and (self.ions, self.atoms) == (other.ions, other.atoms)
             and np.array_equal(mine.numbers, theirs.numbers)
             and np.allclose(mine.lattice, theirs.lattice, rtol=0, atol=1e-10)
             and np.allclose(mine.positions, theirs.positions, rtol=0, atol=1e-10)
@@ -211,6 +231,8 @@ def _plan_from(data: dict[str, Any]) -> Plan:
         ),
         findings=tuple(Finding(**f) for f in data["findings"]),
         files=dict(data["files"]),
+        atoms=data.get("atoms", "affine"),
+        molecules=Molecules.from_dict(data["molecules"]) if data.get("molecules") else None,
     )
 
 
