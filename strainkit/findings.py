@@ -22,6 +22,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "no-symmetry-in-file": ("warning", "the CIF names no space group and lists no operations"),
     "symmetry-depends-on-tolerance": ("warning", "ten times more or less tolerance gives another space group"),
     # the strain set
+    "target-error": ("info", "how the wanted standard error is met"),
     "few-spare-degrees": ("warning", "fewer than three spare degrees of freedom to estimate the noise from"),
     # what came back
     "unreadable-output": ("error", "a job's output cannot be parsed"),

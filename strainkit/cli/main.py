@@ -6,6 +6,9 @@ import os
 import sys
 from typing import Annotated
 
+# the matrices here are small: threads of the linear algebra library only get in each other's way
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 import typer
 
 from strainkit import __version__

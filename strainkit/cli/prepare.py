@@ -9,6 +9,12 @@ import typer
 
 from strainkit.cli.options import Cell, Json, Quiet, ReadAs, Symprec, deliver, note
 
+Aim = Annotated[
+    Literal["fewest", "symmetric", "sharpest"],
+    typer.Option(help="Fewest jobs, most symmetric (cheapest) jobs, or smallest errors for --jobs N."),
+]
+Noise = Annotated[float, typer.Option(help="Stress noise to expect, GPa (standard deviation of one component).")]
+
 
 def prepare(
     cell: Cell,
@@ -16,6 +22,13 @@ def prepare(
     magnitude: Annotated[
         list[float] | None, typer.Option(help="Largest principal strain, percent; repeatable. [default: 1.0]")
     ] = None,
+    aim: Aim = "fewest",
+    jobs: Annotated[int | None, typer.Option(help="Most strained jobs, with --aim sharpest.", min=1)] = None,
+    target_error: Annotated[
+        float | None, typer.Option(help="Standard error wanted for the worst constant, GPa: sets magnitude or jobs.")
+    ] = None,
+    ceiling: Annotated[float, typer.Option(help="Largest strain that --target-error may choose, percent.")] = 2.0,
+    noise: Noise = 0.01,
     ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
     format: Annotated[
         list[str] | None, typer.Option(help="Cell format; repeatable: poscar, cif, extxyz. [default: poscar, cif]")
@@ -29,6 +42,7 @@ def prepare(
 ) -> None:
     """Strained cells for one relaxed crystal: the fewest jobs that fix every constant."""
     from strainkit.crystal.read import read_crystal
+    from strainkit.design.strainset import Wish
     from strainkit.errors import UsageError
     from strainkit.prepare.runfolder import DEFAULT_FORMATS, plan_run, write_run
     from strainkit.prepare.writers import cell_formats
@@ -38,7 +52,9 @@ def prepare(
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     formats = list(format or DEFAULT_FORMATS)
     cell_formats(formats)
-    plan = plan_run(read_crystal(cell, read_as), [m / 100.0 for m in magnitude or [1.0]], ions, symprec)
+    magnitudes = tuple(m / 100.0 for m in magnitude or ())
+    wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
+    plan = plan_run(read_crystal(cell, read_as), wish, ions, symprec)
     if out is not None and not dry_run:
         plan, what = write_run(plan, out, formats, force)
         note(f"{out}: {what}", quiet)

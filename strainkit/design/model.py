@@ -14,66 +14,25 @@ the space that the job's own residual symmetry allows; the others are exact zero
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Literal
 
 import numpy as np
 
+from strainkit.design.shapes import SAME_SHAPE, Shape, largest_principal_of
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_vectors
 from strainkit.tensors.leastsquares import factorise
 from strainkit.tensors.rotations import rotation6
-from strainkit.tensors.sixvectors import from_mandel, to_mandel
+from strainkit.tensors.sixvectors import to_mandel
 
-__all__ = ["LinearModel", "Order", "Shape", "build_model"]
+__all__ = ["LinearModel", "Order", "build_model"]
 
 Order = Literal["linear", "cubic"]
 
 #: strains below this (largest principal value) are the reference
 ZERO_STRAIN = 1e-9
-#: how close two strains must be, relative to their size, to be of one shape
-SAME_SHAPE = 1e-5
-
-
-@dataclass(frozen=True)
-class Shape:
-    """A unit strain tensor and what its symmetry allows.
-
-    Attributes
-    ----------
-    unit : (6,)
-        Mandel vector whose largest absolute principal value is one, given frame.
-    allowed : (6, d)
-        Stresses that the residual symmetry of the strained cell allows (orthonormal columns, Mandel).
-    even, odd : (6, d_even), (6, d_odd)
-        Responses even and odd in the magnitude that H+- allows.
-    residual_order : int
-        Number of the Laue group's rotations that the strained cell keeps.
-    has_image : bool
-        A rotation of the crystal maps the shape to its negative.
-    """
-
-    unit: FloatArray
-    allowed: FloatArray
-    even: FloatArray
-    odd: FloatArray
-    residual_order: int
-    has_image: bool
-
-    @classmethod
-    def of(cls, unit: FloatArray, rotations: FloatArray) -> Shape:
-        """Shape of a Mandel vector (6,) in a crystal with the proper Laue rotations (m, 3, 3)."""
-        turned = rotation6(rotations) @ unit
-        size = SAME_SHAPE * np.linalg.norm(unit)
-        same = np.abs(turned - unit).max(axis=1) < size
-        opposite = np.abs(turned + unit).max(axis=1) < size
-        both = same | opposite
-        allowed = invariant_vectors(rotations[same])
-        if not opposite.any():
-            return cls(unit, allowed, allowed, allowed, int(same.sum()), False)
-        signs = np.where(same, 1.0, -1.0)[both]
-        even, odd = invariant_vectors(rotations[both]), invariant_vectors(rotations[both], signs)
-        return cls(unit, allowed, even, odd, int(same.sum()), True)
 
 
 @dataclass(frozen=True)
@@ -119,7 +78,7 @@ class LinearModel:
     signed_magnitudes: FloatArray
 
     def rows(self, stresses: FloatArray) -> FloatArray:
-        """Data vector (rows,) of Mandel second Piola-Kirchhoff stresses (jobs, 6)."""
+        """Data (rows, ...) of Mandel second Piola-Kirchhoff stresses (jobs, 6, ...)."""
         parts = [w**0.5 * (p.T @ s) for p, s, w in zip(self.projections, stresses, self.weights, strict=True)]
         return np.concatenate(parts) if parts else np.zeros(0)
 
@@ -128,7 +87,7 @@ class LinearModel:
         """Spare degrees of freedom of the odd part: rows, less even nuisance, less constants and cubic terms found."""
         return int(len(self.matrix) - self.even_basis.shape[1] - factorise(self.odd_matrix).rank)
 
-    @property
+    @cached_property
     def odd_matrix(self) -> FloatArray:
         """Columns of the constants and cubic terms with every even response projected out."""
         return self.odd_part(self.matrix[:, np.r_[self.constants, self.cubic]])
@@ -138,20 +97,33 @@ class LinearModel:
         return values - self.even_basis @ (self.even_basis.T @ values)
 
 
-def _place(strain: FloatArray, shapes: list[Shape], rotations: FloatArray) -> tuple[int, float, FloatArray]:
-    """Shape index, signed magnitude and the 6x6 rotation that carries the shape onto this strain (Mandel, (6,))."""
-    magnitude = float(np.abs(np.linalg.eigvalsh(from_mandel(strain))).max())
-    unit = strain / magnitude
+def _place(vectors: FloatArray, rotations: FloatArray) -> tuple[list[Shape], list[tuple[int, float, FloatArray]]]:
+    """The shapes among strains (jobs, 6), Mandel, and where each strain belongs.
+
+    That is the index of its shape (-1 at rest), its signed magnitude and the 6x6 rotation that carries the shape onto it.
+    """
+    sizes = largest_principal_of(vectors)
     q = rotation6(rotations)
-    for index, shape in enumerate(shapes):
-        images = q @ shape.unit
-        for sign in (1.0, -1.0):
-            away = np.abs(sign * images - unit).max(axis=1)
+    shapes: list[Shape] = []
+    images: list[FloatArray] = []
+    placed: list[tuple[int, float, FloatArray]] = []
+    for vector, size in zip(vectors, sizes.tolist(), strict=True):
+        if size < ZERO_STRAIN:
+            placed.append((-1, 0.0, np.eye(6)))
+            continue
+        unit = vector / size
+        for index, image in enumerate(images):
+            away = np.abs(image - unit).max(axis=1)
             nearest = int(away.argmin())
-            if away[nearest] < SAME_SHAPE * np.linalg.norm(unit):
-                return index, sign * magnitude, q[nearest]
-    shapes.append(Shape.of(unit, rotations))
-    return len(shapes) - 1, magnitude, np.eye(6)
+            if away[nearest] < SAME_SHAPE:
+                sign = 1.0 if nearest < len(q) else -1.0
+                placed.append((index, sign * size, q[nearest % len(q)]))
+                break
+        else:
+            shapes.append(Shape.of(unit, rotations))
+            images.append(np.concatenate([q @ unit, -q @ unit]))
+            placed.append((len(shapes) - 1, size, np.eye(6)))
+    return shapes, placed
 
 
 def build_model(
@@ -180,12 +152,8 @@ def build_model(
         raise UsageError(f"unknown order {order!r}", "--order", "Use linear or cubic.")
     vectors = to_mandel(strains)
     weights = np.ones(len(vectors)) if weights is None else np.asarray(weights, dtype=float)
-    shapes: list[Shape] = []
     free = invariant_vectors(rotations)
-    placed: list[tuple[int, float, FloatArray]] = []
-    for vector in vectors:
-        at_rest = np.linalg.norm(vector) < ZERO_STRAIN
-        placed.append((-1, 0.0, np.eye(6)) if at_rest else _place(vector, shapes, rotations))
+    shapes, placed = _place(vectors, rotations)
     n, a = len(matrices), free.shape[1]
     even_start = a + n
     cubic_start = even_start + sum(s.even.shape[1] for s in shapes)

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from strainkit.design.strainset import StrainJob
+from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
 from strainkit.run.plan import Plan
@@ -42,7 +42,7 @@ def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list
 
 def _lone_partners(regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
     """Jobs whose opposite is not there, so that the even response swallows them."""
-    model = regression.model
+    model = regression.estimator.model
     t, shape = model.signed_magnitudes, model.shape_of_job
     alone = []
     for index, job in enumerate(jobs):
