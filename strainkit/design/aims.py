@@ -93,7 +93,13 @@ def _singles(key: bytes) -> Candidates:
     return Candidates.of(image_strains(rotations), rotations, invariant_matrices(rotations))
 
 
-def sharpest(rotations: FloatArray, jobs: int, start: FloatArray | None = None, rows: int = 0) -> FloatArray:
+def sharpest(
+    rotations: FloatArray,
+    jobs: int,
+    start: FloatArray | None = None,
+    rows: int = 0,
+    taken: FloatArray | None = None,
+) -> FloatArray:
     """Unit strains (k, 6), Mandel, of at most `jobs` strained jobs with the smallest A-criterion.
 
     Parameters
@@ -107,6 +113,8 @@ def sharpest(rotations: FloatArray, jobs: int, start: FloatArray | None = None, 
         `invariant_matrices(rotations)`).
     rows : int
         Components of odd stress behind it.
+    taken : (m, 6), optional
+        Unit strains of those jobs, which are not to be repeated.
 
     Raises
     ------
@@ -114,7 +122,7 @@ def sharpest(rotations: FloatArray, jobs: int, start: FloatArray | None = None, 
         When that many jobs cannot fix every constant.
     """
     key = group_key(rotations)
-    pairs, singles = _many_pairs(key), _singles(key)
+    pairs, singles = (c.without(taken, rotations) for c in (_many_pairs(key), _singles(key)))
     size = len(pairs.information[0])
     known = np.zeros((size, size)) if start is None else start
     best = np.inf
@@ -129,7 +137,7 @@ def sharpest(rotations: FloatArray, jobs: int, start: FloatArray | None = None, 
     if np.isfinite(best):
         return winner
     if jobs % 2:
-        return sharpest(rotations, jobs - 1, start, rows)
+        return sharpest(rotations, jobs - 1, start, rows, taken)
     raise UsageError(
         f"{jobs} strained jobs cannot fix every constant",
         "--jobs",

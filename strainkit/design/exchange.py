@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from strainkit.design.criterion import information, trace_of_inverse
-from strainkit.design.shapes import Shape
+from strainkit.design.shapes import Shape, firsts
 from strainkit.tensors.arrays import FloatArray
 
 __all__ = ["SPARE", "Candidates", "exchange"]
@@ -46,6 +46,14 @@ class Candidates:
             information=jobs[:, None, None] * information(units, invariants),
             rows=np.array([shape.odd.shape[1] for shape in shapes]),
         )
+
+    def without(self, taken: FloatArray | None, rotations: FloatArray) -> Candidates:
+        """The candidates that no rotation (g, 3, 3) maps to plus or minus one of the strains taken (k, 6)."""
+        if taken is None or not len(taken):
+            return self
+        first = firsts(np.concatenate([taken, self.units]), rotations)
+        keep = np.array([i - len(taken) for i in first if i >= len(taken)], dtype=int)
+        return Candidates(self.units[keep], self.information[keep], self.rows[keep])
 
 
 def exchange(

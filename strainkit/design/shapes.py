@@ -17,6 +17,7 @@ from strainkit.tensors.sixvectors import from_mandel, to_mandel
 __all__ = [
     "SAME_SHAPE",
     "Shape",
+    "firsts",
     "image_strains",
     "largest_principal_of",
     "one_of_each",
@@ -128,9 +129,14 @@ def image_strains(rotations: FloatArray) -> FloatArray:
 
 def one_of_each(vectors: FloatArray, rotations: FloatArray) -> FloatArray:
     """The vectors (m, 6) without those that a rotation (g, 3, 3) maps to plus or minus an earlier one."""
+    return vectors[firsts(vectors, rotations)]
+
+
+def firsts(vectors: FloatArray, rotations: FloatArray) -> list[int]:
+    """Indices of the vectors (m, 6) that no rotation (g, 3, 3) maps to plus or minus an earlier one."""
     images = np.einsum("gij,mj->mgi", rotation6(rotations), vectors)
     both = np.round(np.concatenate([images, -images], axis=1), 5) + 0.0
     first: dict[tuple[float, ...], int] = {}
     for index, orbit in enumerate(both.tolist()):
         first.setdefault(max(map(tuple, orbit)), index)
-    return vectors[sorted(first.values())]
+    return sorted(first.values())

@@ -21,7 +21,7 @@ from strainkit.run.files import checksum
 from strainkit.run.plan import MANIFEST, Ions, Plan, job_folder, load_plan
 from strainkit.tensors.constants import constant_basis
 
-__all__ = ["DEFAULT_FORMATS", "plan_run", "write_run"]
+__all__ = ["DEFAULT_FORMATS", "files_of", "plan_run", "write_run"]
 
 DEFAULT_FORMATS = ("poscar", "cif")
 
@@ -95,7 +95,7 @@ def write_run(plan: Plan, out: Path, formats: Sequence[str] = DEFAULT_FORMATS, f
         aside = _aside(out)
         out.rename(aside)
         moved = f"; the old folder is now {aside.name}"
-    files = _files_of(plan, chosen)
+    files = files_of(plan, plan.jobs, chosen)
     plan = replace(plan, files={name: checksum(text.encode()) for name, text in files.items()})
     try:
         _write_whole(plan, files, out)
@@ -121,10 +121,10 @@ def _aside(out: Path) -> Path:
     return place
 
 
-def _files_of(plan: Plan, formats: dict[str, CellFormat]) -> dict[str, str]:
-    """Relative path -> text of every file but the manifest."""
+def files_of(plan: Plan, jobs: Sequence[StrainJob], formats: dict[str, CellFormat]) -> dict[str, str]:
+    """Relative path -> text of every file of some jobs."""
     files: dict[str, str] = {}
-    for job in plan.jobs:
+    for job in jobs:
         cell = plan.crystal.deformed(job.gradient)
         title = _title(plan, job)
         for written in formats.values():

@@ -207,7 +207,7 @@ def _plan_from(data: dict[str, Any]) -> Plan:
         aim=data["aim"],
         expectation=Expectation(
             standard_errors=data["expected_standard_error_GPa"],
-            averages=data["expected_standard_error_averages_GPa"],
+            averages=data.get("expected_standard_error_averages_GPa", {"bulk": None, "shear": None}),
             spare=data["spare_degrees_of_freedom"],
             relative_cost=data["relative_cost"],
             noise=data["assumed_noise_GPa"],
