@@ -29,7 +29,9 @@ from strainkit.tensors.sixvectors import to_mandel
 
 __all__ = ["LinearModel", "Order", "build_model"]
 
-Order = Literal["linear", "cubic"]
+Order = Literal["linear", "cubic", "quintic"]
+#: order -> odd powers of the magnitude that are fitted freely for every shape
+_POWERS: dict[str, tuple[int, ...]] = {"linear": (), "cubic": (3,), "quintic": (3, 5)}
 
 #: strains below this (largest principal value) are the reference
 ZERO_STRAIN = 1e-9
@@ -50,7 +52,7 @@ class LinearModel:
     weights : (jobs,)
         Weight of each job's rows: inverse variance in units of the common one.
     reference, constants, even, cubic : slice
-        Column blocks: reference stress, constants, even terms, cubic terms.
+        Column blocks: reference stress, constants, even terms, cubic (and higher odd) terms.
     reference_basis : (6, a)
         Orthonormal stresses that the unstrained crystal allows.
     even_basis : (rows, e)
@@ -61,6 +63,8 @@ class LinearModel:
         Index of the shape, -1 for the reference.
     signed_magnitudes : (jobs,)
         t of each job.
+    even_of_shape, cubic_of_shape : tuple of slice
+        Columns of each shape's even and cubic terms, in units of the response at the largest magnitude.
     """
 
     matrix: FloatArray
@@ -76,6 +80,8 @@ class LinearModel:
     shapes: tuple[Shape, ...]
     shape_of_job: IntArray
     signed_magnitudes: FloatArray
+    even_of_shape: tuple[slice, ...]
+    cubic_of_shape: tuple[slice, ...]
 
     def rows(self, stresses: FloatArray) -> FloatArray:
         """Data (rows, ...) of Mandel second Piola-Kirchhoff stresses (jobs, 6, ...)."""
@@ -143,13 +149,14 @@ def build_model(
         Proper rotations of the Laue group, given frame.
     matrices : (n, 6, 6)
         Mandel matrices of the independent constants, given frame.
-    order : "linear" or "cubic"
-        Whether cubic terms are fitted.
+    order : "linear", "cubic" or "quintic"
+        Whether cubic (and fifth-power) terms are fitted.
     weights : (jobs,), optional
         Inverse variances in units of the common one; ones when left out.
     """
-    if order not in ("linear", "cubic"):
+    if order not in _POWERS:
         raise UsageError(f"unknown order {order!r}", "--order", "Use linear or cubic.")
+    powers = _POWERS[order]
     vectors = to_mandel(strains)
     weights = np.ones(len(vectors)) if weights is None else np.asarray(weights, dtype=float)
     free = invariant_vectors(rotations)
@@ -157,9 +164,9 @@ def build_model(
     n, a = len(matrices), free.shape[1]
     even_start = a + n
     cubic_start = even_start + sum(s.even.shape[1] for s in shapes)
-    width = cubic_start + (sum(s.odd.shape[1] for s in shapes) if order == "cubic" else 0)
     even_at = even_start + np.cumsum([0, *(s.even.shape[1] for s in shapes)])
-    odd_at = cubic_start + np.cumsum([0, *(s.odd.shape[1] for s in shapes)])
+    odd_at = np.cumsum([0, *(s.odd.shape[1] for s in shapes)])
+    width = cubic_start + len(powers) * int(odd_at[-1])
     largest = max((abs(t) for _, t, _ in placed), default=0.0) or 1.0
 
     blocks, projections, nuisance = [], [], []
@@ -173,8 +180,10 @@ def build_model(
         if shape:
             even = turn @ shape.even
             block[:, even_at[index] : even_at[index + 1]] = allowed.T @ even * (t / largest) ** 2
-            if order == "cubic":
-                block[:, odd_at[index] : odd_at[index + 1]] = allowed.T @ turn @ shape.odd * (t / largest) ** 3
+            for place, power in enumerate(powers):
+                first = cubic_start + place * odd_at[-1]
+                columns = slice(first + odd_at[index], first + odd_at[index + 1])
+                block[:, columns] = allowed.T @ turn @ shape.odd * (t / largest) ** power
         blocks.append(weight**0.5 * block)
         nuisance.append(((index, round(abs(t), 10)), weight**0.5 * allowed.T @ even))
         projections.append(allowed)
@@ -193,6 +202,8 @@ def build_model(
         shapes=tuple(shapes),
         shape_of_job=np.array([index for index, _, _ in placed], dtype=np.int64),
         signed_magnitudes=np.array([t for _, t, _ in placed]),
+        even_of_shape=tuple(slice(*map(int, even_at[i : i + 2])) for i in range(len(shapes))),
+        cubic_of_shape=tuple(slice(*map(int, cubic_start + odd_at[i : i + 2])) for i in range(len(shapes) if powers else 0)),
     )
 
 

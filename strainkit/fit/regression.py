@@ -94,6 +94,8 @@ class Regression:
         Independent constants, GPa; NaN where undetermined.
     covariance : (n, n) or None
         GPa^2; None without a noise estimate. Rows and columns of undetermined constants are NaN.
+    parameters : (parameters,)
+        All parameters of the model, in its own column scaling; undetermined ones are arbitrary.
     reference_stress : (6,)
         Fitted symmetry-allowed reference stress S0, Mandel, GPa; NaN when no job determines it.
     noise : float or None
@@ -111,6 +113,7 @@ class Regression:
 
     values: FloatArray
     covariance: FloatArray | None
+    parameters: FloatArray
     reference_stress: FloatArray
     noise: float | None
     degrees_of_freedom: int | None
@@ -169,6 +172,7 @@ def _solve(estimator: Estimator, second: FloatArray, noise: float | None) -> Reg
     return Regression(
         values=np.where(estimator.determined, parameters[model.constants], np.nan),
         covariance=None if noise is None else noise**2 * estimator.unit_covariance,
+        parameters=parameters,
         reference_stress=model.reference_basis @ parameters[model.reference] if at_rest else np.full(6, np.nan),
         noise=noise,
         degrees_of_freedom=dof,
