@@ -15,7 +15,14 @@ from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
 from strainkit.tensors.averages import AVERAGES, SCHEMES
-from strainkit.tensors.sixvectors import COMPONENTS, strain_to_voigt, stress_to_voigt
+from strainkit.tensors.rotations import rotate_matrix
+from strainkit.tensors.sixvectors import (
+    COMPONENTS,
+    stiffness_from_voigt,
+    stiffness_to_voigt,
+    strain_to_voigt,
+    stress_to_voigt,
+)
 
 __all__ = ["BLIND_SPOT", "averages_text", "cell_text", "fit_text", "inspection_text", "plan_text", "table_text"]
 
@@ -159,12 +166,40 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         "",
         f"  stress noise      {'unknown' if noise is None else f'{noise:.3g} GPa, {source}'}",
         f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
+        f"  energies          {_energy_words(fit)}",
+        f"  curvature         {fit.checks.verdict}",
+        *_readings(fit, frame),
         "",
         paragraph(BLIND_SPOT, "  "),
         "",
         findings_text(fit.findings),
     ]
     return "\n".join(lines)
+
+
+def _energy_words(fit: Fit) -> str:
+    """The energy check in a line."""
+    check = fit.checks.energy
+    if check.curvature_agrees is None:
+        return "none to compare with"
+    worst = max(check.pairs, key=lambda p: abs(p.curvature_energy - p.curvature_stress))
+    values = f"{worst.curvature_energy:.2f} against {worst.curvature_stress:.2f} GPa at worst"
+    if check.curvature_agrees and check.slope_agrees:
+        return f"agree with the stresses ({values})"
+    return f"do NOT agree with the stresses ({values})"
+
+
+def _readings(fit: Fit, frame: str) -> list[str]:
+    """The constants under each reading of the reference stress, when that matters."""
+    if not fit.checks.treatments:
+        return []
+    rotation = fit.plan.frames[frame].rotation
+    names = fit.plan.basis.names
+    rows = []
+    for treatment in fit.checks.treatments:
+        turned = stiffness_to_voigt(rotate_matrix(rotation, stiffness_from_voigt(treatment.voigt)))
+        rows.append([treatment.name, *(plain(turned[int(n[1]) - 1, int(n[2]) - 1], 1) for n in names[:7])])
+    return ["", "  readings of the reference stress, GPa", columns(rows, ["", *names[:7]])]
 
 
 def averages_text(averages: Averages) -> str:
