@@ -7,7 +7,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
-from strainkit.crystal.symmetry import DEFAULT_SYMPREC, mean_lattice, operations
+from strainkit.crystal.spacegroup import DEFAULT_SYMPREC, operations
+from strainkit.crystal.symmetry import mean_lattice
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.strain import gradient_between, green_lagrange, largest_principal
