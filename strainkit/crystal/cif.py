@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from strainkit.crystal.cifclaims import attached_hydrogens, formula_claim, refuse_alternatives, refuse_unusable
 from strainkit.crystal.crystal import Crystal
 from strainkit.errors import InputError
 from strainkit.findings import Finding, finding
@@ -38,20 +39,27 @@ def crystal_from_cif(text: str, path: Path) -> Crystal:
     import gemmi
 
     block, structure = _only_structure(gemmi, text, path)
-    _refuse_disorder(structure, path)
+    refuse_unusable(structure, block, path)
+    remarks = refuse_alternatives(structure, block, path)
+    lost = [s.label for s in structure.sites if not all(np.isfinite(s.fract.tolist()))]
+    if lost:
+        raise InputError(f"sites without coordinates: {', '.join(lost)}", path)
     cell = structure.cell
     if not cell.is_crystal():
         raise InputError("no unit cell (_cell_length_a and the five others)", path)
     lattice = np.array(cell.orth.mat.tolist()).T
-    rotations, translations, remarks = _operations(gemmi, structure, path)
+    rotations, translations, doubts = _operations(gemmi, structure, path)
     positions, sites = _expand(structure, rotations, translations, lattice)
+    elements = [structure.sites[i].element for i in sites]
+    symbols = ["H" if element.name == "D" else element.name for element in elements]
+    remarks += [*doubts, *attached_hydrogens(structure, block), *formula_claim(block, symbols, path)]
     deuterium = sorted({site.label for site in structure.sites if site.element.name == "D"})
     if deuterium:
         remarks.append(finding("deuterium", ", ".join(deuterium), "deuterium is treated as hydrogen"))
     return Crystal(
         lattice=lattice,
         positions=positions,
-        numbers=np.array([structure.sites[i].element.atomic_number for i in sites]),
+        numbers=np.array([element.atomic_number for element in elements]),
         labels=tuple(structure.sites[i].label for i in sites),
         name=path.name.split(".")[0] or block.name,
         source=str(path),
@@ -73,22 +81,6 @@ def _only_structure(gemmi: Any, text: str, path: Path) -> tuple[gemmi.cif.Block,
         raise InputError(f"{len(found)} structures in one CIF ({names})", path, "Keep one data block a file.")
     block, structure = found[0]
     return block, structure
-
-
-def _refuse_disorder(structure: gemmi.SmallStructure, path: Path) -> None:
-    partial = [f"{s.label} ({s.occ:g})" for s in structure.sites if s.occ < 1.0]
-    if partial:
-        raise InputError(
-            f"partly occupied sites: {', '.join(partial)}",
-            path,
-            "A periodic calculation needs an ordered cell: keep one component, or build a supercell with every site full.",
-        )
-    unknown = [s.label for s in structure.sites if s.element.atomic_number == 0]
-    if unknown:
-        raise InputError(f"sites without a known element: {', '.join(unknown)}", path)
-    lost = [s.label for s in structure.sites if not all(np.isfinite(s.fract.tolist()))]
-    if lost:
-        raise InputError(f"sites without coordinates: {', '.join(lost)}", path)
 
 
 def _operations(gemmi: Any, structure: gemmi.SmallStructure, path: Path) -> tuple[FloatArray, FloatArray, list[Finding]]:

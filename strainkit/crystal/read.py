@@ -2,12 +2,18 @@
 
 from __future__ import annotations
 
+import re
 import warnings
+from dataclasses import replace
+from io import StringIO
 from pathlib import Path
+from typing import Any
 
 from strainkit.crystal.cif import crystal_from_cif
+from strainkit.crystal.contacts import refuse_coincident
 from strainkit.crystal.crystal import Crystal
 from strainkit.errors import InputError, StrainkitError
+from strainkit.findings import Finding, finding
 
 __all__ = ["read_crystal"]
 
@@ -57,9 +63,9 @@ def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
         raise InputError("the file is empty", path)
     text = raw.decode("utf-8", errors="replace")
     format = {"poscar": "vasp"}.get(format, format) if format else _guess(path, text)
-    if format == "cif":
-        return crystal_from_cif(text, path)
-    return _through_ase(path, format)
+    crystal = crystal_from_cif(text, path) if format == "cif" else _through_ase(path, text, format)
+    refuse_coincident(crystal)
+    return crystal
 
 
 def _guess(path: Path, text: str) -> str:
@@ -80,15 +86,20 @@ def _guess(path: Path, text: str) -> str:
     )
 
 
-def _through_ase(path: Path, format: str) -> Crystal:
+def _through_ase(path: Path, text: str, format: str) -> Crystal:
     from ase import Atoms
-    from ase.io import read
     from ase.io.formats import UnknownFileTypeError
 
+    remarks: tuple[Finding, ...] = ()
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # remarks of ASE's readers to their developers
-            atoms = read(path, format=format, index=-1)
+        try:
+            atoms = _ase_atoms(path, format)
+        except KeyError as error:  # ASE knows no element D
+            plain = re.sub(r"(?m)(?<!\S)D(?!\S)", "H", text)
+            if error.args != ("D",) or plain == text:
+                raise
+            atoms = _ase_atoms(StringIO(plain), format)
+            remarks = (finding("deuterium", str(path), "deuterium is treated as hydrogen"),)
     except UnknownFileTypeError:
         raise InputError(f"unknown format {format!r}", path, "Use cif, poscar, extxyz or a format name of ASE.") from None
     except StrainkitError:
@@ -99,4 +110,12 @@ def _through_ase(path: Path, format: str) -> Crystal:
     if not isinstance(atoms, Atoms):
         raise InputError(f"no structure found when read as {format}", path)
     stem = path.parent.name if path.name.upper() in _NAMES else path.name.split(".")[0]
-    return Crystal.from_atoms(atoms, name=stem or "crystal", source=str(path))
+    return replace(Crystal.from_atoms(atoms, name=stem or "crystal", source=str(path)), remarks=remarks)
+
+
+def _ase_atoms(source: Path | StringIO, format: str) -> Any:
+    from ase.io import read
+
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # remarks of ASE's readers to their developers
+        return read(source, format=format, index=-1)

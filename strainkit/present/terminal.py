@@ -63,12 +63,15 @@ def cell_text(crystal: Crystal, symmetry: Symmetry, molecules: Molecules | None 
 
 def molecules_text(molecules: Molecules) -> str:
     """The molecules of a cell, and what else its bonds make, on one line."""
-    parts: dict[str, list[str]] = {}
-    for kind, formula, count in molecules.counts:
-        parts.setdefault(kind, []).append(f"{count} {formula}")
-    found = f"molecules {', '.join(parts.pop('molecule'))}" if "molecule" in parts else "no molecules"
-    others = [f"{kind if kind == 'unbonded' else kind + 's'} {', '.join(items)}" for kind, items in parts.items()]
-    return "; ".join([found, *others])
+    found = [f"{count} {formula}" for kind, formula, count in molecules.counts if kind == "molecule"]
+    others = [
+        f"{count} {kind}{'s' if count > 1 and kind != 'unbonded' else ''} {'of ' if kind != 'unbonded' else ''}{formula}"
+        for kind, formula, count in molecules.counts
+        if kind != "molecule"
+    ]
+    return "; ".join(
+        [f"molecules {', '.join(found) if found else 'none'}", *([", ".join(others) + " a cell"] if others else [])]
+    )
 
 
 def _head(plan: Plan) -> list[str]:
