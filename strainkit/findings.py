@@ -38,6 +38,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "off-symmetry": ("info", "atoms are not exactly on the positions of the space group"),
     "symmetrized": ("info", "atoms and cell were moved onto the space group, as asked"),
     "symmetry-depends-on-tolerance": ("warning", "ten times more or less tolerance gives another space group"),
+    "bonds-changed": ("warning", "relaxing the reference made other molecules or networks of it"),
     # the strain set
     "target-error": ("info", "how the wanted standard error is met"),
     "few-spare-degrees": ("warning", "fewer than three spare degrees of freedom to estimate the noise from"),

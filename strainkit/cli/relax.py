@@ -30,6 +30,7 @@ def relax(
     from strainkit.evaluate.reference import relax_reference
     from strainkit.prepare.writers import FORMATS
     from strainkit.present.numbers import plain
+    from strainkit.present.text import findings_text
     from strainkit.run.files import atomic_write
     from strainkit.tensors.sixvectors import strain_to_voigt
 
@@ -53,6 +54,7 @@ def relax(
                 f"  volume {crystal.volume:.2f} -> {found.crystal.volume:.2f} A^3",
                 f"  atoms moved by up to {found.largest_shift:.4f} A against the cell",
                 f"  stress left {' '.join(plain(x, 4) for x in stress)} GPa, largest force {found.max_force:.2g} eV/A",
+                *([findings_text(found.findings)] if found.findings else []),
             ]
         )
 
@@ -66,6 +68,7 @@ def relax(
             "largest_shift_A": found.largest_shift,
             "stress_GPa": stress,
             "max_force_eV_per_A": found.max_force,
+            "findings": [f.to_dict() for f in found.findings],
         },
         text,
         json,

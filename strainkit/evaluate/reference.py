@@ -7,9 +7,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.molecules import find_molecules
 from strainkit.errors import InputError
 from strainkit.evaluate.engines import Engine
 from strainkit.evaluate.single import DEFAULT_FMAX, MAX_STEPS, scratch_folder
+from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import stress_to_voigt
 from strainkit.tensors.strain import gradient_between, green_lagrange
@@ -35,6 +37,8 @@ class Relaxation:
         Stress left, GPa, Voigt order, positive in tension.
     max_force : float
         Largest force left, eV/A.
+    findings : tuple of Finding
+        Whether the crystal is still made of the same molecules and networks.
     """
 
     crystal: Crystal
@@ -44,6 +48,7 @@ class Relaxation:
     largest_shift: float
     stress: FloatArray
     max_force: float
+    findings: tuple[Finding, ...] = ()
 
 
 def relax_reference(
@@ -96,4 +101,13 @@ def relax_reference(
         largest_shift=float(np.linalg.norm(shift @ relaxed.lattice, axis=1).max()),
         stress=stress_to_voigt(stress),
         max_force=float(np.linalg.norm(forces, axis=1).max()),
+        findings=_bonds_changed(crystal, relaxed),
     )
+
+
+def _bonds_changed(before: Crystal, after: Crystal) -> tuple[Finding, ...]:
+    counts = [sorted(find_molecules(crystal).counts) for crystal in (before, after)]
+    if counts[0] == counts[1]:
+        return ()
+    texts = [", ".join(f"{count} {formula} ({kind})" for kind, formula, count in found) for found in counts]
+    return (finding("bonds-changed", before.source or before.name, f"before: {texts[0]}; now: {texts[1]}"),)

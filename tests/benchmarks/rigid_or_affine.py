@@ -21,14 +21,17 @@ from strainkit.evaluate.single import DEFAULT_FMAX, evaluate_cell
 from strainkit.prepare.runfolder import plan_run
 from strainkit.shipped import shipped_folder
 
-DEFAULT_CELLS = ("carbon_dioxide", "ammonia", "naphthalene")
+DEFAULT_CELLS = ("carbon_dioxide", "ammonia", "urea", "hexamethylenetetramine")
 
 
 def measure(name: str, engine: Engine, magnitude: float) -> None:
-    """Print one line a strained job of a crystal, and one for them all."""
+    """Print one line a strained job of a crystal, and a row of the table for them all."""
     path = Path(name) if Path(name).is_file() else shipped_folder("sample_cells") / f"{name}.cif"
     relaxed = relax_reference(read_crystal(path), engine)
-    print(f"\n{path.stem}: reference at {relaxed.max_force:.1e} eV/A, converged {relaxed.converged}", flush=True)
+    print(f"\n{path.stem}: reference at {relaxed.max_force:.1e} eV/A after {relaxed.steps} steps", flush=True)
+    if not relaxed.converged or relaxed.findings:
+        print("  left out: not at rest, or no longer the same molecules", *(f.message for f in relaxed.findings))
+        return
     plan = plan_run(relaxed.crystal, [magnitude], atoms="rigid")
     rows = []
     for job in plan.jobs[1:]:

@@ -151,3 +151,17 @@ def test_engine_names_and_settings():
         Engine("tersoff", {"parameters": {"Si": {"m": 3}}}).calculator()
     with pytest.raises(InputError, match="gives no forces, stress"):
         Engine("ase.calculators.test:FreeElectrons").calculator()
+
+
+def test_relaxing_into_other_molecules_is_said(cli, tmp_path):
+    """A dimer of argon squeezed to a bond length flies apart on the Lennard-Jones potential: one molecule becomes two."""
+    from ase import Atoms
+    from ase.io import write as ase_write
+
+    pair = Atoms("Ar2", positions=[(0, 0, 0), (0, 0, 2.4)], cell=[9.0, 9.0, 9.0], pbc=True)
+    ase_write(tmp_path / "pair.extxyz", pair)
+    lj = ["--engine", "lj", "--set", "sigma=3.4", "--set", "epsilon=0.01", "--set", "rc=8.0", "--fmax", "0.1"]
+    result = cli("relax", tmp_path / "pair.extxyz", *lj, "--out", tmp_path / "out.extxyz", "--json")
+    (said,) = result.json["findings"]
+    assert said["code"] == "bonds-changed"
+    assert said["message"].startswith("before: 1 Ar2 (molecule); now: 2 Ar (molecule)")
