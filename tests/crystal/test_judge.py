@@ -19,11 +19,13 @@ from strainkit.crystal.hydrogens import judge_hydrogens
 from strainkit.crystal.judge import judge_cell, judge_setting
 from strainkit.crystal.molecules import find_molecules
 from strainkit.crystal.neighbours import find_neighbours
+from strainkit.crystal.read import read_crystal
 from strainkit.crystal.symmetry import find_symmetry, tolerance_ladder
 from strainkit.crystal.voids import find_voids
 from strainkit.errors import InputError
 from strainkit.findings import CODES, Finding
 from strainkit.prepare.runfolder import plan_run
+from strainkit.shipped import shipped_folder
 
 
 def built(symbols, basis, group, cell):
@@ -89,6 +91,40 @@ def of_atoms(atoms: Atoms, code: str = "") -> list[Finding]:
 @pytest.mark.parametrize("name", SOUND)
 def test_nothing_is_said_about_sound_structures(name):
     assert judge_cell(SOUND[name])[1] == []
+
+
+#: sample cell -> what its bonds make (kind, formula without the count)
+SAMPLES = {
+    "adamantane": {("molecule", "C10H16")},
+    "aluminium_nitride": {("network", "Al2N2")},
+    "ammonia": {("molecule", "H3N")},
+    "ammonium_fluoride": {("molecule", "H4N"), ("molecule", "F")},
+    "benzene": {("molecule", "C6H6")},
+    "carbon_dioxide": {("molecule", "CO2")},
+    "corundum": {("network", "Al12O18")},
+    "dolomite": {("network", "C6Ca3Mg3O18")},
+    "fluorapatite": {("network", "Ca10F2O24P6")},
+    "glycine": {("molecule", "C2H5NO2")},
+    "hexamethylenetetramine": {("molecule", "C6H12N4")},
+    "hexane": {("molecule", "C6H14")},
+    "magnesium_oxide": {("network", "Mg4O4")},
+    "naphthalene": {("molecule", "C10H8")},
+    "quartz": {("network", "O6Si3")},
+    "rutile": {("network", "O4Ti2")},
+    "scheelite": {("network", "Ca4O16W4")},
+    "silicon": {("network", "Si8")},
+    "triazine": {("molecule", "C3H3N3")},
+    "urea": {("molecule", "CH4N2O")},
+}
+
+
+@pytest.mark.parametrize("path", sorted(shipped_folder("sample_cells").glob("*.cif")), ids=lambda path: path.stem)
+def test_sample_cells_raise_no_alarm(path):
+    crystal = read_crystal(path)
+    molecules, doubts = judge_cell(crystal)
+    assert {(kind, formula) for kind, formula, _ in molecules.counts} == SAMPLES[path.stem]
+    said = [*crystal.remarks, *doubts, *judge_setting(crystal, find_symmetry(crystal))]
+    assert {f.code for f in said} <= {"nonstandard-setting", "ions-or-radicals"}
 
 
 @pytest.mark.parametrize("name", ["Al", "W", "Si", "NaCl", "diamond"])
