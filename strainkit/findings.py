@@ -21,6 +21,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "deuterium": ("info", "deuterium is treated as hydrogen"),
     "no-symmetry-in-file": ("warning", "the CIF names no space group and lists no operations"),
     "attached-hydrogens": ("warning", "the CIF says that some atoms carry hydrogens which it does not list"),
+    "solvent-masked": ("warning", "the CIF says that solvent was taken out of the data and is not among its atoms"),
     "formula-differs": ("warning", "the atoms of the cell do not add up to the formula that the CIF states"),
     "disorder-group": ("info", "one disorder group is all that the file holds: read as an ordered model"),
     "atoms-too-close": ("warning", "atoms closer, or with more bonds, than chemistry allows"),

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from strainkit.crystal.cifclaims import attached_hydrogens, formula_claim, refuse_alternatives, refuse_unusable
+from strainkit.crystal.cifclaims import attached_hydrogens, formula_claim, refuse_alternatives, refuse_unusable, solvent_masks
 from strainkit.crystal.crystal import Crystal
 from strainkit.errors import InputError
 from strainkit.findings import Finding, finding
@@ -52,7 +52,8 @@ def crystal_from_cif(text: str, path: Path) -> Crystal:
     positions, sites = _expand(structure, rotations, translations, lattice)
     elements = [structure.sites[i].element for i in sites]
     symbols = ["H" if element.name == "D" else element.name for element in elements]
-    remarks += [*doubts, *attached_hydrogens(structure, block), *formula_claim(block, symbols, path)]
+    remarks += [*doubts, *attached_hydrogens(structure, block), *solvent_masks(block, path)]
+    remarks += formula_claim(block, symbols, path)
     deuterium = sorted({site.label for site in structure.sites if site.element.name == "D"})
     if deuterium:
         remarks.append(finding("deuterium", ", ".join(deuterium), "deuterium is treated as hydrogen"))

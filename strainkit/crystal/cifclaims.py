@@ -14,7 +14,7 @@ from strainkit.findings import Finding, finding
 if TYPE_CHECKING:
     import gemmi
 
-__all__ = ["attached_hydrogens", "formula_claim", "refuse_alternatives", "refuse_unusable"]
+__all__ = ["attached_hydrogens", "formula_claim", "refuse_alternatives", "refuse_unusable", "solvent_masks"]
 
 _UNKNOWN = ("", ".", "?")
 
@@ -70,6 +70,16 @@ def attached_hydrogens(structure: gemmi.SmallStructure, block: gemmi.cif.Block) 
         return []
     text = ", ".join(f"{label} {count}" for label, count in claimed.items())
     return [finding("attached-hydrogens", ", ".join(claimed), f"hydrogens that the file counts but does not list: {text}")]
+
+
+def solvent_masks(block: gemmi.cif.Block, path: Path) -> list[Finding]:
+    """Voids whose solvent the refinement took out of the diffraction data (tags of PLATON and of smtbx, from memory)."""
+    for tag in ("_platon_squeeze_void", "_smtbx_masks_void"):
+        rows = [(row.str(0), row.str(1)) for row in block.find([f"{tag}_volume", f"{tag}_count_electrons"])]
+        if rows:
+            text = ", ".join(f"{volume} A^3 with {electrons} electrons" for volume, electrons in rows)
+            return [finding("solvent-masked", str(path), f"the refinement took solvent out of {len(rows)} voids: {text}")]
+    return []
 
 
 def formula_claim(block: gemmi.cif.Block, symbols: Sequence[str], path: Path) -> list[Finding]:

@@ -21,7 +21,7 @@ from strainkit.evaluate.single import DEFAULT_FMAX, evaluate_cell
 from strainkit.prepare.runfolder import plan_run
 from strainkit.shipped import shipped_folder
 
-DEFAULT_CELLS = ("carbon_dioxide", "ammonia", "urea", "hexamethylenetetramine")
+DEFAULT_CELLS = ("carbon_dioxide", "ammonia", "hexamethylenetetramine", "ammonium_fluoride", "urea")
 
 
 def measure(name: str, engine: Engine, magnitude: float) -> None:

@@ -54,6 +54,14 @@ def test_hydrogens_counted_but_not_listed(tmp_path):
     assert "attached-hydrogens" not in said(tmp_path, with_column("attached_hydrogens", "0", "0"))
 
 
+@pytest.mark.parametrize("tag", ["_platon_squeeze_void", "_smtbx_masks_void"])
+def test_masked_solvent_is_said(tmp_path, tag):
+    """Tag names from memory of PLATON's and smtbx's output."""
+    text = f"{DRY_ICE}loop_\n{tag}_nr\n{tag}_volume\n{tag}_count_electrons\n1 172 41\n2 90 '20'\n"
+    message = said(tmp_path, text)["solvent-masked"][1]
+    assert message.endswith("2 voids: 172 A^3 with 41 electrons, 90 A^3 with 20 electrons")
+
+
 @pytest.mark.parametrize(
     ("claims", "message"),
     [
