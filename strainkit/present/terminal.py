@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 from collections import Counter
+from pathlib import Path
 
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.derive.averages import AVERAGES, SCHEMES, Averages
 from strainkit.fit.result import Fit
+from strainkit.present.calculation import calculation_lines
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
@@ -38,8 +40,8 @@ def cell_text(crystal: Crystal, symmetry: Symmetry) -> str:
     return "\n".join(lines)
 
 
-def plan_text(plan: Plan, jobs: bool = True) -> str:
-    """The plan of a run: constants, jobs, expected errors."""
+def plan_text(plan: Plan, jobs: bool = True, out: Path | None = None) -> str:
+    """The plan of a run: constants, jobs, expected errors, and how its jobs are computed and submitted."""
     expected = plan.expectation
     names = ", ".join(plan.basis.names)
     lines = [
@@ -60,6 +62,7 @@ def plan_text(plan: Plan, jobs: bool = True) -> str:
     lines += [
         paragraph(f"expected standard errors for a stress noise of {expected.noise:g} GPa, in GPa: {', '.join(errors)}", "  "),
         f"  spare degrees of freedom {expected.spare}; cost by lost symmetry about {expected.relative_cost:g} reference jobs",
+        *calculation_lines(plan.calculation, out),
         "",
         findings_text(plan.findings),
     ]
