@@ -101,7 +101,7 @@ def qe_text(crystal: Crystal, title: str) -> str:
 def abinit_text(crystal: Crystal, title: str) -> str:
     """Variables natom to xred of ABINIT, with spinat for a magnetic crystal."""
     kinds, index = atom_kinds(crystal)
-    lines = [f"# {title}", "acell 3*1.0 angstrom", "rprim", *_lattice(crystal)]
+    lines = [f"# {title}", "acell 1.0 1.0 1.0 angstrom", "rprim", *_lattice(crystal)]
     lines += [f"natom {len(index)}", f"ntypat {len(kinds)}", f"znucl {' '.join(str(k.number) for k in kinds)}"]
     lines += ["typat", *(" ".join(str(k + 1) for k in index[at : at + 20]) for at in range(0, len(index), 20))]
     lines += ["xred", *(numbers(row) for row in crystal.positions)]
