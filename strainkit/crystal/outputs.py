@@ -75,6 +75,13 @@ OUTPUTS: tuple[Output, ...] = (
         re.compile(r"Present geometry is converged"),
         re.compile(r"cycle not converged"),
     ),
+    Output(
+        "FHI-aims",
+        ("| Number of atoms ", "| Number of spin channels "),
+        "aims-output",
+        re.compile(r"Present geometry is converged"),
+        re.compile(r"cycle not converged"),
+    ),
     Output("CP2K restart", ("&GLOBAL", "&MOTION", "STEP_START_VAL"), "cp2k-restart"),
 )
 

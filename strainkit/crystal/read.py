@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import warnings
 from dataclasses import replace
 from pathlib import Path
@@ -28,6 +29,8 @@ _ENDINGS = {
     ".res": "res",
 }
 _NAMES = {"POSCAR": "vasp", "CONTCAR": "vasp"}
+#: outputs that job scripts number, and those that a program always calls the same
+_JOB_OUTPUT = re.compile(r"(pw|abinit|castep|aims|vasp)-\d+\.\w+|strainkit-1\.restart|returned\.extxyz|OUTCAR|vasprun\.xml")
 
 
 def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
@@ -126,4 +129,5 @@ def _through_ase(path: Path, format: str) -> Crystal:
 
 def _name(path: Path) -> str:
     """Name of a crystal after its file, or after the folder of a file that is always called the same."""
-    return (path.parent.name if path.name.upper() in _NAMES else path.name.split(".")[0]) or "crystal"
+    always = path.name.upper() in _NAMES or _JOB_OUTPUT.fullmatch(path.name)
+    return (path.parent.name if always else path.name.split(".")[0]) or "crystal"

@@ -29,12 +29,18 @@ class Queue:
     tasks: Callable[[str], Iterable[_Task]]
 
 
+_SLURM_STATES: dict[str, Queued] = {
+    **dict.fromkeys(("PENDING", "CONFIGURING", "REQUEUED", "REQUEUE_FED", "REQUEUE_HOLD", "SPECIAL_EXIT"), "queued"),
+    **dict.fromkeys(("RUNNING", "COMPLETING", "SUSPENDED", "STOPPED", "SIGNALING", "STAGE_OUT", "RESIZING"), "running"),
+}
+
+
 def _slurm(answer: str) -> Iterable[_Task]:
     """`squeue -h -r -o %j|%K|%T`: name, array index, state in words."""
     for line in answer.splitlines():
         name, index, state = line.split("|")
-        if index.isdigit():
-            yield name, int(index), "running" if state in ("RUNNING", "COMPLETING", "SUSPENDED", "STOPPED") else "queued"
+        if index.isdigit() and state in _SLURM_STATES:
+            yield name, int(index), _SLURM_STATES[state]
 
 
 def _pbs(answer: str) -> Iterable[_Task]:

@@ -1,0 +1,102 @@
+"""Relaxed cells out of program outputs, recognised by content; real outputs are those that ASE ships among its test data."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import ase.test
+import numpy as np
+import pytest
+from support.files import write
+
+from strainkit.crystal.outputs import abinit_cell, recognise_output
+from strainkit.crystal.read import read_crystal
+from strainkit.errors import InputError
+
+SHIPPED = Path(ase.test.__file__).parent / "testdata"
+
+#: the parts of an ABINIT 9.6.2 output that hold the cell, cut from a run of ours (silicon, one displaced step)
+ABINIT = """
+.Version 9.6.2 of ABINIT
+            natom           2
+           ntypat           1
+            typat      1  1
+             xred      0.0000000000E+00  0.0000000000E+00  0.0000000000E+00
+                       2.5000000000E-01  2.5000000000E-01  2.5000000000E-01
+            znucl       14.00000
+ R(1)=  0.0000000  5.1023260  5.1023260  G(1)= -0.0979945  0.0979945  0.0979945
+ Real space primitive translations (rprimd) [bohr]
+  0.00000000000000E+00  5.10000000000000E+00  5.10000000000000E+00
+  5.10000000000000E+00  0.00000000000000E+00  5.10000000000000E+00
+  5.10000000000000E+00  5.10000000000000E+00  0.00000000000000E+00
+ Cartesian coordinates (xcart) [bohr]
+ Reduced coordinates (xred)
+  0.00000000000000E+00  0.00000000000000E+00  0.00000000000000E+00
+  2.50000000000000E-01  2.50000000000000E-01  2.50000000000000E-01
+ Real space primitive translations (rprimd) [bohr]
+  0.00000000000000E+00  5.10874519431649E+00  5.10874519431649E+00
+  5.10874519431649E+00  0.00000000000000E+00  5.10874519431649E+00
+  5.10874519431649E+00  5.10874519431649E+00  0.00000000000000E+00
+ Reduced coordinates (xred)
+ -1.00000000000000E-03  0.00000000000000E+00  0.00000000000000E+00
+  2.51000000000000E-01  2.50000000000000E-01  2.50000000000000E-01
+ Calculation completed.
+"""
+
+
+def test_abinit_takes_the_last_step_in_bohr(tmp_path):
+    """1 bohr = 0.529177210903 A (CODATA 2018)."""
+    crystal = read_crystal(write(tmp_path, "run.abo", ABINIT))
+    np.testing.assert_allclose(crystal.lattice[0], 5.10874519431649 * 0.529177210903 * np.array([0, 1, 1]), rtol=1e-8)
+    np.testing.assert_allclose(crystal.positions, [[-0.001, 0, 0], [0.251, 0.25, 0.25]], atol=1e-15)
+    assert list(crystal.numbers) == [14, 14]
+    assert crystal.remarks == ()
+
+
+@pytest.mark.parametrize(
+    "change",
+    [
+        lambda text: text.replace(" Calculation completed.", ""),
+        lambda text: text + "scprqt:  WARNING - nstep=  5 was not enough SCF cycles to converge;",
+        lambda text: text + " not enough Broyd/MD steps to converge",
+    ],
+)
+def test_a_relaxation_that_did_not_end_well_is_said(tmp_path, change):
+    crystal = read_crystal(write(tmp_path, "run.abo", change(ABINIT)))
+    assert [f.code for f in crystal.remarks] == ["relaxation-unfinished"]
+
+
+def test_an_abinit_output_without_a_cell(tmp_path):
+    with pytest.raises(ValueError, match="no positions"):
+        abinit_cell("nothing")
+    with pytest.raises(InputError, match="not readable as abinit-out"):
+        read_crystal(write(tmp_path, "run.abo", ABINIT.replace("xred", "xxxx")))
+
+
+@pytest.mark.parametrize(
+    ("file", "program"),
+    [
+        ("vasp/OUTCAR_example_1", "VASP"),
+        ("vasp/vasprun_pstress.xml", "VASP"),
+        ("castep/md.castep", "CASTEP"),
+        ("aims/numerical_stress.out", "FHI-aims"),
+    ],
+)
+def test_real_outputs_are_recognised(file, program):
+    path = SHIPPED / file
+    assert recognise_output(path.read_text(errors="replace")).program == program
+    crystal = read_crystal(path)
+    assert len(crystal.numbers) > 0
+    assert crystal.volume > 1
+
+
+@pytest.mark.parametrize("text", ["", "hello", "&CONTROL\n/\n", "&GLOBAL\n&END\n"])
+def test_other_texts_are_no_outputs(text):
+    assert recognise_output(text) is None
+
+
+def test_names_come_from_the_folder_where_the_file_is_always_called_the_same(tmp_path):
+    folder = tmp_path / "quartz-cell"
+    folder.mkdir()
+    assert read_crystal(write(folder, "abinit-12.abo", ABINIT)).name == "quartz-cell"
+    assert read_crystal(write(folder, "mine.abo", ABINIT)).name == "mine"
