@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
-from strainkit.cli.fit import Drop, Noise, Order
+from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
 from strainkit.cli.options import Frame, Json, Quiet, Run, deliver
 
 
 def derive(
     run: Run,
     order: Order = "linear",
-    noise: Noise = None,
+    noise: KnownNoise = None,
     drop: Drop = None,
+    reference_stress: Reading = "real",
     frame: Frame = "ieee",
     json: Json = False,
     quiet: Quiet = False,
@@ -21,7 +22,7 @@ def derive(
     from strainkit.present.terminal import BLIND_SPOT, averages_text
     from strainkit.present.text import heading, paragraph
 
-    result = fitted(run, order, noise, drop, frame)
+    result = fitted(run, order, noise, drop, frame, reference_stress)
     found = averages(result.effective)
     deliver(
         lambda: {"schema": "strainkit/derived/1", "name": result.plan.crystal.name, **found.to_dict()},

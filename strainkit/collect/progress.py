@@ -8,11 +8,9 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from strainkit.collect.gather import collect_run
 from strainkit.collect.table import StressRecord, StressTable
-from strainkit.design.model import build_model
+from strainkit.design.cost import job_costs
 from strainkit.run.attempts import Attempts, read_attempts
 from strainkit.run.plan import Plan, job_folder
 from strainkit.run.queues import Queued
@@ -138,7 +136,7 @@ def _core_hours(plan: Plan, jobs: list[JobState]) -> tuple[float | None, float |
     if not any(job.attempts.count for job in jobs):
         return None, None
     used = sum(job.attempts.core_hours for job in jobs)
-    cost = _relative_costs(plan)
+    cost = [job.lost for job in job_costs(plan.jobs, plan.crystal, plan.symmetry)]
     finished = [i for i, job in enumerate(jobs) if job.state == "done" and job.attempts.last_core_hours > 0]
     strained = [i for i in finished if cost[i] != cost[0] or i > 0]
     base = strained or finished
@@ -146,10 +144,3 @@ def _core_hours(plan: Plan, jobs: list[JobState]) -> tuple[float | None, float |
         return used, None
     hour = sum(jobs[i].attempts.last_core_hours for i in base) / sum(cost[i] for i in base)
     return used, hour * sum(cost[i] for i, job in enumerate(jobs) if job.state not in ("done", "unread", "mismatch"))
-
-
-def _relative_costs(plan: Plan) -> list[float]:
-    """Cost of every job in reference jobs, by the symmetry that its cell loses."""
-    model = build_model(np.array([job.strain for job in plan.jobs]), plan.symmetry.rotations, plan.basis.matrices)
-    order = len(plan.symmetry.rotations)
-    return [1.0 if index < 0 else order / model.shapes[index].residual_order for index in model.shape_of_job]

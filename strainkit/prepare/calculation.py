@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import groupby
 from typing import Any, Literal
@@ -19,7 +19,7 @@ from strainkit.prepare.settings import Settings
 from strainkit.prepare.writers import FORMATS, refuse_left_handed
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["Calculation", "Task", "plan_calculation"]
+__all__ = ["Calculation", "Task", "plan_calculation", "recorded_calculation"]
 
 #: what a job does: relax cell and ions, relax the ions at fixed cell, or neither
 Task = Literal["cell", "ions", "single"]
@@ -119,7 +119,7 @@ class Calculation:
             "deck": self.deck.name,
             "program": self.deck.program["name"],
             "task": self.task,
-            "settings": {key: value for key, value in self.deck.values.items() if key not in ("kmesh", "program")},
+            "settings": {key: value for key, value in self.deck.values.items() if key != "kmesh"},
             "pseudopotentials": self.pseudopotentials,
             "pseudopotential_folder": self.settings.folder,
             "kspacing_per_A": self.kspacing,
@@ -180,9 +180,7 @@ def plan_calculation(
     ):
         raise InputError(f"[deck] kmesh = {given!r} must be three whole numbers", settings.source)
     spacing = kspacing if kspacing is not None else None if given else DEFAULT_KSPACING
-    mesh = (
-        k_mesh(crystal.lattice, spacing, bool(chosen.program.get("kmesh_odd"))) if spacing is not None else given or (1, 1, 1)
-    )
+    mesh = k_mesh(crystal, spacing, bool(chosen.program.get("kmesh_odd"))) if spacing is not None else given or (1, 1, 1)
     cells = [crystal.lattice, *lattices] if task != "cell" else [_GROWTH * crystal.lattice]
     return Calculation(
         deck=chosen,
@@ -197,6 +195,33 @@ def plan_calculation(
         lattices=cells,
         multiples=translation_denominators(crystal, symprec),
     )
+
+
+def recorded_calculation(
+    record: Mapping[str, Any], crystal: Crystal, ions: str, lattices: Sequence[FloatArray], symprec: float
+) -> Calculation:
+    """The calculation that a manifest keeps, for further jobs of the same run.
+
+    Parameters
+    ----------
+    record : mapping
+        What `Calculation.record` made.
+    crystal : Crystal
+    ions : str
+        "relaxed" or "clamped".
+    lattices : sequence of (3, 3)
+        The cells of all jobs, angstrom.
+    symprec : float
+        angstrom.
+    """
+    settings = Settings(
+        deck={**record["settings"], "kmesh": list(record["kmesh"])},
+        pseudopotentials=dict(record["pseudopotentials"]),
+        folder=record["pseudopotential_folder"],
+        source="the manifest",
+    )
+    task: Task = "ions" if ions == "relaxed" else "single"
+    return plan_calculation(record["deck"], crystal, task, settings, None, lattices, symprec)
 
 
 def _refuse_unless_magnetic(deck: Deck, crystal: Crystal) -> None:

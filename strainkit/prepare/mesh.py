@@ -10,7 +10,8 @@ from itertools import count
 
 import numpy as np
 
-from strainkit.errors import UsageError
+from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.kpoints import kpoint_mesh
 from strainkit.tensors.arrays import FloatArray, IntArray
 
 __all__ = ["DEFAULT_KSPACING", "fixed_grid", "k_mesh"]
@@ -19,28 +20,10 @@ __all__ = ["DEFAULT_KSPACING", "fixed_grid", "k_mesh"]
 DEFAULT_KSPACING = 0.25
 
 
-def k_mesh(lattice: FloatArray, spacing: float, odd: bool = False) -> tuple[int, int, int]:
-    """Divisions of the reciprocal vectors, n_i = ceil(|b_i| / spacing), for a mesh that holds Gamma.
-
-    Parameters
-    ----------
-    lattice : (3, 3)
-        Reference cell, rows, angstrom.
-    spacing : float
-        1/A, 2 pi included.
-    odd : bool
-        Round up to odd numbers, for programs that move even meshes off Gamma.
-    """
-    if not 0.01 <= spacing <= 10.0:
-        raise UsageError(
-            f"a k-point spacing of {spacing:g} 1/A is out of range", "--kspacing", "0.15 to 0.4 suits most crystals."
-        )
-    lengths = np.linalg.norm(2.0 * np.pi * np.linalg.inv(lattice), axis=0)
-    # 1e-6: a cell that is cubic up to rounding gets one number, not two
-    divisions = [max(1, int(np.ceil(length / spacing - 1e-6))) for length in lengths]
-    if odd:
-        divisions = [n + 1 - n % 2 for n in divisions]
-    return divisions[0], divisions[1], divisions[2]
+def k_mesh(crystal: Crystal, spacing: float, odd: bool = False) -> tuple[int, int, int]:
+    """Gamma-centred mesh of the reference cell, its numbers rounded up to odd ones for programs that move even meshes."""
+    one, two, three = kpoint_mesh(crystal, spacing)
+    return (one | 1, two | 1, three | 1) if odd else (one, two, three)
 
 
 def fixed_grid(

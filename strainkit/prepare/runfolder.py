@@ -10,7 +10,9 @@ from typing import Any
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import FRAMES, crystal_frame
 from strainkit.crystal.symmetry import DEFAULT_SYMPREC, find_symmetry, tolerance_ladder
-from strainkit.design.strainset import StrainJob, choose_strains, expect
+from strainkit.design.expect import expect
+from strainkit.design.jobs import StrainJob
+from strainkit.design.strainset import Wish, choose_strains
 from strainkit.errors import InputError
 from strainkit.prepare.calculation import Calculation
 from strainkit.prepare.folders import write_folder
@@ -20,12 +22,12 @@ from strainkit.run.files import checksum, dump_json
 from strainkit.run.plan import MANIFEST, Ions, Plan, job_folder, load_plan
 from strainkit.tensors.constants import constant_basis
 
-__all__ = ["plan_run", "plan_with_files", "write_run"]
+__all__ = ["files_of", "plan_run", "plan_with_files", "write_run"]
 
 
 def plan_run(
     crystal: Crystal,
-    magnitudes: Sequence[float] = (0.01,),
+    wish: Wish | Sequence[float] = (),
     ions: Ions = "relaxed",
     symprec: float = DEFAULT_SYMPREC,
 ) -> Plan:
@@ -35,17 +37,19 @@ def plan_run(
     ----------
     crystal : Crystal
         The relaxed reference cell.
-    magnitudes : sequence of float
-        Largest principal strains, fractions.
+    wish : Wish or sequence of float
+        What the set should be, or just the strain magnitudes (fractions) of the set of fewest jobs.
     ions : "relaxed" or "clamped"
     symprec : float
         Distance tolerance of the symmetry search, angstrom.
     """
     symmetry = find_symmetry(crystal, symprec)
     frames = {name: crystal_frame(name, symmetry) for name in FRAMES}
-    jobs = choose_strains(symmetry, magnitudes)
+    if not isinstance(wish, Wish):
+        wish = Wish(magnitudes=tuple(wish))
     basis = constant_basis(symmetry.invariants, frames["ieee"].rotation)
-    expectation, doubts = expect(jobs, symmetry.rotations, basis)
+    jobs, remarks = choose_strains(crystal, symmetry, basis, wish)
+    expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise)
     _, changes = tolerance_ladder(crystal, symprec)
     return Plan(
         crystal=crystal,
@@ -53,9 +57,9 @@ def plan_run(
         frames=frames,
         jobs=tuple(jobs),
         ions=ions,
-        aim="fewest",
+        aim=wish.aim,
         expectation=expectation,
-        findings=(*crystal.remarks, *changes, *doubts),
+        findings=(*crystal.remarks, *changes, *remarks, *doubts),
     )
 
 
@@ -135,19 +139,27 @@ def _aside(out: Path) -> Path:
     return place
 
 
-def plan_with_files(
-    plan: Plan, formats: Sequence[str] | None, calculation: Calculation | None, scheduler: str | None
-) -> tuple[Plan, dict[str, str]]:
-    """The plan with checksums and findings of its files, and relative path -> text of every file but the manifest."""
-    formats = default_formats(plan.crystal) if formats is None else formats
+def files_of(
+    plan: Plan, jobs: Sequence[StrainJob], formats: Sequence[str], calculation: Calculation | None = None
+) -> dict[str, str]:
+    """Relative path -> text of every file of some jobs."""
     cell_formats(formats)
     files: dict[str, str] = {}
-    for job in plan.jobs:
+    for job in jobs:
         cell, title, folder = plan.crystal.deformed(job.gradient), _title(plan, job), job_folder(job.label)
         for name in formats:
             files[f"{folder}/{FORMATS[name].file_name}"] = write_cell(name, cell, title)
         if calculation is not None:
             files |= {f"{folder}/{name}": text for name, text in calculation.files(cell, title).items()}
+    return files
+
+
+def plan_with_files(
+    plan: Plan, formats: Sequence[str] | None, calculation: Calculation | None, scheduler: str | None
+) -> tuple[Plan, dict[str, str]]:
+    """The plan with checksums and findings of its files, and relative path -> text of every file but the manifest."""
+    formats = default_formats(plan.crystal) if formats is None else formats
+    files = files_of(plan, plan.jobs, formats, calculation)
     record: dict[str, Any] = {}
     doubts = format_findings(formats)
     if calculation is not None:

@@ -15,23 +15,23 @@ from strainkit.prepare.mesh import fixed_grid, k_mesh
 
 def test_mesh_of_a_box():
     """2 pi / 10 A = 0.628 1/A: 3 divisions at 0.25, 2 at 0.4, 1 at 0.7; VASP's KSPACING follows the same rule (its manual)."""
-    lattice = np.diag([10.0, 5.0, 20.0])
-    assert k_mesh(lattice, 0.25) == (3, 6, 2)
-    assert k_mesh(lattice, 0.4) == (2, 4, 1)
-    assert k_mesh(lattice, 0.7) == (1, 2, 1)
-    assert k_mesh(lattice, 0.4, odd=True) == (3, 5, 1)
+    box = Crystal(np.diag([10.0, 5.0, 20.0]), [[0, 0, 0]], [2])
+    assert k_mesh(box, 0.25) == (3, 6, 2)
+    assert k_mesh(box, 0.4) == (2, 4, 1)
+    assert k_mesh(box, 0.7) == (1, 2, 1)
+    assert k_mesh(box, 0.4, odd=True) == (3, 5, 1)
 
 
 def test_mesh_is_no_matter_of_orientation():
-    lattice = conventional("2/m").lattice
+    crystal = conventional("2/m")
     turn = random_rotation(np.random.default_rng(3))
-    assert k_mesh(lattice @ turn.T, 0.2) == k_mesh(lattice, 0.2)
+    assert k_mesh(crystal.deformed(turn), 0.2) == k_mesh(crystal, 0.2)
 
 
 @pytest.mark.parametrize("spacing", [0.0, -1.0, 1e-4, 20.0, float("nan")])
 def test_impossible_spacing(spacing):
     with pytest.raises(UsageError, match="out of range"):
-        k_mesh(np.eye(3), spacing)
+        k_mesh(conventional("mmm"), spacing)
 
 
 @pytest.mark.parametrize("laue", ["-1", "-3m", "m-3m"])
