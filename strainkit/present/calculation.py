@@ -21,11 +21,11 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
     mesh = "x".join(map(str, calculation["kmesh"]))
     spacing = calculation["kspacing_per_A"]
     source = "from the settings file" if spacing is None else f"spacing at most {spacing:g} 1/A, 2 pi included"
-    lines = ["", heading(f"{calculation['program']}, {_TASKS[calculation['task']]}")]
-    lines.append(f"  k-mesh    {mesh}, Gamma-centred ({source}), the same for every job")
+    lines = ["", heading(f"{calculation['program']}, {_TASKS[calculation['task']]}, one mesh and grid for every job")]
+    lines.append(f"  k-mesh    {mesh}, Gamma-centred ({source})")
     grids = ", ".join("x".join(map(str, points)) for points in calculation["grids"])
     if grids:
-        lines.append(f"  grid      {grids} points, the same for every job")
+        lines.append(f"  grid      {grids} points")
     pseudopotentials = ", ".join(f"{symbol} {name}" for symbol, name in calculation["pseudopotentials"].items())
     if pseudopotentials:
         lines.append(paragraph(f"files     {pseudopotentials}", "  "))

@@ -83,6 +83,7 @@ def slurm(need, tmp_path, monkeypatch):
         assert conf.returncode == 0, conf.stderr
         monkeypatch.setenv("SLURM_CONF", conf.stdout.strip())
         monkeypatch.setenv("OMP_NUM_THREADS", "1")
+        monkeypatch.setenv("STRAINKIT_BEAT", "5")  # a dead task is known as such sooner
         # the sandbox of MPI inside a scheduler it knows nothing of
         monkeypatch.setenv("OMPI_ALLOW_RUN_AS_ROOT", "1")
         monkeypatch.setenv("OMPI_ALLOW_RUN_AS_ROOT_CONFIRM", "1")
