@@ -1,12 +1,13 @@
 """Relaxed cells out of the outputs of programs, so that the output of a variable-cell run can be given as CELL.
 
 Each kind is recognised by its content. Quantum ESPRESSO, VASP, CASTEP and FHI-aims are read through ASE; ABINIT here, since ASE
-ignores acell; CP2K through the restart file that it leaves.
+ignores acell, and CP2K from the restart file that it leaves (its output rounds the cell).
 """
 
 from __future__ import annotations
 
 import re
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,7 +15,7 @@ import numpy as np
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["OUTPUTS", "Output", "abinit_cell", "recognise_output", "relaxation_doubts"]
+__all__ = ["OUTPUTS", "OWN", "Output", "recognise_output", "relaxation_doubts"]
 
 #: characters in which a file says what it is
 _HEAD = 4096
@@ -30,7 +31,7 @@ class Output:
     words : tuple of str
         All of them stand in the first characters.
     ase_format : str
-        Format for ase.io.read, or "abinit-out", which is read here.
+        Name of the format; a key of `OWN`, or one of ase.io.read.
     ended : pattern or None
         Found in every run that ended and converged; None where the file does not say.
     failed : pattern or None
@@ -86,6 +87,9 @@ OUTPUTS: tuple[Output, ...] = (
 )
 
 
+Cell = tuple[FloatArray, FloatArray, list[int]]
+
+
 def recognise_output(text: str) -> Output | None:
     """The kind of output that a text is, None when it is none."""
     head = text[:_HEAD]
@@ -103,7 +107,7 @@ def relaxation_doubts(kind: Output, text: str, source: str) -> tuple[Finding, ..
     return (finding("relaxation-unfinished", source, why),)
 
 
-def abinit_cell(text: str) -> tuple[FloatArray, FloatArray, list[int]]:
+def abinit_cell(text: str) -> Cell:
     """Lattice (3, 3) in angstrom, fractional positions (n, 3) and atomic numbers of the last step of an ABINIT output.
 
     Raises
@@ -130,3 +134,31 @@ def abinit_cell(text: str) -> tuple[FloatArray, FloatArray, list[int]]:
             raise ValueError("no lattice vectors in it")
         lattice = np.array(rows[-3:], dtype=float) * Bohr
     return lattice, np.array(positions[-1].split(), dtype=float).reshape(-1, 3), numbers
+
+
+def cp2k_cell(text: str) -> Cell:
+    """Lattice (3, 3) in angstrom, fractional positions (n, 3) and atomic numbers in a restart file of CP2K.
+
+    Raises
+    ------
+    ValueError
+        When the file holds no such thing.
+    """
+    from ase.data import atomic_numbers
+
+    cell = re.search(r"&CELL\s*\n((?:\s+[ABC]\s.*\n){3})", text)
+    block = re.search(r"&COORD\s*\n(.*?)&END COORD", text, re.S)
+    if cell is None or block is None:
+        raise ValueError("no CELL and COORD sections in it")
+    elements = dict(re.findall(r"&KIND\s+(\S+)\n(?:(?!&END KIND).*\n)*?\s+ELEMENT\s+(\S+)", text))
+    lattice = np.array([line.split()[1:4] for line in cell[1].splitlines()], dtype=float)
+    rows = [line.split() for line in block[1].splitlines()]
+    atoms = [row for row in rows if len(row) >= 4]
+    places = np.array([row[1:4] for row in atoms], dtype=float)
+    scaled = any(row[:1] == ["SCALED"] and row[1:2] != ["F"] for row in rows)
+    numbers = [atomic_numbers[elements.get(row[0], row[0])] for row in atoms]
+    return lattice, places if scaled else places @ np.linalg.inv(lattice), numbers
+
+
+#: format -> reader of text, for the outputs that are read here
+OWN: dict[str, Callable[[str], Cell]] = {"abinit-out": abinit_cell, "cp2k-restart": cp2k_cell}

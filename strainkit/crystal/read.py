@@ -11,7 +11,7 @@ import numpy as np
 
 from strainkit.crystal.cif import crystal_from_cif
 from strainkit.crystal.crystal import Crystal
-from strainkit.crystal.outputs import OUTPUTS, Output, abinit_cell, recognise_output, relaxation_doubts
+from strainkit.crystal.outputs import OUTPUTS, OWN, Output, recognise_output, relaxation_doubts
 from strainkit.errors import InputError, StrainkitError
 
 __all__ = ["read_crystal"]
@@ -74,10 +74,10 @@ def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
 
 def _from_output(path: Path, text: str, kind: Output) -> Crystal:
     """The last cell of a program's output, with a finding when the run did not end well."""
-    if kind.ase_format == "abinit-out":
+    if kind.ase_format in OWN:
         try:
-            lattice, positions, numbers = abinit_cell(text)
-        except (ValueError, IndexError) as error:
+            lattice, positions, numbers = OWN[kind.ase_format](text)
+        except (ValueError, IndexError, KeyError) as error:
             raise InputError(f"not readable as {kind.ase_format}: {error}", path) from None
         crystal = Crystal(lattice, positions, np.array(numbers), name=_name(path), source=str(path))
     else:

@@ -11,7 +11,11 @@ from strainkit.present.text import heading, paragraph
 
 __all__ = ["calculation_lines"]
 
-_TASKS = {"cell": "cell and ions relaxed", "ions": "ions relaxed at fixed cell", "single": "ions held"}
+_TASKS = {
+    "cell": "cell and ions relaxed",
+    "ions": "ions relaxed at fixed cell, one mesh and grid for all",
+    "single": "ions held, one mesh and grid for all",
+}
 
 
 def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[str]:
@@ -21,7 +25,7 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
     mesh = "x".join(map(str, calculation["kmesh"]))
     spacing = calculation["kspacing_per_A"]
     source = "from the settings file" if spacing is None else f"spacing at most {spacing:g} 1/A, 2 pi included"
-    lines = ["", heading(f"{calculation['program']}, {_TASKS[calculation['task']]}, one mesh and grid for every job")]
+    lines = ["", heading(f"{calculation['program']}, {_TASKS[calculation['task']]}")]
     lines.append(f"  k-mesh    {mesh}, Gamma-centred ({source})")
     grids = ", ".join("x".join(map(str, points)) for points in calculation["grids"])
     if grids:

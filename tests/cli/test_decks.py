@@ -46,7 +46,7 @@ def test_what_prepare_prints(cli, cell, settings, tmp_path):
     assert "k-mesh    9x9x9, Gamma-centred (spacing at most 0.25 1/A, 2 pi included)" in made.out
     assert f"cd {folder} && sbatch submit.sh" in made.out
     assert max(map(len, made.out.replace(str(folder), "run").splitlines())) <= 80
-    assert sorted(p.name for p in folder.iterdir()) == ["jobs", "joblist.txt", "logs", "strain-set.json", "submit.sh"]
+    assert sorted(p.name for p in folder.iterdir()) == ["joblist.txt", "jobs", "logs", "strain-set.json", "submit.sh"]
     assert (folder / "joblist.txt").read_text() == "jobs/reference\njobs/s1-plus-1\njobs/s1-minus-1\n"
 
 

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from support.files import write
 
-from strainkit.crystal.outputs import abinit_cell, recognise_output
+from strainkit.crystal.outputs import abinit_cell, cp2k_cell, recognise_output
 from strainkit.crystal.read import read_crystal
 from strainkit.errors import InputError
 
@@ -71,6 +71,57 @@ def test_an_abinit_output_without_a_cell(tmp_path):
         abinit_cell("nothing")
     with pytest.raises(InputError, match="not readable as abinit-out"):
         read_crystal(write(tmp_path, "run.abo", ABINIT.replace("xred", "xxxx")))
+
+
+#: a restart file of CP2K 2023.1 from a variable-cell run of ours (nitrogen, two steps), shortened
+CP2K = """ # Version information for this restart file
+ &GLOBAL
+   RUN_TYPE  CELL_OPT
+ &END GLOBAL
+ &MOTION
+   &CELL_OPT
+     STEP_START_VAL  2
+   &END CELL_OPT
+ &END MOTION
+ &FORCE_EVAL
+   &SUBSYS
+     &CELL
+       A     4.0092769933227919E+00    0.0000000000000000E+00    0.0000000000000000E+00
+       B     9.9993075642531432E-02    4.2061915444662148E+00    0.0000000000000000E+00
+       C     3.7039543359458995E-04    1.9918034719163030E-01    4.3840281690043170E+00
+       PERIODIC  XYZ
+       &CELL_REF
+         A     4.0000000000000000E+00    0.0000000000000000E+00    0.0000000000000000E+00
+       &END CELL_REF
+     &END CELL
+     &COORD
+N1    4.0327843781663681E-04    3.9499635265129374E-04   -9.1407994432452996E-03
+N2    1.7919368398126915E-02    1.4995042448582690E-02    2.6955338164290099E-01
+       SCALED  T
+     &END COORD
+     &KIND N1
+       BASIS_SET SZV-MOLOPT-SR-GTH
+       ELEMENT N
+     &END KIND
+     &KIND N2
+       BASIS_SET SZV-MOLOPT-SR-GTH
+       ELEMENT N
+     &END KIND
+   &END SUBSYS
+ &END FORCE_EVAL
+"""
+
+
+def test_cp2k_restart_file(tmp_path):
+    crystal = read_crystal(write(tmp_path, "strainkit-1.restart", CP2K))
+    np.testing.assert_allclose(crystal.lattice[1], [9.9993075642531432e-02, 4.2061915444662148, 0], rtol=1e-15)
+    np.testing.assert_allclose(crystal.positions[1, 2], 0.26955338164290099, rtol=1e-15)
+    assert crystal.symbols == ["N", "N"]
+    cartesian = CP2K.replace("       SCALED  T\n", "")
+    lattice, positions, _ = cp2k_cell(cartesian)
+    np.testing.assert_allclose(positions @ lattice, crystal.positions, rtol=1e-12)
+    with pytest.raises(InputError, match="no CELL and COORD"):
+        read_crystal(write(tmp_path, "x.restart", CP2K.replace("&COORD", "&XXXXX")))
 
 
 @pytest.mark.parametrize(

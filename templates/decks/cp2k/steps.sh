@@ -1,7 +1,7 @@
-# CP2K writes the input of the next attempt itself, with the cell and the ions of the last step
+# CP2K writes the input of the next attempt itself, with the cell and the ions of the last step; steps are counted anew
 make_inputs() {
-  if [ "$n" -gt 1 ] && grep -q '&END FORCE_EVAL\|&END *$' strainkit-1.restart 2>/dev/null; then
-    cp strainkit-1.restart "cp2k-$n.inp"
+  if [ "$n" -gt 1 ] && grep -q '&END FORCE_EVAL' strainkit-1.restart 2>/dev/null; then
+    sed '/STEP_START_VAL/d' strainkit-1.restart >"cp2k-$n.inp"
   else
     cp cp2k.inp "cp2k-$n.inp"
   fi
