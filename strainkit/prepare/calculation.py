@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import groupby
@@ -69,6 +70,7 @@ class Calculation:
         from ase import units
 
         kinds, index = atom_kinds(cell)
+        title = re.sub(r"[^\w .,+()=-]", "_", " ".join(title.split()))  # it ends up in comments of scripts
         moments = [0.0] * len(index) if cell.magnetic_moments is None else [float(m) for m in cell.magnetic_moments]
         names = self.pseudopotentials
         geometry = FORMATS[self.deck.program["geometry"]]

@@ -85,7 +85,8 @@ def load_deck(name: str, wanted: Mapping[str, Any], source: str = "") -> Deck:
         template = path
         folder = _like(path, wanted)
     else:
-        remedy = f"Choose from {', '.join(DECK_NAMES)}, or name a folder or file of your own."
+        shipped = shipped_folder("templates") / "decks"
+        remedy = f"Choose from {', '.join(DECK_NAMES)} (in {shipped}), or name a folder or file of your own."
         raise UsageError(f"no such deck: {name!r}", "--deck", remedy)
     facts = _facts(folder)
     templates = {p.name: p for p in sorted(folder.iterdir()) if p.is_file() and _is_template(p)}
@@ -94,8 +95,9 @@ def load_deck(name: str, wanted: Mapping[str, Any], source: str = "") -> Deck:
     own: set[str] = set()
     if template is not None:
         first = next(iter(templates))
-        if template.suffix not in (".j2", ".jinja"):
-            first = next((n for n in templates if Path(n).suffix == template.suffix), first)
+        name_inside = template.name.removesuffix(".j2")
+        same_kind = [n for n in templates if n.removesuffix(".j2") == name_inside or Path(n).suffix == Path(name_inside).suffix]
+        first = name_inside if name_inside in templates else next(iter(same_kind), first)
         templates[first] = template
         own = _mentioned(template)
     values = dict(facts["deck"])

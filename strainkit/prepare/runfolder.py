@@ -146,7 +146,8 @@ def files_of(
     cell_formats(formats)
     files: dict[str, str] = {}
     for job in jobs:
-        cell, title, folder = plan.crystal.deformed(job.gradient), _title(plan, job), job_folder(job.label)
+        cell = plan.crystal.deformed(job.gradient)
+        title, folder = _title(plan, job), job_folder(job.label)
         for name in formats:
             files[f"{folder}/{FORMATS[name].file_name}"] = write_cell(name, cell, title)
         if calculation is not None:

@@ -27,8 +27,8 @@ case $task in
     exit 2
     ;;
   *)
-    first=$(((task - 1) * bundle + 1))
-    last=$((task * bundle))
+    first=$(((10#$task - 1) * bundle + 1))
+    last=$((10#$task * bundle))
     ;;
 esac
 

@@ -205,6 +205,18 @@ def test_own_deck_of_one_file(tmp_path, crystal):
     assert files["pw.in"].startswith("job 80.0 4.5 1x2x3\n! job\nCELL_PARAMETERS angstrom\n")
 
 
+def test_own_file_takes_the_place_of_its_namesake(tmp_path, crystal):
+    path = write(tmp_path, "KPOINTS", "mine {{ kmesh[0] }}\n")
+    files = plan_calculation(str(path), crystal, "ions", settings(program="vasp", kmesh=[5, 5, 5])).files(crystal, "job")
+    assert files["KPOINTS"] == "mine 5\n"
+    assert "ENCUT = 600.0" in files["INCAR"]
+
+
+def test_names_cannot_smuggle_lines_into_scripts(crystal):
+    files = plan_calculation("gpaw", crystal, "ions", settings()).files(crystal, 'x\n"""\nimport os #')
+    assert files["gpaw_job.py"].splitlines()[0] == '"""x ___ import os _"""'
+
+
 def test_own_deck_folder(tmp_path, crystal):
     folder = tmp_path / "siesta"
     folder.mkdir()

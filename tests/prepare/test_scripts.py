@@ -141,6 +141,7 @@ def test_from_any_folder_and_beyond_the_list(made, tmp_path):
     elsewhere.mkdir()
     assert made.start("1", cwd=elsewhere).returncode == 0
     assert made.start("99", cwd=elsewhere).returncode == 0
+    assert made.start("09", cwd=elsewhere).returncode == 0
     assert made.calls() == ["reference pw-1.in"]
 
 
