@@ -30,9 +30,9 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
     grids = ", ".join("x".join(map(str, points)) for points in calculation["grids"])
     if grids:
         lines.append(f"  grid      {grids} points")
-    pseudopotentials = ", ".join(f"{symbol} {name}" for symbol, name in calculation["pseudopotentials"].items())
+    pseudopotentials = ", ".join(f"{symbol} = {name}" for symbol, name in calculation["pseudopotentials"].items())
     if pseudopotentials:
-        lines.append(paragraph(f"files     {pseudopotentials}", "  "))
+        lines.append(paragraph(f"pseudo    {pseudopotentials}", "  "))
     values = ", ".join(f"{key} {_value(value)}" for key, value in calculation["settings"].items() if value not in ({}, 0.0))
     lines.append(paragraph(f"settings  {values}", "  "))
     if "submit" in calculation:
