@@ -9,9 +9,12 @@ from io import StringIO
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from strainkit.crystal.cif import crystal_from_cif
 from strainkit.crystal.contacts import refuse_coincident
 from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.outputs import OUTPUTS, OWN, Output, recognise_output, relaxation_doubts
 from strainkit.errors import InputError, StrainkitError
 from strainkit.findings import Finding, finding
 
@@ -30,6 +33,8 @@ _ENDINGS = {
     ".res": "res",
 }
 _NAMES = {"POSCAR": "vasp", "CONTCAR": "vasp"}
+#: outputs that job scripts number, and those that a program always calls the same
+_JOB_OUTPUT = re.compile(r"(pw|abinit|castep|aims|vasp)-\d+\.\w+|strainkit-1\.restart|returned\.extxyz|OUTCAR|vasprun\.xml")
 
 
 def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
@@ -63,9 +68,28 @@ def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
         raise InputError("the file is empty", path)
     text = raw.decode("utf-8", errors="replace")
     format = {"poscar": "vasp"}.get(format, format) if format else _guess(path, text)
-    crystal = crystal_from_cif(text, path) if format == "cif" else _through_ase(path, text, format)
+    kind = next((kind for kind in OUTPUTS if kind.ase_format == format), None)
+    if format == "cif":
+        crystal = crystal_from_cif(text, path)
+    elif kind is not None:
+        crystal = _from_output(path, text, kind)
+    else:
+        crystal = _through_ase(path, text, format)
     refuse_coincident(crystal)
     return crystal
+
+
+def _from_output(path: Path, text: str, kind: Output) -> Crystal:
+    """The last cell of a program's output, with a finding when the run did not end well."""
+    if kind.ase_format in OWN:
+        try:
+            lattice, positions, numbers = OWN[kind.ase_format](text)
+        except (ValueError, IndexError, KeyError) as error:
+            raise InputError(f"not readable as {kind.ase_format}: {error}", path) from None
+        crystal = Crystal(lattice, positions, np.array(numbers), name=_name(path), source=str(path))
+    else:
+        crystal = _through_ase(path, text, kind.ase_format)
+    return replace(crystal, remarks=(*crystal.remarks, *relaxation_doubts(kind, text, str(path))))
 
 
 def _guess(path: Path, text: str) -> str:
@@ -74,6 +98,9 @@ def _guess(path: Path, text: str) -> str:
         return "cif"
     if len(head) == 2 and head[0].strip().isdigit() and "lattice=" in head[1].lower():
         return "extxyz"
+    kind = recognise_output(text)
+    if kind is not None:
+        return kind.ase_format
     for name, format in _NAMES.items():
         if path.name.upper().startswith(name):
             return format
@@ -109,8 +136,7 @@ def _through_ase(path: Path, text: str, format: str) -> Crystal:
         raise InputError(f"not readable as {format}: {reason}", path) from None
     if not isinstance(atoms, Atoms):
         raise InputError(f"no structure found when read as {format}", path)
-    stem = path.parent.name if path.name.upper() in _NAMES else path.name.split(".")[0]
-    return replace(Crystal.from_atoms(atoms, name=stem or "crystal", source=str(path)), remarks=remarks)
+    return replace(Crystal.from_atoms(atoms, name=_name(path), source=str(path)), remarks=remarks)
 
 
 def _ase_atoms(source: Path | StringIO, format: str) -> Any:
@@ -119,3 +145,9 @@ def _ase_atoms(source: Path | StringIO, format: str) -> Any:
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # remarks of ASE's readers to their developers
         return read(source, format=format, index=-1)
+
+
+def _name(path: Path) -> str:
+    """Name of a crystal after its file, or after the folder of a file that is always called the same."""
+    always = path.name.upper() in _NAMES or _JOB_OUTPUT.fullmatch(path.name)
+    return (path.parent.name if always else path.name.split(".")[0]) or "crystal"

@@ -9,13 +9,30 @@ from functools import cached_property
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
-from strainkit.crystal.spacegroup import DEFAULT_SYMPREC, deviation, exact_operations, space_group_data, standard_rotations
+from strainkit.crystal.spacegroup import (
+    DEFAULT_SYMPREC,
+    deviation,
+    exact_operations,
+    space_group_data,
+    species,
+    spglib_raises,
+    standard_rotations,
+)
 from strainkit.errors import InputError
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_matrices
 
-__all__ = ["DEFAULT_SYMPREC", "LAUE_CLASSES", "Symmetry", "find_symmetry", "laue_class_of", "mean_lattice", "tolerance_ladder"]
+__all__ = [
+    "DEFAULT_SYMPREC",
+    "LAUE_CLASSES",
+    "Symmetry",
+    "find_symmetry",
+    "laue_class_of",
+    "mean_lattice",
+    "tolerance_ladder",
+    "translation_denominators",
+]
 
 #: Laue class -> (crystal system, point groups)
 LAUE_CLASSES: dict[str, tuple[str, tuple[str, ...]]] = {
@@ -151,6 +168,28 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float
         where = crystal.source or crystal.name
         findings.append(finding("symmetry-depends-on-tolerance", where, text + offer))
     return rungs, findings
+
+
+def translation_denominators(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> tuple[int, int, int]:
+    """Smallest whole numbers of grid points along a, b, c whose multiples every symmetry operation maps onto themselves.
+
+    Glide planes and screw axes move the grid by a fraction of a lattice vector; operations whose fraction is none of
+    the usual ones (a crystal with its origin elsewhere) do not count, since no grid suits them.
+    """
+    import spglib
+
+    cell = (crystal.lattice.tolist(), crystal.positions.tolist(), species(crystal).tolist())
+    try:
+        with spglib_raises():
+            found = spglib.get_symmetry(cell, symprec=symprec)
+    except spglib.SpglibError:
+        return 1, 1, 1
+    needed = np.ones(3, dtype=int)
+    for translation in found["translations"] if found else ():
+        fits = [next((d for d in (1, 2, 3, 4, 6) if abs(d * x - round(d * x)) < 1e-3), 0) for x in translation]
+        if all(fits):
+            needed = np.lcm(needed, fits)
+    return int(needed[0]), int(needed[1]), int(needed[2])
 
 
 def laue_class_of(rotations: FloatArray) -> str:

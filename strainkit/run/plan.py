@@ -58,6 +58,8 @@ class Plan:
         Whether the starting cells move molecules as bodies or every atom with the lattice.
     molecules : Molecules or None
         What the bonds of the reference cell make of it; None in a manifest that does not say.
+    calculation : dict
+        How the jobs are computed (deck, its settings, k-mesh, pseudopotentials, job script); empty for cells only.
     """
 
     crystal: Crystal
@@ -69,6 +71,7 @@ class Plan:
     expectation: Expectation
     findings: tuple[Finding, ...] = ()
     files: dict[str, str] = field(default_factory=dict)
+    calculation: dict[str, Any] = field(default_factory=dict)
     atoms: AtomMoves = "affine"
     molecules: Molecules | None = None
 
@@ -141,6 +144,7 @@ class Plan:
                 "labels": list(self.crystal.labels),
                 "magnetic_moments": self.crystal.magnetic_moments,
             },
+            "calculation": self.calculation or None,
             "files": self.files,
         }
 
@@ -236,6 +240,7 @@ def _plan_from(data: dict[str, Any]) -> Plan:
         files=dict(data["files"]),
         atoms=data.get("atoms", "affine"),
         molecules=Molecules.from_dict(data["molecules"]) if data.get("molecules") else None,
+        calculation=dict(data.get("calculation") or {}),
     )
 
 
