@@ -37,6 +37,11 @@ CODES: dict[str, tuple[Severity, str]] = {
     "not-positive-definite": ("error", "the stiffness has an eigenvalue that is not positive"),
     "residual-stress": ("warning", "the reference stress exceeds 5 % of the smallest diagonal constant"),
     "reference-stress-unknown": ("warning", "no usable job determines the reference stress"),
+    # what is derived
+    "axes-assumed": ("info", "a tensor file does not name its axes: taken to be the IEEE ones of the cell"),
+    "asymmetric-coefficients": ("warning", "the reference stress makes the stress-strain coefficients asymmetric"),
+    "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),
+    "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
 }
 
 

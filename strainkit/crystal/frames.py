@@ -46,10 +46,10 @@ def conventional_axes(symmetry: Symmetry) -> tuple[FloatArray, str]:
         for order, words in enumerate(("a, b, c", "b, c, a", "c, a, b") if symmetry.system == "monoclinic" else ("a, b, c",)):
             axes = np.roll(exact, -order, axis=0)
             if _is_conventional(axes, symmetry):
-                return axes, f"a, b, c being {words} of the cell as given"
+                return axes, f"{'a, b, c' if order == 0 else f'a, b, c being {words}'} of the cell as given"
     rows = np.linalg.inv(symmetry.transformation).T
-    words = "; ".join(f"{name} = {_combination(row)}" for name, row in zip("abc", rows, strict=True))
-    return symmetry.standard_lattice, f"of the standard cell, {words} of the cell as given"
+    words = ", ".join(_combination(row) for row in rows)
+    return symmetry.standard_lattice, f"a, b, c of the standard cell, which are {words} of the cell as given"
 
 
 def _combination(row: FloatArray) -> str:

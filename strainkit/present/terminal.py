@@ -7,22 +7,19 @@ from collections import Counter
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.symmetry import Symmetry
-from strainkit.derive.averages import AVERAGES, SCHEMES, Averages
 from strainkit.fit.result import Fit
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
 from strainkit.tensors.sixvectors import COMPONENTS, strain_to_voigt, stress_to_voigt
 
-__all__ = ["BLIND_SPOT", "averages_text", "cell_text", "fit_text", "plan_text", "table_text"]
+__all__ = ["BLIND_SPOT", "cell_text", "fit_text", "plan_text", "table_text"]
 
 #: what every fit says about its error bars
 BLIND_SPOT = (
     "Error bars are the precision of the fit. They cannot see errors that are smooth in strain: cutoff, k-mesh, grid, "
     "functional, ions that are not fully relaxed."
 )
-
-_NAMES = {"bulk_GPa": "bulk K", "shear_GPa": "shear G", "young_GPa": "Young E", "poisson": "Poisson nu"}
 
 
 def cell_text(crystal: Crystal, symmetry: Symmetry) -> str:
@@ -115,16 +112,3 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         findings_text(fit.findings),
     ]
     return "\n".join(lines)
-
-
-def averages_text(averages: Averages) -> str:
-    """Bulk, shear, Young's modulus and Poisson's ratio."""
-    rows = []
-    for i, name in enumerate(AVERAGES):
-        errors = [None] * 3 if averages.errors is None else averages.errors[i]
-        digits = 3 if name == "poisson" else 2
-        unit = "" if name == "poisson" else " (GPa)"
-        cells = [uncertain(v, e, digits) for v, e in zip(averages.values[i], errors, strict=True)]
-        rows.append([_NAMES[name] + unit, *cells])
-    index = uncertain(averages.anisotropy, averages.anisotropy_error)
-    return columns(rows, ["average", *SCHEMES]) + f"\n  universal anisotropy index {index}"
