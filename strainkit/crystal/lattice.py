@@ -90,10 +90,10 @@ class IndexAxes:
         while True:  # Lagrange-Gauss reduction of the plane's lattice
             if first @ first > second @ second + 1e-9:
                 first, second = second, first
-            turns = round(float(first @ second / (first @ first)))
-            if turns == 0:
+            share = float(first @ second / (first @ first))
+            if abs(share) < 0.5 + 1e-9:  # hexagonal nets sit on the tie
                 return _upright(_coprime(self.reciprocal @ first)), float(np.linalg.norm(first))
-            second = second - turns * first
+            second = second - round(share) * first
 
     def images(self, plane: IntArray) -> list[tuple[int, ...]]:
         """All planes that the Laue class makes alike, one of each pair of opposite normals, the nicest to print first."""

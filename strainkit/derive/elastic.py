@@ -193,7 +193,9 @@ def from_tensor_file(
         return _without_cell(file, printing_frame(frame, None), density)
     if file.laue_class not in (None, symmetry.laue_class):
         raise UsageError(
-            f"the tensor is of Laue class {file.laue_class}, the cell of {symmetry.laue_class}", file.where, "Check the line `laue` and the structure."
+            f"the tensor is of Laue class {file.laue_class}, the cell of {symmetry.laue_class}",
+            file.where,
+            "Check the line `laue` and the structure.",
         )
     typed = crystal_frame(file.axes or "ieee", symmetry)
     rotations = typed.rotation @ symmetry.rotations @ typed.rotation.T

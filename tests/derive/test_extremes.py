@@ -7,7 +7,7 @@ import pytest
 from scipy.optimize import minimize
 from support.crystals import random_rotation
 from support.groups import LAUE_CLASSES
-from support.published import BY_LAUE_CLASS, entries, mandel
+from support.published import BY_LAUE_CLASS, mandel
 
 from strainkit.derive.directional import poisson, poisson_range, shear, shear_range, young
 from strainkit.derive.search import search
@@ -31,10 +31,10 @@ GRID = np.stack(np.meshgrid(*[np.radians(np.arange(3.75, 180, 7.5))] * 3, indexi
 
 
 def brute(function, largest: bool) -> float:
-    """Global optimum over n and m together: a full grid, then scipy's simplex from its five best points."""
+    """Global optimum over n and m together: a full grid, then scipy's simplex from its three best points."""
     sign = -1.0 if largest else 1.0
     every = sign * function(*axes_of(GRID))
-    starts = GRID[np.argsort(every)[:5]]
+    starts = GRID[np.argsort(every)[:3]]
     return sign * min(
         minimize(lambda angles: float(sign * function(*axes_of(angles[None]))[0]), start, method="Nelder-Mead", tol=1e-10).fun
         for start in starts
@@ -59,9 +59,9 @@ def test_against_a_full_grid_and_a_simplex_search(laue, largest):
         assert quantity(s[None], found.direction[None, None])[0, 0] == pytest.approx(found.value.value, rel=1e-12)
 
 
-@pytest.mark.parametrize("entry", sorted(entries()))
+@pytest.mark.parametrize("entry", [*BY_LAUE_CLASS.values(), "urea_FZ1970", "Zn_Alers1958", "CsSCN_1983", "CCl4_Ia"])
 def test_no_random_direction_beats_an_extreme(entry):
-    """Every published tensor of the collection, 5,000 random directions."""
+    """A published tensor of every class and the most uneven ones of the collection, 5,000 random directions."""
     s = np.linalg.inv(mandel(entry))
     n = np.random.default_rng(0).normal(size=(5_000, 3))
     n /= np.linalg.norm(n, axis=1, keepdims=True)
