@@ -118,7 +118,7 @@ class IndexAxes:
         y = np.cross(z, x)
         start = np.arctan2(vectors[0] @ y, vectors[0] @ x)
         turned = []
-        for angle in np.radians(30.0 * np.arange(12)) - start:
+        for angle in start - np.radians(30.0 * np.arange(12)):
             c, s = np.cos(angle), np.sin(angle)
             along = vectors @ np.array([c * x + s * y, -s * x + c * y, z]).T  # components in turned axes
             turned.append(along @ np.array([x, y, z]))

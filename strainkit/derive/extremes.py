@@ -2,21 +2,25 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
 from strainkit.crystal.lattice import IndexAxes, low_indices
-from strainkit.derive.directional import poisson_range, shear_range, young
+from strainkit.derive.directional import linear_compressibility, poisson_range, shear_range, young
 from strainkit.derive.elastic import ElasticCrystal
 from strainkit.derive.search import Top, search
 from strainkit.derive.spread import WithError, half_width, with_errors
-from strainkit.derive.waves import christoffel, sound_speeds, speed
+from strainkit.derive.waves import christoffel, speed
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import from_mandel
 
 __all__ = ["Extreme", "Near", "extremes", "ratio"]
+
+#: maps 6x6 matrices, unit vectors and 0 or 1 (least, most) to values (..., k) and second directions (..., k, 3), if any
+Paired = Callable[[FloatArray, FloatArray, int], tuple[FloatArray, FloatArray | None]]
 
 #: draws behind the errors of extremes: good to about 4 %
 _DRAWS = 300
@@ -75,24 +79,27 @@ def extremes(elastic: ElasticCrystal) -> dict[str, tuple[Extreme, Extreme]]:
     dict
         "young_GPa", "linear_compressibility_per_TPa", "shear_GPa", "poisson", and with a density "sound_m_per_s".
     """
-    s, draws, simple = elastic.compliance, elastic.compliance_draws[:_DRAWS], _simple(elastic.axes)
-    found: dict[str, tuple[Extreme, Extreme]] = {}
-    pair = []
-    for largest in (False, True):
-        top = search(young, s, draws, largest, simple)
-        pair.append(_named(elastic.axes, top, top.direction[None]))
-    found["young_GPa"] = (pair[0], pair[1])
-    found["linear_compressibility_per_TPa"] = _compressibilities(elastic)
-    for name, function in (("shear_GPa", shear_range), ("poisson", poisson_range)):
-        pair = []
-        for order in (0, 1):
-            top = search(lambda m, n, f=function, i=order: f(m, n)[i], s, draws, bool(order), simple)  # type: ignore[misc]
-            side = function(s, top.direction[None])[2 + order][0]
-            pair.append(_named(elastic.axes, top, np.array([top.direction, side])))
-        found[name] = (pair[0], pair[1])
-    if elastic.density is not None:
-        found["sound_m_per_s"] = _speeds(elastic, elastic.density)
+    s, draws = elastic.compliance, elastic.compliance_draws[:_DRAWS]
+    found = {
+        "young_GPa": _ends(elastic, s, draws, lambda m, n, _: (young(m, n), None)),
+        "linear_compressibility_per_TPa": _compressibilities(elastic),
+        "shear_GPa": _ends(elastic, s, draws, lambda m, n, most: _of(shear_range(m, n), most)),
+        "poisson": _ends(elastic, s, draws, lambda m, n, most: _of(poisson_range(m, n), most)),
+    }
+    density = elastic.density
+    if density is not None:
+
+        def wave(m: FloatArray, n: FloatArray, most: int) -> tuple[FloatArray, FloatArray]:
+            values, vectors = np.linalg.eigh(christoffel(m, elastic.stress, n))
+            return speed(values[..., 2 * most], density), vectors[..., 2 * most]
+
+        found["sound_m_per_s"] = _ends(elastic, elastic.waves.mandel, elastic.wave_draws[:_DRAWS], wave)
     return found
+
+
+def _of(ranges: tuple[FloatArray, FloatArray, FloatArray, FloatArray], most: int) -> tuple[FloatArray, FloatArray]:
+    """Least or most of a range, and its direction."""
+    return ranges[most], ranges[2 + most]
 
 
 def ratio(least: Extreme, most: Extreme) -> WithError:
@@ -109,23 +116,32 @@ def _compressibilities(elastic: ElasticCrystal) -> tuple[Extreme, Extreme]:
     drawn = np.linalg.eigvalsh(1e3 * from_mandel(elastic.compliance_draws @ trace))
     errors = half_width(drawn) if len(drawn) > 1 else None
     found = with_errors(values, errors)
-    tops = [Top(found[i], vectors[:, i], drawn[:, i]) for i in (0, 2)]
-    return _named(elastic.axes, tops[0], tops[0].direction[None]), _named(elastic.axes, tops[1], tops[1].direction[None])
+    simple = _simple(elastic.axes)
+    along = 1e3 * linear_compressibility(elastic.compliance, simple)
+    ends = []
+    for i in (0, 2):  # an axis of symmetry leaves a whole plane of equal directions: name a simple one
+        equal = np.abs(along - values[i]) < 1e-9 * np.abs(values).max()
+        direction = simple[np.argmax(equal)] if equal.any() else vectors[:, i]
+        ends.append(_named(elastic.axes, Top(found[i], direction, drawn[:, i]), [direction[None]]))
+    return ends[0], ends[1]
 
 
-def _speeds(elastic: ElasticCrystal, density: float) -> tuple[Extreme, Extreme]:
-    """The slowest and the fastest wave."""
-    draws = elastic.wave_draws[:_DRAWS]
-    pair = []
-    for order in (0, 2):
-
-        def quantity(m: FloatArray, n: FloatArray, order: int = order) -> FloatArray:
-            return speed(np.linalg.eigvalsh(christoffel(m, elastic.stress, n))[..., order], density)
-
-        top = search(quantity, elastic.waves.mandel, draws, bool(order), _simple(elastic.axes))
-        side = sound_speeds(elastic.waves.mandel, elastic.stress, density, top.direction[None])[1][0, order]
-        pair.append(_named(elastic.axes, top, np.array([top.direction, side])))
-    return pair[0], pair[1]
+def _ends(elastic: ElasticCrystal, matrix: FloatArray, draws: FloatArray, quantity: Paired) -> tuple[Extreme, Extreme]:
+    """Smallest and largest value of a quantity that depends on a direction and has a second one of its own."""
+    ends = []
+    for most in (0, 1):
+        top = search(lambda m, n, most=most: quantity(m, n, most)[0], matrix, draws, bool(most), _simple(elastic.axes))  # type: ignore[misc]
+        vectors = [top.direction]
+        side = quantity(matrix, top.direction[None], most)[1]
+        if side is not None:
+            vectors.append(side[0])
+        equal = [np.array(vectors)]
+        if side is not None:  # in shear and in transverse waves the two directions may change places
+            value, back = quantity(matrix, side, most)
+            if back is not None and abs(value[0] - top.value.value) < 1e-9 * abs(top.value.value):
+                equal.append(np.array([side[0], back[0]]))
+        ends.append(_named(elastic.axes, top, equal))
+    return ends[0], ends[1]
 
 
 def _simple(axes: IndexAxes | None) -> FloatArray:
@@ -136,18 +152,19 @@ def _simple(axes: IndexAxes | None) -> FloatArray:
     return np.asarray(np.stack([axes.direction(indices), axes.normal(indices)], axis=1).reshape(-1, 3))
 
 
-def _named(axes: IndexAxes | None, top: Top, vectors: FloatArray) -> Extreme:
-    """Of all directions that symmetry makes alike, the one with the nicest indices."""
+def _named(axes: IndexAxes | None, top: Top, equal: list[FloatArray]) -> Extreme:
+    """Of all directions that are equally good, by symmetry or otherwise, the ones with the nicest indices."""
     if axes is None:
-        near = [Near(v if v[np.abs(v) > 1e-6][0] > 0 else -v, None, None) for v in vectors]
+        near = [Near(v if v[np.abs(v) > 1e-6][0] > 0 else -v, None, None) for v in equal[0]]
     else:
-        choices = [[Near(v, axes.nearest(v), axes.nearest(v, planes=True)) for v in turned] for turned in axes.alike(vectors)]
-        near = min(choices, key=_awkwardness)
+        turned = [vectors for first in equal for vectors in axes.alike(first)]
+        near = min(([Near(v, axes.nearest(v), axes.nearest(v, planes=True)) for v in vectors] for vectors in turned), key=_ugly)
     return Extreme(top.value, near[0], near[1] if len(near) > 1 else None, top.drawn)
 
 
-def _awkwardness(near: list[Near]) -> tuple[list[float], int, int, list[int]]:
-    """Sorts alike sets of directions for print: small angles, then small indices, few minus signs, h before k before l."""
-    names = [name for n in near for name in (n.direction, n.plane) if name is not None]
+def _ugly(near: list[Near]) -> tuple[float, int, int, list[int]]:
+    """Sorts directions for print: small angles, then small indices, few minus signs, h before k before l."""
+    names = [name for n in near for name in (n.plane, n.direction) if name is not None]
     numbers = [i for indices, _ in names for i in indices]
-    return [round(angle, 2) for _, angle in names], sum(map(abs, numbers)), sum(i < 0 for i in numbers), [-i for i in numbers]
+    angles = sum(min(name[1] for name in (n.plane, n.direction) if name is not None) for n in near)
+    return round(angles, 2), sum(map(abs, numbers)), sum(i < 0 for i in numbers), [-i for i in numbers]

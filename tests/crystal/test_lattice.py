@@ -175,3 +175,11 @@ def test_parse_indices():
     for bad in ("", "1,2", "0,0,0", "1,x,2", "1,1,1,0", "1.5,0,0", "1,2,3,4,5"):
         with pytest.raises(UsageError, match="are not indices"):
             parse_indices(bad, "--plane", plane=True)
+
+
+def test_directions_of_hexagonal_crystals_are_brought_beside_the_axes():
+    """The stiffness is round about c (tested above), so a direction is named in the planes of c with a or with a*."""
+    axes = axes_of(conventional("6/m"))
+    for turned in axes.alike(random_rotation(np.random.default_rng(9))[:1]):
+        azimuth = np.degrees(np.arctan2(turned[0, 1], turned[0, 0]))
+        assert azimuth / 30 == pytest.approx(round(azimuth / 30), rel=0, abs=1e-6)
