@@ -22,6 +22,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "no-symmetry-in-file": ("warning", "the CIF names no space group and lists no operations"),
     "symmetry-depends-on-tolerance": ("warning", "ten times more or less tolerance gives another space group"),
     # the strain set
+    "target-error": ("info", "how the wanted standard error is met"),
     "few-spare-degrees": ("warning", "fewer than three spare degrees of freedom to estimate the noise from"),
     # what came back
     "unreadable-output": ("error", "a job's output cannot be parsed"),
@@ -37,6 +38,19 @@ CODES: dict[str, tuple[Severity, str]] = {
     "not-positive-definite": ("error", "the stiffness has an eigenvalue that is not positive"),
     "residual-stress": ("warning", "the reference stress exceeds 5 % of the smallest diagonal constant"),
     "reference-stress-unknown": ("warning", "no usable job determines the reference stress"),
+    "energy-mismatch": ("warning", "energies and stresses of the same jobs give different stiffness"),
+    "energy-slope-mismatch": ("warning", "energies and stresses of the same jobs give different reference stress"),
+    "outlier": ("warning", "a job that does not fit with the others"),
+    "curved": ("warning", "a nonlinear response that this set cannot correct"),
+    "even-response": ("info", "a statistically real quadratic response; it does not bias pairs"),
+    "offset-removed": ("info", "the reference stress was subtracted as a basis-set offset"),
+    "reference-stress-reading": ("warning", "the constants depend on whether the reference stress is real or an offset"),
+    # the strain magnitude
+    "one-magnitude": ("info", "jobs at one magnitude only: its effect cannot be seen"),
+    "cubic-untested": ("info", "too few jobs to test the cubic response"),
+    "cubic-response": ("info", "a statistically real cubic response that is too small to matter"),
+    "magnitude-matters": ("warning", "a statistically real cubic response that shifts a constant by more than 1 %"),
+    "convergence-unclear": ("info", "the shift to zero strain is known too poorly for a verdict"),
     # what is derived
     "axes-assumed": ("info", "a tensor file does not name its axes: taken to be the IEEE ones of the cell"),
     "asymmetric-coefficients": ("warning", "the reference stress makes the stress-strain coefficients asymmetric"),

@@ -8,6 +8,10 @@ import os
 import sys
 from dataclasses import dataclass
 
+# small matrices: threads would only get in each other's way
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+os.environ.setdefault("OMP_NUM_THREADS", "1")
+
 import pytest
 
 

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 
 import typer
 
-from strainkit.cli.fit import Drop, Noise, Order
+from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
 from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver
 
 if TYPE_CHECKING:
@@ -36,15 +36,18 @@ def derive(
     symprec: Symprec = 1e-3,
     indices: Indices = "conventional",
     order: Order = "linear",
-    noise: Noise = None,
+    noise: KnownNoise = None,
     drop: Drop = None,
+    reference_stress: Reading = "real",
     frame: Frame = "ieee",
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
     """What the tensor means: moduli, planes, directions, waves, each with its error."""
+    from strainkit.cli.load import fitted
     from strainkit.crystal.lattice import parse_indices
     from strainkit.derive.derived import derive_properties
+    from strainkit.derive.elastic import from_fit
     from strainkit.errors import UsageError
     from strainkit.present.derived import derived_text
     from strainkit.present.terminal import BLIND_SPOT
@@ -54,27 +57,19 @@ def derive(
     if (run is None) == (tensor is None):
         raise UsageError("one tensor is needed", "derive", "Give either a run folder or a file with --tensor.")
     if tensor is not None:
-        if order != "linear" or noise is not None or drop:
-            raise UsageError("--order, --noise and --drop are for run folders", "--tensor")
+        if order != "linear" or noise is not None or drop or reference_stress != "real":
+            raise UsageError("--order, --noise, --drop and --reference-stress are for run folders", "--tensor")
         elastic, blind = _typed(tensor, cell, density, read_as, symprec, frame, indices == "given"), ""
     else:
         assert run is not None
         if cell is not None or density is not None:
             raise UsageError("--cell and --density belong to --tensor: a run folder has its own", "derive")
-        elastic, blind = _fitted(run, order, noise, drop, frame, indices == "given"), BLIND_SPOT
+        elastic = from_fit(fitted(run, order, noise, drop, "ieee", reference_stress), frame, indices == "given")
+        blind = BLIND_SPOT
     derived = derive_properties(elastic, planes, directions)
     deliver(derived.to_dict, lambda: derived_text(derived, blind), json)
     if not derived.stability.stable:
         raise typer.Exit(5)
-
-
-def _fitted(
-    run: Path, order: Order, noise: float | None, drop: list[str] | None, frame: str, given_indices: bool
-) -> ElasticCrystal:
-    from strainkit.cli.load import fitted
-    from strainkit.derive.elastic import from_fit
-
-    return from_fit(fitted(run, order, noise, drop, "ieee"), frame, given_indices)
 
 
 def _typed(

@@ -9,15 +9,20 @@ import typer
 from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
 
 Order = Annotated[Literal["linear", "cubic"], typer.Option(help="Fit cubic terms for every shape too?")]
-Noise = Annotated[float | None, typer.Option(help="Known stress noise, GPa; estimated from the residuals if not given.")]
+KnownNoise = Annotated[float | None, typer.Option(help="Known stress noise, GPa; estimated from the residuals if not given.")]
 Drop = Annotated[list[str] | None, typer.Option(help="Leave this job out; repeatable; recorded in the result.")]
+Reading = Annotated[
+    Literal["real", "offset"],
+    typer.Option(help="Is a stress on the reference real, or an offset of the basis set to be removed?"),
+]
 
 
 def fit(
     run: Run,
     order: Order = "linear",
-    noise: Noise = None,
+    noise: KnownNoise = None,
     drop: Drop = None,
+    reference_stress: Reading = "real",
     frame: Frame = "ieee",
     json: Json = False,
     quiet: Quiet = False,
@@ -27,7 +32,7 @@ def fit(
     from strainkit.fit.result import FITTED
     from strainkit.present.terminal import fit_text
 
-    result = fitted(run, order, noise, drop, frame)
+    result = fitted(run, order, noise, drop, frame, reference_stress)
     result.save(run, frame)
     note(f"wrote {run / FITTED}", quiet)
     deliver(lambda: result.to_dict(frame), lambda: fit_text(result, frame), json)

@@ -2,24 +2,67 @@
 
 from __future__ import annotations
 
+from typing import Annotated
+
+import typer
+
 from strainkit.cli.options import Cell, Json, Quiet, ReadAs, Symprec, deliver
+from strainkit.cli.prepare import Noise
 
 
-def inspect(cell: Cell, read_as: ReadAs = None, symprec: Symprec = 1e-3, json: Json = False, quiet: Quiet = False) -> None:
+def inspect(
+    cell: Cell,
+    magnitude: Annotated[float, typer.Option(help="Largest principal strain to expect errors for, percent.")] = 1.0,
+    noise: Noise = 0.01,
+    kspacing: Annotated[
+        float | None, typer.Option(help="Count irreducible k-points of a mesh of this spacing, 1/A, 2 pi included.")
+    ] = None,
+    read_as: ReadAs = None,
+    symprec: Symprec = 1e-3,
+    json: Json = False,
+    quiet: Quiet = False,
+) -> None:
     """What is this cell: symmetry over tolerances, constants, jobs needed, problems."""
+    from strainkit.crystal.kpoints import kpoint_mesh
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import tolerance_ladder
+    from strainkit.design.cost import job_costs
+    from strainkit.design.strainset import Wish
     from strainkit.prepare.runfolder import plan_run
-    from strainkit.present.terminal import plan_text
-    from strainkit.present.text import columns
+    from strainkit.present.terminal import inspection_text
 
     crystal = read_crystal(cell, read_as)
-    plan = plan_run(crystal, symprec=symprec)
+    mesh = None if kspacing is None else kpoint_mesh(crystal, kspacing)
     rungs, _ = tolerance_ladder(crystal, symprec)
-    ladder = [{"tolerance_A": t, "space_group": group, "laue_class": laue} for t, group, laue in rungs]
-    text = columns([[f"{t:g} A", group, laue] for t, group, laue in rungs], ["tolerance", "space group", "Laue class"], 3)
+    sizes = (magnitude / 100.0,)
+    first = plan_run(crystal, Wish(magnitudes=sizes, noise=noise), symprec=symprec)
+    sharp = Wish("sharpest", sizes, 2 * (len(first.jobs) - 1), noise=noise)
+    plans = [first, *(plan_run(crystal, w, symprec=symprec) for w in (Wish("symmetric", sizes, noise=noise), sharp))]
+    costs = [job_costs(plan.jobs, crystal, plan.symmetry, mesh) for plan in plans]
     deliver(
-        lambda: plan.to_dict() | {"schema": "strainkit/inspection/1", "tolerances": ladder},
-        lambda: f"{plan_text(plan, jobs=False)}\n\n{text}",
+        lambda: (
+            first.to_dict()
+            | {
+                "schema": "strainkit/inspection/1",
+                "tolerances": [{"tolerance_A": t, "space_group": g, "laue_class": laue} for t, g, laue in rungs],
+                "kpoint_mesh": mesh,
+                "aims": [
+                    {
+                        "aim": plan.aim,
+                        "strained_jobs": len(plan.jobs) - 1,
+                        "spare_degrees_of_freedom": plan.expectation.spare,
+                        "relative_cost": plan.expectation.relative_cost,
+                        "expected_standard_error_GPa": plan.expectation.standard_errors,
+                        "expected_standard_error_averages_GPa": plan.expectation.averages,
+                        "jobs": [
+                            {"label": c.label, "laue_class": c.laue_class, "lost": c.lost, "irreducible_kpoints": c.kpoints}
+                            for c in cost
+                        ],
+                    }
+                    for plan, cost in zip(plans, costs, strict=True)
+                ],
+            }
+        ),
+        lambda: inspection_text(plans, costs, rungs, mesh),
         json,
     )

@@ -6,10 +6,14 @@ import os
 import sys
 from typing import Annotated
 
+# the matrices here are small: threads of the linear algebra library only get in each other's way
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 import typer
 
 from strainkit import __version__
 from strainkit.cli.collect import collect
+from strainkit.cli.converge import converge
 from strainkit.cli.demo import demo
 from strainkit.cli.derive import derive
 from strainkit.cli.evaluate import evaluate
@@ -29,7 +33,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     add_completion=False,
 )
-for command in (inspect, relax, prepare, evaluate, progress, collect, fit, derive, demo):
+for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, demo):
     app.command()(command)
 
 

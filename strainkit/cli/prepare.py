@@ -7,15 +7,32 @@ from typing import Annotated, Literal
 
 import typer
 
-from strainkit.cli.options import Cell, Json, Quiet, ReadAs, Symprec, deliver, note
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver, note
+
+Aim = Annotated[
+    Literal["fewest", "symmetric", "sharpest"],
+    typer.Option(help="Fewest jobs, most symmetric (cheapest) jobs, or smallest errors for --jobs N."),
+]
+Noise = Annotated[float, typer.Option(help="Stress noise to expect, GPa (standard deviation of one component).")]
 
 
 def prepare(
-    cell: Cell,
+    cell: Annotated[Path | None, typer.Argument(help="Structure file of the relaxed cell; none with --extend.")] = None,
     out: Annotated[Path | None, typer.Option(help="Run folder to make.")] = None,
     magnitude: Annotated[
         list[float] | None, typer.Option(help="Largest principal strain, percent; repeatable. [default: 1.0]")
     ] = None,
+    aim: Aim = "fewest",
+    jobs: Annotated[int | None, typer.Option(help="Most strained jobs, with --aim sharpest.", min=1)] = None,
+    target_error: Annotated[
+        float | None, typer.Option(help="Standard error wanted for the worst constant, GPa: sets magnitude or jobs.")
+    ] = None,
+    ceiling: Annotated[float, typer.Option(help="Largest strain that --target-error may choose, percent.")] = 2.0,
+    noise: Noise = 0.01,
+    extend: Annotated[
+        Path | None, typer.Option(help="Add jobs to this run folder: with --magnitude, or with --more N.")
+    ] = None,
+    more: Annotated[int | None, typer.Option(help="With --extend: at most N jobs that help most.", min=1)] = None,
     ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
     format: Annotated[
         list[str] | None, typer.Option(help="Cell format; repeatable: poscar, cif, extxyz. [default: poscar, cif]")
@@ -29,17 +46,55 @@ def prepare(
 ) -> None:
     """Strained cells for one relaxed crystal: the fewest jobs that fix every constant."""
     from strainkit.crystal.read import read_crystal
+    from strainkit.design.strainset import Wish
     from strainkit.errors import UsageError
     from strainkit.prepare.runfolder import DEFAULT_FORMATS, plan_run, write_run
     from strainkit.prepare.writers import cell_formats
     from strainkit.present.terminal import plan_text
 
-    if out is None and not dry_run:
-        raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     formats = list(format or DEFAULT_FORMATS)
     cell_formats(formats)
-    plan = plan_run(read_crystal(cell, read_as), [m / 100.0 for m in magnitude or [1.0]], ions, symprec)
+    magnitudes = tuple(m / 100.0 for m in magnitude or ())
+    if extend is not None:
+        if cell is not None or out is not None or (more is None) == (not magnitudes):
+            raise UsageError(
+                "--extend goes with --magnitude or --more", "--extend", "It takes neither a CELL nor --out: they are the run's."
+            )
+        _extend(extend, magnitudes, more, formats, dry_run, json, quiet)
+        return
+    if cell is None:
+        raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
+    if out is None and not dry_run:
+        raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
+    wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
+    plan = plan_run(read_crystal(cell, read_as), wish, ions, symprec)
     if out is not None and not dry_run:
         plan, what = write_run(plan, out, formats, force)
         note(f"{out}: {what}", quiet)
+    deliver(plan.to_dict, lambda: plan_text(plan), json)
+
+
+def _extend(
+    run: Path,
+    magnitudes: tuple[float, ...],
+    more: int | None,
+    formats: list[str],
+    dry_run: bool,
+    json: bool,
+    quiet: bool,
+) -> None:
+    from strainkit.design.extend import at_magnitudes, more_jobs
+    from strainkit.prepare.extend import extend_plan, write_extension
+    from strainkit.present.terminal import plan_text
+    from strainkit.run.plan import load_plan
+
+    old = load_plan(run)
+    if more is None:
+        new = at_magnitudes(old.jobs, magnitudes, old.symmetry)
+    else:
+        new = more_jobs(old.jobs, more, old.crystal, old.symmetry)
+    plan = extend_plan(old, new)
+    if not dry_run:
+        plan = write_extension(run, old, plan, formats)
+        note(f"{run}: {len(new)} more job folders", quiet)
     deliver(plan.to_dict, lambda: plan_text(plan), json)

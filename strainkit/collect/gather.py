@@ -10,7 +10,7 @@ import numpy as np
 from strainkit.collect.readers import READERS, Reader, Returned, read_returned, recognise
 from strainkit.collect.table import StressRecord, StressTable
 from strainkit.crystal.crystal import Crystal
-from strainkit.design.strainset import StrainJob
+from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
 from strainkit.findings import Finding, finding
 from strainkit.run.files import checksum

@@ -6,11 +6,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["FRAMES", "Frame", "conventional_axes", "crystal_frame", "standard_frame"]
+__all__ = ["FRAMES", "Frame", "conventional_axes", "crystal_frame", "physical_axes"]
 
 #: names that `--frame` takes
 FRAMES = ("given", "ieee", "crystal")
@@ -104,9 +105,50 @@ def crystal_frame(name: str, symmetry: Symmetry) -> Frame:
     raise UsageError(f"unknown frame {name!r}", "--frame", f"Use one of {', '.join(FRAMES)}.")
 
 
-def standard_frame(symmetry: Symmetry) -> FloatArray:
-    """Rows (3, 3) of the IEEE axes of spglib's standard cell: the same physical axes however the cell was given."""
-    return _ieee(symmetry.system, symmetry.standard_lattice)[0]
+def physical_axes(crystal: Crystal, symmetry: Symmetry) -> FloatArray:
+    """Rows (3, 3) of axes that are fixed to the atoms: the same however the cell was turned, chosen or repeated.
+
+    They are the IEEE axes of spglib's standard cell. Where the lattice has rotations that the crystal lacks (4/m, -3, -3m,
+    6/m and m-3), several such axes are equivalent for the lattice but not for the atoms: the ones are taken along which a
+    fixed polynomial of the directions between neighbouring atoms is largest.
+    """
+    axes = _ieee(symmetry.system, symmetry.standard_lattice)[0]
+    choices = _lattice_rotations(symmetry.system)
+    if len(choices) <= len(symmetry.rotations):
+        return axes
+    vectors, weights = _neighbours(crystal)
+    powers = np.einsum("gij,jk,nk,pi->gnp", choices, axes, vectors, _PROBES, optimize=True) ** 8
+    scores = np.round(np.einsum("gnp,n,p->g", powers, weights, [1.0, -0.7, 0.4, -0.2], optimize=True), 8)
+    return np.asarray(choices[int(scores.argmax())] @ axes)
+
+
+#: directions of the polynomial of `physical_axes`, off every symmetry axis
+_PROBES = np.array([[0.812, 0.251, 0.527], [0.334, 0.871, -0.361], [-0.452, 0.639, 0.622], [0.183, -0.534, 0.825]])
+
+
+def _lattice_rotations(system: str) -> FloatArray:
+    """Proper rotations of the lattice in IEEE axes, for the systems that have Laue classes with fewer."""
+    from scipy.spatial.transform import Rotation
+
+    match system:
+        case "tetragonal":
+            return np.asarray(Rotation.create_group("D4").as_matrix())
+        case "trigonal" | "hexagonal":
+            return np.asarray(Rotation.create_group("D6").as_matrix())
+        case "cubic":
+            return np.asarray(Rotation.create_group("O").as_matrix())
+        case _:
+            return np.eye(3)[None]
+
+
+def _neighbours(crystal: Crystal) -> tuple[FloatArray, FloatArray]:
+    """Unit vectors (n, 3) between atoms within a few atomic distances, and smooth weights a volume."""
+    from ase.neighborlist import neighbor_list
+
+    reach = 3.0 * (crystal.volume / len(crystal.numbers)) ** (1 / 3)
+    first, second, vectors, lengths = neighbor_list("ijDd", crystal.to_atoms(), reach)
+    charges = crystal.numbers[first] * np.sqrt(crystal.numbers[second])
+    return vectors / lengths[:, None], charges * (1.0 - (lengths / reach) ** 2) ** 4 / len(crystal.numbers)
 
 
 def _ieee(system: str, axes: FloatArray) -> tuple[FloatArray, str]:

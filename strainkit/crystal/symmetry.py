@@ -15,7 +15,16 @@ from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_matrices
 
-__all__ = ["DEFAULT_SYMPREC", "LAUE_CLASSES", "Symmetry", "find_symmetry", "tolerance_ladder"]
+__all__ = [
+    "DEFAULT_SYMPREC",
+    "LAUE_CLASSES",
+    "Symmetry",
+    "find_symmetry",
+    "laue_class_of",
+    "species",
+    "spglib_raises",
+    "tolerance_ladder",
+]
 
 #: default distance tolerance of the symmetry search, angstrom
 DEFAULT_SYMPREC = 1e-3
@@ -75,7 +84,7 @@ class Symmetry:
 
 
 @contextmanager
-def _spglib_raises() -> Iterator[None]:
+def spglib_raises() -> Iterator[None]:
     """spglib 2.8 still hides its errors by default; ask for exceptions here and put the switch back afterwards."""
     import spglib
 
@@ -89,7 +98,7 @@ def _spglib_raises() -> Iterator[None]:
             spglib.error.OLD_ERROR_HANDLING = before
 
 
-def _species(crystal: Crystal) -> IntArray:
+def species(crystal: Crystal) -> IntArray:
     """Integer kind of every atom: element, and the signed moment where there is one (never too much symmetry)."""
     moments = crystal.magnetic_moments
     if moments is None:
@@ -114,11 +123,11 @@ def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetr
     """
     import spglib
 
-    kinds = _species(crystal)
+    kinds = species(crystal)
     cell = (crystal.lattice.tolist(), crystal.positions.tolist(), kinds.tolist())
     where = crystal.source or crystal.name
     try:
-        with _spglib_raises():
+        with spglib_raises():
             data = spglib.get_symmetry_dataset(cell, symprec=symprec)
             if data is None:
                 raise spglib.SpglibError("no symmetry found")
@@ -199,3 +208,27 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float
         text = ", ".join(f"{group} at {tolerance:g} A" for tolerance, group, _ in rungs)
         findings.append(finding("symmetry-depends-on-tolerance", crystal.source or crystal.name, text))
     return rungs, findings
+
+
+def laue_class_of(rotations: FloatArray) -> str:
+    """Laue class of a group of proper rotations (m, 3, 3), in any frame, by its numbers of rotation axes."""
+    angles = np.degrees(np.arccos(np.clip(0.5 * (np.trace(rotations, axis1=1, axis2=2) - 1.0), -1.0, 1.0)))
+    two_fold = int((np.round(angles) == 180).sum())
+    four_fold = int((np.round(angles) == 90).sum())
+    match len(rotations):
+        case 1:
+            return "-1"
+        case 2:
+            return "2/m"
+        case 3:
+            return "-3"
+        case 4:
+            return "4/m" if four_fold else "mmm"
+        case 6:
+            return "-3m" if two_fold == 3 else "6/m"
+        case 8:
+            return "4/mmm"
+        case 12:
+            return "m-3" if two_fold == 3 else "6/mmm"
+        case _:
+            return "m-3m"

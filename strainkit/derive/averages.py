@@ -11,7 +11,7 @@ from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.averages import AVERAGES, SCHEMES, anisotropy_of, averages_of, pugh_of
 from strainkit.tensors.stiffness import Stiffness
 
-__all__ = ["AVERAGES", "SCHEMES", "Averages", "averages", "averages_of"]
+__all__ = ["Averages", "averages"]
 
 
 @dataclass(frozen=True)

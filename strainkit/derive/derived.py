@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from strainkit.derive.averages import AVERAGES, Averages, averages
+from strainkit.derive.averages import Averages, averages
 from strainkit.derive.elastic import ElasticCrystal
 from strainkit.derive.extremes import Extreme, extremes, ratio
 from strainkit.derive.heat import Heat, heat_of
@@ -18,6 +18,7 @@ from strainkit.derive.spread import WithError
 from strainkit.derive.stability import Stability, stability
 from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
+from strainkit.tensors.averages import AVERAGES
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import stiffness_to_voigt, stress_to_voigt
 

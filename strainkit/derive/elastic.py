@@ -133,9 +133,10 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
     stress = np.nan_to_num(fit.reference_stress)
     moduli = fit.effective
     asymmetry = _asymmetry(fit.stiffness, stress)
+    removed = ", reference stress removed as an offset" if fit.reading == "offset" else ""
     return ElasticCrystal(
         name=plan.crystal.name,
-        origin=f"fit of {len(fit.jobs_used)} jobs, ions {plan.ions}, order {fit.order}",
+        origin=f"fit of {len(fit.jobs_used)} jobs, ions {plan.ions}, order {fit.order}{removed}",
         moduli=moduli,
         waves=fit.stiffness,
         stress=stress,

@@ -14,66 +14,27 @@ the space that the job's own residual symmetry allows; the others are exact zero
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Literal
 
 import numpy as np
 
+from strainkit.design.shapes import SAME_SHAPE, Shape, largest_principal_of
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_vectors
 from strainkit.tensors.leastsquares import factorise
 from strainkit.tensors.rotations import rotation6
-from strainkit.tensors.sixvectors import from_mandel, to_mandel
+from strainkit.tensors.sixvectors import to_mandel
 
-__all__ = ["LinearModel", "Order", "Shape", "build_model"]
+__all__ = ["LinearModel", "Order", "build_model"]
 
-Order = Literal["linear", "cubic"]
+Order = Literal["linear", "cubic", "quintic"]
+#: order -> odd powers of the magnitude that are fitted freely for every shape
+_POWERS: dict[str, tuple[int, ...]] = {"linear": (), "cubic": (3,), "quintic": (3, 5)}
 
 #: strains below this (largest principal value) are the reference
 ZERO_STRAIN = 1e-9
-#: how close two strains must be, relative to their size, to be of one shape
-SAME_SHAPE = 1e-5
-
-
-@dataclass(frozen=True)
-class Shape:
-    """A unit strain tensor and what its symmetry allows.
-
-    Attributes
-    ----------
-    unit : (6,)
-        Mandel vector whose largest absolute principal value is one, given frame.
-    allowed : (6, d)
-        Stresses that the residual symmetry of the strained cell allows (orthonormal columns, Mandel).
-    even, odd : (6, d_even), (6, d_odd)
-        Responses even and odd in the magnitude that H+- allows.
-    residual_order : int
-        Number of the Laue group's rotations that the strained cell keeps.
-    has_image : bool
-        A rotation of the crystal maps the shape to its negative.
-    """
-
-    unit: FloatArray
-    allowed: FloatArray
-    even: FloatArray
-    odd: FloatArray
-    residual_order: int
-    has_image: bool
-
-    @classmethod
-    def of(cls, unit: FloatArray, rotations: FloatArray) -> Shape:
-        """Shape of a Mandel vector (6,) in a crystal with the proper Laue rotations (m, 3, 3)."""
-        turned = rotation6(rotations) @ unit
-        size = SAME_SHAPE * np.linalg.norm(unit)
-        same = np.abs(turned - unit).max(axis=1) < size
-        opposite = np.abs(turned + unit).max(axis=1) < size
-        both = same | opposite
-        allowed = invariant_vectors(rotations[same])
-        if not opposite.any():
-            return cls(unit, allowed, allowed, allowed, int(same.sum()), False)
-        signs = np.where(same, 1.0, -1.0)[both]
-        even, odd = invariant_vectors(rotations[both]), invariant_vectors(rotations[both], signs)
-        return cls(unit, allowed, even, odd, int(same.sum()), True)
 
 
 @dataclass(frozen=True)
@@ -91,7 +52,7 @@ class LinearModel:
     weights : (jobs,)
         Weight of each job's rows: inverse variance in units of the common one.
     reference, constants, even, cubic : slice
-        Column blocks: reference stress, constants, even terms, cubic terms.
+        Column blocks: reference stress, constants, even terms, cubic (and higher odd) terms.
     reference_basis : (6, a)
         Orthonormal stresses that the unstrained crystal allows.
     even_basis : (rows, e)
@@ -102,6 +63,8 @@ class LinearModel:
         Index of the shape, -1 for the reference.
     signed_magnitudes : (jobs,)
         t of each job.
+    even_of_shape, cubic_of_shape : tuple of slice
+        Columns of each shape's even and cubic terms, in units of the response at the largest magnitude.
     """
 
     matrix: FloatArray
@@ -117,9 +80,11 @@ class LinearModel:
     shapes: tuple[Shape, ...]
     shape_of_job: IntArray
     signed_magnitudes: FloatArray
+    even_of_shape: tuple[slice, ...]
+    cubic_of_shape: tuple[slice, ...]
 
     def rows(self, stresses: FloatArray) -> FloatArray:
-        """Data vector (rows,) of Mandel second Piola-Kirchhoff stresses (jobs, 6)."""
+        """Data (rows, ...) of Mandel second Piola-Kirchhoff stresses (jobs, 6, ...)."""
         parts = [w**0.5 * (p.T @ s) for p, s, w in zip(self.projections, stresses, self.weights, strict=True)]
         return np.concatenate(parts) if parts else np.zeros(0)
 
@@ -128,7 +93,7 @@ class LinearModel:
         """Spare degrees of freedom of the odd part: rows, less even nuisance, less constants and cubic terms found."""
         return int(len(self.matrix) - self.even_basis.shape[1] - factorise(self.odd_matrix).rank)
 
-    @property
+    @cached_property
     def odd_matrix(self) -> FloatArray:
         """Columns of the constants and cubic terms with every even response projected out."""
         return self.odd_part(self.matrix[:, np.r_[self.constants, self.cubic]])
@@ -138,20 +103,33 @@ class LinearModel:
         return values - self.even_basis @ (self.even_basis.T @ values)
 
 
-def _place(strain: FloatArray, shapes: list[Shape], rotations: FloatArray) -> tuple[int, float, FloatArray]:
-    """Shape index, signed magnitude and the 6x6 rotation that carries the shape onto this strain (Mandel, (6,))."""
-    magnitude = float(np.abs(np.linalg.eigvalsh(from_mandel(strain))).max())
-    unit = strain / magnitude
+def _place(vectors: FloatArray, rotations: FloatArray) -> tuple[list[Shape], list[tuple[int, float, FloatArray]]]:
+    """The shapes among strains (jobs, 6), Mandel, and where each strain belongs.
+
+    That is the index of its shape (-1 at rest), its signed magnitude and the 6x6 rotation that carries the shape onto it.
+    """
+    sizes = largest_principal_of(vectors)
     q = rotation6(rotations)
-    for index, shape in enumerate(shapes):
-        images = q @ shape.unit
-        for sign in (1.0, -1.0):
-            away = np.abs(sign * images - unit).max(axis=1)
+    shapes: list[Shape] = []
+    images: list[FloatArray] = []
+    placed: list[tuple[int, float, FloatArray]] = []
+    for vector, size in zip(vectors, sizes.tolist(), strict=True):
+        if size < ZERO_STRAIN:
+            placed.append((-1, 0.0, np.eye(6)))
+            continue
+        unit = vector / size
+        for index, image in enumerate(images):
+            away = np.abs(image - unit).max(axis=1)
             nearest = int(away.argmin())
-            if away[nearest] < SAME_SHAPE * np.linalg.norm(unit):
-                return index, sign * magnitude, q[nearest]
-    shapes.append(Shape.of(unit, rotations))
-    return len(shapes) - 1, magnitude, np.eye(6)
+            if away[nearest] < SAME_SHAPE:
+                sign = 1.0 if nearest < len(q) else -1.0
+                placed.append((index, sign * size, q[nearest % len(q)]))
+                break
+        else:
+            shapes.append(Shape.of(unit, rotations))
+            images.append(np.concatenate([q @ unit, -q @ unit]))
+            placed.append((len(shapes) - 1, size, np.eye(6)))
+    return shapes, placed
 
 
 def build_model(
@@ -171,27 +149,24 @@ def build_model(
         Proper rotations of the Laue group, given frame.
     matrices : (n, 6, 6)
         Mandel matrices of the independent constants, given frame.
-    order : "linear" or "cubic"
-        Whether cubic terms are fitted.
+    order : "linear", "cubic" or "quintic"
+        Whether cubic (and fifth-power) terms are fitted.
     weights : (jobs,), optional
         Inverse variances in units of the common one; ones when left out.
     """
-    if order not in ("linear", "cubic"):
+    if order not in _POWERS:
         raise UsageError(f"unknown order {order!r}", "--order", "Use linear or cubic.")
+    powers = _POWERS[order]
     vectors = to_mandel(strains)
     weights = np.ones(len(vectors)) if weights is None else np.asarray(weights, dtype=float)
-    shapes: list[Shape] = []
     free = invariant_vectors(rotations)
-    placed: list[tuple[int, float, FloatArray]] = []
-    for vector in vectors:
-        at_rest = np.linalg.norm(vector) < ZERO_STRAIN
-        placed.append((-1, 0.0, np.eye(6)) if at_rest else _place(vector, shapes, rotations))
+    shapes, placed = _place(vectors, rotations)
     n, a = len(matrices), free.shape[1]
     even_start = a + n
     cubic_start = even_start + sum(s.even.shape[1] for s in shapes)
-    width = cubic_start + (sum(s.odd.shape[1] for s in shapes) if order == "cubic" else 0)
     even_at = even_start + np.cumsum([0, *(s.even.shape[1] for s in shapes)])
-    odd_at = cubic_start + np.cumsum([0, *(s.odd.shape[1] for s in shapes)])
+    odd_at = np.cumsum([0, *(s.odd.shape[1] for s in shapes)])
+    width = cubic_start + len(powers) * int(odd_at[-1])
     largest = max((abs(t) for _, t, _ in placed), default=0.0) or 1.0
 
     blocks, projections, nuisance = [], [], []
@@ -205,8 +180,10 @@ def build_model(
         if shape:
             even = turn @ shape.even
             block[:, even_at[index] : even_at[index + 1]] = allowed.T @ even * (t / largest) ** 2
-            if order == "cubic":
-                block[:, odd_at[index] : odd_at[index + 1]] = allowed.T @ turn @ shape.odd * (t / largest) ** 3
+            for place, power in enumerate(powers):
+                first = cubic_start + place * odd_at[-1]
+                columns = slice(first + odd_at[index], first + odd_at[index + 1])
+                block[:, columns] = allowed.T @ turn @ shape.odd * (t / largest) ** power
         blocks.append(weight**0.5 * block)
         nuisance.append(((index, round(abs(t), 10)), weight**0.5 * allowed.T @ even))
         projections.append(allowed)
@@ -225,6 +202,8 @@ def build_model(
         shapes=tuple(shapes),
         shape_of_job=np.array([index for index, _, _ in placed], dtype=np.int64),
         signed_magnitudes=np.array([t for _, t, _ in placed]),
+        even_of_shape=tuple(slice(*map(int, even_at[i : i + 2])) for i in range(len(shapes))),
+        cubic_of_shape=tuple(slice(*map(int, cubic_start + odd_at[i : i + 2])) for i in range(len(shapes) if powers else 0)),
     )
 
 

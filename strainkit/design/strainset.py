@@ -1,150 +1,151 @@
-"""The strain set: every job of one crystal, by label, with its strain and deformation gradient."""
+"""Choosing the strain set of a crystal: by aim, by number of jobs, or by the error that is wanted."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from math import ceil
 
 import numpy as np
 
-from strainkit.crystal.frames import standard_frame
+from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.frames import physical_axes
 from strainkit.crystal.symmetry import Symmetry
-from strainkit.design.model import Shape, build_model
-from strainkit.design.search import SPARE, fewest_pairs
+from strainkit.design.aims import fewest, fewest_jobs, sharpest
+from strainkit.design.expect import ASSUMED_NOISE, expect
+from strainkit.design.jobs import StrainJob, percent, reference_job, strained_jobs
+from strainkit.design.symmetric import most_symmetric
 from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.constants import ConstantBasis
-from strainkit.tensors.leastsquares import factorise
-from strainkit.tensors.sixvectors import to_mandel
-from strainkit.tensors.strain import gradient_from_strain, green_lagrange
+from strainkit.tensors.sixvectors import from_mandel
 
-__all__ = ["REFERENCE", "Expectation", "StrainJob", "choose_strains", "expect"]
+__all__ = ["AIMS", "CEILING", "Wish", "choose_strains"]
 
-#: label of the unstrained job
-REFERENCE = "reference"
-#: stress noise assumed before anything is run, GPa (standard deviation of one Mandel component)
-ASSUMED_NOISE = 0.01
-#: strains above this are refused: the harmonic range of any solid ends well before (percent)
-LARGEST_MAGNITUDE = 10.0
-
-
-@dataclass(frozen=True)
-class StrainJob:
-    """One calculation.
-
-    Attributes
-    ----------
-    label : str
-        Folder name: "reference", "s1-plus-1", "s1-minus-0.5", ...
-    shape : int
-        Number of the shape from 1; 0 for the reference.
-    magnitude : float
-        Largest absolute principal value of the Green-Lagrange strain, signed by the side of the shape.
-    gradient : (3, 3)
-        Deformation gradient F (x' = F x) in the given frame, symmetric.
-    """
-
-    label: str
-    shape: int
-    magnitude: float
-    gradient: FloatArray
-
-    @property
-    def strain(self) -> FloatArray:
-        """Green-Lagrange strain (3, 3) in the given frame."""
-        return green_lagrange(self.gradient)
+AIMS = ("fewest", "symmetric", "sharpest")
+#: magnitude that a set is given when none is asked for (fraction)
+DEFAULT_MAGNITUDE = 0.01
+#: largest magnitude that `--target-error` chooses by itself (fraction)
+CEILING = 0.02
+#: a set for a target error may hold this many times the fewest jobs
+_MOST_TIMES_FEWEST = 12
 
 
 @dataclass(frozen=True)
-class Expectation:
-    """What a strain set promises before anything is run.
+class Wish:
+    """What a strain set should be.
 
     Attributes
     ----------
-    standard_errors : dict
-        Constant -> standard error in GPa at the assumed noise; None where the set does not determine it.
-    spare : int
-        Spare degrees of freedom of the odd part, from which the noise is estimated.
-    relative_cost : float
-        Cost of the strained jobs in reference jobs, by lost symmetry.
+    aim : "fewest", "symmetric" or "sharpest"
+    magnitudes : tuple of float
+        Largest principal strains, fractions; empty to leave the choice open.
+    jobs : int or None
+        Most strained jobs; needed by "sharpest", refused by the others.
+    target_error : float or None
+        Largest standard error of a constant, GPa, at the assumed noise.
     noise : float
         Assumed standard deviation of one Mandel stress component, GPa.
+    ceiling : float
+        Largest magnitude that a target error may lead to, fraction.
     """
 
-    standard_errors: dict[str, float | None]
-    spare: int
-    relative_cost: float
-    noise: float
+    aim: str = "fewest"
+    magnitudes: tuple[float, ...] = ()
+    jobs: int | None = None
+    target_error: float | None = None
+    noise: float = ASSUMED_NOISE
+    ceiling: float = CEILING
+
+    def __post_init__(self) -> None:
+        if self.aim not in AIMS:
+            raise UsageError(f"unknown aim {self.aim!r}", "--aim", f"Use one of {', '.join(AIMS)}.")
+        if (self.jobs is None) == (self.aim == "sharpest" and self.target_error is None):
+            remedy = "Give the number of strained jobs with --aim sharpest --jobs N, and only there."
+            raise UsageError("--jobs and --aim sharpest belong together", "--jobs", remedy)
+        if self.target_error is not None and not self.target_error > 0:
+            raise UsageError(f"a target error of {self.target_error:g} GPa is not possible", "--target-error")
+        if not self.noise > 0:
+            raise UsageError(f"a noise of {self.noise:g} GPa is not possible", "--noise", "Give a positive number.")
 
 
-def reference_job() -> StrainJob:
-    """The unstrained job."""
-    return StrainJob(REFERENCE, 0, 0.0, np.eye(3))
-
-
-def choose_strains(symmetry: Symmetry, magnitudes: Sequence[float]) -> list[StrainJob]:
-    """The fewest strained jobs that fix every constant to second order, the reference first.
+def choose_strains(
+    crystal: Crystal, symmetry: Symmetry, basis: ConstantBasis, wish: Wish
+) -> tuple[list[StrainJob], list[Finding]]:
+    """The jobs of a crystal, the reference first, and how a target error was met.
 
     Parameters
     ----------
+    crystal : Crystal
     symmetry : Symmetry
-    magnitudes : sequence of float
-        Largest principal strains, fractions (0.01 is one percent).
+    basis : ConstantBasis
+        Symmetry and independent constants of the crystal.
+    wish : Wish
     """
-    axes = standard_frame(symmetry)
-    units = fewest_pairs(axes @ symmetry.rotations @ axes.T)
-    return strained_jobs(axes.T @ units @ axes, magnitudes, symmetry.rotations)
+    magnitudes = wish.magnitudes or (DEFAULT_MAGNITUDE,)
+    axes = physical_axes(crystal, symmetry)
+    units = aimed(symmetry, axes, wish.aim, None if wish.jobs is None else wish.jobs // len(set(magnitudes)))
+    jobs = _jobs(units, magnitudes, symmetry)
+    if wish.target_error is None:
+        return jobs, []
+    return _reach(symmetry, axes, basis, wish, jobs, units)
 
 
-def strained_jobs(units: FloatArray, magnitudes: Sequence[float], rotations: FloatArray) -> list[StrainJob]:
-    """Jobs of the unit strains (k, 3, 3), given frame, at every magnitude, the reference first.
+def aimed(symmetry: Symmetry, axes: FloatArray, aim: str, jobs: int | None = None) -> FloatArray:
+    """Unit strains (k, 3, 3), given frame, of an aim, found in the crystal's physical axes (3, 3), rows.
 
-    A shape that a rotation of the crystal maps to its negative is strained to one side only: the odd part of that one
-    job is its central difference.
+    `jobs` are those at one magnitude, for "sharpest".
     """
-    sizes = sorted({check_magnitude(size) for size in magnitudes})
-    if not sizes:
-        raise UsageError("at least one strain magnitude is needed", "--magnitude")
-    jobs = [reference_job()]
-    for number, unit in enumerate(units, start=1):
-        one_sided = Shape.of(to_mandel(unit), rotations).has_image
-        for size in sizes:
-            for side, word in ((1.0, "plus"), (-1.0, "minus"))[: 1 if one_sided else 2]:
-                label = f"s{number}-{word}-{percent(size)}"
-                jobs.append(StrainJob(label, number, side * size, gradient_from_strain(side * size * unit)))
-    return jobs
+    group = axes @ symmetry.rotations @ axes.T
+    if aim == "symmetric":
+        units = most_symmetric(group)
+    elif aim == "fewest" or jobs is None:
+        units = fewest(group)
+    else:
+        units = sharpest(group, jobs)
+    return np.asarray(axes.T @ from_mandel(units) @ axes)
 
 
-def check_magnitude(size: float) -> float:
-    """A strain magnitude (fraction) if it can be used."""
-    if not 1e-5 <= size <= LARGEST_MAGNITUDE / 100:
-        raise UsageError(
-            f"a strain magnitude of {100 * size:g} % is out of range",
-            "--magnitude",
-            f"Give a percentage between 0.001 and {LARGEST_MAGNITUDE:g}; 0.5 to 1 suits most crystals.",
-        )
-    return float(size)
+def _jobs(units: FloatArray, magnitudes: Sequence[float], symmetry: Symmetry) -> list[StrainJob]:
+    return [reference_job(), *strained_jobs(units, magnitudes, symmetry.rotations)]
 
 
-def percent(size: float) -> str:
-    """A fraction as a short percentage for labels: 0.01 -> "1"."""
-    return f"{100.0 * size:.6g}"
+def _reach(
+    symmetry: Symmetry,
+    axes: FloatArray,
+    basis: ConstantBasis,
+    wish: Wish,
+    jobs: list[StrainJob],
+    units: FloatArray,
+) -> tuple[list[StrainJob], list[Finding]]:
+    """Meet a target error: by a larger magnitude where it was left open, then by more shapes."""
+    assert wish.target_error is not None
 
+    def error(trial: list[StrainJob]) -> float:
+        return expect(trial, symmetry.rotations, basis, wish.noise)[0].largest
 
-def expect(
-    jobs: Sequence[StrainJob], rotations: FloatArray, basis: ConstantBasis, noise: float = ASSUMED_NOISE
-) -> tuple[Expectation, list[Finding]]:
-    """Expected standard errors, spare degrees of freedom and cost of a list of jobs, and what to warn about."""
-    model = build_model(np.array([job.strain for job in jobs]), rotations, basis.matrices)
-    variances = np.diag(factorise(model.matrix).inverse)[model.constants]
-    cost = sum(len(rotations) / model.shapes[index].residual_order for index in model.shape_of_job if index >= 0)
-    spare = model.odd_degrees_of_freedom
-    findings = []
-    if spare < SPARE:
-        findings.append(
-            finding("few-spare-degrees", "strain set", f"{spare} spare degrees of freedom: the noise is poorly estimated")
-        )
-    errors = [None if np.isnan(v) else float(noise * v**0.5) for v in variances]
-    named = dict(zip(basis.names, errors, strict=True))
-    return Expectation(named, spare, float(cost), noise), findings
+    magnitudes, notes = wish.magnitudes or (DEFAULT_MAGNITUDE,), []
+    if error(jobs) > wish.target_error and not wish.magnitudes:
+        # errors fall as one over the magnitude: the next 0.05 % that meets the target
+        size = ceil(round(2000 * magnitudes[0] * error(jobs) / wish.target_error, 6)) / 2000
+        if size > wish.ceiling:
+            notes.append(f"{percent(size)} % strain would exceed the ceiling of {percent(wish.ceiling)} %")
+        magnitudes = (min(size, wish.ceiling),)
+        jobs = _jobs(units, magnitudes, symmetry)
+    least = fewest_jobs(symmetry.rotations)
+    count = least
+    while error(jobs) > wish.target_error:
+        count = max(count + 2, 2 * int(0.45 * count * (error(jobs) / wish.target_error) ** 2))
+        if count > _MOST_TIMES_FEWEST * least:
+            raise UsageError(
+                f"a standard error of {wish.target_error:g} GPa at a noise of {wish.noise:g} GPa needs more than "
+                f"{_MOST_TIMES_FEWEST * least} jobs at {percent(max(magnitudes))} % strain",
+                "--target-error",
+                "Lower the noise (convergence settings), raise --ceiling or --magnitude, or ask for less.",
+            )
+        jobs = _jobs(aimed(symmetry, axes, "sharpest", count), magnitudes, symmetry)
+    sizes = ", ".join(percent(m) for m in magnitudes)
+    notes.append(f"{len(jobs) - 1} strained jobs at {sizes} % promise {error(jobs):.3g} GPa for the worst constant")
+    text = f"target {wish.target_error:g} GPa at a noise of {wish.noise:g} GPa: {'; '.join(notes)}"
+    return jobs, [finding("target-error", "strain set", text)]

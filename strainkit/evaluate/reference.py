@@ -9,7 +9,7 @@ import numpy as np
 from strainkit.crystal.crystal import Crystal
 from strainkit.errors import InputError
 from strainkit.evaluate.engines import Engine
-from strainkit.evaluate.single import DEFAULT_FMAX, MAX_STEPS, scratch_folder
+from strainkit.evaluate.single import DEFAULT_FMAX, MAX_STEPS, quiet_engine, scratch_folder
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import stress_to_voigt
 from strainkit.tensors.strain import gradient_between, green_lagrange
@@ -76,7 +76,7 @@ def relax_reference(
     if fixed_symmetry:
         atoms.set_constraint(FixSymmetry(atoms, symprec=symprec))
     try:
-        with scratch_folder(atoms.calc), LBFGS(FrechetCellFilter(atoms), logfile=None) as optimiser:
+        with quiet_engine(), scratch_folder(atoms.calc), LBFGS(FrechetCellFilter(atoms), logfile=None) as optimiser:
             converged = bool(optimiser.run(fmax=fmax, steps=MAX_STEPS))
             steps = int(optimiser.nsteps)
         stress = np.array(atoms.get_stress(voigt=False, apply_constraint=False)) * EV_PER_A3_IN_GPA

@@ -14,7 +14,7 @@ import numpy as np
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.read import read_crystal
-from strainkit.design.strainset import StrainJob
+from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError, StrainkitError
 from strainkit.evaluate.engines import Engine
 from strainkit.evaluate.single import DEFAULT_FMAX, evaluate_cell

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tempfile
+import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -62,6 +63,14 @@ def scratch_folder(calculator: Any) -> Iterator[None]:
         yield
 
 
+@contextmanager
+def quiet_engine() -> Iterator[None]:
+    """Without the remarks that engines and optimisers make to their developers at every step."""
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        yield
+
+
 def evaluate_cell(crystal: Crystal, engine: Engine, relax: bool, fmax: float = DEFAULT_FMAX) -> Outcome:
     """Energy, forces and stress of a cell, its ions relaxed first if asked.
 
@@ -79,7 +88,7 @@ def evaluate_cell(crystal: Crystal, engine: Engine, relax: bool, fmax: float = D
     """
     atoms = crystal.to_atoms()
     atoms.calc = engine.calculator()
-    with scratch_folder(atoms.calc):
+    with quiet_engine(), scratch_folder(atoms.calc):
         try:
             steps, converged = _relax(atoms, fmax) if relax else (0, True)
             energy = float(atoms.get_potential_energy(force_consistent="free_energy" in atoms.calc.implemented_properties))

@@ -6,7 +6,8 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from strainkit.design.strainset import StrainJob
+from strainkit.design.extend import restoring_jobs
+from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
 from strainkit.run.plan import Plan
@@ -22,10 +23,13 @@ NOTABLE_STRESS = 0.05
 def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
     """Findings about a fit of the given jobs."""
     findings: list[Finding] = []
-    names = plan.basis.names
-    lost = [name for name, known in zip(names, regression.determined, strict=True) if not known]
+    lost = [name for name, known in zip(plan.basis.names, regression.determined, strict=True) if not known]
     if lost:
-        findings.append(finding("undetermined-constants", ", ".join(lost), "the usable jobs do not determine these"))
+        used = {job.label for job in jobs}
+        remedy = restoring_jobs(jobs, [j for j in plan.jobs if j.label not in used], plan.symmetry, plan.basis)
+        names = " ".join(job.label for job in remedy)
+        text = f"the usable jobs do not determine these; with {names} they would" if remedy else "no planned job fixes these"
+        findings.append(finding("undetermined-constants", ", ".join(lost), text))
     used = {job.label for job in jobs}
     absent = [job.label for job in plan.jobs if job.label not in used]
     if absent:
@@ -42,7 +46,7 @@ def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list
 
 def _lone_partners(regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
     """Jobs whose opposite is not there, so that the even response swallows them."""
-    model = regression.model
+    model = regression.estimator.model
     t, shape = model.signed_magnitudes, model.shape_of_job
     alone = []
     for index, job in enumerate(jobs):

@@ -14,11 +14,74 @@ import numpy as np
 
 from strainkit.design.model import LinearModel, Order, build_model
 from strainkit.tensors.arrays import BoolArray, FloatArray
-from strainkit.tensors.leastsquares import factorise
+from strainkit.tensors.leastsquares import LeastSquares, factorise
 from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
 from strainkit.tensors.strain import green_lagrange, pk2_from_cauchy
 
-__all__ = ["Regression", "regress"]
+__all__ = ["Estimator", "Regression", "regress", "second_stresses"]
+
+
+def second_stresses(gradients: FloatArray, stresses: FloatArray) -> FloatArray:
+    """Second Piola-Kirchhoff stresses (jobs, 6), Mandel, of Cauchy stresses (jobs, 6), Voigt, GPa, under F (jobs, 3, 3)."""
+    return to_mandel(pk2_from_cauchy(stress_from_voigt(stresses), gradients))
+
+
+@dataclass(frozen=True)
+class Estimator:
+    """A factorised linear model: everything about a fit that does not depend on the stresses.
+
+    Attributes
+    ----------
+    model : LinearModel
+    whole, odd : LeastSquares
+        Of all rows, and of the rows with every even response projected out.
+    odd_freedom, even_freedom : int
+        Spare degrees of freedom of the odd part, and of the rest.
+    """
+
+    model: LinearModel
+    whole: LeastSquares
+    odd: LeastSquares
+    odd_freedom: int
+    even_freedom: int
+
+    @classmethod
+    def of(cls, model: LinearModel) -> Estimator:
+        """Factorise a model."""
+        whole, odd = factorise(model.matrix), factorise(model.odd_matrix)
+        rows = len(model.matrix)
+        odd_freedom = rows - model.even_basis.shape[1] - odd.rank
+        return cls(model, whole, odd, odd_freedom, rows - whole.rank - odd_freedom)
+
+    @property
+    def determined(self) -> BoolArray:
+        """Which constants (n,) the jobs determine."""
+        return self.whole.determined[self.model.constants]
+
+    @property
+    def unit_covariance(self) -> FloatArray:
+        """Covariance (n, n) of the constants for unit noise; NaN where undetermined."""
+        return self.whole.inverse[self.model.constants, self.model.constants]
+
+    def estimate(self, rows: FloatArray) -> FloatArray:
+        """All parameters (parameters, ...) from data rows (rows, ...)."""
+        return self.whole.solver @ rows
+
+    def squares(self, rows: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Sums of squared residuals (...,) of data rows (rows, ...): odd part, and the rest."""
+        odd = self.model.odd_part(rows)
+        odd_left = ((odd - self.model.odd_matrix @ (self.odd.solver @ odd)) ** 2).sum(axis=0)
+        all_left = ((rows - self.model.matrix @ (self.whole.solver @ rows)) ** 2).sum(axis=0)
+        return odd_left, np.maximum(all_left - odd_left, 0.0)
+
+    def noise_variance(self, rows: FloatArray) -> tuple[FloatArray | None, int | None]:
+        """Variance (...,) of one Mandel component and its degrees of freedom; None without spare degrees of freedom."""
+        odd, rest = self.squares(rows)
+        if self.odd_freedom > 0:
+            return odd / self.odd_freedom, self.odd_freedom
+        if self.even_freedom > 0:
+            return (odd + rest) / self.even_freedom, self.even_freedom
+        return None, None
 
 
 @dataclass(frozen=True)
@@ -31,7 +94,8 @@ class Regression:
         Independent constants, GPa; NaN where undetermined.
     covariance : (n, n) or None
         GPa^2; None without a noise estimate. Rows and columns of undetermined constants are NaN.
-    determined : (n,) bool
+    parameters : (parameters,)
+        All parameters of the model, in its own column scaling; undetermined ones are arbitrary.
     reference_stress : (6,)
         Fitted symmetry-allowed reference stress S0, Mandel, GPa; NaN when no job determines it.
     noise : float or None
@@ -40,25 +104,28 @@ class Regression:
         Behind the noise; None when it was given.
     even_noise : float or None
         The same from what is left of the even part.
-    even_degrees_of_freedom : int
     forbidden_noise : float or None
         Root mean square of the components that symmetry forbids or ties, GPa; zero for programs that symmetrise.
     residuals : (jobs, 6)
         Data less model, Mandel, GPa, in the allowed space of each job.
-    model : LinearModel
+    estimator : Estimator
     """
 
     values: FloatArray
     covariance: FloatArray | None
-    determined: BoolArray
+    parameters: FloatArray
     reference_stress: FloatArray
     noise: float | None
     degrees_of_freedom: int | None
     even_noise: float | None
-    even_degrees_of_freedom: int
     forbidden_noise: float | None
     residuals: FloatArray
-    model: LinearModel
+    estimator: Estimator
+
+    @property
+    def determined(self) -> BoolArray:
+        """Which constants (n,) the jobs determine."""
+        return self.estimator.determined
 
 
 def regress(
@@ -88,40 +155,31 @@ def regress(
     weights : (jobs,), optional
         Inverse variances in units of the common one.
     """
-    model = build_model(green_lagrange(gradients), rotations, matrices, order, weights)
-    second = to_mandel(pk2_from_cauchy(stress_from_voigt(stresses), gradients))
-    data = model.rows(second)
-    whole = factorise(model.matrix)
-    estimate = whole.solver @ data
-    residual = data - model.matrix @ estimate
+    estimator = Estimator.of(build_model(green_lagrange(gradients), rotations, matrices, order, weights))
+    return _solve(estimator, second_stresses(gradients, stresses), noise)
 
-    odd_matrix, odd_data = model.odd_matrix, model.odd_part(data)
-    odd = factorise(odd_matrix)
-    odd_dof = len(data) - model.even_basis.shape[1] - odd.rank
-    odd_squares = float(((odd_data - odd_matrix @ (odd.solver @ odd_data)) ** 2).sum())
-    all_squares, all_dof = float((residual**2).sum()), len(data) - whole.rank
-    even_dof = all_dof - odd_dof
 
+def _solve(estimator: Estimator, second: FloatArray, noise: float | None) -> Regression:
+    model = estimator.model
+    rows = model.rows(second)
+    parameters = estimator.estimate(rows)
     dof: int | None = None
-    if noise is None and odd_dof > 0:
-        noise, dof = (odd_squares / odd_dof) ** 0.5, odd_dof
-    elif noise is None and all_dof > 0:
-        noise, dof = (all_squares / all_dof) ** 0.5, all_dof
-    block = model.constants
-    determined = whole.determined[block]
-    at_rest = whole.determined[model.reference].all()
+    if noise is None:
+        variance, dof = estimator.noise_variance(rows)
+        noise = None if variance is None else float(variance**0.5)
+    rest = float(estimator.squares(rows)[1])
+    at_rest = estimator.whole.determined[model.reference].all()
     return Regression(
-        values=np.where(determined, estimate[block], np.nan),
-        covariance=None if noise is None else noise**2 * whole.inverse[block, block],
-        determined=determined,
-        reference_stress=model.reference_basis @ estimate[model.reference] if at_rest else np.full(6, np.nan),
+        values=np.where(estimator.determined, parameters[model.constants], np.nan),
+        covariance=None if noise is None else noise**2 * estimator.unit_covariance,
+        parameters=parameters,
+        reference_stress=model.reference_basis @ parameters[model.reference] if at_rest else np.full(6, np.nan),
         noise=noise,
         degrees_of_freedom=dof,
-        even_noise=(max(all_squares - odd_squares, 0.0) / even_dof) ** 0.5 if even_dof > 0 else None,
-        even_degrees_of_freedom=even_dof,
+        even_noise=(rest / estimator.even_freedom) ** 0.5 if estimator.even_freedom > 0 else None,
         forbidden_noise=_forbidden(model, second),
-        residuals=_by_job(model, residual),
-        model=model,
+        residuals=_by_job(model, rows - model.matrix @ parameters),
+        estimator=estimator,
     )
 
 

@@ -10,11 +10,14 @@ import numpy as np
 
 from strainkit.collect.table import StressTable
 from strainkit.crystal.frames import Frame
+from strainkit.design.jobs import StrainJob
 from strainkit.design.model import Order
 from strainkit.errors import NoTensorError
-from strainkit.findings import Finding
+from strainkit.findings import Finding, finding
+from strainkit.fit.checks import Checks, examine
 from strainkit.fit.judge import judge
 from strainkit.fit.regression import Regression, regress
+from strainkit.fit.residual import ReferenceStress, remove_offset
 from strainkit.run.files import atomic_write, dump_json
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
@@ -23,7 +26,7 @@ from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt, stress_to_voigt
 from strainkit.tensors.stiffness import Stiffness
 
-__all__ = ["FITTED", "Fit", "fit_run"]
+__all__ = ["FITTED", "Fit", "fit_run", "usable_jobs"]
 
 FITTED = "stiffness.json"
 _KIND = "strainkit/stiffness"
@@ -41,6 +44,10 @@ class Fit:
     order : "linear" or "cubic"
     jobs_used, dropped : tuple of str
         Labels.
+    reading : "real" or "offset"
+        What the reference stress was taken for; an offset was subtracted as a constant Kirchhoff stress.
+    checks : Checks
+        Energies, curvature, outliers, readings of the reference stress.
     findings : tuple of Finding
     """
 
@@ -49,6 +56,8 @@ class Fit:
     order: Order
     jobs_used: tuple[str, ...]
     dropped: tuple[str, ...]
+    reading: ReferenceStress
+    checks: Checks
     findings: tuple[Finding, ...]
 
     @property
@@ -132,6 +141,8 @@ class Fit:
             "jobs_used": list(self.jobs_used),
             "jobs_dropped": list(self.dropped),
             "undetermined": list(self.undetermined),
+            "reference_stress_reading": self.reading,
+            **self.checks.to_dict(plan.basis.names),
             "findings": [f.to_dict() for f in self.findings],
         }
 
@@ -157,12 +168,30 @@ class Fit:
         atomic_write(run / FITTED, dump_json(self.to_dict(frame)))
 
 
+def usable_jobs(plan: Plan, table: StressTable, drop: tuple[str, ...] = ()) -> tuple[list[StrainJob], FloatArray]:
+    """Jobs whose stress may be used, and their Cauchy stresses (jobs, 6), Voigt, GPa, given frame.
+
+    Raises
+    ------
+    NoTensorError
+        When there is no strained one among them.
+    """
+    records = {r.label: r.stress for r in table.usable if r.label not in drop and r.stress is not None}
+    jobs = [job for job in plan.jobs if job.label in records]
+    if not any(job.shape for job in jobs):
+        raise NoTensorError(
+            f"none of the {len(plan.jobs) - 1} strained jobs is usable", plan.crystal.name, "See: strainkit progress RUN"
+        )
+    return jobs, np.array([records[job.label] for job in jobs])
+
+
 def fit_run(
     plan: Plan,
     table: StressTable,
     order: Order = "linear",
     noise: float | None = None,
     drop: tuple[str, ...] = (),
+    reading: ReferenceStress = "real",
 ) -> Fit:
     """Fit the stiffness of a run from its stress table.
 
@@ -176,27 +205,42 @@ def fit_run(
         Known stress noise, GPa (standard deviation of one Mandel component).
     drop : tuple of str
         Labels of jobs to leave out; recorded in the result.
+    reading : "real" or "offset"
+        Whether a stress on the reference is real, or an offset of the basis set to be removed.
 
     Raises
     ------
     NoTensorError
         When no constant is determined by the usable jobs.
     """
-    usable = {r.label: r for r in table.usable if r.label not in drop and r.stress is not None}
-    jobs = [job for job in plan.jobs if job.label in usable]
-    if not any(job.shape for job in jobs):
-        raise NoTensorError(
-            f"none of the {len(plan.jobs) - 1} strained jobs is usable", plan.crystal.name, "See: strainkit progress RUN"
-        )
-    regression = regress(
-        np.array([job.gradient for job in jobs]),
-        np.array([usable[job.label].stress for job in jobs]),
-        plan.symmetry.rotations,
-        plan.basis.matrices,
-        order,
-        noise,
-    )
+    jobs, stresses = usable_jobs(plan, table, drop)
+    gradients = np.array([job.gradient for job in jobs])
+    doubts: list[Finding] = []
+    if reading == "offset":
+        stresses, doubts = _without_offset(jobs, gradients, stresses)
+    regression = regress(gradients, stresses, plan.symmetry.rotations, plan.basis.matrices, order, noise)
     if not regression.determined.any():
         raise NoTensorError("the usable jobs determine no constant", plan.crystal.name, "See: strainkit progress RUN")
-    used = tuple(job.label for job in jobs)
-    return Fit(plan, regression, order, used, tuple(drop), tuple(judge(plan, regression, jobs)))
+    energies = {record.label: record.energy for record in table.records}
+    checks = examine(plan, jobs, stresses, [energies[job.label] for job in jobs], regression, order)
+    return Fit(
+        plan=plan,
+        regression=regression,
+        order=order,
+        jobs_used=tuple(job.label for job in jobs),
+        dropped=tuple(drop),
+        reading=reading,
+        checks=checks,
+        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings),
+    )
+
+
+def _without_offset(jobs: list[StrainJob], gradients: FloatArray, stresses: FloatArray) -> tuple[FloatArray, list[Finding]]:
+    """Stresses less that of the reference as a constant Kirchhoff stress."""
+    at_rest = next((i for i, job in enumerate(jobs) if not job.shape), None)
+    if at_rest is None:
+        raise NoTensorError("no usable reference job, so its offset is unknown", "--reference-stress offset")
+    offset = stresses[at_rest]
+    size = float(np.abs(offset).max())
+    text = f"a reference stress of up to {size:.3g} GPa was removed as a basis-set offset; the correction is approximate"
+    return remove_offset(stresses, gradients, offset), [finding("offset-removed", "reference", text)]

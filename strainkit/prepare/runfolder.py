@@ -12,21 +12,23 @@ from pathlib import Path
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import FRAMES, crystal_frame
 from strainkit.crystal.symmetry import DEFAULT_SYMPREC, find_symmetry, tolerance_ladder
-from strainkit.design.strainset import StrainJob, choose_strains, expect
+from strainkit.design.expect import expect
+from strainkit.design.jobs import StrainJob
+from strainkit.design.strainset import Wish, choose_strains
 from strainkit.errors import InputError
 from strainkit.prepare.writers import CellFormat, cell_formats
 from strainkit.run.files import checksum
 from strainkit.run.plan import MANIFEST, Ions, Plan, job_folder, load_plan
 from strainkit.tensors.constants import constant_basis
 
-__all__ = ["DEFAULT_FORMATS", "plan_run", "write_run"]
+__all__ = ["DEFAULT_FORMATS", "files_of", "plan_run", "write_run"]
 
 DEFAULT_FORMATS = ("poscar", "cif")
 
 
 def plan_run(
     crystal: Crystal,
-    magnitudes: Sequence[float] = (0.01,),
+    wish: Wish | Sequence[float] = (),
     ions: Ions = "relaxed",
     symprec: float = DEFAULT_SYMPREC,
 ) -> Plan:
@@ -36,17 +38,19 @@ def plan_run(
     ----------
     crystal : Crystal
         The relaxed reference cell.
-    magnitudes : sequence of float
-        Largest principal strains, fractions.
+    wish : Wish or sequence of float
+        What the set should be, or just the strain magnitudes (fractions) of the set of fewest jobs.
     ions : "relaxed" or "clamped"
     symprec : float
         Distance tolerance of the symmetry search, angstrom.
     """
     symmetry = find_symmetry(crystal, symprec)
     frames = {name: crystal_frame(name, symmetry) for name in FRAMES}
-    jobs = choose_strains(symmetry, magnitudes)
+    if not isinstance(wish, Wish):
+        wish = Wish(magnitudes=tuple(wish))
     basis = constant_basis(symmetry.invariants, frames["ieee"].rotation)
-    expectation, doubts = expect(jobs, symmetry.rotations, basis)
+    jobs, remarks = choose_strains(crystal, symmetry, basis, wish)
+    expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise)
     _, changes = tolerance_ladder(crystal, symprec)
     return Plan(
         crystal=crystal,
@@ -54,9 +58,9 @@ def plan_run(
         frames=frames,
         jobs=tuple(jobs),
         ions=ions,
-        aim="fewest",
+        aim=wish.aim,
         expectation=expectation,
-        findings=(*crystal.remarks, *changes, *doubts),
+        findings=(*crystal.remarks, *changes, *remarks, *doubts),
     )
 
 
@@ -91,7 +95,7 @@ def write_run(plan: Plan, out: Path, formats: Sequence[str] = DEFAULT_FORMATS, f
         aside = _aside(out)
         out.rename(aside)
         moved = f"; the old folder is now {aside.name}"
-    files = _files_of(plan, chosen)
+    files = files_of(plan, plan.jobs, chosen)
     plan = replace(plan, files={name: checksum(text.encode()) for name, text in files.items()})
     try:
         _write_whole(plan, files, out)
@@ -117,10 +121,10 @@ def _aside(out: Path) -> Path:
     return place
 
 
-def _files_of(plan: Plan, formats: dict[str, CellFormat]) -> dict[str, str]:
-    """Relative path -> text of every file but the manifest."""
+def files_of(plan: Plan, jobs: Sequence[StrainJob], formats: dict[str, CellFormat]) -> dict[str, str]:
+    """Relative path -> text of every file of some jobs."""
     files: dict[str, str] = {}
-    for job in plan.jobs:
+    for job in jobs:
         cell = plan.crystal.deformed(job.gradient)
         title = _title(plan, job)
         for written in formats.values():

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from strainkit.derive.averages import AVERAGES, SCHEMES, Averages
+from strainkit.derive.averages import Averages
 from strainkit.derive.derived import Derived, Direction
 from strainkit.derive.elastic import ElasticCrystal
 from strainkit.derive.extremes import Extreme, Near, ratio
@@ -17,6 +17,7 @@ from strainkit.derive.spread import WithError
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import WIDTH, columns, findings_text, heading, paragraph
 from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.averages import AVERAGES, SCHEMES
 from strainkit.tensors.sixvectors import COMPONENTS, stiffness_to_voigt, to_mandel
 
 __all__ = ["derived_text"]

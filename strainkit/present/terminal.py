@@ -3,17 +3,26 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Sequence
 
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.symmetry import Symmetry
+from strainkit.design.cost import JobCost
 from strainkit.fit.result import Fit
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
-from strainkit.tensors.sixvectors import COMPONENTS, strain_to_voigt, stress_to_voigt
+from strainkit.tensors.rotations import rotate_matrix
+from strainkit.tensors.sixvectors import (
+    COMPONENTS,
+    stiffness_from_voigt,
+    stiffness_to_voigt,
+    strain_to_voigt,
+    stress_to_voigt,
+)
 
-__all__ = ["BLIND_SPOT", "cell_text", "fit_text", "plan_text", "table_text"]
+__all__ = ["BLIND_SPOT", "cell_text", "fit_text", "inspection_text", "plan_text", "table_text"]
 
 #: what every fit says about its error bars
 BLIND_SPOT = (
@@ -35,32 +44,79 @@ def cell_text(crystal: Crystal, symmetry: Symmetry) -> str:
     return "\n".join(lines)
 
 
-def plan_text(plan: Plan, jobs: bool = True) -> str:
-    """The plan of a run: constants, jobs, expected errors."""
-    expected = plan.expectation
+def _head(plan: Plan) -> list[str]:
     names = ", ".join(plan.basis.names)
-    lines = [
+    return [
         cell_text(plan.crystal, plan.symmetry),
         paragraph(f"IEEE axes: {plan.frames['ieee'].axes}", "  "),
         paragraph(f"{len(plan.basis.names)} independent constants: {names}", "  "),
-        "",
-        heading(f"{len(plan.jobs) - 1} strained jobs and the reference, ions {plan.ions}"),
     ]
-    if jobs:
-        rows = [
-            [job.label, f"{100 * abs(job.magnitude):g}", *(plain(100 * x) for x in strain_to_voigt(job.strain))]
-            for job in plan.jobs
-        ]
-        lines.append(columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS)]))
-        lines.append("  Green-Lagrange strain, engineering shear, in the frame of the input cell")
-    errors = [f"{name} {'undetermined' if e is None else f'{e:.2g}'}" for name, e in expected.standard_errors.items()]
-    lines += [
-        paragraph(f"expected standard errors for a stress noise of {expected.noise:g} GPa, in GPa: {', '.join(errors)}", "  "),
-        f"  spare degrees of freedom {expected.spare}; cost by lost symmetry about {expected.relative_cost:g} reference jobs",
+
+
+def _promise(plan: Plan) -> str:
+    expected = plan.expectation
+    errors = {**expected.standard_errors, "K": expected.averages["bulk"], "G": expected.averages["shear"]}
+    words = [f"{name} {'undetermined' if e is None else f'{e:.2g}'}" for name, e in errors.items()]
+    return paragraph(f"expected standard errors at a stress noise of {expected.noise:g} GPa, in GPa: {', '.join(words)}", "  ")
+
+
+def plan_text(plan: Plan) -> str:
+    """The plan of a run: constants, jobs, expected errors."""
+    rows = [
+        [job.label, f"{100 * abs(job.magnitude):g}", *(plain(100 * x) for x in strain_to_voigt(job.strain))]
+        for job in plan.jobs
+    ]
+    lines = [
+        *_head(plan),
+        "",
+        heading(f"{len(plan.jobs) - 1} strained jobs and the reference, aim {plan.aim}, ions {plan.ions}"),
+        columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS)]),
+        "  Green-Lagrange strain, engineering shear, in the frame of the input cell",
+        _promise(plan),
+        f"  spare degrees of freedom {plan.expectation.spare}; cost by lost symmetry about "
+        f"{plan.expectation.relative_cost:g} reference jobs",
         "",
         findings_text(plan.findings),
     ]
     return "\n".join(lines)
+
+
+def inspection_text(
+    plans: Sequence[Plan],
+    costs: Sequence[Sequence[JobCost]],
+    rungs: Sequence[tuple[float, str, str]],
+    mesh: tuple[int, int, int] | None,
+) -> str:
+    """The cell, its symmetry over tolerances, and what each aim would take."""
+    first = plans[0]
+    ladder = columns([[f"{t:g} A", g, laue] for t, g, laue in rungs], ["tolerance", "space group", "Laue class"], 3)
+    rows, classes = [], []
+    for plan, cost in zip(plans, costs, strict=True):
+        e = plan.expectation
+        points = "" if mesh is None else str(sum(c.kpoints or 0 for c in cost[1:]))
+        sharp = [f"{x:.2g}" if x is not None else "-" for x in (e.largest, e.averages["bulk"], e.averages["shear"])]
+        rows.append([plan.aim, str(len(plan.jobs) - 1), str(e.spare), f"{e.relative_cost:g}", points, *sharp])
+        kinds = Counter(c.laue_class for c in cost[1:])
+        classes.append(f"  {plan.aim}: cells of Laue class {', '.join(f'{n} x {k}' for k, n in kinds.items())}")
+    header = ["aim", "jobs", "spare", "cost", "k-points" if mesh else "", "worst C", "K", "G"]
+    lines = [
+        *_head(first),
+        "",
+        ladder,
+        "",
+        heading(f"Strain sets at {100 * max(abs(j.magnitude) for j in first.jobs):g} %"),
+        columns(rows, header),
+        paragraph(
+            f"cost: strained jobs in reference jobs by lost symmetry; the last three: expected standard errors in GPa "
+            f"at a stress noise of {first.expectation.noise:g} GPa; spare: degrees of freedom for the noise",
+            "  ",
+        ),
+        *classes,
+    ]
+    if mesh is not None:
+        words = " x ".join(map(str, mesh))
+        lines.append(f"  k-mesh {words} (Gamma-centred): {costs[0][0].kpoints} irreducible points in the reference")
+    return "\n".join([*lines, _promise(first), "", findings_text(first.findings)])
 
 
 def table_text(table: StressTable, every: bool = False) -> str:
@@ -106,9 +162,37 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         "",
         f"  stress noise      {'unknown' if noise is None else f'{noise:.3g} GPa, {source}'}",
         f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
+        f"  energies          {_energy_words(fit)}",
+        f"  curvature         {fit.checks.verdict}",
+        *_readings(fit, frame),
         "",
         paragraph(BLIND_SPOT, "  "),
         "",
         findings_text(fit.findings),
     ]
     return "\n".join(lines)
+
+
+def _energy_words(fit: Fit) -> str:
+    """The energy check in a line."""
+    check = fit.checks.energy
+    if check.curvature_agrees is None:
+        return "none to compare with"
+    worst = max(check.pairs, key=lambda p: abs(p.curvature_energy - p.curvature_stress))
+    values = f"{worst.curvature_energy:.2f} against {worst.curvature_stress:.2f} GPa at worst"
+    if check.curvature_agrees and check.slope_agrees:
+        return f"agree with the stresses ({values})"
+    return f"do NOT agree with the stresses ({values})"
+
+
+def _readings(fit: Fit, frame: str) -> list[str]:
+    """The constants under each reading of the reference stress, when that matters."""
+    if not fit.checks.treatments:
+        return []
+    rotation = fit.plan.frames[frame].rotation
+    names = fit.plan.basis.names
+    rows = []
+    for treatment in fit.checks.treatments:
+        turned = stiffness_to_voigt(rotate_matrix(rotation, stiffness_from_voigt(treatment.voigt)))
+        rows.append([treatment.name, *(plain(turned[int(n[1]) - 1, int(n[2]) - 1], 1) for n in names[:7])])
+    return ["", "  readings of the reference stress, GPa", columns(rows, ["", *names[:7]])]

@@ -14,7 +14,8 @@ from strainkit import __version__
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import FRAMES, Frame
 from strainkit.crystal.symmetry import Symmetry
-from strainkit.design.strainset import Expectation, StrainJob
+from strainkit.design.expect import Expectation
+from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
 from strainkit.findings import Finding
 from strainkit.run.files import atomic_write, dump_json, load_json
@@ -86,6 +87,7 @@ class Plan:
             "ions": self.ions,
             "spare_degrees_of_freedom": expected.spare,
             "expected_standard_error_GPa": expected.standard_errors,
+            "expected_standard_error_averages_GPa": expected.averages,
             "assumed_noise_GPa": expected.noise,
             "relative_cost": expected.relative_cost,
             "findings": [f.to_dict() for f in self.findings],
@@ -205,6 +207,7 @@ def _plan_from(data: dict[str, Any]) -> Plan:
         aim=data["aim"],
         expectation=Expectation(
             standard_errors=data["expected_standard_error_GPa"],
+            averages=data.get("expected_standard_error_averages_GPa", {"bulk": None, "shear": None}),
             spare=data["spare_degrees_of_freedom"],
             relative_cost=data["relative_cost"],
             noise=data["assumed_noise_GPa"],

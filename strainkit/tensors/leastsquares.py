@@ -14,6 +14,8 @@ __all__ = ["LeastSquares", "factorise"]
 _SINGULAR = 1e-7
 #: columns this much shorter than the longest are rounding errors
 _NEGLIGIBLE = 1e-9
+#: a parameter with more than this share in what the rows do not see is not determined
+_UNKNOWN = 1e-8
 
 
 @dataclass(frozen=True)
@@ -36,24 +38,22 @@ class LeastSquares:
     inverse: FloatArray
     solver: FloatArray
 
-    def determines(self, combination: FloatArray, tolerance: float = 1e-7) -> bool:
-        """Do the rows fix this linear combination (parameters,) of parameters (all parts of which must be known)?"""
-        return bool(self.determined[np.abs(combination) > tolerance].all())
-
 
 def factorise(matrix: FloatArray) -> LeastSquares:
     """Singular value decomposition of the matrix with its columns scaled to unit length."""
     sizes = np.linalg.norm(matrix, axis=0)
     real = sizes > _NEGLIGIBLE * max(sizes.max(initial=0.0), 1e-300)
     scale = np.where(real, sizes, 1.0)
-    u, s, vt = np.linalg.svd(np.where(real, matrix / scale, 0.0), full_matrices=False)
-    keep = s > _SINGULAR
+    u, s, vt = np.linalg.svd(np.where(real, matrix / scale, 0.0), full_matrices=len(matrix) < matrix.shape[1])
+    keep = np.zeros(len(vt), dtype=bool)
+    keep[: len(s)] = s > _SINGULAR
     v = vt[keep].T
-    determined = (v**2).sum(axis=1) > 1.0 - 1e-10
-    inverse = (v / s[keep] ** 2) @ v.T / np.outer(scale, scale)
+    determined = np.linalg.norm(vt[~keep], axis=0) < _UNKNOWN
+    s = s[keep[: len(s)]]
+    inverse = (v / s**2) @ v.T / np.outer(scale, scale)
     return LeastSquares(
         rank=int(keep.sum()),
         determined=determined,
         inverse=np.where(np.outer(determined, determined), inverse, np.nan),
-        solver=(v / s[keep]) @ u[:, keep].T / scale[:, None],
+        solver=(v / s) @ u[:, : len(s)].T / scale[:, None],
     )

@@ -64,7 +64,10 @@ def test_page_of_a_run(cli, tmp_path):
     assert data["planes"][0]["plane"] == [1, 1, 1]
     assert data["frame"] == "ieee"
     assert "standard cell" in data["indices"]
-    for indices, spacing in (("conventional", 5.432), ("given", 5.432 / 3**0.5)):  # (1 0 0) of the cube, and of its rhombohedron
+    for indices, spacing in (
+        ("conventional", 5.432),
+        ("given", 5.432 / 3**0.5),
+    ):  # (1 0 0) of the cube, and of its rhombohedron
         data = cli("derive", run, "--plane", "1,0,0", "--indices", indices, "--json").json
         assert data["planes"][0]["d_spacing_A"] == pytest.approx(spacing, rel=1e-6)
 

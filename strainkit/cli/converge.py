@@ -1,0 +1,22 @@
+"""strainkit converge RUN."""
+
+from __future__ import annotations
+
+import typer
+
+from strainkit.cli.fit import Drop, KnownNoise
+from strainkit.cli.options import Json, Quiet, Run, deliver
+
+
+def converge(run: Run, noise: KnownNoise = None, drop: Drop = None, json: Json = False, quiet: Quiet = False) -> None:
+    """Is the strain magnitude right: constants per magnitude, extrapolation, best magnitude."""
+    from strainkit.cli.load import usable
+    from strainkit.fit.magnitude import converge as study
+    from strainkit.present.convergence import convergence_text
+
+    plan, jobs, records = usable(run, drop)
+    found = study(plan, jobs, records, noise)
+    deliver(found.to_dict, lambda: convergence_text(plan.crystal.name, found), json)
+    if found.common.determined.all():
+        return
+    raise typer.Exit(4)

@@ -1,0 +1,1 @@
+"""Lattice dynamics through phonopy: displaced cells, force constants, internal strain, sound speeds."""
