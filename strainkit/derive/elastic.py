@@ -8,7 +8,7 @@ from functools import cached_property
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
-from strainkit.crystal.frames import FRAMES, Frame, crystal_frame
+from strainkit.crystal.frames import Frame, chosen_frame, crystal_frame
 from strainkit.crystal.lattice import IndexAxes, index_axes
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.derive.spread import stable_draws
@@ -22,7 +22,7 @@ from strainkit.tensors.sixvectors import stiffness_to_voigt
 from strainkit.tensors.stiffness import Stiffness
 from strainkit.tensors.textfile import TensorFile
 
-__all__ = ["ElasticCrystal", "from_fit", "from_tensor_file", "printing_frame"]
+__all__ = ["ElasticCrystal", "from_fit", "from_tensor_file"]
 
 #: a typed tensor that its crystal's symmetry changes by more than this part of its largest constant is doubted
 _NOTABLE_CHANGE = 0.02
@@ -89,30 +89,6 @@ class ElasticCrystal:
         return self.draws + (self.waves.mandel - self.moduli.mandel)
 
 
-def printing_frame(choice: str, symmetry: Symmetry | None) -> Frame:
-    """The frame that a user asked for: a name, or nine numbers, row by row the axes X, Y, Z in the given frame."""
-    if choice in FRAMES:
-        if symmetry is not None:
-            return crystal_frame(choice, symmetry)
-        if choice == "given":
-            return Frame("given", np.eye(3), "the axes of the tensor as typed")
-        raise UsageError(f"axes {choice!r} need a cell", "--frame", "Give --cell, or --frame given.")
-    try:
-        rotation = np.array([float(x) for x in choice.replace(",", " ").split()]).reshape(3, 3)
-    except ValueError:
-        raise UsageError(
-            f"unknown frame {choice!r}",
-            "--frame",
-            f"Use one of {', '.join(FRAMES)}, or nine numbers: the axes X, Y, Z in the given frame, row by row.",
-        ) from None
-    length = np.linalg.norm(rotation, axis=1, keepdims=True)
-    rotation = rotation / np.where(length > 0, length, 1.0)
-    if not np.allclose(rotation @ rotation.T, np.eye(3), rtol=0, atol=1e-3) or np.linalg.det(rotation) < 0:
-        raise UsageError("these nine numbers are not three perpendicular right-handed axes", "--frame")
-    u, _, vt = np.linalg.svd(rotation)
-    return Frame("custom", u @ vt, "axes typed by the user, rows of the rotation from the given frame")
-
-
 def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> ElasticCrystal:
     """Tensors of a fitted run: B for moduli and stability, C with the reference stress for waves.
 
@@ -120,7 +96,7 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
     ----------
     fit : Fit
     frame : str
-        See `printing_frame`.
+        See `chosen_frame`.
     given_indices : bool
         Take (hkl) and [uvw] in the cell as given even when that is not a conventional one.
 
@@ -140,7 +116,7 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
         moduli=moduli,
         waves=fit.stiffness,
         stress=stress,
-        frame=printing_frame(frame, plan.symmetry),
+        frame=chosen_frame(frame, plan.symmetry),
         laue_class=plan.symmetry.laue_class,
         crystal=plan.crystal,
         axes=index_axes(plan.symmetry, given_indices),
@@ -191,7 +167,7 @@ def from_tensor_file(
         kg/m^3; the file's or the cell's when left out.
     """
     if symmetry is None or crystal is None:
-        return _without_cell(file, printing_frame(frame, None), density)
+        return _without_cell(file, chosen_frame(frame, None), density)
     if file.laue_class not in (None, symmetry.laue_class):
         raise UsageError(
             f"the tensor is of Laue class {file.laue_class}, the cell of {symmetry.laue_class}",
@@ -211,7 +187,7 @@ def from_tensor_file(
         moduli=given,
         waves=given,
         stress=np.zeros((3, 3)),
-        frame=printing_frame(frame, symmetry),
+        frame=chosen_frame(frame, symmetry),
         laue_class=symmetry.laue_class,
         crystal=crystal,
         axes=index_axes(symmetry, given_indices),
