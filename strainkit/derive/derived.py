@@ -9,15 +9,16 @@ from typing import Any
 import numpy as np
 
 from strainkit.derive.averages import Averages, averages
-from strainkit.derive.elastic import ElasticCrystal
+from strainkit.derive.elastic import ElasticCrystal, from_fit
 from strainkit.derive.extremes import Extreme, extremes, ratio
 from strainkit.derive.heat import Heat, heat_of
-from strainkit.derive.layers import covalent_bonds, molecules_in_cell
+from strainkit.derive.layers import covalent_bonds, find_molecules
 from strainkit.derive.planes import Along, OnPlane, along, low_index_planes, on_planes
 from strainkit.derive.spread import WithError
 from strainkit.derive.stability import Stability, stability
 from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
+from strainkit.fit.result import Fit
 from strainkit.tensors.averages import AVERAGES
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import stiffness_to_voigt, stress_to_voigt
@@ -131,8 +132,8 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
 
     Parameters
     ----------
-    elastic : ElasticCrystal
-        From `strainkit.derive.elastic.from_fit` or `from_tensor_file`.
+    elastic : ElasticCrystal or Fit
+        A fit, printed in IEEE axes; or from `strainkit.derive.elastic.from_fit` or `from_tensor_file`, in other axes.
     planes, directions : sequences of (h, k, l) and [u, v, w]
         What to look at besides the cell axes and the low-index planes.
 
@@ -141,14 +142,18 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
     UsageError
         Planes or directions without a cell that they could refer to.
     """
+    if isinstance(elastic, Fit):
+        elastic = from_fit(elastic)
     if (planes or directions) and elastic.axes is None:
         raise UsageError("planes and directions need a cell", "--plane, --direction", "Give the structure with --cell.")
     verdict = stability(elastic.moduli)
     findings = (*elastic.findings, *_doubts(verdict, elastic))
     if not verdict.stable:
         return Derived(elastic, verdict, None, {}, (), (), (), (), None, {}, findings)
-    bonds = None if elastic.crystal is None else covalent_bonds(elastic.crystal)
-    count = None if bonds is None or elastic.crystal is None else molecules_in_cell(len(elastic.crystal.numbers), bonds)
+    bonds = molecules = None
+    if elastic.crystal is not None:
+        bonds = covalent_bonds(elastic.crystal)
+        molecules = find_molecules(len(elastic.crystal.numbers), bonds)
     named = elastic.axes is not None
     return Derived(
         elastic=elastic,
@@ -156,10 +161,10 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
         averages=averages(elastic.moduli),
         extremes=extremes(elastic),
         cell_axes=_directions(elastic, [(1, 0, 0), (0, 1, 0), (0, 0, 1)]) if named else (),
-        planes=tuple(on_planes(elastic, planes, bonds)) if named else (),
+        planes=tuple(on_planes(elastic, planes, bonds, molecules)) if named else (),
         directions=_directions(elastic, directions) if named else (),
-        low_index_planes=tuple(low_index_planes(elastic, bonds)) if named else (),
-        heat=heat_of(elastic, count),
+        low_index_planes=tuple(low_index_planes(elastic, bonds, molecules)) if named else (),
+        heat=heat_of(elastic, None if molecules is None else molecules.count),
         cauchy=_cauchy(elastic),
         findings=findings,
     )

@@ -25,7 +25,7 @@ class Heat:
     shortcut_speed : float
         The same from the Hill averages (Anderson), m/s; for comparison with papers that print it.
     atoms, molecules : WithError or None
-        Debye temperature, K, counting atoms, and counting molecules where the crystal consists of them.
+        Debye temperature, K, counting atoms, and counting molecules (ions of a salt too) where the crystal consists of them.
     shortcut : float or None
         By the shortcut, counting atoms, K.
     molecules_in_cell : int or None

@@ -10,7 +10,7 @@ import numpy as np
 
 from strainkit.derive.directional import linear_compressibility, poisson_range, shear, shear_range, young
 from strainkit.derive.elastic import ElasticCrystal
-from strainkit.derive.layers import Bonds, Cut, easiest_cut
+from strainkit.derive.layers import Bonds, Cut, Molecules, easiest_cut
 from strainkit.derive.spread import WithError, half_width, with_errors
 from strainkit.derive.waves import christoffel, sound_speeds, speed
 from strainkit.tensors.arrays import FloatArray
@@ -164,8 +164,10 @@ def along(elastic: ElasticCrystal, directions: FloatArray) -> list[Along]:
     return [Along(*row) for row in zip(n, stretch, squeeze, thin, thick, waves, polarisations, strict=True)]
 
 
-def on_planes(elastic: ElasticCrystal, planes: Sequence[Indices], bonds: Bonds | None) -> list[OnPlane]:
-    """What the crystal does on planes (hkl); bonds (None without atoms) say what each plane cuts."""
+def on_planes(
+    elastic: ElasticCrystal, planes: Sequence[Indices], bonds: Bonds | None, molecules: Molecules | None
+) -> list[OnPlane]:
+    """What the crystal does on planes (hkl); bonds (None without atoms) and molecules say what each plane cuts."""
     axes = elastic.axes
     assert axes is not None
     if not planes:
@@ -185,7 +187,7 @@ def on_planes(elastic: ElasticCrystal, planes: Sequence[Indices], bonds: Bonds |
         whole = np.array(plane)
         reciprocal, distance = axes.lattice_planes(whole)
         directed = most[i] / least[i] - 1.0 > _ROUND
-        cut = None if bonds is None or elastic.crystal is None else easiest_cut(elastic.crystal, bonds, reciprocal)
+        cut = None if bonds is None or elastic.crystal is None else easiest_cut(elastic.crystal, bonds, molecules, reciprocal)
         rows.append(
             OnPlane(
                 indices=plane,
@@ -207,15 +209,13 @@ def on_planes(elastic: ElasticCrystal, planes: Sequence[Indices], bonds: Bonds |
     return rows
 
 
-def low_index_planes(elastic: ElasticCrystal, bonds: Bonds | None) -> list[OnPlane]:
-    """Low-index planes of wide spacing: first those that cut no bonds, softest in shear first, then the others by spacing."""
+def low_index_planes(elastic: ElasticCrystal, bonds: Bonds | None, molecules: Molecules | None) -> list[OnPlane]:
+    """Low-index planes of wide spacing: by the gap between layers in molecular crystals, by spacing in others."""
     assert elastic.axes is not None
     families = elastic.axes.families[:_FAMILIES]
     spacings = [elastic.axes.lattice_planes(np.array(plane))[1] for plane in families]
     wide = [plane for plane, spacing in zip(families, spacings, strict=True) if spacing >= _NARROWEST * spacings[0]]
-
-    def rank(row: OnPlane) -> tuple[bool, float, float]:
-        between_layers = row.cut is not None and row.cut.bonds_per_nm2 == 0.0
-        return not between_layers, float(f"{row.shear_least.value:.4g}") if between_layers else 0.0, -row.lattice_spacing
-
-    return sorted(on_planes(elastic, wide, bonds), key=rank)
+    rows = on_planes(elastic, wide, bonds, molecules)
+    if molecules is None:
+        return rows
+    return sorted(rows, key=lambda row: 0.0 if row.cut is None else -round(row.cut.gap, 3))

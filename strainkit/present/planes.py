@@ -15,8 +15,8 @@ __all__ = ["PLASTICITY", "sheared_text"]
 _PRINTED = 8
 
 PLASTICITY = (
-    "Slip is looked for first on a widely spaced plane that cuts no bonds and shears softly, cleavage where such a plane also "
-    "pulls apart softly. Elastic constants indicate and do not decide: dislocations, surfaces and neighbouring grains do. "
+    "Slip is looked for first on a widely spaced plane between flat layers that shears softly, cleavage where such a plane "
+    "also pulls apart softly. Elastic constants indicate and do not decide: dislocations, surfaces and neighbouring grains do. "
     "None of this is a tablet strength or a milling limit."
 )
 
@@ -49,10 +49,9 @@ def _one_plane(plane: OnPlane) -> list[str]:
     cut = plane.cut
     if cut is not None:
         bonds = "no bonds" if cut.bonds_per_nm2 == 0 else f"{cut.bonds_per_nm2:.1f} bonds a nm^2"
-        where_to = (
-            f"lattice planes {plane.lattice_spacing:.3f} A apart; the easiest flat cut, between atoms {cut.gap:.2f} A apart"
-        )
-        lines.append(paragraph(f"{where_to}, crosses {bonds}", "    "))
+        gap = f"a gap of {cut.gap:.2f} A" if cut.gap > 0 else f"molecules interlocked by {-cut.gap:.2f} A"
+        where_to = f"lattice planes {plane.lattice_spacing:.3f} A apart; the easiest flat cut crosses {bonds}, {gap}"
+        lines.append(paragraph(where_to, "    "))
     return lines
 
 
@@ -85,10 +84,11 @@ def _plane_table(rows: Sequence[OnPlane]) -> str:
 
 def _table_note(rows: Sequence[OnPlane]) -> str:
     hidden = f"; {len(rows) - _PRINTED} more in --json" if len(rows) > _PRINTED else ""
+    molecular = "Widest gap first" if any(row.cut is not None and row.cut.layers for row in rows) else "Widest d first"
     return (
-        "d: distance of lattice planes (centring counted). bonds, gap: covalent bonds (near neighbours in metals and salts) a "
-        "nm^2 that the easiest flat cut crosses, and the distance of the atoms on its two sides. layers: cuts without bonds in "
-        "one d. least G, along: smallest shear modulus on the plane, GPa, and the lattice direction in it nearest to its "
-        "direction; G is the same when normal and direction change places. E across: Young's modulus along the normal, GPa. "
-        f"Planes that cut no bonds come first, softest in shear first, then the others by d{hidden}."
+        "d: distance of lattice planes (centring counted). bonds: covalent bonds (near neighbours in metals and salts) a nm^2 "
+        "that the easiest flat cut crosses. gap: distance of the atoms on its two sides; negative: molecules of neighbouring "
+        "layers interlock by that much. layers: flat layers in one d. least G, along: smallest shear modulus on the plane, "
+        "GPa, and the lattice direction in it nearest to its own; G is the same when normal and direction change places. "
+        f"E across: Young's modulus along the normal, GPa. {molecular}{hidden}."
     )

@@ -13,12 +13,19 @@ from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.lattice import index_axes
 from strainkit.crystal.read import read_crystal
 from strainkit.crystal.symmetry import find_symmetry
-from strainkit.derive.layers import covalent_bonds, easiest_cut, molecules_in_cell
+from strainkit.derive.layers import covalent_bonds, easiest_cut, find_molecules
 
 
 def cut(crystal: Crystal, plane: tuple[int, int, int]):
     axes = index_axes(find_symmetry(crystal))
-    return easiest_cut(crystal, covalent_bonds(crystal), axes.lattice_planes(np.array(plane))[0])
+    bonds = covalent_bonds(crystal)
+    return easiest_cut(crystal, bonds, find_molecules(len(crystal.numbers), bonds), axes.lattice_planes(np.array(plane))[0])
+
+
+def molecules_of(crystal: Crystal) -> int | None:
+    """Number of molecules in the cell; None for a network."""
+    found = find_molecules(len(crystal.numbers), covalent_bonds(crystal))
+    return None if found is None else found.count
 
 
 @pytest.mark.parametrize("seed", [None, 0, 1])
@@ -36,7 +43,7 @@ def test_diamond(seed):
         assert cut(crystal, plane).bonds_per_nm2 == pytest.approx(bonds / area, rel=1e-6)
         assert cut(crystal, plane).layers == 0
     assert cut(crystal, (1, 1, 1)).gap == pytest.approx(3**0.5 / 4 * a, rel=1e-6)
-    assert molecules_in_cell(len(crystal.numbers), covalent_bonds(crystal)) is None
+    assert molecules_of(crystal) is None
 
 
 def test_graphite_cuts_no_bonds_between_its_layers():
@@ -50,16 +57,16 @@ def test_graphite_cuts_no_bonds_between_its_layers():
     assert found.gap == pytest.approx(3.35, rel=0, abs=0.01)
     assert found.layers == 2
     assert cut(crystal, (1, 0, 0)).bonds_per_nm2 > 0
-    assert molecules_in_cell(4, covalent_bonds(crystal)) is None
+    assert molecules_of(crystal) is None
 
 
 def test_molecules_are_counted_across_cell_faces(tmp_path):
     crystal = read_crystal(write(tmp_path, "co2.cif", DRY_ICE))
-    assert molecules_in_cell(12, covalent_bonds(crystal)) == 4
+    assert molecules_of(crystal) == 4
     assert len(covalent_bonds(crystal).pairs) == 8
     moved = rewritten(crystal, random_rotation(np.random.default_rng(0)), np.eye(3, dtype=int))
     moved = Crystal(moved.lattice, (moved.positions + 0.11) % 1.0, moved.numbers)
-    assert molecules_in_cell(12, covalent_bonds(moved)) == 4
+    assert molecules_of(moved) == 4
 
 
 def test_dry_ice_layers(tmp_path):
@@ -71,14 +78,28 @@ def test_dry_ice_layers(tmp_path):
     assert found.gap == pytest.approx((0.5 - 0.237) * 5.624, rel=1e-6)
 
 
+def test_interlocked_molecules_by_hand():
+    """Rods along x, 3.4 A from centre to centre and 3.6 A long: interlocked by 0.2 A along x, 4 A apart along z."""
+    rod = [[0.0, 0, 0], [1.2, 0, 0], [2.4, 0, 0], [3.6, 0, 0]]
+    other = [[x + 3.4, y + 3.5, z + 4.0] for x, y, z in rod]
+    crystal = Crystal.from_atoms(Atoms("N8", rod + other, cell=[6.8, 7.0, 8.0], pbc=True))
+    found = find_molecules(8, covalent_bonds(crystal))
+    assert found.count == 2
+    across = easiest_cut(crystal, covalent_bonds(crystal), found, np.array([1 / 6.8, 0, 0]))
+    assert across.gap == pytest.approx(3.4 - 3.6, rel=0, abs=1e-9)
+    assert across.layers == 0
+    assert across.bonds_per_nm2 == pytest.approx(1 / 0.56, rel=1e-9)
+    assert easiest_cut(crystal, covalent_bonds(crystal), found, np.array([0, 0, 1 / 8.0])).gap == pytest.approx(4.0, rel=1e-9)
+
+
 def test_a_chain_is_no_molecule_and_single_atoms_are():
     chain = Atoms("C2H4", [[0, 0, 0], [0, 0.87, 1.27], [0.9, -0.6, 0], [-0.9, -0.6, 0], [0.9, 1.5, 1.27], [-0.9, 1.5, 1.27]])
     chain.set_cell([8.0, 8.0, 2.54])
     chain.pbc = True
     crystal = Crystal.from_atoms(chain)
-    assert molecules_in_cell(6, covalent_bonds(crystal)) is None
+    assert molecules_of(crystal) is None
     argon = Crystal.from_atoms(bulk("Ar", "fcc", a=5.3, cubic=True))
-    assert molecules_in_cell(4, covalent_bonds(argon)) == 4
+    assert molecules_of(argon) == 4
     assert cut(argon, (1, 1, 1)).bonds_per_nm2 == 0
 
 
