@@ -124,23 +124,25 @@ class IndexAxes:
             turned.append(along @ np.array([x, y, z]))
         return np.array(turned)
 
-    def nearest(
-        self, vector: FloatArray, planes: bool = False, within: IntArray | None = None
-    ) -> tuple[tuple[int, ...], float]:
-        """The low-index direction, or plane by its normal, nearest to a vector (3,) or its opposite, and the angle, degrees.
+    def nearest(self, vectors: FloatArray, planes: bool = False) -> list[tuple[tuple[int, ...], float]]:
+        """Low-index directions (or planes, by normal) nearest to vectors (n, 3) or their opposites, and the angles, degrees."""
+        units = self._low_normals if planes else self._low_directions
+        return _closest(low_indices(), units, np.asarray(vectors, dtype=float).reshape(-1, 3))
 
-        `within` (3,) asks for directions that lie in this plane.
-        """
-        indices = low_indices()
-        if within is not None:
-            indices = indices[indices @ np.asarray(within) == 0]
-            if not len(indices):
-                indices = np.array([self.shortest_in_plane(within)[0]])
-        units = self.normal(indices) if planes else self.direction(indices)
-        cosines = np.abs(units @ _unit(np.asarray(vector)))
-        best = int(np.lexsort((np.abs(indices).sum(axis=1), -np.round(cosines, 9)))[0])
-        sine = min(1.0, float(np.linalg.norm(np.cross(units[best], _unit(np.asarray(vector))))))
-        return tuple(int(i) for i in indices[best]), float(np.degrees(np.arcsin(sine)))
+    def nearest_in_plane(self, vector: FloatArray, plane: IntArray) -> tuple[tuple[int, ...], float]:
+        """The low-index direction in a plane nearest to a vector (3,) or its opposite, and the angle, degrees."""
+        indices = low_indices()[low_indices() @ np.asarray(plane) == 0]
+        if not len(indices):
+            indices = np.array([self.shortest_in_plane(plane)[0]])
+        return _closest(indices, self.direction(indices), np.asarray(vector, dtype=float).reshape(1, 3))[0]
+
+    @cached_property
+    def _low_normals(self) -> FloatArray:
+        return self.normal(low_indices())
+
+    @cached_property
+    def _low_directions(self) -> FloatArray:
+        return self.direction(low_indices())
 
 
 @cache
@@ -191,6 +193,16 @@ def parse_indices(text: str, option: str, plane: bool) -> tuple[int, ...]:
 
 def _unit(vectors: FloatArray) -> FloatArray:
     return np.asarray(vectors / np.linalg.norm(vectors, axis=-1, keepdims=True))
+
+
+def _closest(indices: IntArray, units: FloatArray, vectors: FloatArray) -> list[tuple[tuple[int, ...], float]]:
+    """Which of the unit vectors (m, 3) lies nearest to each vector (n, 3), the lowest indices first where several do."""
+    vectors = _unit(vectors)
+    cosines = np.abs(vectors @ units.T)
+    best = np.argmax(np.round(cosines, 9) - 1e-11 * np.abs(indices).sum(axis=1), axis=1)
+    sines = np.linalg.norm(np.cross(units[best], vectors), axis=1)
+    angles = np.degrees(np.arcsin(np.minimum(1.0, sines)))
+    return [(tuple(int(i) for i in indices[b]), float(angle)) for b, angle in zip(best, angles, strict=True)]
 
 
 def _ugliness(indices: tuple[int, ...]) -> tuple[int, int, tuple[int, ...]]:

@@ -19,8 +19,8 @@ from strainkit.tensors.sixvectors import from_mandel
 
 __all__ = ["Extreme", "Near", "extremes", "ratio"]
 
-#: maps 6x6 matrices, unit vectors and 0 or 1 (least, most) to values (..., k) and second directions (..., k, 3), if any
-Paired = Callable[[FloatArray, FloatArray, int], tuple[FloatArray, FloatArray | None]]
+#: maps 6x6 matrices (..., 6, 6), unit vectors (..., k, 3) and 0 or 1 (least, most) to (..., k) values or (..., k, 3) vectors
+Directed = Callable[[FloatArray, FloatArray, int], FloatArray]
 
 #: draws behind the errors of extremes: good to about 4 %
 _DRAWS = 300
@@ -81,25 +81,20 @@ def extremes(elastic: ElasticCrystal) -> dict[str, tuple[Extreme, Extreme]]:
     """
     s, draws = elastic.compliance, elastic.compliance_draws[:_DRAWS]
     found = {
-        "young_GPa": _ends(elastic, s, draws, lambda m, n, _: (young(m, n), None)),
+        "young_GPa": _ends(elastic, s, draws, lambda m, n, _: young(m, n)),
         "linear_compressibility_per_TPa": _compressibilities(elastic),
-        "shear_GPa": _ends(elastic, s, draws, lambda m, n, most: _of(shear_range(m, n), most)),
-        "poisson": _ends(elastic, s, draws, lambda m, n, most: _of(poisson_range(m, n), most)),
     }
-    density = elastic.density
-    if density is not None:
-
-        def wave(m: FloatArray, n: FloatArray, most: int) -> tuple[FloatArray, FloatArray]:
-            values, vectors = np.linalg.eigh(christoffel(m, elastic.stress, n))
-            return speed(values[..., 2 * most], density), vectors[..., 2 * most]
-
-        found["sound_m_per_s"] = _ends(elastic, elastic.waves.mandel, elastic.wave_draws[:_DRAWS], wave)
+    for name, function in (("shear_GPa", shear_range), ("poisson", poisson_range)):
+        found[name] = _ends(
+            elastic,
+            s,
+            draws,
+            lambda m, n, most, f=function: f(m, n)[most],  # type: ignore[misc]
+            lambda m, n, most, f=function: f(m, n)[2 + most],  # type: ignore[misc]
+        )
+    if elastic.density is not None:
+        found["sound_m_per_s"] = _speeds(elastic, elastic.density)
     return found
-
-
-def _of(ranges: tuple[FloatArray, FloatArray, FloatArray, FloatArray], most: int) -> tuple[FloatArray, FloatArray]:
-    """Least or most of a range, and its direction."""
-    return ranges[most], ranges[2 + most]
 
 
 def ratio(least: Extreme, most: Extreme) -> WithError:
@@ -126,20 +121,32 @@ def _compressibilities(elastic: ElasticCrystal) -> tuple[Extreme, Extreme]:
     return ends[0], ends[1]
 
 
-def _ends(elastic: ElasticCrystal, matrix: FloatArray, draws: FloatArray, quantity: Paired) -> tuple[Extreme, Extreme]:
-    """Smallest and largest value of a quantity that depends on a direction and has a second one of its own."""
+def _speeds(elastic: ElasticCrystal, density: float) -> tuple[Extreme, Extreme]:
+    """The slowest and the fastest wave, with their displacements."""
+
+    def value(m: FloatArray, n: FloatArray, most: int) -> FloatArray:
+        return speed(np.linalg.eigvalsh(christoffel(m, elastic.stress, n))[..., 2 * most], density)
+
+    def displacement(m: FloatArray, n: FloatArray, most: int) -> FloatArray:
+        return np.asarray(np.linalg.eigh(christoffel(m, elastic.stress, n))[1][..., 2 * most])
+
+    return _ends(elastic, elastic.waves.mandel, elastic.wave_draws[:_DRAWS], value, displacement)
+
+
+def _ends(
+    elastic: ElasticCrystal, matrix: FloatArray, draws: FloatArray, value: Directed, side: Directed | None = None
+) -> tuple[Extreme, Extreme]:
+    """Smallest and largest value of a quantity that depends on a direction and may have a second one of its own."""
     ends = []
     for most in (0, 1):
-        top = search(lambda m, n, most=most: quantity(m, n, most)[0], matrix, draws, bool(most), _simple(elastic.axes))  # type: ignore[misc]
-        vectors = [top.direction]
-        side = quantity(matrix, top.direction[None], most)[1]
+        top = search(lambda m, n, most=most: value(m, n, most), matrix, draws, bool(most), _simple(elastic.axes))  # type: ignore[misc]
+        equal = [top.direction[None]]
         if side is not None:
-            vectors.append(side[0])
-        equal = [np.array(vectors)]
-        if side is not None:  # in shear and in transverse waves the two directions may change places
-            value, back = quantity(matrix, side, most)
-            if back is not None and abs(value[0] - top.value.value) < 1e-9 * abs(top.value.value):
-                equal.append(np.array([side[0], back[0]]))
+            other = side(matrix, top.direction[None], most)
+            equal = [np.concatenate([top.direction[None], other])]
+            # in shear and in transverse waves the two directions may change places
+            if abs(value(matrix, other, most)[0] - top.value.value) < 1e-9 * abs(top.value.value):
+                equal.append(np.concatenate([other, side(matrix, other, most)]))
         ends.append(_named(elastic.axes, top, equal))
     return ends[0], ends[1]
 
@@ -157,8 +164,11 @@ def _named(axes: IndexAxes | None, top: Top, equal: list[FloatArray]) -> Extreme
     if axes is None:
         near = [Near(v if v[np.abs(v) > 1e-6][0] > 0 else -v, None, None) for v in equal[0]]
     else:
-        turned = [vectors for first in equal for vectors in axes.alike(first)]
-        near = min(([Near(v, axes.nearest(v), axes.nearest(v, planes=True)) for v in vectors] for vectors in turned), key=_ugly)
+        turned = np.concatenate([axes.alike(vectors) for vectors in equal])
+        flat = turned.reshape(-1, 3)
+        every = [Near(*named) for named in zip(flat, axes.nearest(flat), axes.nearest(flat, planes=True), strict=True)]
+        size = turned.shape[1]
+        near = min((every[start : start + size] for start in range(0, len(every), size)), key=_ugly)
     return Extreme(top.value, near[0], near[1] if len(near) > 1 else None, top.drawn)
 
 

@@ -131,11 +131,11 @@ def test_nearest_by_brute_force(laue):
     axes = axes_of(conventional(laue))
     for vector in random_rotation(np.random.default_rng(7)):
         for planes, unit in ((True, axes.normal), (False, axes.direction)):
-            indices, angle = axes.nearest(vector, planes=planes)
+            indices, angle = axes.nearest(vector, planes=planes)[0]
             every = np.degrees(np.arccos(np.abs([unit(np.array(i)) @ vector for i in low_indices()])))
             assert angle == pytest.approx(every.min(), rel=0, abs=1e-6)
             assert np.degrees(np.arccos(abs(unit(np.array(indices)) @ vector))) == pytest.approx(angle, rel=0, abs=1e-6)
-    indices, _ = axes.nearest(np.array([0.3, 0.5, 0.8]), within=np.array([1, 1, 2]))
+    indices, _ = axes.nearest_in_plane(np.array([0.3, 0.5, 0.8]), np.array([1, 1, 2]))
     assert np.dot(indices, (1, 1, 2)) == 0
 
 
