@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from strainkit.crystal.lattice import IndexAxes, low_indices
-from strainkit.derive.directional import linear_compressibility, poisson_range, shear_range, young
+from strainkit.derive.directional import linear_compressibility, poisson, poisson_range, shear, shear_range, young
 from strainkit.derive.elastic import ElasticCrystal
 from strainkit.derive.search import Top, search
 from strainkit.derive.spread import WithError, half_width, with_errors
@@ -84,13 +84,14 @@ def extremes(elastic: ElasticCrystal) -> dict[str, tuple[Extreme, Extreme]]:
         "young_GPa": _ends(elastic, s, draws, lambda m, n, _: young(m, n)),
         "linear_compressibility_per_TPa": _compressibilities(elastic),
     }
-    for name, function in (("shear_GPa", shear_range), ("poisson", poisson_range)):
+    for name, function, of_pair in (("shear_GPa", shear_range, shear), ("poisson", poisson_range, poisson)):
         found[name] = _ends(
             elastic,
             s,
             draws,
             lambda m, n, most, f=function: f(m, n)[most],  # type: ignore[misc]
             lambda m, n, most, f=function: f(m, n)[2 + most],  # type: ignore[misc]
+            of_pair,
         )
     if elastic.density is not None:
         found["sound_m_per_s"] = _speeds(elastic, elastic.density)
@@ -130,23 +131,34 @@ def _speeds(elastic: ElasticCrystal, density: float) -> tuple[Extreme, Extreme]:
     def displacement(m: FloatArray, n: FloatArray, most: int) -> FloatArray:
         return np.asarray(np.linalg.eigh(christoffel(m, elastic.stress, n))[1][..., 2 * most])
 
-    return _ends(elastic, elastic.waves.mandel, elastic.wave_draws[:_DRAWS], value, displacement)
+    def of_pair(m: FloatArray, n: FloatArray, u: FloatArray) -> FloatArray:
+        return speed(np.einsum("ki,kij,kj->k", u, christoffel(m, elastic.stress, n), u), density)
+
+    return _ends(elastic, elastic.waves.mandel, elastic.wave_draws[:_DRAWS], value, displacement, of_pair)
 
 
 def _ends(
-    elastic: ElasticCrystal, matrix: FloatArray, draws: FloatArray, value: Directed, side: Directed | None = None
+    elastic: ElasticCrystal,
+    matrix: FloatArray,
+    draws: FloatArray,
+    value: Directed,
+    side: Directed | None = None,
+    of_pair: Callable[[FloatArray, FloatArray, FloatArray], FloatArray] | None = None,
 ) -> tuple[Extreme, Extreme]:
     """Smallest and largest value of a quantity that depends on a direction and may have a second one of its own."""
-    ends = []
+    ends, simple = [], _simple(elastic.axes)
     for most in (0, 1):
-        top = search(lambda m, n, most=most: value(m, n, most), matrix, draws, bool(most), _simple(elastic.axes))  # type: ignore[misc]
+        top = search(lambda m, n, most=most: value(m, n, most), matrix, draws, bool(most), simple)  # type: ignore[misc]
         equal = [top.direction[None]]
-        if side is not None:
-            other = side(matrix, top.direction[None], most)
-            equal = [np.concatenate([top.direction[None], other])]
-            # in shear and in transverse waves the two directions may change places
-            if abs(value(matrix, other, most)[0] - top.value.value) < 1e-9 * abs(top.value.value):
-                equal.append(np.concatenate([other, side(matrix, other, most)]))
+        if side is not None and of_pair is not None:
+            n, best = top.direction[None], top.value.value
+            along = np.broadcast_to(n, simple.shape)
+            shared = np.abs(of_pair(matrix, along, simple) - best) < 1e-9 * abs(best)  # any direction at right angles, say
+            shared &= np.abs(simple @ n[0]) < 1e-9 if abs(side(matrix, n, most)[0] @ n[0]) < 0.5 else shared
+            other = simple[None, np.argmax(shared)] if shared.any() else side(matrix, n, most)
+            equal = [np.concatenate([n, other])]
+            if abs(value(matrix, other, most)[0] - best) < 1e-9 * abs(best):  # shear and waves: the two may change places
+                equal.append(np.concatenate([other, n]))
         ends.append(_named(elastic.axes, top, equal))
     return ends[0], ends[1]
 

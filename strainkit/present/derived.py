@@ -172,7 +172,7 @@ def _sound(derived: Derived) -> list[str]:
         lines.append(row("Debye temperature, K", value_text(heat.atoms, 1), "counting atoms; exact average"))
     if heat.molecules is not None:
         count = heat.molecules_in_cell
-        lines.append(row("", value_text(heat.molecules, 1), f"counting molecules or ions, {count} a cell"))
+        lines.append(row("", value_text(heat.molecules, 1), f"counting molecules, {count} in the cell"))
     if heat.shortcut is not None:
         lines.append(row("", plain(heat.shortcut, 1), "Anderson's shortcut, counting atoms"))
     return [*lines, ""]
