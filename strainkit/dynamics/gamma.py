@@ -107,7 +107,7 @@ def force_constants(crystal: Crystal, moved: Sequence[Displacement], forces: Flo
         raise InputError("no force constants from these displaced cells", crystal.name)
     size = 3 * len(crystal.numbers)
     matrix = np.asarray(found, dtype=float).transpose(0, 2, 1, 3).reshape(size, size)
-    return 0.5 * (matrix + matrix.T)
+    return np.asarray(0.5 * (matrix + matrix.T))
 
 
 def frequencies(constants: FloatArray, numbers: FloatArray) -> tuple[FloatArray, FloatArray]:

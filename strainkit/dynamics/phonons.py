@@ -124,4 +124,4 @@ def gamma_constants(study: Phonopy, crystal: Crystal) -> FloatArray:
             summed[i, owner[column]] += full[row, column]
     turned = np.einsum("ia,mnij,jb->mnab", rotation, summed, rotation)
     matrix = turned.transpose(0, 2, 1, 3).reshape(3 * n, 3 * n)
-    return 0.5 * (matrix + matrix.T)
+    return np.asarray(0.5 * (matrix + matrix.T))
