@@ -24,6 +24,10 @@ CODES: dict[str, tuple[Severity, str]] = {
     # the strain set
     "target-error": ("info", "how the wanted standard error is met"),
     "few-spare-degrees": ("warning", "fewer than three spare degrees of freedom to estimate the noise from"),
+    # the files of the jobs
+    "orientation-not-in-format": ("info", "a cell format holds lengths and angles only, not the Cartesian axes"),
+    "no-dispersion": ("warning", "an organic crystal is computed without a dispersion correction"),
+    "relaxation-unfinished": ("warning", "the cell comes from a relaxation that did not end or did not converge"),
     # what came back
     "unreadable-output": ("error", "a job's output cannot be parsed"),
     "job-unfinished": ("error", "a job's output has no end-of-job mark or no stress"),

@@ -8,9 +8,8 @@ import typer
 
 from strainkit.cli.options import Json, Quiet, Run, deliver, progress
 
-EngineName = Annotated[
-    str, typer.Option(help="emt, lj, morse, tersoff, gfn1-xtb, gfn2-xtb, or module:Class of an ASE calculator.")
-]
+ENGINE_HELP = "emt, lj, morse, tersoff, gfn1-xtb, gfn2-xtb, or module:Class of an ASE calculator."
+EngineName = Annotated[str, typer.Option(help=ENGINE_HELP)]
 Settings = Annotated[list[str] | None, typer.Option("--set", help="Engine setting key=value; repeatable.")]
 Fmax = Annotated[float, typer.Option(help="Largest force left on an ion, eV/A.", min=1e-12)]
 

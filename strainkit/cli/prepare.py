@@ -15,6 +15,15 @@ Aim = Annotated[
 ]
 Noise = Annotated[float, typer.Option(help="Stress noise to expect, GPa (standard deviation of one component).")]
 
+Deck = Annotated[
+    str | None, typer.Option(help="Input deck: qe, vasp, abinit, cp2k, castep, aims, gpaw, or your own folder or file.")
+]
+SettingsFiles = Annotated[
+    list[Path] | None, typer.Option("--settings", help="TOML with [deck], [pseudopotentials], [site]; repeatable.")
+]
+KSpacing = Annotated[float | None, typer.Option(help="k-point spacing, 1/A, 2 pi included. [default: 0.25]")]
+SchedulerName = Annotated[str | None, typer.Option(help="Job script for slurm, pbs, lsf, sge or bash; needs --deck.")]
+
 
 def prepare(
     cell: Annotated[Path | None, typer.Argument(help="Structure file of the relaxed cell; none with --extend.")] = None,
@@ -35,8 +44,16 @@ def prepare(
     more: Annotated[int | None, typer.Option(help="With --extend: at most N jobs that help most.", min=1)] = None,
     ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
     format: Annotated[
-        list[str] | None, typer.Option(help="Cell format; repeatable: poscar, cif, extxyz. [default: poscar, cif]")
+        list[str] | None,
+        typer.Option(
+            help="Cell format; repeatable: poscar, cif, extxyz, qe, abinit, cp2k, castep, aims, siesta, gen, crystal, xsf, "
+            "pwmat. [default: poscar, cif]"
+        ),
     ] = None,
+    deck: Deck = None,
+    settings: SettingsFiles = None,
+    kspacing: KSpacing = None,
+    scheduler: SchedulerName = None,
     read_as: ReadAs = None,
     symprec: Symprec = 1e-3,
     dry_run: Annotated[bool, typer.Option("--dry-run", help="Print the plan and write nothing.")] = False,
@@ -45,22 +62,24 @@ def prepare(
     quiet: Quiet = False,
 ) -> None:
     """Strained cells for one relaxed crystal: the fewest jobs that fix every constant."""
+    from strainkit.cli.calculate import chosen_calculation
     from strainkit.crystal.read import read_crystal
     from strainkit.design.strainset import Wish
     from strainkit.errors import UsageError
-    from strainkit.prepare.runfolder import DEFAULT_FORMATS, plan_run, write_run
+    from strainkit.prepare.runfolder import plan_run, plan_with_files, write_run
     from strainkit.prepare.writers import cell_formats
     from strainkit.present.terminal import plan_text
 
-    formats = list(format or DEFAULT_FORMATS)
-    cell_formats(formats)
+    cell_formats(format or [])
     magnitudes = tuple(m / 100.0 for m in magnitude or ())
     if extend is not None:
         if cell is not None or out is not None or (more is None) == (not magnitudes):
             raise UsageError(
                 "--extend goes with --magnitude or --more", "--extend", "It takes neither a CELL nor --out: they are the run's."
             )
-        _extend(extend, magnitudes, more, formats, dry_run, json, quiet)
+        if deck or settings or scheduler or kspacing is not None:
+            raise UsageError("--deck and its options are the run's own", "--extend", "Leave them out.")
+        _extend(extend, magnitudes, more, format, dry_run, json, quiet)
         return
     if cell is None:
         raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
@@ -68,17 +87,20 @@ def prepare(
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
     plan = plan_run(read_crystal(cell, read_as), wish, ions, symprec)
-    if out is not None and not dry_run:
-        plan, what = write_run(plan, out, formats, force)
+    calculation = chosen_calculation(deck, plan, settings, kspacing, scheduler, symprec)
+    if out is None or dry_run:
+        plan, _ = plan_with_files(plan, format, calculation, scheduler)
+    else:
+        plan, what = write_run(plan, out, format, force, calculation, scheduler)
         note(f"{out}: {what}", quiet)
-    deliver(plan.to_dict, lambda: plan_text(plan), json)
+    deliver(plan.to_dict, lambda: plan_text(plan, out), json)
 
 
 def _extend(
     run: Path,
     magnitudes: tuple[float, ...],
     more: int | None,
-    formats: list[str],
+    formats: list[str] | None,
     dry_run: bool,
     json: bool,
     quiet: bool,
@@ -97,4 +119,6 @@ def _extend(
     if not dry_run:
         plan = write_extension(run, old, plan, formats)
         note(f"{run}: {len(new)} more job folders", quiet)
+        if "scheduler" in plan.calculation:
+            note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
     deliver(plan.to_dict, lambda: plan_text(plan), json)

@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
+import re
 import warnings
+from dataclasses import replace
 from pathlib import Path
+
+import numpy as np
 
 from strainkit.crystal.cif import crystal_from_cif
 from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.outputs import OUTPUTS, OWN, Output, recognise_output, relaxation_doubts
 from strainkit.errors import InputError, StrainkitError
 
 __all__ = ["read_crystal"]
@@ -24,6 +29,8 @@ _ENDINGS = {
     ".res": "res",
 }
 _NAMES = {"POSCAR": "vasp", "CONTCAR": "vasp"}
+#: outputs that job scripts number, and those that a program always calls the same
+_JOB_OUTPUT = re.compile(r"(pw|abinit|castep|aims|vasp)-\d+\.\w+|strainkit-1\.restart|returned\.extxyz|OUTCAR|vasprun\.xml")
 
 
 def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
@@ -59,7 +66,23 @@ def read_crystal(path: str | Path, format: str | None = None) -> Crystal:
     format = {"poscar": "vasp"}.get(format, format) if format else _guess(path, text)
     if format == "cif":
         return crystal_from_cif(text, path)
+    kind = next((kind for kind in OUTPUTS if kind.ase_format == format), None)
+    if kind is not None:
+        return _from_output(path, text, kind)
     return _through_ase(path, format)
+
+
+def _from_output(path: Path, text: str, kind: Output) -> Crystal:
+    """The last cell of a program's output, with a finding when the run did not end well."""
+    if kind.ase_format in OWN:
+        try:
+            lattice, positions, numbers = OWN[kind.ase_format](text)
+        except (ValueError, IndexError, KeyError) as error:
+            raise InputError(f"not readable as {kind.ase_format}: {error}", path) from None
+        crystal = Crystal(lattice, positions, np.array(numbers), name=_name(path), source=str(path))
+    else:
+        crystal = _through_ase(path, kind.ase_format)
+    return replace(crystal, remarks=(*crystal.remarks, *relaxation_doubts(kind, text, str(path))))
 
 
 def _guess(path: Path, text: str) -> str:
@@ -68,6 +91,9 @@ def _guess(path: Path, text: str) -> str:
         return "cif"
     if len(head) == 2 and head[0].strip().isdigit() and "lattice=" in head[1].lower():
         return "extxyz"
+    kind = recognise_output(text)
+    if kind is not None:
+        return kind.ase_format
     for name, format in _NAMES.items():
         if path.name.upper().startswith(name):
             return format
@@ -98,5 +124,10 @@ def _through_ase(path: Path, format: str) -> Crystal:
         raise InputError(f"not readable as {format}: {reason}", path) from None
     if not isinstance(atoms, Atoms):
         raise InputError(f"no structure found when read as {format}", path)
-    stem = path.parent.name if path.name.upper() in _NAMES else path.name.split(".")[0]
-    return Crystal.from_atoms(atoms, name=stem or "crystal", source=str(path))
+    return Crystal.from_atoms(atoms, name=_name(path), source=str(path))
+
+
+def _name(path: Path) -> str:
+    """Name of a crystal after its file, or after the folder of a file that is always called the same."""
+    always = path.name.upper() in _NAMES or _JOB_OUTPUT.fullmatch(path.name)
+    return (path.parent.name if always else path.name.split(".")[0]) or "crystal"

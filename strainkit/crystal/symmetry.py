@@ -210,6 +210,28 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float
     return rungs, findings
 
 
+def translation_denominators(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> tuple[int, int, int]:
+    """Smallest whole numbers of grid points along a, b, c whose multiples every symmetry operation maps onto themselves.
+
+    Glide planes and screw axes move the grid by a fraction of a lattice vector; operations whose fraction is none of
+    the usual ones (a crystal with its origin elsewhere) do not count, since no grid suits them.
+    """
+    import spglib
+
+    cell = (crystal.lattice.tolist(), crystal.positions.tolist(), species(crystal).tolist())
+    try:
+        with spglib_raises():
+            found = spglib.get_symmetry(cell, symprec=symprec)
+    except spglib.SpglibError:
+        return 1, 1, 1
+    needed = np.ones(3, dtype=int)
+    for translation in found["translations"] if found else ():
+        fits = [next((d for d in (1, 2, 3, 4, 6) if abs(d * x - round(d * x)) < 1e-3), 0) for x in translation]
+        if all(fits):
+            needed = np.lcm(needed, fits)
+    return int(needed[0]), int(needed[1]), int(needed[2])
+
+
 def laue_class_of(rotations: FloatArray) -> str:
     """Laue class of a group of proper rotations (m, 3, 3), in any frame, by its numbers of rotation axes."""
     angles = np.degrees(np.arccos(np.clip(0.5 * (np.trace(rotations, axis1=1, axis2=2) - 1.0), -1.0, 1.0)))

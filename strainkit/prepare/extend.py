@@ -9,8 +9,9 @@ from pathlib import Path
 from strainkit.design.expect import expect
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
+from strainkit.prepare.calculation import recorded_calculation
 from strainkit.prepare.runfolder import files_of
-from strainkit.prepare.writers import cell_formats
+from strainkit.prepare.writers import default_formats
 from strainkit.run.files import atomic_write, checksum
 from strainkit.run.plan import Plan, job_folder
 
@@ -25,17 +26,28 @@ def extend_plan(plan: Plan, new: Sequence[StrainJob]) -> Plan:
     return replace(plan, jobs=jobs, expectation=promise, findings=(*kept, *doubts))
 
 
-def write_extension(run: Path, old: Plan, plan: Plan, formats: Sequence[str]) -> Plan:
+def write_extension(run: Path, old: Plan, plan: Plan, formats: Sequence[str] | None = None) -> Plan:
     """Write the folders of the jobs that `plan` has beyond `old`, then the manifest; nothing else is touched.
+
+    A run with an input deck gets the same deck, settings, mesh and grid for the new jobs.
 
     Raises
     ------
     InputError
-        When the folder of a new job exists and holds something that strainkit would not write there.
+        When the folder of a new job exists and holds something that strainkit would not write there, or when its
+        cell needs a larger real-space grid than the run has.
     """
     known = {job.label for job in old.jobs}
     new = [job for job in plan.jobs if job.label not in known]
-    files = files_of(plan, new, cell_formats(list(formats)))
+    calculation = None
+    if old.calculation:
+        lattices = [plan.crystal.lattice @ job.gradient.T for job in plan.jobs]
+        calculation = recorded_calculation(old.calculation, plan.crystal, plan.ions, lattices, plan.symmetry.tolerance)
+    files = files_of(plan, new, default_formats(plan.crystal) if formats is None else formats, calculation)
+    if calculation is not None and [list(points) for points in calculation.grids] != old.calculation["grids"]:
+        raise InputError(
+            "the new cells need a larger real-space grid than this run has", run, "Prepare a new run with all magnitudes."
+        )
     for job in new:
         folder = run / job_folder(job.label)
         if folder.exists():

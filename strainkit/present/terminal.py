@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
+from pathlib import Path
 
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.cost import JobCost
 from strainkit.fit.result import Fit
+from strainkit.present.calculation import calculation_lines
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
@@ -60,8 +62,8 @@ def _promise(plan: Plan) -> str:
     return paragraph(f"expected standard errors at a stress noise of {expected.noise:g} GPa, in GPa: {', '.join(words)}", "  ")
 
 
-def plan_text(plan: Plan) -> str:
-    """The plan of a run: constants, jobs, expected errors."""
+def plan_text(plan: Plan, out: Path | None = None) -> str:
+    """The plan of a run: constants, jobs, expected errors, and how its jobs are computed and submitted."""
     rows = [
         [job.label, f"{100 * abs(job.magnitude):g}", *(plain(100 * x) for x in strain_to_voigt(job.strain))]
         for job in plan.jobs
@@ -75,6 +77,7 @@ def plan_text(plan: Plan) -> str:
         _promise(plan),
         f"  spare degrees of freedom {plan.expectation.spare}; cost by lost symmetry about "
         f"{plan.expectation.relative_cost:g} reference jobs",
+        *calculation_lines(plan.calculation, out),
         "",
         findings_text(plan.findings),
     ]

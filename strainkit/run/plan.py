@@ -52,6 +52,8 @@ class Plan:
         Doubts about the cell and the set.
     files : dict
         Relative path -> SHA-256 of every file that prepare wrote.
+    calculation : dict
+        How the jobs are computed (deck, its settings, k-mesh, pseudopotentials, job script); empty for cells only.
     """
 
     crystal: Crystal
@@ -63,6 +65,7 @@ class Plan:
     expectation: Expectation
     findings: tuple[Finding, ...] = ()
     files: dict[str, str] = field(default_factory=dict)
+    calculation: dict[str, Any] = field(default_factory=dict)
 
     @cached_property
     def basis(self) -> ConstantBasis:
@@ -121,6 +124,7 @@ class Plan:
                 "labels": list(self.crystal.labels),
                 "magnetic_moments": self.crystal.magnetic_moments,
             },
+            "calculation": self.calculation or None,
             "files": self.files,
         }
 
@@ -214,6 +218,7 @@ def _plan_from(data: dict[str, Any]) -> Plan:
         ),
         findings=tuple(Finding(**f) for f in data["findings"]),
         files=dict(data["files"]),
+        calculation=dict(data.get("calculation") or {}),
     )
 
 

@@ -48,7 +48,7 @@ def test_dry_ice_and_its_noise(cli, need, tmp_path):
     assert values["C44"] == pytest.approx(2.9, abs=0.2)
     assert fit["energy_check"]["curvature_agrees"]
     pair = fit["energy_check"]["pairs"][0]
-    assert pair["curvature_energy_GPa"] == pytest.approx(pair["curvature_stress_GPa"], rel=0.02)
+    assert pair["curvature_energy_GPa"] == pytest.approx(pair["curvature_stress_GPa"], rel=0.05)
 
 
 @pytest.mark.slow

@@ -1,0 +1,40 @@
+"""New folders that appear whole or not at all."""
+
+from __future__ import annotations
+
+import os
+import shutil
+import tempfile
+from collections.abc import Iterable, Mapping
+from pathlib import Path
+
+from strainkit.errors import InputError
+
+__all__ = ["write_folder"]
+
+
+def write_folder(out: Path, files: Mapping[str, str], folders: Iterable[str] = ()) -> None:
+    """Make a folder with files (relative path -> text) and further empty folders; it is renamed into place when complete.
+
+    Raises
+    ------
+    InputError
+        When the place cannot be written; nothing is left behind then.
+    """
+    try:
+        out.parent.mkdir(parents=True, exist_ok=True)
+        building = Path(tempfile.mkdtemp(prefix=f".{out.name}.", dir=out.parent))
+        try:
+            for folder in folders:
+                (building / folder).mkdir(parents=True, exist_ok=True)
+            for name, text in files.items():
+                path = building / name
+                path.parent.mkdir(parents=True, exist_ok=True)
+                path.write_text(text, encoding="utf-8")
+            building.chmod(0o755)
+            os.rename(building, out)
+        except BaseException:
+            shutil.rmtree(building, ignore_errors=True)
+            raise
+    except OSError as error:
+        raise InputError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None

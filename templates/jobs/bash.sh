@@ -1,0 +1,6 @@
+#!/bin/bash
+# {{ title }}
+array_task=""
+submitted_from=""
+job_id=""
+{% include "job.sh" %}
