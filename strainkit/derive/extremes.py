@@ -152,10 +152,13 @@ def _ends(
         equal = [top.direction[None]]
         if side is not None and of_pair is not None:
             n, best = top.direction[None], top.value.value
-            along = np.broadcast_to(n, simple.shape)
-            shared = np.abs(of_pair(matrix, along, simple) - best) < 1e-9 * abs(best)  # any direction at right angles, say
-            shared &= np.abs(simple @ n[0]) < 1e-9 if abs(side(matrix, n, most)[0] @ n[0]) < 0.5 else shared
-            other = simple[None, np.argmax(shared)] if shared.any() else side(matrix, n, most)
+            other = side(matrix, n, most)
+            # several second directions may be as good (all of those at right angles, say): name a simple one
+            shared = np.abs(of_pair(matrix, np.broadcast_to(n, simple.shape), simple) - best) < 1e-9 * abs(best)
+            if abs(other[0] @ n[0]) < 0.5:
+                shared &= np.abs(simple @ n[0]) < 1e-9
+            if shared.any():
+                other = simple[None, np.argmax(shared)]
             equal = [np.concatenate([n, other])]
             if abs(value(matrix, other, most)[0] - best) < 1e-9 * abs(best):  # shear and waves: the two may change places
                 equal.append(np.concatenate([other, n]))
