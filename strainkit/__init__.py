@@ -6,7 +6,7 @@ The whole job from a notebook::
     plan, _ = strainkit.write_run(strainkit.plan_run(crystal, [0.01]), Path("run"))
     strainkit.evaluate_run(Path("run"), plan, strainkit.Engine("gfn1-xtb"))
     fit = strainkit.fit_run(plan, strainkit.collect_run(Path("run"), plan))
-    fit.stiffness, strainkit.averages(fit.effective)
+    fit.stiffness, strainkit.averages(fit.effective), strainkit.derive_properties(fit, planes=[(0, 0, 1)])
 """
 
 from __future__ import annotations
@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import find_symmetry
     from strainkit.derive.averages import averages
+    from strainkit.derive.derived import derive_properties
     from strainkit.errors import StrainkitError
     from strainkit.evaluate.engines import Engine
     from strainkit.evaluate.reference import relax_reference
@@ -40,6 +41,7 @@ __all__ = [
     "StrainkitError",
     "averages",
     "collect_run",
+    "derive_properties",
     "evaluate_run",
     "find_symmetry",
     "fit_run",
@@ -58,6 +60,7 @@ _HOME = {
     "StrainkitError": "errors",
     "averages": "derive.averages",
     "collect_run": "collect.gather",
+    "derive_properties": "derive.derived",
     "evaluate_run": "evaluate.runset",
     "find_symmetry": "crystal.symmetry",
     "fit_run": "fit.result",

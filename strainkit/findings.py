@@ -74,6 +74,11 @@ CODES: dict[str, tuple[Severity, str]] = {
     "cubic-response": ("info", "a statistically real cubic response that is too small to matter"),
     "magnitude-matters": ("warning", "a statistically real cubic response that shifts a constant by more than 1 %"),
     "convergence-unclear": ("info", "the shift to zero strain is known too poorly for a verdict"),
+    # what is derived
+    "axes-assumed": ("info", "a tensor file does not name its axes: taken to be the IEEE ones of the cell"),
+    "asymmetric-coefficients": ("warning", "the reference stress makes the stress-strain coefficients asymmetric"),
+    "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),
+    "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
 }
 
 

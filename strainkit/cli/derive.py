@@ -1,13 +1,40 @@
-"""strainkit derive RUN."""
+"""strainkit derive RUN, or derive --tensor FILE."""
 
 from __future__ import annotations
 
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Literal
+
+import typer
+
 from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
-from strainkit.cli.options import Frame, Json, Quiet, Run, deliver
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver
+
+if TYPE_CHECKING:
+    from strainkit.derive.elastic import ElasticCrystal
+
+Run = Annotated[Path | None, typer.Argument(help="Run folder made by strainkit prepare; or none, with --tensor.")]
+Planes = Annotated[list[str] | None, typer.Option("--plane", help="Plane h,k,l to look at, as 0,1,-2; repeatable.")]
+Directions = Annotated[list[str] | None, typer.Option("--direction", help="Direction u,v,w to look at; repeatable.")]
+Tensor = Annotated[Path | None, typer.Option(help="Derive from this typed tensor: a 6x6 matrix or lines such as C11 165.8.")]
+TensorCell = Annotated[Path | None, typer.Option("--cell", help="Structure of the crystal whose tensor is typed.")]
+Density = Annotated[float | None, typer.Option(help="Density for a typed tensor, kg/m^3; the cell's if not given.")]
+Frame = Annotated[str, typer.Option(help="Printed axes: given, ieee, crystal (x||a, z||c*), or nine numbers.")]
+Indices = Annotated[
+    Literal["conventional", "given"], typer.Option(help="Cell that planes and directions refer to.", show_default=True)
+]
 
 
 def derive(
-    run: Run,
+    run: Run = None,
+    plane: Planes = None,
+    direction: Directions = None,
+    tensor: Tensor = None,
+    cell: TensorCell = None,
+    density: Density = None,
+    read_as: ReadAs = None,
+    symprec: Symprec = 1e-3,
+    indices: Indices = "conventional",
     order: Order = "linear",
     noise: KnownNoise = None,
     drop: Drop = None,
@@ -16,16 +43,48 @@ def derive(
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
-    """Moduli with standard errors from the fitted stiffness."""
+    """What the tensor means: moduli, planes, directions, waves, each with its error."""
     from strainkit.cli.load import fitted
-    from strainkit.derive.averages import averages
-    from strainkit.present.terminal import BLIND_SPOT, averages_text
-    from strainkit.present.text import heading, paragraph
+    from strainkit.crystal.lattice import parse_indices
+    from strainkit.derive.derived import derive_properties
+    from strainkit.derive.elastic import from_fit
+    from strainkit.errors import UsageError
+    from strainkit.present.derived import derived_text
+    from strainkit.present.terminal import BLIND_SPOT
 
-    result = fitted(run, order, noise, drop, frame, reference_stress)
-    found = averages(result.effective)
-    deliver(
-        lambda: {"schema": "strainkit/derived/1", "name": result.plan.crystal.name, **found.to_dict()},
-        lambda: f"{heading(f'{result.plan.crystal.name}: moduli')}\n{averages_text(found)}\n{paragraph(BLIND_SPOT, '  ')}",
-        json,
-    )
+    planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
+    directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
+    if (run is None) == (tensor is None):
+        raise UsageError("one tensor is needed", "derive", "Give either a run folder or a file with --tensor.")
+    if tensor is not None:
+        if order != "linear" or noise is not None or drop or reference_stress != "real":
+            raise UsageError("--order, --noise, --drop and --reference-stress are for run folders", "--tensor")
+        elastic, blind = _typed(tensor, cell, density, read_as, symprec, frame, indices == "given"), ""
+    else:
+        assert run is not None
+        if cell is not None or density is not None:
+            raise UsageError("--cell and --density belong to --tensor: a run folder has its own", "derive")
+        elastic = from_fit(fitted(run, order, noise, drop, "ieee", reference_stress), frame, indices == "given")
+        blind = BLIND_SPOT
+    derived = derive_properties(elastic, planes, directions)
+    deliver(derived.to_dict, lambda: derived_text(derived, blind), json)
+    if not derived.stability.stable:
+        raise typer.Exit(5)
+
+
+def _typed(
+    tensor: Path, cell: Path | None, density: float | None, read_as: str | None, symprec: float, frame: str, given: bool
+) -> ElasticCrystal:
+    from strainkit.crystal.read import read_crystal
+    from strainkit.crystal.symmetry import find_symmetry
+    from strainkit.derive.elastic import from_tensor_file
+    from strainkit.errors import UsageError
+    from strainkit.tensors.textfile import read_tensor
+
+    if density is not None and not density > 0:
+        raise UsageError(f"a density of {density:g} kg/m^3 is not possible", "--density")
+    file = read_tensor(tensor)
+    if cell is None:
+        return from_tensor_file(file, frame="given" if frame == "ieee" else frame, density=density)
+    crystal = read_crystal(cell, read_as)
+    return from_tensor_file(file, crystal, find_symmetry(crystal, symprec), frame, density, given)

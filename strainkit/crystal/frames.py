@@ -11,7 +11,7 @@ from strainkit.crystal.symmetry import Symmetry
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["FRAMES", "Frame", "conventional_axes", "crystal_frame", "physical_axes"]
+__all__ = ["FRAMES", "Frame", "chosen_frame", "conventional_axes", "crystal_frame", "physical_axes"]
 
 #: names that `--frame` takes
 FRAMES = ("given", "ieee", "crystal")
@@ -47,10 +47,10 @@ def conventional_axes(symmetry: Symmetry) -> tuple[FloatArray, str]:
         for order, words in enumerate(("a, b, c", "b, c, a", "c, a, b") if symmetry.system == "monoclinic" else ("a, b, c",)):
             axes = np.roll(exact, -order, axis=0)
             if _is_conventional(axes, symmetry):
-                return axes, f"a, b, c being {words} of the cell as given"
+                return axes, f"{'a, b, c' if order == 0 else f'a, b, c being {words}'} of the cell as given"
     rows = np.linalg.inv(symmetry.transformation).T
-    words = "; ".join(f"{name} = {_combination(row)}" for name, row in zip("abc", rows, strict=True))
-    return symmetry.standard_lattice, f"of the standard cell, {words} of the cell as given"
+    words = ", ".join(_combination(row) for row in rows)
+    return symmetry.standard_lattice, f"a, b, c of the standard cell, which are {words} of the cell as given"
 
 
 def _combination(row: FloatArray) -> str:
@@ -103,6 +103,30 @@ def crystal_frame(name: str, symmetry: Symmetry) -> Frame:
         rotation, words = _ieee(symmetry.system, axes)
         return Frame(name, rotation, f"{words}; {whose}")
     raise UsageError(f"unknown frame {name!r}", "--frame", f"Use one of {', '.join(FRAMES)}.")
+
+
+def chosen_frame(choice: str, symmetry: Symmetry | None) -> Frame:
+    """The frame that a user asked for: a name, or nine numbers, row by row the axes X, Y, Z in the given frame."""
+    if choice in FRAMES:
+        if symmetry is not None:
+            return crystal_frame(choice, symmetry)
+        if choice == "given":
+            return Frame("given", np.eye(3), "the axes of the tensor as typed")
+        raise UsageError(f"axes {choice!r} need a cell", "--frame", "Give --cell, or --frame given.")
+    try:
+        rotation = np.array([float(x) for x in choice.replace(",", " ").split()]).reshape(3, 3)
+    except ValueError:
+        raise UsageError(
+            f"unknown frame {choice!r}",
+            "--frame",
+            f"Use one of {', '.join(FRAMES)}, or nine numbers: the axes X, Y, Z in the given frame, row by row.",
+        ) from None
+    length = np.linalg.norm(rotation, axis=1, keepdims=True)
+    rotation = rotation / np.where(length > 0, length, 1.0)
+    if not np.allclose(rotation @ rotation.T, np.eye(3), rtol=0, atol=1e-3) or np.linalg.det(rotation) < 0:
+        raise UsageError("these nine numbers are not three perpendicular right-handed axes", "--frame")
+    u, _, vt = np.linalg.svd(rotation)
+    return Frame("custom", u @ vt, "axes typed by the user, rows of the rotation from the given frame")
 
 
 def physical_axes(crystal: Crystal, symmetry: Symmetry) -> FloatArray:

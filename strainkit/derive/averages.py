@@ -1,27 +1,17 @@
-"""Averages over all orientations (Voigt, Reuss, Hill) and the universal anisotropy index, with standard errors.
-
-R. Hill, Proc. Phys. Soc. A 65, 349 (1952); S. I. Ranganathan & M. Ostoja-Starzewski, Phys. Rev. Lett. 101, 055504 (2008).
-"""
+"""Averages over all orientations (`strainkit.tensors.averages`) with standard errors."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from typing import Any
 
-import numpy as np
-
+from strainkit.derive.spread import spread_of
 from strainkit.errors import NoTensorError
 from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.averages import AVERAGES, SCHEMES, averages_of
+from strainkit.tensors.averages import AVERAGES, SCHEMES, anisotropy_of, averages_of, pugh_of
 from strainkit.tensors.stiffness import Stiffness
 
 __all__ = ["Averages", "averages"]
-
-
-def _anisotropy(values: FloatArray) -> FloatArray:
-    """Universal anisotropy index 5 G_V/G_R + K_V/K_R - 6 from the output of `averages_of`."""
-    ratio = values[..., 0] / values[..., 1]
-    return np.asarray(5.0 * ratio[..., 1] + ratio[..., 0] - 6.0)
 
 
 @dataclass(frozen=True)
@@ -33,13 +23,17 @@ class Averages:
     values, errors : (4, 3)
         In the order of `AVERAGES` and `SCHEMES`; errors are None without covariance.
     anisotropy, anisotropy_error : float
-        Universal anisotropy index, zero for an isotropic solid.
+        Universal anisotropy index, zero for an isotropic solid; its error is sampled, since the index is not smooth there.
+    pugh, pugh_error : float
+        K/G of the Hill averages.
     """
 
     values: FloatArray
     errors: FloatArray | None
     anisotropy: float
     anisotropy_error: float | None
+    pugh: float
+    pugh_error: float | None
 
     def to_dict(self) -> dict[str, Any]:
         """JSON-ready: {"bulk_GPa": {"voigt", "reuss", "hill", "standard_error": {...}}, ..., "anisotropy_index"}."""
@@ -50,11 +44,12 @@ class Averages:
             out[name]["standard_error"] = dict(zip(SCHEMES, errors, strict=True))
         out["anisotropy_index"] = self.anisotropy
         out["anisotropy_index_standard_error"] = self.anisotropy_error
+        out["pugh_ratio"] = {"value": self.pugh, "standard_error": self.pugh_error}
         return out
 
 
 def averages(stiffness: Stiffness) -> Averages:
-    """Averages of a stiffness with standard errors to first order.
+    """Averages of a stiffness with standard errors.
 
     Raises
     ------
@@ -66,11 +61,12 @@ def averages(stiffness: Stiffness) -> Averages:
             f"the stiffness is not positive definite (smallest eigenvalue {stiffness.eigenvalues[0]:.3g} GPa)",
             remedy="Averages have no meaning for an unstable crystal; see the findings of strainkit fit.",
         )
-    values = averages_of(stiffness.mandel)
-    error = stiffness.standard_error_of(lambda m: _anisotropy(averages_of(m)))
+    index_error, pugh_error = spread_of(stiffness, anisotropy_of), stiffness.standard_error_of(pugh_of)
     return Averages(
-        values=values,
+        values=averages_of(stiffness.mandel),
         errors=stiffness.standard_error_of(averages_of),
-        anisotropy=float(_anisotropy(values)),
-        anisotropy_error=None if error is None else float(error),
+        anisotropy=float(anisotropy_of(stiffness.mandel)),
+        anisotropy_error=None if index_error is None else float(index_error),
+        pugh=float(pugh_of(stiffness.mandel)),
+        pugh_error=None if pugh_error is None else float(pugh_error),
     )

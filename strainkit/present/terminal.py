@@ -10,14 +10,12 @@ from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
-from strainkit.derive.averages import Averages
 from strainkit.design.cost import JobCost
 from strainkit.fit.result import Fit
 from strainkit.present.calculation import calculation_lines
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
-from strainkit.tensors.averages import AVERAGES, SCHEMES
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import (
     COMPONENTS,
@@ -27,16 +25,7 @@ from strainkit.tensors.sixvectors import (
     stress_to_voigt,
 )
 
-__all__ = [
-    "BLIND_SPOT",
-    "averages_text",
-    "cell_text",
-    "fit_text",
-    "inspection_text",
-    "molecules_text",
-    "plan_text",
-    "table_text",
-]
+__all__ = ["BLIND_SPOT", "cell_text", "fit_text", "inspection_text", "molecules_text", "plan_text", "table_text"]
 
 #: what every fit says about its error bars
 BLIND_SPOT = (
@@ -45,7 +34,6 @@ BLIND_SPOT = (
 )
 
 _MOVES = {"rigid": "molecules moved as bodies", "affine": "atoms moved with the lattice"}
-_NAMES = {"bulk_GPa": "bulk K", "shear_GPa": "shear G", "young_GPa": "Young E", "poisson": "Poisson nu"}
 
 
 def cell_text(crystal: Crystal, symmetry: Symmetry, molecules: Molecules | None = None) -> str:
@@ -230,16 +218,3 @@ def _readings(fit: Fit, frame: str) -> list[str]:
         turned = stiffness_to_voigt(rotate_matrix(rotation, stiffness_from_voigt(treatment.voigt)))
         rows.append([treatment.name, *(plain(turned[int(n[1]) - 1, int(n[2]) - 1], 1) for n in names[:7])])
     return ["", "  readings of the reference stress, GPa", columns(rows, ["", *names[:7]])]
-
-
-def averages_text(averages: Averages) -> str:
-    """Bulk, shear, Young's modulus and Poisson's ratio."""
-    rows = []
-    for i, name in enumerate(AVERAGES):
-        errors = [None] * 3 if averages.errors is None else averages.errors[i]
-        digits = 3 if name == "poisson" else 2
-        unit = "" if name == "poisson" else " (GPa)"
-        cells = [uncertain(v, e, digits) for v, e in zip(averages.values[i], errors, strict=True)]
-        rows.append([_NAMES[name] + unit, *cells])
-    index = uncertain(averages.anisotropy, averages.anisotropy_error)
-    return columns(rows, ["average", *SCHEMES]) + f"\n  universal anisotropy index {index}"

@@ -1,4 +1,7 @@
-"""Averages over all orientations (Voigt, Reuss, Hill): R. Hill, Proc. Phys. Soc. A 65, 349 (1952)."""
+"""Averages of a stiffness over all orientations: Voigt, Reuss, Hill, and the universal anisotropy index.
+
+R. Hill, Proc. Phys. Soc. A 65, 349 (1952); S. I. Ranganathan & M. Ostoja-Starzewski, Phys. Rev. Lett. 101, 055504 (2008).
+"""
 
 from __future__ import annotations
 
@@ -6,7 +9,7 @@ import numpy as np
 
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["AVERAGES", "SCHEMES", "averages_of"]
+__all__ = ["AVERAGES", "SCHEMES", "anisotropy_of", "averages_of", "pugh_of"]
 
 SCHEMES = ("voigt", "reuss", "hill")
 #: rows of `averages_of`
@@ -37,3 +40,16 @@ def averages_of(mandel: FloatArray) -> FloatArray:
     young = 9.0 * bulk * shear / (3.0 * bulk + shear)
     poisson = (3.0 * bulk - 2.0 * shear) / (6.0 * bulk + 2.0 * shear)
     return np.stack([bulk, shear, young, poisson], axis=-2)
+
+
+def anisotropy_of(mandel: FloatArray) -> FloatArray:
+    """Universal anisotropy index 5 G_V/G_R + K_V/K_R - 6, (...), of a Mandel stiffness (..., 6, 6); zero when isotropic."""
+    values = averages_of(mandel)
+    ratio = values[..., 0] / values[..., 1]
+    return np.asarray(5.0 * ratio[..., 1] + ratio[..., 0] - 6.0)
+
+
+def pugh_of(mandel: FloatArray) -> FloatArray:
+    """Pugh ratio K/G of the Hill averages, (...), of a Mandel stiffness (..., 6, 6) (Pugh, Phil. Mag. 45, 823, 1954)."""
+    values = averages_of(mandel)
+    return np.asarray(values[..., 0, 2] / values[..., 1, 2])
