@@ -76,7 +76,7 @@ def demo(
             lines.append("  averages by Hill, standard errors of the last digits in brackets")
         else:
             lines += ["", paragraph("Install strainkit[xtb] to see two molecular crystals on a tight-binding engine.")]
-        doubts = [f for fit in fits.values() for f in fit.findings]
+        doubts = [f for fit in fits.values() for f in fit.findings if f.severity != "info"]
         lines += ["", paragraph(BLIND_SPOT), "", findings_text(doubts), f"Everything is in {out}/ to look at."]
         return "\n".join(lines)
 
