@@ -12,7 +12,7 @@ from strainkit.derive.averages import Averages, averages
 from strainkit.derive.elastic import ElasticCrystal, from_fit
 from strainkit.derive.extremes import Extreme, extremes, ratio
 from strainkit.derive.heat import Heat, heat_of
-from strainkit.derive.layers import covalent_bonds, find_molecules
+from strainkit.derive.layers import bonds_and_molecules
 from strainkit.derive.planes import Along, OnPlane, along, low_index_planes, on_planes
 from strainkit.derive.spread import WithError
 from strainkit.derive.stability import Stability, stability
@@ -152,8 +152,7 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
         return Derived(elastic, verdict, None, {}, (), (), (), (), None, {}, findings)
     bonds = molecules = None
     if elastic.crystal is not None:
-        bonds = covalent_bonds(elastic.crystal)
-        molecules = find_molecules(len(elastic.crystal.numbers), bonds)
+        bonds, molecules = bonds_and_molecules(elastic.crystal)
     named = elastic.axes is not None
     return Derived(
         elastic=elastic,
@@ -164,7 +163,7 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
         planes=tuple(on_planes(elastic, planes, bonds, molecules)) if named else (),
         directions=_directions(elastic, directions) if named else (),
         low_index_planes=tuple(low_index_planes(elastic, bonds, molecules)) if named else (),
-        heat=heat_of(elastic, None if molecules is None else molecules.count),
+        heat=heat_of(elastic, None if molecules is None else len(molecules.kinds)),
         cauchy=_cauchy(elastic),
         findings=findings,
     )

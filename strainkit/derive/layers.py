@@ -1,9 +1,8 @@
 """Where planes pass between the atoms: covalent bonds that a flat cut crosses, and the gap between layers of molecules.
 
-Bonds are pairs of atoms closer than 1.2 times the sum of their covalent radii (Cordero et al., Dalton Trans. 2008, 2832,
-as tabulated in ASE). Molecules are what bonds hold together, ions of a salt included. In a molecular crystal a plane is judged
-by how far the molecules on its two sides stay apart, or interlock, along its normal; in metals, ionic and network crystals by
-the bonds (near neighbours) that it cuts.
+Bonds and molecules are those of `strainkit.crystal.molecules`, ions of a salt included. In a molecular crystal a plane is
+judged by how far the molecules on its two sides stay apart, or interlock, along its normal; in metals, ionic and network
+crystals by the bonds (near neighbours) that it cuts.
 """
 
 from __future__ import annotations
@@ -13,49 +12,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
-from strainkit.tensors.arrays import FloatArray, IntArray
+from strainkit.crystal.molecules import Molecules, find_molecules
+from strainkit.crystal.neighbours import Neighbours, find_neighbours
+from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["Bonds", "Cut", "Molecules", "covalent_bonds", "easiest_cut", "find_molecules"]
+__all__ = ["Cut", "bonds_and_molecules", "easiest_cut"]
 
-#: two atoms are bonded below this multiple of the sum of their covalent radii
-BOND_FACTOR = 1.2
 #: atoms whose heights differ by less lie in one plane, angstrom
 _SAME_HEIGHT = 0.02
-
-
-@dataclass(frozen=True)
-class Bonds:
-    """Covalent bonds of a cell, each once.
-
-    Attributes
-    ----------
-    pairs : (b, 2)
-        Indices of the atoms.
-    shifts : (b, 3)
-        Lattice vectors, in cells, to add to the second atom.
-    """
-
-    pairs: IntArray
-    shifts: IntArray
-
-
-@dataclass(frozen=True)
-class Molecules:
-    """Finite groups of bonded atoms.
-
-    Attributes
-    ----------
-    count : int
-        In the cell.
-    of_atom : (n,)
-        Number of the group of every atom, from 0.
-    shifts : (n, 3)
-        Lattice vectors, in cells, that bring every atom beside the first one of its group.
-    """
-
-    count: int
-    of_atom: IntArray
-    shifts: IntArray
 
 
 @dataclass(frozen=True)
@@ -78,56 +42,26 @@ class Cut:
     layers: int
 
 
-def covalent_bonds(crystal: Crystal, factor: float = BOND_FACTOR) -> Bonds:
-    """Bonds from covalent radii under periodic boundaries."""
-    from ase.data import covalent_radii
-    from ase.neighborlist import neighbor_list
-
-    first, second, shifts = neighbor_list("ijS", crystal.to_atoms(), factor * covalent_radii[crystal.numbers])
-    order = np.column_stack([first, second, shifts])
-    back = np.column_stack([second, first, -shifts])
-    differs = order != back
-    column = differs.argmax(axis=1)
+def bonds_and_molecules(crystal: Crystal) -> tuple[Neighbours, Molecules | None]:
+    """Bonds, each once, and the molecules; None when some atoms belong to chains, layers, a network or a metal."""
+    neighbours = find_neighbours(crystal)
+    molecules = find_molecules(crystal, neighbours)
+    bonds = neighbours.bonds
+    order = np.column_stack([bonds.first, bonds.second, bonds.shifts])
+    back = np.column_stack([bonds.second, bonds.first, -bonds.shifts])
+    column = (order != back).argmax(axis=1)
     row = np.arange(len(order))
-    once = order[row, column] < back[row, column]
-    return Bonds(np.column_stack([first, second])[once], shifts[once])
+    return bonds.where(order[row, column] < back[row, column]), molecules if molecules.movable.all() else None
 
 
-def find_molecules(atoms: int, bonds: Bonds) -> Molecules | None:
-    """Molecules of a cell with so many atoms; None when a network of bonds runs through the crystal."""
-    neighbours: list[list[tuple[int, IntArray]]] = [[] for _ in range(atoms)]
-    for (i, j), shift in zip(bonds.pairs, bonds.shifts, strict=True):
-        neighbours[i].append((j, shift))
-        neighbours[j].append((i, -shift))
-    place: dict[int, IntArray] = {}
-    group: dict[int, int] = {}
-    count = 0
-    for start in range(atoms):
-        if start in place:
-            continue
-        place[start], group[start] = np.zeros(3, dtype=int), count
-        waiting = [start]
-        while waiting:
-            atom = waiting.pop()
-            for other, shift in neighbours[atom]:
-                there = place[atom] + shift
-                if other not in place:
-                    place[other], group[other] = there, count
-                    waiting.append(other)
-                elif (place[other] != there).any():
-                    return None
-        count += 1
-    every = range(atoms)
-    return Molecules(count, np.array([group[i] for i in every]), np.array([place[i] for i in every]))
-
-
-def easiest_cut(crystal: Crystal, bonds: Bonds, molecules: Molecules | None, reciprocal: FloatArray) -> Cut:
+def easiest_cut(crystal: Crystal, bonds: Neighbours, molecules: Molecules | None, reciprocal: FloatArray) -> Cut:
     """Where among the planes normal to a reciprocal-lattice vector the fewest bonds are cut.
 
     Parameters
     ----------
     crystal : Crystal
-    bonds : Bonds
+    bonds : Neighbours
+        Each bond once.
     molecules : Molecules or None
     reciprocal : (3,)
         Shortest reciprocal-lattice vector along the normal, 1/angstrom, given frame.
@@ -136,14 +70,14 @@ def easiest_cut(crystal: Crystal, bonds: Bonds, molecules: Molecules | None, rec
     spacing = 1.0 / float(np.linalg.norm(np.linalg.inv(crystal.lattice) @ indices))
     height = crystal.positions @ indices
     middles, widths = _between(height, spacing)
-    ends = np.column_stack([height[bonds.pairs[:, 0]], height[bonds.pairs[:, 1]] + bonds.shifts @ indices])
+    ends = np.column_stack([height[bonds.first], height[bonds.second] + bonds.shifts @ indices])
     low, high = ends.min(axis=1), ends.max(axis=1)
     crossed = (np.floor(high[:, None] - middles) - np.floor(low[:, None] - middles)).sum(axis=0)
     best = np.lexsort((-widths, crossed))[0]
     area = crystal.volume / spacing / 100.0
     gap = float(widths[best])
     if molecules is not None and crossed[best] > 0:
-        gap = _interlock(height + molecules.shifts @ indices, molecules, spacing)
+        gap = _interlock(height + molecules.images @ indices, molecules, spacing)
     return Cut(float(crossed[best] / area), gap, int((crossed == 0).sum()))
 
 
@@ -158,7 +92,7 @@ def _between(heights: FloatArray, spacing: float) -> tuple[FloatArray, FloatArra
 
 def _interlock(heights: FloatArray, molecules: Molecules, spacing: float) -> float:
     """Largest distance, angstrom, of the molecules above a cut from those below it, as their centres divide them."""
-    every = [heights[molecules.of_atom == number] for number in range(molecules.count)]
+    every = [heights[molecules.part == number] for number in range(len(molecules.kinds))]
     centre, low, high = np.array([(h.mean(), h.min(), h.max()) for h in every]).T
     cuts, _ = _between(centre, spacing)
     below = np.floor(cuts[:, None] - centre)

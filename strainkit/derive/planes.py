@@ -8,9 +8,11 @@ from typing import Any
 
 import numpy as np
 
+from strainkit.crystal.molecules import Molecules
+from strainkit.crystal.neighbours import Neighbours
 from strainkit.derive.directional import linear_compressibility, poisson_range, shear, shear_range, young
 from strainkit.derive.elastic import ElasticCrystal
-from strainkit.derive.layers import Bonds, Cut, Molecules, easiest_cut
+from strainkit.derive.layers import Cut, easiest_cut
 from strainkit.derive.spread import WithError, half_width, with_errors
 from strainkit.derive.waves import christoffel, sound_speeds, speed
 from strainkit.tensors.arrays import FloatArray
@@ -165,7 +167,7 @@ def along(elastic: ElasticCrystal, directions: FloatArray) -> list[Along]:
 
 
 def on_planes(
-    elastic: ElasticCrystal, planes: Sequence[Indices], bonds: Bonds | None, molecules: Molecules | None
+    elastic: ElasticCrystal, planes: Sequence[Indices], bonds: Neighbours | None, molecules: Molecules | None
 ) -> list[OnPlane]:
     """What the crystal does on planes (hkl); bonds (None without atoms) and molecules say what each plane cuts."""
     axes = elastic.axes
@@ -209,7 +211,7 @@ def on_planes(
     return rows
 
 
-def low_index_planes(elastic: ElasticCrystal, bonds: Bonds | None, molecules: Molecules | None) -> list[OnPlane]:
+def low_index_planes(elastic: ElasticCrystal, bonds: Neighbours | None, molecules: Molecules | None) -> list[OnPlane]:
     """Low-index planes of wide spacing: by the gap between layers in molecular crystals, by spacing in others."""
     assert elastic.axes is not None
     families = elastic.axes.families[:_FAMILIES]

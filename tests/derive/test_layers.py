@@ -13,19 +13,18 @@ from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.lattice import index_axes
 from strainkit.crystal.read import read_crystal
 from strainkit.crystal.symmetry import find_symmetry
-from strainkit.derive.layers import covalent_bonds, easiest_cut, find_molecules
+from strainkit.derive.layers import bonds_and_molecules, easiest_cut
 
 
 def cut(crystal: Crystal, plane: tuple[int, int, int]):
     axes = index_axes(find_symmetry(crystal))
-    bonds = covalent_bonds(crystal)
-    return easiest_cut(crystal, bonds, find_molecules(len(crystal.numbers), bonds), axes.lattice_planes(np.array(plane))[0])
+    return easiest_cut(crystal, *bonds_and_molecules(crystal), axes.lattice_planes(np.array(plane))[0])
 
 
 def molecules_of(crystal: Crystal) -> int | None:
     """Number of molecules in the cell; None for a network."""
-    found = find_molecules(len(crystal.numbers), covalent_bonds(crystal))
-    return None if found is None else found.count
+    found = bonds_and_molecules(crystal)[1]
+    return None if found is None else len(found.kinds)
 
 
 @pytest.mark.parametrize("seed", [None, 0, 1])
@@ -37,7 +36,7 @@ def test_diamond(seed):
     if seed is not None:
         rng = np.random.default_rng(seed)
         crystal = rewritten(crystal, random_rotation(rng), random_unimodular(rng))
-    assert len(covalent_bonds(crystal).pairs) == 4
+    assert len(bonds_and_molecules(crystal)[0].first) == 4
     area = (a / 10) ** 2
     for plane, bonds in (((1, 1, 1), 4 / 3**0.5), ((1, 1, 0), 8**0.5), ((1, 0, 0), 4.0)):
         assert cut(crystal, plane).bonds_per_nm2 == pytest.approx(bonds / area, rel=1e-6)
@@ -63,7 +62,7 @@ def test_graphite_cuts_no_bonds_between_its_layers():
 def test_molecules_are_counted_across_cell_faces(tmp_path):
     crystal = read_crystal(write(tmp_path, "co2.cif", DRY_ICE))
     assert molecules_of(crystal) == 4
-    assert len(covalent_bonds(crystal).pairs) == 8
+    assert len(bonds_and_molecules(crystal)[0].first) == 8
     moved = rewritten(crystal, random_rotation(np.random.default_rng(0)), np.eye(3, dtype=int))
     moved = Crystal(moved.lattice, (moved.positions + 0.11) % 1.0, moved.numbers)
     assert molecules_of(moved) == 4
@@ -83,13 +82,13 @@ def test_interlocked_molecules_by_hand():
     rod = [[0.0, 0, 0], [1.2, 0, 0], [2.4, 0, 0], [3.6, 0, 0]]
     other = [[x + 3.4, y + 3.5, z + 4.0] for x, y, z in rod]
     crystal = Crystal.from_atoms(Atoms("N8", rod + other, cell=[6.8, 7.0, 8.0], pbc=True))
-    found = find_molecules(8, covalent_bonds(crystal))
-    assert found.count == 2
-    across = easiest_cut(crystal, covalent_bonds(crystal), found, np.array([1 / 6.8, 0, 0]))
+    bonds, found = bonds_and_molecules(crystal)
+    assert len(found.kinds) == 2
+    across = easiest_cut(crystal, bonds, found, np.array([1 / 6.8, 0, 0]))
     assert across.gap == pytest.approx(3.4 - 3.6, rel=0, abs=1e-9)
     assert across.layers == 0
     assert across.bonds_per_nm2 == pytest.approx(1 / 0.56, rel=1e-9)
-    assert easiest_cut(crystal, covalent_bonds(crystal), found, np.array([0, 0, 1 / 8.0])).gap == pytest.approx(4.0, rel=1e-9)
+    assert easiest_cut(crystal, bonds, found, np.array([0, 0, 1 / 8.0])).gap == pytest.approx(4.0, rel=1e-9)
 
 
 def test_a_chain_is_no_molecule_and_single_atoms_are():
@@ -105,6 +104,6 @@ def test_a_chain_is_no_molecule_and_single_atoms_are():
 
 def test_bonds_to_images_of_the_same_atom_are_found_once():
     """A simple cubic metal with one atom: three bonds an atom."""
-    bonds = covalent_bonds(Crystal.from_atoms(bulk("Po", "sc", a=3.0)))
-    assert len(bonds.pairs) == 3
+    bonds, _ = bonds_and_molecules(Crystal.from_atoms(bulk("Po", "sc", a=3.0)))
+    assert len(bonds.first) == 3
     assert cut(Crystal.from_atoms(bulk("Po", "sc", a=3.0)), (1, 0, 0)).bonds_per_nm2 == pytest.approx(1 / 0.09, rel=1e-9)
