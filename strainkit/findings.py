@@ -61,6 +61,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "not-positive-definite": ("error", "the stiffness has an eigenvalue that is not positive"),
     "residual-stress": ("warning", "the reference stress exceeds 5 % of the smallest diagonal constant"),
     "reference-stress-unknown": ("warning", "no usable job determines the reference stress"),
+    "finer-settings-matter": ("warning", "finer settings change a constant by more than its error bar and one percent"),
     "energy-mismatch": ("warning", "energies and stresses of the same jobs give different stiffness"),
     "energy-slope-mismatch": ("warning", "energies and stresses of the same jobs give different reference stress"),
     "outlier": ("warning", "a job that does not fit with the others"),

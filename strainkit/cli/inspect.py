@@ -52,7 +52,7 @@ def inspect(
                 "aims": [
                     {
                         "aim": plan.aim,
-                        "strained_jobs": len(plan.jobs) - 1,
+                        "strained_jobs": len(plan.strain_set) - 1,
                         "spare_degrees_of_freedom": plan.expectation.spare,
                         "relative_cost": plan.expectation.relative_cost,
                         "expected_standard_error_GPa": plan.expectation.standard_errors,

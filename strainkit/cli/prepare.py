@@ -42,6 +42,9 @@ def prepare(
         Path | None, typer.Option(help="Add jobs to this run folder: with --magnitude, or with --more N.")
     ] = None,
     more: Annotated[int | None, typer.Option(help="With --extend: at most N jobs that help most.", min=1)] = None,
+    finer: Annotated[
+        Path | None, typer.Option(help="With --extend: one or two pairs again at the finer settings of this TOML file.")
+    ] = None,
     ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
     atoms: Annotated[
         Literal["auto", "rigid", "affine"],
@@ -80,13 +83,15 @@ def prepare(
     cell_formats(format or [])
     magnitudes = tuple(m / 100.0 for m in magnitude or ())
     if extend is not None:
-        if cell is not None or out is not None or (more is None) == (not magnitudes):
+        if cell is not None or out is not None or [more is not None, bool(magnitudes), finer is not None].count(True) != 1:
             raise UsageError(
-                "--extend goes with --magnitude or --more", "--extend", "It takes neither a CELL nor --out: they are the run's."
+                "--extend goes with one of --magnitude, --more and --finer",
+                "--extend",
+                "It takes neither a CELL nor --out: they are the run's.",
             )
         if deck or settings or scheduler or kspacing is not None:
             raise UsageError("--deck and its options are the run's own", "--extend", "Leave them out.")
-        _extend(extend, magnitudes, more, format, dry_run, json, quiet)
+        _extend(extend, magnitudes, more, finer, format, dry_run, json, quiet)
         return
     if cell is None:
         raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
@@ -107,25 +112,28 @@ def _extend(
     run: Path,
     magnitudes: tuple[float, ...],
     more: int | None,
+    finer: Path | None,
     formats: list[str] | None,
     dry_run: bool,
     json: bool,
     quiet: bool,
 ) -> None:
     from strainkit.design.extend import at_magnitudes, more_jobs
-    from strainkit.prepare.extend import extend_plan, write_extension
+    from strainkit.prepare.extend import at_finer_settings, extend_plan, write_extension
+    from strainkit.prepare.settings import read_settings
     from strainkit.present.terminal import plan_text
     from strainkit.run.plan import load_plan
 
     old = load_plan(run)
-    if more is None:
-        new = at_magnitudes(old.jobs, magnitudes, old.symmetry)
+    if finer is not None:
+        plan = at_finer_settings(old, read_settings([finer]))
+    elif more is None:
+        plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry))
     else:
-        new = more_jobs(old.jobs, more, old.crystal, old.symmetry)
-    plan = extend_plan(old, new)
+        plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry))
     if not dry_run:
         plan = write_extension(run, old, plan, formats)
-        note(f"{run}: {len(new)} more job folders", quiet)
+        note(f"{run}: {len(plan.jobs) - len(old.jobs)} more job folders", quiet)
         if "scheduler" in plan.calculation:
             note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
     deliver(plan.to_dict, lambda: plan_text(plan), json)

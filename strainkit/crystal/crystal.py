@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Iterable
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -137,6 +137,31 @@ class Crystal:
     def deformed(self, gradient: FloatArray) -> Crystal:
         """The same atoms, moved affinely, in the lattice L F^T for a deformation gradient F (3, 3)."""
         return replace(self, lattice=self.lattice @ np.asarray(gradient, dtype=float).T)
+
+    def to_dict(self) -> dict[str, Any]:
+        """JSON-ready: what `from_dict` needs to make the crystal again, but for its name."""
+        return {
+            "source": self.source,
+            "lattice_A": self.lattice,
+            "fractional_positions": self.positions,
+            "atomic_numbers": self.numbers,
+            "labels": list(self.labels),
+            "magnetic_moments": self.magnetic_moments,
+        }
+
+    @classmethod
+    def from_dict(cls, data: dict[str, Any], name: str) -> Crystal:
+        """The inverse of `to_dict`."""
+        moments = data["magnetic_moments"]
+        return cls(
+            lattice=np.array(data["lattice_A"]),
+            positions=np.array(data["fractional_positions"]),
+            numbers=np.array(data["atomic_numbers"]),
+            labels=tuple(data["labels"]),
+            name=name,
+            source=data["source"],
+            magnetic_moments=None if moments is None else np.array(moments),
+        )
 
     def to_atoms(self) -> Atoms:
         """ASE atoms with the same order, cell and orientation."""

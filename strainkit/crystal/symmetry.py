@@ -5,6 +5,7 @@ from __future__ import annotations
 from contextlib import suppress
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 
@@ -86,6 +87,35 @@ class Symmetry:
     def invariants(self) -> FloatArray:
         """Orthonormal basis (n, 6, 6) of the stiffness matrices (Mandel, given frame) that the crystal allows."""
         return invariant_matrices(self.rotations)
+
+    def to_dict(self) -> dict[str, Any]:
+        """JSON-ready: what `from_dict` needs, but for the names of space group and Laue class."""
+        return {
+            "number": self.number,
+            "point_group": self.point_group,
+            "system": self.system,
+            "tolerance_A": self.tolerance,
+            "deviation_A": self.deviation,
+            "rotations": self.rotations,
+            "standard_lattice_A": self.standard_lattice,
+            "transformation": self.transformation,
+        }
+
+    @classmethod
+    def from_dict(cls, data: dict[str, Any], space_group: str, laue_class: str) -> Symmetry:
+        """The inverse of `to_dict`."""
+        return cls(
+            space_group=space_group,
+            number=data["number"],
+            point_group=data["point_group"],
+            laue_class=laue_class,
+            system=data["system"],
+            rotations=np.array(data["rotations"]),
+            standard_lattice=np.array(data["standard_lattice_A"]),
+            transformation=np.array(data["transformation"]),
+            tolerance=data["tolerance_A"],
+            deviation=data["deviation_A"],
+        )
 
 
 def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetry:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -20,7 +21,10 @@ from strainkit.tensors.leastsquares import factorise
 from strainkit.tensors.rotations import rotate_matrix, rotation6
 from strainkit.tensors.sixvectors import from_mandel, to_mandel
 
-__all__ = ["at_magnitudes", "lost_constants", "more_jobs", "restoring_jobs"]
+__all__ = ["at_magnitudes", "finer_jobs", "lost_constants", "more_jobs", "restoring_jobs"]
+
+#: shapes that are repeated at finer settings
+_FINER_SHAPES = 2
 
 
 def at_magnitudes(jobs: Sequence[StrainJob], magnitudes: Sequence[float], symmetry: Symmetry) -> list[StrainJob]:
@@ -51,6 +55,20 @@ def more_jobs(jobs: Sequence[StrainJob], count: int, crystal: Crystal, symmetry:
     rows = len(odd) - model.even_basis.shape[1]
     new = sharpest(group, count, odd.T @ odd / size**2, rows, known)
     return strained_jobs(axes.T @ from_mandel(new) @ axes, [size], symmetry.rotations, max(units) + 1)
+
+
+def finer_jobs(jobs: Sequence[StrainJob]) -> list[StrainJob]:
+    """One or two pairs of a set once more, for finer settings: the first shapes at the largest magnitude.
+
+    A pair (or single job with an image) cancels errors that do not change with strain, so no reference is needed.
+    """
+    size = max(abs(job.magnitude) for job in jobs)
+    numbers = sorted({job.shape for job in jobs if job.shape})[:_FINER_SHAPES]
+    return [
+        replace(job, label=f"{job.label}-finer", kind="finer")
+        for job in jobs
+        if job.shape in numbers and abs(abs(job.magnitude) - size) < 1e-9
+    ]
 
 
 def lost_constants(jobs: Sequence[StrainJob], symmetry: Symmetry, basis: ConstantBasis) -> list[str]:

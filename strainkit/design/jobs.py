@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
@@ -13,7 +14,9 @@ from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import to_mandel
 from strainkit.tensors.strain import gradient_from_strain, green_lagrange
 
-__all__ = ["REFERENCE", "StrainJob", "check_magnitude", "percent", "reference_job", "strained_jobs", "units_of"]
+__all__ = ["REFERENCE", "JobKind", "StrainJob", "check_magnitude", "percent", "reference_job", "strained_jobs", "units_of"]
+
+JobKind = Literal["reference", "strained", "finer", "displaced"]
 
 #: label of the unstrained job
 REFERENCE = "reference"
@@ -35,12 +38,19 @@ class StrainJob:
         Largest absolute principal value of the Green-Lagrange strain, signed by the side of the shape.
     gradient : (3, 3)
         Deformation gradient F (x' = F x) in the given frame, symmetric.
+    kind : str
+        "reference" and "strained" make up the strain set; "finer" repeats a strained job at finer settings; "displaced"
+        moves one atom of the unstrained cell.
+    moved : (int, (3,)) or None
+        Atom and displacement (angstrom, given frame) of a displaced job.
     """
 
     label: str
     shape: int
     magnitude: float
     gradient: FloatArray
+    kind: JobKind = "strained"
+    moved: tuple[int, FloatArray] | None = None
 
     @property
     def strain(self) -> FloatArray:
@@ -50,7 +60,7 @@ class StrainJob:
 
 def reference_job() -> StrainJob:
     """The unstrained job."""
-    return StrainJob(REFERENCE, 0, 0.0, np.eye(3))
+    return StrainJob(REFERENCE, 0, 0.0, np.eye(3), "reference")
 
 
 def strained_jobs(units: FloatArray, magnitudes: Sequence[float], rotations: FloatArray, first: int = 1) -> list[StrainJob]:

@@ -66,9 +66,14 @@ def evaluate_run(
     """
     engine.calculator()  # fails here, once, rather than in every process
     relax = plan.ions == "relaxed"
-    stamp = (engine.description + (f" fmax={fmax:g}" if relax else " clamped")).replace('"', "'").replace("\n", " ")
-    kept = tuple(job.label for job in plan.jobs if _finished(run, job.label, stamp))
-    todo = {job.label: _start(run, plan, job) for job in plan.jobs if job.label not in kept}
+    engines = {job.label: _engine_of(job, plan, engine) for job in plan.jobs}
+    stamps = {label: _stamp(chosen, relax, fmax) for label, chosen in engines.items()}
+    kept = tuple(job.label for job in plan.jobs if _finished(run, job.label, stamps[job.label]))
+    todo = {
+        job.label: (_start(run, plan, job), engines[job.label], relax and job.kind != "displaced", fmax, stamps[job.label])
+        for job in plan.jobs
+        if job.label not in kept
+    }
     count = max(1, min(workers or os.cpu_count() or 1, len(todo) or 1))
     done: list[str] = []
     unconverged: list[str] = []
@@ -83,21 +88,34 @@ def evaluate_run(
             report(len(kept) + len(done) + len(unconverged) + len(failed), len(plan.jobs), label)
 
     if count == 1:
-        for label, cell in todo.items():
-            settle(label, *_guarded(run, label, cell, engine, relax, fmax, stamp))
+        for label, work in todo.items():
+            settle(label, *_guarded(run, label, *work))
     elif todo:
         with _one_thread():
-            _in_processes(run, todo, engine, relax, fmax, stamp, count, settle)
+            _in_processes(run, todo, count, settle)
     return RunOutcome(tuple(done), kept, tuple(unconverged), failed)
+
+
+def _engine_of(job: StrainJob, plan: Plan, engine: Engine) -> Engine:
+    """The engine, with its finer settings for the jobs that ask for them."""
+    if job.kind != "finer":
+        return engine
+    finer = plan.finer.get("engine")
+    if not finer:
+        raise InputError(
+            "the finer settings of this run are those of a deck, not of a local engine", job.label, "Run it on the cluster."
+        )
+    return Engine(engine.name, {**engine.settings, **finer})
+
+
+def _stamp(engine: Engine, relax: bool, fmax: float) -> str:
+    """What a result says about how it was made."""
+    return (engine.description + (f" fmax={fmax:g}" if relax else " clamped")).replace('"', "'").replace("\n", " ")
 
 
 def _in_processes(
     run: Path,
-    todo: dict[str, Crystal],
-    engine: Engine,
-    relax: bool,
-    fmax: float,
-    stamp: str,
+    todo: dict[str, tuple[Crystal, Engine, bool, float, str]],
     count: int,
     settle: Callable[..., None],
 ) -> None:
@@ -105,7 +123,7 @@ def _in_processes(
     pool = ProcessPoolExecutor(count, mp_context=get_context("spawn"), initializer=_leave_interrupts_to_parent)
     try:
         waiting: dict[Future[tuple[bool | None, str]], str] = {
-            pool.submit(_guarded, run, label, cell, engine, relax, fmax, stamp): label for label, cell in todo.items()
+            pool.submit(_guarded, run, label, *work): label for label, work in todo.items()
         }
         while waiting:
             for future in wait(waiting, return_when=FIRST_COMPLETED).done:

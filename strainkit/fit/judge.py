@@ -26,14 +26,14 @@ def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list
     lost = [name for name, known in zip(plan.basis.names, regression.determined, strict=True) if not known]
     if lost:
         used = {job.label for job in jobs}
-        remedy = restoring_jobs(jobs, [j for j in plan.jobs if j.label not in used], plan.symmetry, plan.basis)
+        remedy = restoring_jobs(jobs, [j for j in plan.strain_set if j.label not in used], plan.symmetry, plan.basis)
         names = " ".join(job.label for job in remedy)
         text = f"the usable jobs do not determine these; with {names} they would" if remedy else "no planned job fixes these"
         findings.append(finding("undetermined-constants", ", ".join(lost), text))
     used = {job.label for job in jobs}
-    absent = [job.label for job in plan.jobs if job.label not in used]
+    absent = [job.label for job in plan.strain_set if job.label not in used]
     if absent:
-        findings.append(finding("jobs-not-used", ", ".join(absent), f"{len(absent)} of {len(plan.jobs)} jobs not used"))
+        findings.append(finding("jobs-not-used", ", ".join(absent), f"{len(absent)} of {len(plan.strain_set)} jobs not used"))
     findings += _lone_partners(regression, jobs)
     if regression.noise is None:
         findings.append(

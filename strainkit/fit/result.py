@@ -15,6 +15,7 @@ from strainkit.design.model import Order
 from strainkit.errors import NoTensorError
 from strainkit.findings import Finding, finding
 from strainkit.fit.checks import Checks, examine
+from strainkit.fit.finer import FinerChange, finer_change
 from strainkit.fit.judge import judge
 from strainkit.fit.regression import Regression, regress
 from strainkit.fit.residual import ReferenceStress, remove_offset
@@ -48,6 +49,8 @@ class Fit:
         What the reference stress was taken for; an offset was subtracted as a constant Kirchhoff stress.
     checks : Checks
         Energies, curvature, outliers, readings of the reference stress.
+    finer : FinerChange or None
+        What the pairs at finer settings change; None when there are none.
     findings : tuple of Finding
     """
 
@@ -58,6 +61,7 @@ class Fit:
     dropped: tuple[str, ...]
     reading: ReferenceStress
     checks: Checks
+    finer: FinerChange | None
     findings: tuple[Finding, ...]
 
     @property
@@ -143,6 +147,7 @@ class Fit:
             "undetermined": list(self.undetermined),
             "reference_stress_reading": self.reading,
             **self.checks.to_dict(plan.basis.names),
+            "finer_settings": None if self.finer is None else self.finer.to_dict(plan.basis.names),
             "findings": [f.to_dict() for f in self.findings],
         }
 
@@ -177,10 +182,10 @@ def usable_jobs(plan: Plan, table: StressTable, drop: tuple[str, ...] = ()) -> t
         When there is no strained one among them.
     """
     records = {r.label: r.stress for r in table.usable if r.label not in drop and r.stress is not None}
-    jobs = [job for job in plan.jobs if job.label in records]
+    jobs = [job for job in plan.strain_set if job.label in records]
     if not any(job.shape for job in jobs):
         raise NoTensorError(
-            f"none of the {len(plan.jobs) - 1} strained jobs is usable", plan.crystal.name, "See: strainkit progress RUN"
+            f"none of the {len(plan.strain_set) - 1} strained jobs is usable", plan.crystal.name, "See: strainkit progress RUN"
         )
     return jobs, np.array([records[job.label] for job in jobs])
 
@@ -223,6 +228,8 @@ def fit_run(
         raise NoTensorError("the usable jobs determine no constant", plan.crystal.name, "See: strainkit progress RUN")
     energies = {record.label: record.energy for record in table.records}
     checks = examine(plan, jobs, stresses, [energies[job.label] for job in jobs], regression, order)
+    finer = finer_change(plan, table, regression)
+    changes = [] if finer is None else finer.findings(plan.basis.names, regression.values)
     return Fit(
         plan=plan,
         regression=regression,
@@ -231,7 +238,8 @@ def fit_run(
         dropped=tuple(drop),
         reading=reading,
         checks=checks,
-        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings),
+        finer=finer,
+        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings, *changes),
     )
 
 

@@ -2,34 +2,73 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 from strainkit.design.expect import expect
+from strainkit.design.extend import finer_jobs
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
 from strainkit.prepare.calculation import recorded_calculation
 from strainkit.prepare.runfolder import files_of
+from strainkit.prepare.settings import Settings
 from strainkit.prepare.writers import default_formats
 from strainkit.run.files import atomic_write, checksum
 from strainkit.run.plan import Plan, job_folder
+from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["extend_plan", "write_extension"]
+__all__ = ["at_finer_settings", "extend_plan", "write_extension"]
 
 
-def extend_plan(plan: Plan, new: Sequence[StrainJob]) -> Plan:
-    """The plan with further jobs behind the old ones, and what the whole promises."""
-    jobs = (*plan.jobs, *new)
-    promise, doubts = expect(jobs, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
+def extend_plan(plan: Plan, new: Sequence[StrainJob], starts: Mapping[str, FloatArray] | None = None) -> Plan:
+    """The plan with further jobs behind the old ones, and what the whole strain set promises.
+
+    Parameters
+    ----------
+    plan : Plan
+    new : sequence of StrainJob
+    starts : mapping, optional
+        Label -> fractional positions (n, 3) that a new job starts from.
+    """
+    longer = replace(plan, jobs=(*plan.jobs, *new), starts={**plan.starts, **(starts or {})})
+    promise, doubts = expect(longer.strain_set, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
     kept = tuple(f for f in plan.findings if f.code not in ("few-spare-degrees", "target-error"))
-    return replace(plan, jobs=jobs, expectation=promise, findings=(*kept, *doubts))
+    return replace(longer, expectation=promise, findings=(*kept, *doubts))
+
+
+def at_finer_settings(plan: Plan, settings: Settings) -> Plan:
+    """The plan with one or two pairs once more, at finer settings of the deck or of the local engine.
+
+    Raises
+    ------
+    InputError
+        Settings that change nothing, or those of a deck for a run without one.
+    """
+    if plan.finer:
+        raise InputError("this run has jobs at finer settings already", "--finer", "Prepare a new run for still finer ones.")
+    if settings.deck and not plan.calculation:
+        raise InputError(
+            "[deck] settings for a run without a deck", settings.source, "Name those of your engine under [engine]."
+        )
+    if not settings.deck and not settings.engine:
+        raise InputError("neither [deck] nor [engine] settings", settings.source, "Say what is finer: cutoff, kmesh, grid.")
+    finer: dict[str, Any] = {"engine": settings.engine}
+    if settings.deck:
+        record = dict(plan.calculation)
+        kmesh = settings.deck.get("kmesh", record["kmesh"])
+        changed = {key: value for key, value in settings.deck.items() if key != "kmesh"}
+        finer["calculation"] = {**record, "settings": {**record["settings"], **changed}, "kmesh": kmesh}
+        if finer["calculation"] == record:
+            raise InputError("these are the settings that the run has", settings.source, "Give finer ones.")
+    return replace(extend_plan(plan, finer_jobs(plan.strain_set)), finer=finer)
 
 
 def write_extension(run: Path, old: Plan, plan: Plan, formats: Sequence[str] | None = None) -> Plan:
     """Write the folders of the jobs that `plan` has beyond `old`, then the manifest; nothing else is touched.
 
-    A run with an input deck gets the same deck, settings, mesh and grid for the new jobs.
+    A run with an input deck gets the same deck, settings, mesh and grid for the new jobs, or the finer ones.
 
     Raises
     ------
@@ -39,15 +78,20 @@ def write_extension(run: Path, old: Plan, plan: Plan, formats: Sequence[str] | N
     """
     known = {job.label for job in old.jobs}
     new = [job for job in plan.jobs if job.label not in known]
+    record = old.calculation
+    if not old.finer and plan.finer:
+        record = plan.finer.get("calculation", record)
     calculation = None
-    if old.calculation:
+    if record:
         lattices = [plan.crystal.lattice @ job.gradient.T for job in plan.jobs]
-        calculation = recorded_calculation(old.calculation, plan.crystal, plan.ions, lattices, plan.symmetry.tolerance)
+        calculation = recorded_calculation(record, plan.crystal, plan.ions, lattices, plan.symmetry.tolerance)
     files = files_of(plan, new, default_formats(plan.crystal) if formats is None else formats, calculation)
-    if calculation is not None and [list(points) for points in calculation.grids] != old.calculation["grids"]:
+    if calculation is not None and record is old.calculation and calculation.record()["grids"] != record["grids"]:
         raise InputError(
             "the new cells need a larger real-space grid than this run has", run, "Prepare a new run with all magnitudes."
         )
+    if calculation is not None and record is not old.calculation:
+        plan = replace(plan, finer={**plan.finer, "calculation": {**record, **calculation.record()}})
     for job in new:
         folder = run / job_folder(job.label)
         if folder.exists():

@@ -8,6 +8,9 @@ kmesh = [8, 8, 8]            # in place of --kspacing
 folder = "/opt/pseudo"
 Si = "Si.upf"
 
+[engine]                     # settings of a local engine, for prepare --extend RUN --finer
+accuracy = 0.01
+
 [site]                       # what the cluster wants; a key that is not there leaves no line in the script
 account = "a1234"
 walltime = "12:00:00"
@@ -49,7 +52,7 @@ SITE_KEYS: dict[str, tuple[type, str, Any]] = {
     "extra": (list, "further directives, such as --gres=gpu:1", ()),
 }
 
-_TABLES = ("deck", "pseudopotentials", "site")
+_TABLES = ("deck", "pseudopotentials", "engine", "site")
 _WALLTIME = re.compile(r"(?:(\d+)-)?(\d{1,4}):(\d\d):(\d\d)")
 _MEMORY = re.compile(r"\d+(\.\d+)?[KMGT]B")
 
@@ -66,6 +69,8 @@ class Settings:
         Element -> name.
     folder : str
         Where pseudopotentials are on the cluster; empty when not said.
+    engine : dict
+        Settings of a local engine at finer settings.
     site : dict
         Every key of `SITE_KEYS`, with its default where it was not set.
     source : str
@@ -75,6 +80,7 @@ class Settings:
     deck: dict[str, Any] = field(default_factory=dict)
     pseudopotentials: dict[str, str] = field(default_factory=dict)
     folder: str = ""
+    engine: dict[str, Any] = field(default_factory=dict)
     site: dict[str, Any] = field(default_factory=lambda: {key: default for key, (_, _, default) in SITE_KEYS.items()})
     source: str = ""
 
@@ -104,6 +110,7 @@ def read_settings(paths: Sequence[Path]) -> Settings:
         deck=tables["deck"],
         pseudopotentials=pseudopotentials,
         folder=folder,
+        engine=tables["engine"],
         site=defaults.site | tables["site"],
         source=" and ".join(map(str, paths)),
     )

@@ -11,6 +11,7 @@ from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.cost import JobCost
+from strainkit.fit.finer import FinerChange
 from strainkit.fit.result import Fit
 from strainkit.present.calculation import calculation_lines
 from strainkit.present.numbers import plain, uncertain
@@ -89,7 +90,7 @@ def plan_text(plan: Plan, out: Path | None = None) -> str:
     lines = [
         *_head(plan),
         "",
-        heading(f"{len(plan.jobs) - 1} strained jobs and the reference, aim {plan.aim}, ions {plan.ions}"),
+        heading(f"{len(plan.strain_set) - 1} strained jobs and the reference, aim {plan.aim}, ions {plan.ions}"),
         columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS)]),
         f"  starting cells: {_MOVES[plan.atoms]}",
         "  Green-Lagrange strain, engineering shear, in the frame of the input cell",
@@ -117,7 +118,7 @@ def inspection_text(
         e = plan.expectation
         points = "" if mesh is None else str(sum(c.kpoints or 0 for c in cost[1:]))
         sharp = [f"{x:.2g}" if x is not None else "-" for x in (e.largest, e.averages["bulk"], e.averages["shear"])]
-        rows.append([plan.aim, str(len(plan.jobs) - 1), str(e.spare), f"{e.relative_cost:g}", points, *sharp])
+        rows.append([plan.aim, str(len(plan.strain_set) - 1), str(e.spare), f"{e.relative_cost:g}", points, *sharp])
         kinds = Counter(c.laue_class for c in cost[1:])
         classes.append(f"  {plan.aim}: cells of Laue class {', '.join(f'{n} x {k}' for k, n in kinds.items())}")
     header = ["aim", "jobs", "spare", "cost", "k-points" if mesh else "", "worst C", "K", "G"]
@@ -162,22 +163,18 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
     """Constants with errors, the matrix in a frame, residual stress, findings."""
     data = fit.to_dict(frame)
     rows = []
-    for constant in data["constants"]:
+    changes = [""] * len(data["constants"]) if fit.finer is None else _changes(fit.finer)
+    for constant, change in zip(data["constants"], changes, strict=True):
         low, high = constant["interval95_GPa"]
-        rows.append(
-            [
-                constant["name"],
-                uncertain(constant["value_GPa"], constant["standard_error_GPa"]),
-                f"{plain(low, 2)} to {plain(high, 2)}",
-            ]
-        )
+        value = uncertain(constant["value_GPa"], constant["standard_error_GPa"])
+        rows.append([constant["name"], value, f"{plain(low, 2)} to {plain(high, 2)}", change])
     noise, dof = fit.regression.noise, fit.regression.degrees_of_freedom
     source = "given" if dof is None else f"from {dof} degrees of freedom"
     chosen = fit.plan.frames[frame]
     stress = stress_to_voigt(chosen.rotation @ fit.reference_stress @ chosen.rotation.T)
     lines = [
         heading(f"{fit.plan.crystal.name}: stiffness, {len(fit.jobs_used)} jobs, ions {fit.plan.ions}, order {fit.order}"),
-        columns(rows, ["IEEE axes", "GPa", "95 % interval"]),
+        columns(rows, ["IEEE axes", "GPa", "95 % interval", "" if fit.finer is None else "finer settings"]),
         "",
         paragraph(f"6x6 in GPa, frame {chosen.name}: {chosen.axes}", "  "),
         columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
@@ -186,6 +183,7 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
         f"  energies          {_energy_words(fit)}",
         f"  curvature         {fit.checks.verdict}",
+        f"  finer settings    {_finer_words(fit)}",
         *_readings(fit, frame),
         "",
         paragraph(BLIND_SPOT, "  "),
@@ -193,6 +191,20 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         findings_text(fit.findings),
     ]
     return "\n".join(lines)
+
+
+def _changes(finer: FinerChange) -> list[str]:
+    """Change of each constant at finer settings; a tilde where the pairs do not fix it by themselves."""
+    errors = [None] * len(finer.change) if finer.error is None else finer.error
+    rows = zip(finer.change, errors, finer.determined, strict=True)
+    return [f"{'' if fixed else '~'}{uncertain(float(c), None if e is None else float(e))}" for c, e, fixed in rows]
+
+
+def _finer_words(fit: Fit) -> str:
+    """Whether finer settings were tried."""
+    if fit.finer is None:
+        return "not tried (prepare --extend RUN --finer FILE)"
+    return f"{len(fit.finer.labels)} jobs compared; ~ marks what they do not fix by themselves"
 
 
 def _energy_words(fit: Fit) -> str:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import Any, Literal, get_args
@@ -20,6 +20,7 @@ from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
 from strainkit.findings import Finding
 from strainkit.run.files import atomic_write, dump_json, load_json
+from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.constants import ConstantBasis, constant_basis
 from strainkit.tensors.sixvectors import strain_to_voigt
 
@@ -44,7 +45,7 @@ class Plan:
     frames : dict of Frame
         By name: "given", "ieee", "crystal".
     jobs : tuple of StrainJob
-        The reference first.
+        The reference first; jobs beyond the strain set (finer settings, displaced cells) at the end.
     ions : "relaxed" or "clamped"
         Whether the jobs relax their ions at fixed cell.
     aim : str
@@ -60,6 +61,10 @@ class Plan:
         What the bonds of the reference cell make of it; None in a manifest that does not say.
     calculation : dict
         How the jobs are computed (deck, its settings, k-mesh, pseudopotentials, job script); empty for cells only.
+    finer : dict
+        How the finer jobs are computed: "calculation" as above, and "engine", settings of a local engine.
+    starts : dict
+        Label -> fractional positions (n, 3) that a job starts from in place of the moved reference.
     """
 
     crystal: Crystal
@@ -74,13 +79,27 @@ class Plan:
     calculation: dict[str, Any] = field(default_factory=dict)
     atoms: AtomMoves = "affine"
     molecules: Molecules | None = None
+    finer: dict[str, Any] = field(default_factory=dict)
+    starts: dict[str, FloatArray] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
         if self.atoms not in get_args(AtomMoves) or (self.atoms == "rigid" and self.molecules is None):
             raise ValueError(f"atoms {self.atoms!r} without molecules to move")
 
+    @property
+    def strain_set(self) -> tuple[StrainJob, ...]:
+        """The jobs that the stiffness is fitted to: the reference and the strained ones."""
+        return tuple(job for job in self.jobs if job.kind in ("reference", "strained"))
+
     def starting_cell(self, job: StrainJob) -> Crystal:
         """The cell that a job starts from: its lattice is the planned one, its atoms are moved as `atoms` says."""
+        if job.label in self.starts:
+            return replace(self.crystal.deformed(job.gradient), positions=self.starts[job.label])
+        if job.moved is not None:
+            atom, vector = job.moved
+            positions = self.crystal.positions.copy()
+            positions[atom] += np.linalg.solve(self.crystal.lattice.T, vector)
+            return replace(self.crystal, positions=positions)
         if self.atoms == "rigid" and self.molecules is not None:
             return self.molecules.deformed(self.crystal, job.gradient)
         return self.crystal.deformed(job.gradient)
@@ -103,7 +122,7 @@ class Plan:
             "space_group": symmetry.space_group,
             "independent_constants": len(self.basis.names),
             "constant_names": list(self.basis.names),
-            "strained_jobs": len(self.jobs) - 1,
+            "strained_jobs": len(self.strain_set) - 1,
             "aim": self.aim,
             "ions": self.ions,
             "atoms": self.atoms,
@@ -117,33 +136,21 @@ class Plan:
             "jobs": [
                 {
                     "label": job.label,
+                    "kind": job.kind,
                     "shape": job.shape,
                     "magnitude_percent": 100.0 * job.magnitude,
                     "strain_voigt": strain_to_voigt(job.strain),
                     "deformation_gradient": job.gradient,
+                    "moved_atom": None if job.moved is None else {"atom": job.moved[0], "displacement_A": job.moved[1]},
                     "folder": job_folder(job.label),
                 }
                 for job in self.jobs
             ],
             "frames": {f.name: {"rotation": f.rotation, "axes": f.axes} for f in self.frames.values()},
-            "symmetry": {
-                "number": symmetry.number,
-                "point_group": symmetry.point_group,
-                "system": symmetry.system,
-                "tolerance_A": symmetry.tolerance,
-                "deviation_A": symmetry.deviation,
-                "rotations": symmetry.rotations,
-                "standard_lattice_A": symmetry.standard_lattice,
-                "transformation": symmetry.transformation,
-            },
-            "reference_cell": {
-                "source": self.crystal.source,
-                "lattice_A": self.crystal.lattice,
-                "fractional_positions": self.crystal.positions,
-                "atomic_numbers": self.crystal.numbers,
-                "labels": list(self.crystal.labels),
-                "magnetic_moments": self.crystal.magnetic_moments,
-            },
+            "symmetry": symmetry.to_dict(),
+            "reference_cell": self.crystal.to_dict(),
+            "starting_positions": self.starts,
+            "finer": self.finer or None,
             "calculation": self.calculation or None,
             "files": self.files,
         }
@@ -191,42 +198,24 @@ def load_plan(run: Path) -> Plan:
         ) from None
 
 
-def _plan_from(data: dict[str, Any]) -> Plan:
-    cell, symmetry = data["reference_cell"], data["symmetry"]
-    moments = cell["magnetic_moments"]
-    jobs = tuple(
-        StrainJob(
-            label=_safe(job["label"]),
-            shape=int(job["shape"]),
-            magnitude=job["magnitude_percent"] / 100.0,
-            gradient=np.array(job["deformation_gradient"], dtype=float),
-        )
-        for job in data["jobs"]
+def _job_from(data: dict[str, Any]) -> StrainJob:
+    moved = data.get("moved_atom")
+    return StrainJob(
+        label=_safe(data["label"]),
+        shape=int(data["shape"]),
+        magnitude=data["magnitude_percent"] / 100.0,
+        gradient=np.array(data["deformation_gradient"], dtype=float),
+        kind=data.get("kind", "strained" if data["shape"] else "reference"),
+        moved=None if moved is None else (int(moved["atom"]), np.array(moved["displacement_A"])),
     )
+
+
+def _plan_from(data: dict[str, Any]) -> Plan:
     return Plan(
-        crystal=Crystal(
-            lattice=np.array(cell["lattice_A"]),
-            positions=np.array(cell["fractional_positions"]),
-            numbers=np.array(cell["atomic_numbers"]),
-            labels=tuple(cell["labels"]),
-            name=data["name"],
-            source=cell["source"],
-            magnetic_moments=None if moments is None else np.array(moments),
-        ),
-        symmetry=Symmetry(
-            space_group=data["space_group"],
-            number=symmetry["number"],
-            point_group=symmetry["point_group"],
-            laue_class=data["laue_class"],
-            system=symmetry["system"],
-            rotations=np.array(symmetry["rotations"]),
-            standard_lattice=np.array(symmetry["standard_lattice_A"]),
-            transformation=np.array(symmetry["transformation"]),
-            tolerance=symmetry["tolerance_A"],
-            deviation=symmetry["deviation_A"],
-        ),
+        crystal=Crystal.from_dict(data["reference_cell"], data["name"]),
+        symmetry=Symmetry.from_dict(data["symmetry"], data["space_group"], data["laue_class"]),
         frames={name: Frame(name, np.array(data["frames"][name]["rotation"]), data["frames"][name]["axes"]) for name in FRAMES},
-        jobs=jobs,
+        jobs=tuple(_job_from(job) for job in data["jobs"]),
         ions=data["ions"],
         aim=data["aim"],
         expectation=Expectation(
@@ -241,6 +230,8 @@ def _plan_from(data: dict[str, Any]) -> Plan:
         atoms=data.get("atoms", "affine"),
         molecules=Molecules.from_dict(data["molecules"]) if data.get("molecules") else None,
         calculation=dict(data.get("calculation") or {}),
+        finer=dict(data.get("finer") or {}),
+        starts={label: np.array(p, dtype=float) for label, p in (data.get("starting_positions") or {}).items()},
     )
 
 

@@ -1,7 +1,7 @@
 """Molecular crystals on a tight-binding engine, end to end through the command line (GFN1-xTB, one cell, Gamma point).
 
-The single cell at the Gamma point is a model of its own, not a good one of the real crystal; it serves because it is
-deterministic, has 13 soft and stiff constants, and runs here.
+The engine knows the Gamma point only, which makes it a model of its own, not a good one of the real crystals; it serves because
+it is deterministic, has soft and stiff constants, and runs here.
 """
 
 from __future__ import annotations
@@ -18,7 +18,8 @@ from strainkit.shipped import shipped_folder
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import stiffness_from_voigt, stiffness_to_voigt
 
-#: naphthalene P2_1/c, 36 atoms: sample_cells/naphthalene.cif relaxed with GFN1-xTB in one cell by strainkit relax
+#: naphthalene P2_1/c, 36 atoms a cell, as a 1x2x1 supercell (in one cell at Gamma its molecules join to chains):
+#: sample_cells/naphthalene.cif relaxed with GFN1-xTB by strainkit relax
 NAPHTHALENE = Path(__file__).parent.parent / "data" / "naphthalene_gfn1_gamma.extxyz"
 
 
