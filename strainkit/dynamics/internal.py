@@ -68,7 +68,7 @@ def force_response(strains: FloatArray, forces: FloatArray, operations: Operatio
     q = rotation6(operations.cartesian)
     keep = np.linalg.norm(strains, axis=1) > 1e-9
     eta = np.einsum("gij,sj->sgi", q, strains[keep]).reshape(-1, 6)
-    turned = np.einsum("gij,snj->sgni", operations.cartesian, forces[keep])
+    turned = np.einsum("gij,snj->sgni", operations.cartesian, operations.average(forces[keep]))
     copies = np.empty_like(turned)
     for g, permutation in enumerate(operations.permutations):
         copies[:, g, permutation] = turned[:, g]
@@ -78,7 +78,8 @@ def force_response(strains: FloatArray, forces: FloatArray, operations: Operatio
         raise NoTensorError("the strained cells do not determine the force response to strain", remedy="Use the whole set.")
     solution = np.linalg.lstsq(rows, data, rcond=None)[0]
     left = data - rows @ solution
-    return solution.T, float(np.sqrt((left**2).mean()))
+    response = solution.reshape(6, -1, 3)[:, operations.classes]
+    return response.reshape(6, -1).T, float(np.sqrt((left**2).mean()))
 
 
 def _odd_parts(eta: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -1,7 +1,7 @@
 """What finer settings change: one or two pairs once more, against the same pairs of the set.
 
 The difference of the odd parts is (C_finer - C):e, free of the reference stress. One or two pairs rarely fix every constant;
-the change is then the smallest relative one that explains the difference, and what it does not determine is said.
+the change is then the one closest to a common relative change of all constants, and what the pairs do not determine is said.
 """
 
 from __future__ import annotations
@@ -24,6 +24,7 @@ __all__ = ["FinerChange", "finer_change"]
 
 #: a change above this part of the constant, or of a tenth of the largest where that is more, matters
 MATTERS = 0.01
+_CHEAP = 1e3
 
 
 @dataclass(frozen=True)
@@ -94,14 +95,21 @@ def finer_change(plan: Plan, table: StressTable, regression: Regression) -> Fine
     odd = model.odd_part(model.matrix[:, model.constants])
     if not np.abs(odd).max() > 1e-9:
         return None
-    scale = np.maximum(np.abs(regression.values), 1e-3 * np.abs(regression.values).max())
-    solved = factorise(odd)
-    relative = np.linalg.pinv(odd * scale, rcond=1e-7) @ model.odd_part(finer - coarse)
-    error = None
-    if regression.noise is not None:
-        solver = scale[:, None] * np.linalg.pinv(odd * scale, rcond=1e-7)
-        error = 2**0.5 * regression.noise * np.linalg.norm(solver, axis=1)
-    return FinerChange(tuple(job.label for job in jobs), scale * relative, error, solved.determined)
+    solver = _common_first(odd, regression.values)
+    error = None if regression.noise is None else 2**0.5 * regression.noise * np.linalg.norm(solver, axis=1)
+    change = solver @ model.odd_part(finer - coarse)
+    return FinerChange(tuple(job.label for job in jobs), change, error, factorise(odd).determined)
+
+
+def _common_first(odd: FloatArray, values: FloatArray) -> FloatArray:
+    """Solver (n, rows) of the change that is closest to one common relative change of all constants (n,)."""
+    scaled = odd * np.maximum(np.abs(values), 1e-3 * np.abs(values).max())
+    common = scaled @ np.sign(values)
+    # a column that costs next to nothing takes the common part; the smallest deviations from it explain the rest
+    wide = np.column_stack([_CHEAP * common, scaled])
+    found = np.linalg.pinv(wide, rcond=1e-9)
+    relative = found[1:] + np.outer(_CHEAP * np.sign(values), found[0])
+    return np.asarray(np.maximum(np.abs(values), 1e-3 * np.abs(values).max())[:, None] * relative)
 
 
 def _twin(label: str) -> str:
