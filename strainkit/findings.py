@@ -42,6 +42,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "bonds-changed": ("warning", "relaxing the reference made other molecules or networks of it"),
     # the strain set
     "target-error": ("info", "how the wanted standard error is met"),
+    "internal-strain-cost": ("info", "what relaxing the ions costs against clamped ions with displaced cells"),
     "few-spare-degrees": ("warning", "fewer than three spare degrees of freedom to estimate the noise from"),
     # the files of the jobs
     "orientation-not-in-format": ("info", "a cell format holds lengths and angles only, not the Cartesian axes"),

@@ -53,6 +53,9 @@ def prepare(
     symmetrize: Annotated[
         bool, typer.Option("--symmetrize", help="Move atoms and cell onto the group found at --symprec first.")
     ] = False,
+    displaced: Annotated[
+        bool, typer.Option(help="With clamped ions: displaced cells too, for the relaxed-ion stiffness.")
+    ] = True,
     format: Annotated[
         list[str] | None,
         typer.Option(
@@ -98,7 +101,9 @@ def prepare(
     if out is None and not dry_run:
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
-    plan = plan_run(read_crystal(cell, read_as), wish, ions, symprec, atoms, symmetrize)
+    plan = plan_run(
+        read_crystal(cell, read_as), wish, ions, symprec, atoms, symmetrize, displaced=displaced and ions == "clamped"
+    )
     calculation = chosen_calculation(deck, plan, settings, kspacing, scheduler, symprec)
     if out is None or dry_run:
         plan, _ = plan_with_files(plan, format, calculation, scheduler)

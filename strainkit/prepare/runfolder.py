@@ -19,6 +19,7 @@ from strainkit.design.strainset import Wish, choose_strains
 from strainkit.errors import InputError, UsageError
 from strainkit.findings import Finding
 from strainkit.prepare.calculation import Calculation
+from strainkit.prepare.displaced import cost_finding, displaced_jobs
 from strainkit.prepare.folders import write_folder
 from strainkit.prepare.scripts import LOGS, first_submission
 from strainkit.prepare.writers import FORMATS, cell_formats, default_formats, format_findings, write_cell
@@ -37,6 +38,7 @@ def plan_run(
     atoms: AtomMoves | Literal["auto"] = "auto",
     symmetrize: bool = False,
     judged: tuple[Molecules, list[Finding]] | None = None,
+    displaced: bool = False,
 ) -> Plan:
     """Choose the strained jobs of a crystal; nothing is written.
 
@@ -56,6 +58,8 @@ def plan_run(
         Move atoms and cell onto the space group found at the tolerance first.
     judged : pair of Molecules and list of Finding, optional
         What `judge_cell` says of this crystal, when it is known already.
+    displaced : bool
+        With clamped ions: add the displaced cells from which the relaxed-ion stiffness follows.
 
     Raises
     ------
@@ -77,6 +81,12 @@ def plan_run(
     jobs, remarks = choose_strains(crystal, symmetry, basis, wish)
     expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise)
     _, changes = tolerance_ladder(crystal, symprec)
+    if displaced:
+        if ions != "clamped":
+            raise UsageError("displaced cells belong to clamped ions", "--displaced", "Relaxed ions need none.")
+        moved_jobs = displaced_jobs(crystal, symprec)
+        doubts.append(cost_finding(crystal, len(jobs) - 1, len(moved_jobs), molecules.molecular))
+        jobs = [*jobs, *moved_jobs]
     return Plan(
         crystal=crystal,
         symmetry=symmetry,

@@ -85,13 +85,14 @@ def plan_text(plan: Plan, out: Path | None = None) -> str:
     """The plan of a run: constants, jobs, expected errors, and how its jobs are computed and submitted."""
     rows = [
         [job.label, f"{100 * abs(job.magnitude):g}", *(plain(100 * x) for x in strain_to_voigt(job.strain))]
-        for job in plan.jobs
+        for job in plan.strain_set
     ]
     lines = [
         *_head(plan),
         "",
         heading(f"{len(plan.strain_set) - 1} strained jobs and the reference, aim {plan.aim}, ions {plan.ions}"),
         columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS)]),
+        *_beyond(plan),
         f"  starting cells: {_MOVES[plan.atoms]}",
         "  Green-Lagrange strain, engineering shear, in the frame of the input cell",
         _promise(plan),
@@ -102,6 +103,17 @@ def plan_text(plan: Plan, out: Path | None = None) -> str:
         findings_text(plan.findings),
     ]
     return "\n".join(lines)
+
+
+def _beyond(plan: Plan) -> list[str]:
+    """Jobs beyond the strain set."""
+    counts = Counter(job.kind for job in plan.jobs)
+    words = []
+    if counts["displaced"]:
+        words.append(f"  and {counts['displaced']} displaced cells, for the answer of the ions")
+    if counts["finer"]:
+        words.append(f"  and {counts['finer']} of these jobs again at finer settings")
+    return words
 
 
 def inspection_text(
