@@ -25,7 +25,7 @@ def test_later_files_override_key_by_key(tmp_path):
     ("text", "message", "remedy"),
     [
         ("[site", "not valid TOML", ""),
-        ("[sight]\na = 1", "unknown table or key 'sight'", "deck, pseudopotentials, site"),
+        ("[sight]\na = 1", "unknown table or key 'sight'", "deck, pseudopotentials, engine, site"),
         ("walltime = '1:00:00'", "unknown table or key 'walltime'", ""),
         ("[site]\nwaltime = '01:00:00'", "unknown key 'waltime' in [site]", "Did you mean 'walltime'?"),
         ("[site]\nwalltime = '1 hour'", "no time limit", "HH:MM:SS"),
