@@ -80,7 +80,7 @@ def _read_job(run: Path, plan: Plan, job: StrainJob, path: Path, reader: Reader)
         return StressRecord(job.label, status, program=reader.program, file=name, findings=(doubt,))
     findings: list[Finding] = [finding(f"job-{status}", job.label, f"{name}: {text}") for status, text in returned.problems]
     status = returned.problems[0][0] if returned.problems else "done"
-    stress = None
+    stress = forces = moved = None
     planned = plan.crystal.deformed(job.gradient)
     try:
         rotation = remove_rotation(planned, returned)
@@ -90,17 +90,30 @@ def _read_job(run: Path, plan: Plan, job: StrainJob, path: Path, reader: Reader)
     else:
         if returned.stress is not None:
             stress = stress_to_voigt(rotation.T @ returned.stress @ rotation)
+        forces = None if returned.forces is None else returned.forces @ rotation
+        moved = _displacements(planned, returned)
     return StressRecord(
         label=job.label,
         status=status,
         stress=stress,
         energy=returned.energy,
-        max_force=returned.max_force,
+        max_force=None if returned.forces is None else float(np.linalg.norm(returned.forces, axis=1).max(initial=0.0)),
         program=returned.program,
         file=name,
         file_sha256=digest,
         findings=tuple(findings),
+        forces=forces,
+        displacements=moved,
     )
+
+
+def _displacements(planned: Crystal, returned: Returned) -> FloatArray:
+    """Way of each atom (n, 3) from its affinely strained position to where it came back, A, planned frame, mean removed."""
+    shift = returned.positions - planned.positions
+    shift -= np.round(shift)
+    # a whole cell shifted near half a lattice vector wraps differently for different atoms: centre on the first atom
+    shift -= np.round(shift - shift[0])
+    return np.asarray((shift - shift.mean(axis=0)) @ planned.lattice)
 
 
 def remove_rotation(planned: Crystal, returned: Returned) -> FloatArray:

@@ -46,8 +46,8 @@ class Returned:
         Cauchy stress in the output's own frame, GPa, positive in tension.
     energy : float or None
         Free energy of the cell, eV.
-    max_force : float or None
-        Largest force on an atom, eV/A.
+    forces : (n, 3) or None
+        On the atoms, eV/A, in the output's own frame and order.
     problems : tuple of (status, message)
         Why the numbers must not be used; empty for a finished, converged job.
     """
@@ -58,7 +58,7 @@ class Returned:
     numbers: IntArray
     stress: FloatArray | None
     energy: float | None
-    max_force: float | None
+    forces: FloatArray | None
     problems: tuple[tuple[str, str], ...] = ()
 
 
@@ -238,7 +238,7 @@ def _from_atoms(atoms: Atoms, program: str, problems: list[tuple[str, str]]) -> 
         numbers=np.array(atoms.numbers, dtype=np.int64),
         stress=None if stress is None else _full(np.asarray(stress, dtype=float)) * EV_PER_A3_IN_GPA,
         energy=None if energy is None else float(energy),
-        max_force=None if forces is None else float(np.linalg.norm(forces, axis=1).max()),
+        forces=None if forces is None else np.array(forces, dtype=float),
         problems=tuple(problems),
     )
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -16,10 +16,12 @@ from strainkit.run.files import atomic_write, dump_json, load_json
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import COMPONENTS
 
-__all__ = ["STATUSES", "TABLE", "StressRecord", "StressTable", "load_table"]
+__all__ = ["IONS", "STATUSES", "TABLE", "StressRecord", "StressTable", "load_table"]
 
 TABLE = "stresses.json"
+IONS = "ions.json"
 _KIND = "strainkit/stresses"
+_IONS_KIND = "strainkit/ions"
 
 #: status of a job -> meaning
 STATUSES = {
@@ -50,6 +52,10 @@ class StressRecord:
     program, file, file_sha256 : str
         Where it came from; the file relative to the run folder.
     findings : tuple of Finding
+    forces : (n, 3) or None
+        eV/A, given frame, rotation removed, planned order of atoms. Kept in ions.json, not in the table.
+    displacements : (n, 3) or None
+        From the affinely strained positions to the returned ones, A, given frame, mean removed. Kept in ions.json.
     """
 
     label: str
@@ -61,6 +67,8 @@ class StressRecord:
     file: str = ""
     file_sha256: str = ""
     findings: tuple[Finding, ...] = ()
+    forces: FloatArray | None = None
+    displacements: FloatArray | None = None
 
     def to_dict(self) -> dict[str, Any]:
         """JSON-ready record."""
@@ -97,8 +105,19 @@ class StressTable:
             "expected": len(self.records),
         }
 
+    def ions_to_dict(self) -> dict[str, Any]:
+        """JSON-ready forces and displacements of the usable jobs, each with the checksum of the file they came from."""
+        return {
+            "schema": f"{_IONS_KIND}/1",
+            "jobs": {
+                r.label: {"file_sha256": r.file_sha256, "forces_eV_per_A": r.forces, "displacements_A": r.displacements}
+                for r in self.usable
+                if r.displacements is not None
+            },
+        }
+
     def save(self, run: Path) -> None:
-        """Write stresses.json and stresses.csv into the run folder."""
+        """Write stresses.json, stresses.csv and ions.json into the run folder."""
         buffer = io.StringIO()
         writer = csv.writer(buffer, lineterminator="\n")
         writer.writerow(["label", "status", *(f"{c}_GPa" for c in COMPONENTS), "energy_eV", "file"])
@@ -106,19 +125,45 @@ class StressTable:
             stress = [""] * 6 if r.stress is None else [repr(float(x)) for x in r.stress]
             writer.writerow([r.label, r.status, *stress, "" if r.energy is None else repr(r.energy), r.file])
         atomic_write(run / "stresses.csv", buffer.getvalue())
+        atomic_write(run / IONS, dump_json(self.ions_to_dict()))
         atomic_write(run / TABLE, dump_json(self.to_dict()))
 
 
-def load_table(run: Path) -> StressTable:
-    """Read the stress table of a run folder."""
+def load_table(run: Path, ions: bool = False) -> StressTable:
+    """Read the stress table of a run folder; with `ions`, also what ions.json holds of each job.
+
+    Raises
+    ------
+    InputError
+        No table, or a damaged one.
+    """
     path = run / TABLE
     if not path.is_file():
         raise InputError("no stress table yet", path, f"Make it with: strainkit collect {run}")
     data = load_json(path, _KIND)
     try:
-        return StressTable(tuple(_record(item) for item in data["records"]))
+        table = StressTable(tuple(_record(item) for item in data["records"]))
+        return _with_ions(run, table) if ions else table
     except (KeyError, TypeError, ValueError) as error:
         raise InputError(f"damaged ({type(error).__name__}: {error})", path, "Run strainkit collect again.") from None
+
+
+def _with_ions(run: Path, table: StressTable) -> StressTable:
+    """The table with forces and displacements, where they come from the same file as the stress."""
+    path = run / IONS
+    if not path.is_file():
+        return table
+    jobs = load_json(path, _IONS_KIND)["jobs"]
+    return StressTable(tuple(_with_own_ions(record, jobs.get(record.label)) for record in table.records))
+
+
+def _with_own_ions(record: StressRecord, item: dict[str, Any] | None) -> StressRecord:
+    if item is None or item["file_sha256"] != record.file_sha256:
+        return record
+    forces, moved = (
+        None if (x := item[key]) is None else np.array(x, dtype=float) for key in ("forces_eV_per_A", "displacements_A")
+    )
+    return replace(record, forces=forces, displacements=moved)
 
 
 def _record(item: dict[str, Any]) -> StressRecord:

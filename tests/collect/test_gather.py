@@ -49,6 +49,32 @@ def test_table_round_trip(made):
     assert len(lines) == 1 + len(plan.jobs)
 
 
+def test_forces_and_displacements_come_back_in_the_planned_frame(made):
+    """An atom moved by a known vector and a known force, in an output turned at random."""
+    run, plan = made
+    job = plan.jobs[1]
+    cell = plan.crystal.deformed(job.gradient)
+    n = len(cell.numbers)
+    moved = np.random.default_rng(1).normal(size=(n, 3)) * 0.05
+    forces = np.random.default_rng(2).normal(size=(n, 3))
+    turn = random_rotation(np.random.default_rng(3))
+    fractions = cell.positions + moved @ np.linalg.inv(cell.lattice) + np.random.default_rng(4).integers(-2, 3, (n, 3))
+    atoms = Crystal(cell.lattice @ turn.T, fractions, cell.numbers).to_atoms()
+    from ase.calculators.singlepoint import SinglePointCalculator
+    from ase.io import write
+
+    atoms.calc = SinglePointCalculator(atoms, energy=0.0, forces=forces @ turn.T, stress=np.zeros(6))
+    write(run / job_folder(job.label) / "returned.extxyz", atoms)
+    collect_run(run, plan).save(run)
+    record = load_table(run, ions=True).records[1]
+    np.testing.assert_allclose(record.displacements, moved - moved.mean(axis=0), rtol=0, atol=1e-6)
+    np.testing.assert_allclose(record.forces, forces, rtol=0, atol=1e-6)
+    assert load_table(run).records[1].forces is None
+    (run / job_folder(job.label) / "returned.extxyz").write_text("")
+    collect_run(run, plan).save(run)
+    assert load_table(run, ions=True).records[1].forces is None
+
+
 @pytest.mark.parametrize(
     ("change", "message"),
     [
