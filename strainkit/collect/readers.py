@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import re
 import warnings
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -60,6 +60,10 @@ class Returned:
     energy: float | None
     forces: FloatArray | None
     problems: tuple[tuple[str, str], ...] = ()
+    version: str = ""
+    settings: Mapping[str, str | float] = field(default_factory=dict)
+    stress_repeat: FloatArray | None = None
+    lattice_precision: float = 1e-6
 
 
 @dataclass(frozen=True)
