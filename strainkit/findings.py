@@ -9,7 +9,7 @@ from collections.abc import Iterable
 from dataclasses import asdict, dataclass
 from typing import Any, Literal
 
-from strainkit.errors import StrainkitError
+from strainkit.errors import StrainkitError, printable
 
 __all__ = ["CODES", "Finding", "Severity", "finding", "worst"]
 
@@ -117,10 +117,10 @@ class Finding:
 
 
 def finding(code: str, where: str, message: str) -> Finding:
-    """Make a finding of a documented code; its severity is the documented one."""
+    """Make a finding of a documented code; its severity is the documented one. File names in it cannot steer a terminal."""
     if code not in CODES:
         raise StrainkitError(f"finding code {code!r} is not documented", "strainkit.findings")
-    return Finding(code, CODES[code][0], where, message)
+    return Finding(code, CODES[code][0], printable(where), printable(message))
 
 
 def worst(findings: Iterable[Finding]) -> Severity | None:

@@ -69,9 +69,9 @@ def collect_run(
         folder = folders[job.label]
         seen = checksum(f"{plan_fingerprint(plan, job)}{folder.state}".encode())[:32]
         if (old := _unchanged(run, known.get(job.label), seen, elsewhere, {f.name for f in foreign})) is not None:
-            kept[job.label] = replace(old, seen=_stamp(seen, elsewhere, folder))
+            kept[job.label] = replace(old, seen=_stamp(seen, elsewhere, folder, foreign))
         else:
-            tasks.append(_Task(job, folder, _stamp(seen, elsewhere, folder)))
+            tasks.append(_Task(job, folder, _stamp(seen, elsewhere, folder, foreign)))
     for record in _read_all(run, plan, tasks, workers):
         kept[record.label] = record
     records = [kept[job.label] for job in plan.jobs]
@@ -92,8 +92,9 @@ def _known(run: Path) -> dict[str, StressRecord]:
         return {}
 
 
-def _stamp(seen: str, elsewhere: str, folder: Folder) -> str:
-    return f"{seen}.{elsewhere}{'' if folder.settled else '?'}"
+def _stamp(seen: str, elsewhere: str, folder: Folder, foreign: Sequence[Folder]) -> str:
+    settled = folder.settled and all(other.settled for other in foreign)
+    return f"{seen}.{elsewhere}{'' if settled else '?'}"
 
 
 def _unchanged(run: Path, old: StressRecord | None, seen: str, elsewhere: str, foreign: Set[str]) -> StressRecord | None:

@@ -12,7 +12,7 @@ from strainkit.collect.readers import READERS, Reader, Returned, read_returned, 
 from strainkit.collect.scan import Folder, natural
 from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
-from strainkit.errors import InputError
+from strainkit.errors import InputError, printable
 from strainkit.findings import Finding, finding
 from strainkit.run.files import checksum
 from strainkit.run.plan import Plan
@@ -87,7 +87,7 @@ def record_of(plan: Plan, job: StrainJob, folder: Folder, outputs: list[Output])
 
 
 def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
-    name, returned = output.name, output.returned
+    name, returned = printable(output.name), output.returned
     if returned is None:
         status = "unfinished" if "end-of-job" in output.error else "broken"
         doubt = finding("unreadable-output", job.label, f"{name}: {output.error}")

@@ -113,7 +113,7 @@ def _given(plan: Plan, job: StrainJob, folder: Folder, outputs: list[Output], be
     record = record_of(plan, job, replace(folder, links=()), outputs[:1])
     note = finding("matched-by-cell", job.label, f"{record.file}: in another folder, but of this job's cell")
     kept = tuple(f for f in before.findings if f.code == "link-not-followed")
-    return replace(record, findings=(*record.findings, note, *kept))
+    return replace(record, findings=(*record.findings, note, *kept), seen=before.seen)
 
 
 def _jobs_of(plan: Plan, keys: _Keys, returned: Returned) -> list[StrainJob]:
