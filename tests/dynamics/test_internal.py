@@ -150,7 +150,7 @@ def test_hexagonal_silicon_explicit_relaxation_against_the_formula():
 
 @pytest.mark.slow
 def test_molecular_crystal_explicit_relaxation_against_the_formula(need):
-    """Solid ammonia on GFN1-xTB, within 0.5 %; both at one strain, as the model's own noise moves C11 by 1 % between strains."""
+    """Solid ammonia on GFN1-xTB, within 0.5 %; both at one strain, whose noise moves C11 by 1 % between strains."""
     need("tblite")
     from strainkit.crystal.read import read_crystal
     from strainkit.shipped import shipped_folder
