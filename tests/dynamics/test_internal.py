@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from ase.build import bulk
-from support.crystals import random_rotation, random_unimodular, rewritten
+from support.crystals import conventional, random_rotation, random_unimodular, rewritten
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.operations import crystal_operations
@@ -17,6 +17,7 @@ from strainkit.evaluate.reference import relax_reference
 from strainkit.evaluate.single import evaluate_cell
 from strainkit.fit.regression import regress
 from strainkit.prepare.runfolder import plan_run
+from strainkit.tensors.rotations import rotation6
 from strainkit.tensors.sixvectors import stress_to_voigt, to_mandel
 from strainkit.units import EV_PER_A3_IN_GPA
 
@@ -47,8 +48,8 @@ def clamped(crystal, engine, magnitude=0.002):
     gradients = np.array([job.gradient for job in plan.strain_set])
     fit = regress(gradients, stresses, plan.symmetry.rotations, plan.basis.matrices)
     strains = to_mandel(np.array([job.strain for job in plan.strain_set]))
-    response, noise = force_response(strains, np.array([r.forces for r in results]), crystal_operations(crystal, 1e-4))
-    return fit.values, plan.basis, response, noise
+    found = force_response(strains, np.array([r.forces for r in results]), crystal_operations(crystal, 1e-4))
+    return fit.values, plan.basis, found.matrix, found.noise
 
 
 def relaxed_by_formula(crystal, engine, magnitude=0.002):
@@ -120,6 +121,43 @@ def test_an_unstable_reference_is_refused():
     constants = np.kron(np.array([[1.0, -1.0], [-1.0, 1.0]]), np.diag([2.0, 2.0, -0.5]))
     with pytest.raises(NoTensorError, match="1 unstable"):
         internal_strain(silicon(), constants, np.zeros((6, 6)))
+
+
+@pytest.mark.parametrize("laue", ["-1", "2/m", "mmm", "4/m", "-3m", "6/mmm", "m-3", "m-3m"])
+@pytest.mark.parametrize("symmetrised", [False, True])
+def test_noise_of_the_forces_is_found_again(laue, symmetrised):
+    """Simulated forces: the estimated variance is chi-squared with the stated degrees of freedom, mean 1, variance 2 / dof."""
+    rng = np.random.default_rng(7)
+    crystal = rewritten(conventional(laue), random_rotation(rng), np.eye(3))
+    operations = crystal_operations(crystal, 1e-3)
+    jobs = plan_run(crystal, [0.01]).strain_set
+    strains = to_mandel(np.array([job.strain for job in jobs]))
+    n = len(crystal.numbers)
+    estimates = []
+    for _ in range(400):
+        forces = 3e-3 * rng.normal(size=(len(jobs), n, 3))
+        if symmetrised:
+            forces = np.array([symmetric_forces(f, eta, operations) for f, eta in zip(forces, strains, strict=True)])
+        found = force_response(strains, forces, operations)
+        estimates.append(np.nan if found.noise is None else (found.noise / 3e-3) ** 2)
+    if found.degrees_of_freedom < 1:
+        assert np.isnan(estimates).all()
+        return
+    dof = found.degrees_of_freedom
+    assert np.mean(estimates) == pytest.approx(1.0, abs=4 * (2 / dof / 400) ** 0.5)
+    assert np.var(estimates) == pytest.approx(2 / dof, rel=4 * ((2 + 12 / dof) / 400) ** 0.5)
+
+
+def symmetric_forces(forces, strain, operations):
+    """Forces averaged over the operations that the strained cell keeps, as a program that symmetrises prints them."""
+    keeps = np.abs(rotation6(operations.cartesian) @ strain - strain).max(axis=1) < 1e-9
+    total = np.zeros_like(forces)
+    means = operations.average(forces)
+    for rotation, permutation in zip(operations.cartesian[keeps], operations.permutations[keeps], strict=True):
+        moved = np.empty_like(means)
+        moved[permutation] = means @ rotation.T
+        total += moved[operations.classes]
+    return total / keeps.sum()
 
 
 def test_too_few_strains_are_refused():
