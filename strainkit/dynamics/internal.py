@@ -18,7 +18,7 @@ from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.rotations import rotation6
 from strainkit.units import EV_PER_A3_IN_GPA
 
-__all__ = ["ForceResponse", "InternalStrain", "force_response", "internal_strain"]
+__all__ = ["ForceResponse", "InternalStrain", "force_response", "internal_strain", "ions_answer"]
 
 #: modes softer than this part of the stiffest one count as translations or as unstable (force constants)
 _SOFT = 1e-5
@@ -122,10 +122,8 @@ def _spare(points: FloatArray, strains: list[FloatArray], operations: Operations
 
     Both are dimensions of invariant spaces, counted by characters.
     """
-    q = rotation6(operations.cartesian)
+    q, character = rotation6(operations.cartesian), _field_characters(operations)
     size = np.abs(points).max()
-    fixed = (operations.permutations == np.arange(operations.permutations.shape[1])).sum(axis=1)
-    character = (fixed - 1) * np.trace(operations.cartesian, axis1=1, axis2=2)
     left, data = list(strains), 0
     while left:
         images = q @ left[0]
@@ -134,7 +132,24 @@ def _spare(points: FloatArray, strains: list[FloatArray], operations: Operations
         data += round(float((sign * character).sum() / np.abs(sign).sum()))
         orbit = np.concatenate([images, -images])
         left = [other for other in left if np.abs(orbit - other).max(axis=1).min() > 1e-4 * size]
-    return data - round(float((character * np.trace(q, axis1=1, axis2=2)).mean()))
+    return data - _free_elements(operations)
+
+
+def _field_characters(operations: Operations) -> FloatArray:
+    """Characters (m,) of the representation on fields of vectors on the atoms, translations left out."""
+    fixed = (operations.permutations == np.arange(operations.permutations.shape[1])).sum(axis=1)
+    return np.asarray((fixed - 1) * np.trace(operations.cartesian, axis1=1, axis2=2))
+
+
+def _free_elements(operations: Operations) -> int:
+    """Independent elements of the response of such a field to strain."""
+    strains = np.trace(rotation6(operations.cartesian), axis1=1, axis2=2)
+    return round(float((_field_characters(operations) * strains).mean()))
+
+
+def ions_answer(operations: Operations) -> bool:
+    """Does symmetry allow the ions to leave their affine places under some strain?"""
+    return _free_elements(operations) > 0
 
 
 def internal_strain(crystal: Crystal, constants: FloatArray, response: FloatArray) -> InternalStrain:
