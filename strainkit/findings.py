@@ -81,6 +81,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "magnitude-matters": ("warning", "a statistically real cubic response that shifts a constant by more than 1 %"),
     "convergence-unclear": ("info", "the shift to zero strain is known too poorly for a verdict"),
     # what is derived
+    "acoustic-mismatch": ("warning", "sound speeds of the force constants differ from those of the stiffness"),
     "axes-assumed": ("info", "a tensor file does not name its axes: taken to be the IEEE ones of the cell"),
     "asymmetric-coefficients": ("warning", "the reference stress makes the stress-strain coefficients asymmetric"),
     "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),
