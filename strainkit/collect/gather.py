@@ -104,7 +104,7 @@ def _unchanged(run: Path, old: StressRecord | None, seen: str, elsewhere: str, f
     mine, _, others = old.seen.removesuffix("?").partition(".")
     place = old.file.rpartition("/")[0]
     at_home = place in ("", job_folder(old.label)) or (place in foreign and others == elsewhere)
-    if mine != seen or not at_home or (old.displacements is None and old.max_force is not None):
+    if mine != seen or not at_home or (old.forces is None and old.max_force is not None):
         return None
     if old.seen.endswith("?"):
         try:

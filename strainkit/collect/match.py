@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from strainkit.collect.readers import Returned
+from strainkit.collect.returned import Returned
 from strainkit.crystal.crystal import Crystal, formula_of
 from strainkit.errors import InputError
 from strainkit.tensors.arrays import FloatArray, IntArray
@@ -71,9 +71,9 @@ class Match:
 
 
 def strain_tolerance(lattice: FloatArray, precision: float) -> float:
-    """Largest strain that rounding of the lattice vectors to `precision` (A) can explain."""
+    """Largest strain that rounding of the lattice vectors by up to `precision` (A) in each component can explain."""
     heights = 1.0 / np.linalg.norm(np.linalg.inv(lattice), axis=0)
-    return max(LEAST_TOLERANCE, 2.0 * precision / float(heights.min()))
+    return max(LEAST_TOLERANCE, 3.0 * precision / float(heights.min()))
 
 
 def match(planned: Crystal, returned: Returned) -> Match:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from hashlib import file_digest
 from pathlib import Path
 
 import numpy as np
@@ -14,9 +15,7 @@ from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError, printable
 from strainkit.findings import Finding, finding
-from strainkit.run.files import checksum
 from strainkit.run.plan import Plan
-from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import stress_to_voigt
 
 __all__ = ["Output", "read_outputs", "record_of"]
@@ -64,8 +63,9 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
 def _read(run: Path, name: str, reader: Reader) -> Output:
     path = run / name
     try:
-        digest = checksum(path.read_bytes())
-        return Output(name, reader.program, digest, read_returned(path, reader))
+        returned = read_returned(path, reader, run)
+        with path.open("rb") as file:
+            return Output(name, reader.program, file_digest(file, "sha256").hexdigest(), returned)
     except InputError as error:
         return Output(name, reader.program, "", None, error.what)
     except OSError as error:
@@ -98,15 +98,11 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
         energy=returned.energy,
         program=returned.program,
         version=returned.version,
-        settings=dict(returned.settings),
+        settings={key: value if isinstance(value, str | float) else str(value) for key, value in returned.settings.items()},
         file=name,
         file_sha256=output.digest,
         findings=tuple(finding(f"job-{status}", job.label, f"{name}: {text}") for status, text in returned.problems),
     )
-    odd = _not_finite(returned)
-    if odd:
-        doubt = finding("job-broken", job.label, f"{name}: {odd} not finite numbers")
-        return replace(blank, status="broken", energy=None, findings=(*blank.findings, doubt))
     try:
         found = match(plan.crystal.deformed(job.gradient), returned)
     except MismatchError as error:
@@ -121,7 +117,7 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
 def _placed(plan: Plan, job: StrainJob, blank: StressRecord, returned: Returned, found: Match) -> StressRecord:
     """The record with everything in the planned frame and order."""
     turn = found.rotation
-    keep = returned.forces is not None or found.farthest > _AT_REST
+    keep = returned.positions_known and (returned.forces is not None or found.farthest > _AT_REST)
     record = replace(
         blank,
         stress=None if returned.stress is None else stress_to_voigt(turn.T @ returned.stress @ turn),
@@ -144,17 +140,6 @@ def _from_start(plan: Plan, job: StrainJob, found: Match) -> float:
     shift = start.positions - plan.crystal.positions
     planned = (shift - shift.mean(axis=0)) @ start.lattice
     return float(np.linalg.norm(found.displacements - planned, axis=1).max(initial=0.0))
-
-
-def _not_finite(returned: Returned) -> str:
-    parts: list[tuple[str, FloatArray | float | None]] = [
-        ("lattice", returned.lattice),
-        ("positions", returned.positions),
-        ("stress", returned.stress),
-        ("forces", returned.forces),
-        ("energy", returned.energy),
-    ]
-    return ", ".join(word for word, value in parts if value is not None and not np.isfinite(value).all())
 
 
 def _second(record: StressRecord, other: StressRecord) -> list[Finding]:

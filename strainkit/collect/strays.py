@@ -10,8 +10,8 @@ from pathlib import Path
 import numpy as np
 
 from strainkit.collect.match import LEAST_TOLERANCE, MismatchError, match
-from strainkit.collect.readers import Returned
 from strainkit.collect.readjob import Output, read_outputs, record_of
+from strainkit.collect.returned import Returned
 from strainkit.collect.scan import Folder
 from strainkit.collect.table import StressRecord
 from strainkit.crystal.crystal import Crystal

@@ -130,7 +130,7 @@ class StressTable:
             "jobs": {
                 r.label: {"file_sha256": r.file_sha256, "forces_eV_per_A": r.forces, "displacements_A": r.displacements}
                 for r in self.records
-                if r.displacements is not None
+                if r.displacements is not None or r.forces is not None
             },
         }
 
@@ -143,7 +143,7 @@ class StressTable:
             stress = [""] * 6 if r.stress is None else [repr(float(x)) for x in r.stress]
             writer.writerow([r.label, r.status, *stress, "" if r.energy is None else repr(r.energy), r.file])
         atomic_write(run / "stresses.csv", buffer.getvalue())
-        if any(r.displacements is not None for r in self.records):
+        if any(r.displacements is not None or r.forces is not None for r in self.records):
             atomic_write(run / IONS, dump_json(self.ions_to_dict()))
         atomic_write(run / TABLE, dump_json(self.to_dict()))
 

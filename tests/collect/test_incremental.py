@@ -35,9 +35,9 @@ def reads(monkeypatch):
     names = []
     real = readjob.read_returned
 
-    def spy(path, reader):
+    def spy(path, reader, within=None):
         names.append(path.parent.name)
-        return real(path, reader)
+        return real(path, reader, within)
 
     monkeypatch.setattr(readjob, "read_returned", spy)
     return names
