@@ -26,7 +26,7 @@ LARGEST_DRIFT = 0.15
 #: atoms closer to their planned sites than this (A) are where they belong without looking further
 CLOSE = 0.25
 #: in another basis or order, atoms farther than this (A) from their planned sites are not the planned crystal
-FAR = 1.0
+FAR = 0.5
 
 
 class MismatchError(InputError):

@@ -83,6 +83,9 @@ def energy_jumps(plan: Plan, done: Done) -> list[Finding]:
         return []
     off = np.array([sum(found[x][0] - found[x][1] for x in labels) for labels in groups])
     size = np.array([sum(abs(found[x][1]) for x in labels) for labels in groups])
+    # a small work may be the noise of its stress: weigh by what is usual at that strain
+    strain = np.array([len(labels) * found[labels[0]][2].magnitude ** 2 for labels in groups])
+    size = np.maximum(size, strain * np.median(size / strain))
     part = off / np.maximum(size, 1e-12)
     middle = float(np.median(part))
     spread = float(np.median(np.abs(part - middle)))
