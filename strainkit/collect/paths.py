@@ -24,7 +24,7 @@ JUMP, JUMP_SPREAD, JUMP_EV = 0.5, 6.0, 1e-4
 #: ions are elsewhere when they move this far (A), and so many times farther per strain than in the other jobs
 ELSEWHERE_A, ELSEWHERE = 0.15, 4.0
 #: left-over forces matter when they can put the stress off by this part of its change under strain
-FORCES_MATTER = 0.1
+FORCES_MATTER = 0.05
 #: force constant (eV/A^2) of an ion that has not moved at all: common practice, no source
 _SPRING = 10.0
 
