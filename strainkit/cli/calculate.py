@@ -30,9 +30,7 @@ def chosen_calculation(
     return None if deck is None else jobs_calculation(deck, plan, read_settings(settings or []), kspacing, symprec)
 
 
-def check_calculation(
-    deck: str | None, settings: list[Path] | None, kspacing: float | None, scheduler: str | None
-) -> None:
+def check_calculation(deck: str | None, settings: list[Path] | None, kspacing: float | None, scheduler: str | None) -> None:
     """Refuse options of a deck without a deck, and an unknown scheduler."""
     from strainkit.prepare.scripts import check_scheduler
 

@@ -1,4 +1,4 @@
-"""strainkit fit RUN."""
+"""strainkit fit RUN, or a campaign."""
 
 from __future__ import annotations
 
@@ -6,7 +6,7 @@ from typing import Annotated, Literal
 
 import typer
 
-from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
+from strainkit.cli.options import Again, Frame, Json, Quiet, RunOrCampaign, Workers, deliver, note
 
 Order = Annotated[Literal["linear", "cubic"], typer.Option(help="Fit cubic terms for every shape too?")]
 KnownNoise = Annotated[float | None, typer.Option(help="Known stress noise, GPa; estimated from the residuals if not given.")]
@@ -18,12 +18,14 @@ Reading = Annotated[
 
 
 def fit(
-    run: Run,
+    run: RunOrCampaign,
     order: Order = "linear",
     noise: KnownNoise = None,
     drop: Drop = None,
     reference_stress: Reading = "real",
     frame: Frame = "ieee",
+    again: Again = False,
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
@@ -31,7 +33,14 @@ def fit(
     from strainkit.cli.load import fitted
     from strainkit.fit.result import FITTED
     from strainkit.present.terminal import fit_text
+    from strainkit.run.campaign import is_campaign
 
+    if is_campaign(run):
+        from strainkit.cli.campaign import fit_campaign
+        from strainkit.cli.load import fit_options
+
+        fit_campaign(run, fit_options(order, noise, drop, frame, reference_stress), again, workers, json, quiet)
+        return
     result = fitted(run, order, noise, drop, frame, reference_stress)
     result.save(run, frame)
     note(f"wrote {run / FITTED}", quiet)

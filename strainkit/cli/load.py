@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 from strainkit.errors import UsageError
 
 if TYPE_CHECKING:
+    from strainkit.cli.each import FitOptions
     from strainkit.design.jobs import StrainJob
     from strainkit.design.model import Order
     from strainkit.fit.residual import ReferenceStress
@@ -15,7 +16,7 @@ if TYPE_CHECKING:
     from strainkit.run.plan import Plan
     from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["fitted", "usable"]
+__all__ = ["fit_options", "fitted", "usable"]
 
 
 def fitted(
@@ -23,17 +24,34 @@ def fitted(
 ) -> Fit:
     """Fit a run from its stress table, with the options checked."""
     from strainkit.collect.table import load_table
-    from strainkit.crystal.frames import FRAMES
     from strainkit.fit.result import fit_run
     from strainkit.run.plan import load_plan
+
+    _check(noise, frame)
+    plan = load_plan(run)
+    _check_labels(plan, drop)
+    return fit_run(plan, load_table(run), order, noise, tuple(drop or ()), reading)
+
+
+def fit_options(
+    order: Order, noise: float | None, drop: list[str] | None, frame: str, reading: ReferenceStress = "real"
+) -> FitOptions:
+    """How every crystal of a campaign is fitted, with the options checked."""
+    from strainkit.cli.each import FitOptions
+
+    _check(noise, frame)
+    if drop:
+        raise UsageError("jobs are dropped in one run at a time", "--drop", "Give the run folder of that crystal.")
+    return FitOptions(order, noise, reading, frame)
+
+
+def _check(noise: float | None, frame: str) -> None:
+    from strainkit.crystal.frames import FRAMES
 
     if frame not in FRAMES:
         raise UsageError(f"unknown frame {frame!r}", "--frame", f"Use one of {', '.join(FRAMES)}.")
     if noise is not None and not noise > 0:
         raise UsageError(f"a noise of {noise:g} GPa is not possible", "--noise", "Give a positive number.")
-    plan = load_plan(run)
-    _check_labels(plan, drop)
-    return fit_run(plan, load_table(run), order, noise, tuple(drop or ()), reading)
 
 
 def usable(run: Path, drop: list[str] | None) -> tuple[Plan, list[StrainJob], FloatArray]:

@@ -115,16 +115,14 @@ def prepare(
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
     moved = displaced and ions == "clamped"
     if campaign or not is_one_cell(cell):
-        from strainkit.cli.campaign import prepare_campaign
+        from strainkit.cli.prepare_campaign import prepare_campaign
         from strainkit.prepare.campaign import Recipe
         from strainkit.prepare.settings import read_settings
 
         check_calculation(deck, settings, kspacing, scheduler)
         chosen = read_settings(settings or [])
         formats = None if format is None else tuple(format)
-        recipe = Recipe(
-            wish, ions, symprec, atoms, symmetrize, moved, formats, deck, chosen, kspacing, scheduler, read_as
-        )
+        recipe = Recipe(wish, ions, symprec, atoms, symmetrize, moved, formats, deck, chosen, kspacing, scheduler, read_as)
         prepare_campaign(cell, out, recipe, workers, dry_run, force, yes, json, quiet)
         return
     plan = plan_run(read_crystal(cell[0], read_as), wish, ions, symprec, atoms, symmetrize, displaced=moved)

@@ -98,27 +98,27 @@ def make_campaign(
     old = None if out is None else _existing(out, digest, force)
     kept, todo, changed = _compare(cells, old, out)
     refused += changed
-    spool = Spool()
-    with stage("plan") as report:
-        planned, bad = plan_cells(todo, recipe, spool, workers, report)
-    refused += bad
-    estimate = Estimate(
-        crystals=len(planned),
-        jobs=sum(p.member.jobs for p in planned),
-        files=sum(p.files for p in planned),
-        bytes=sum(p.bytes for p in planned),
-        kept=len(kept),
-        refused=tuple(refused),
-        laue_classes=_counted([*kept, *(p.member for p in planned)]),
-    )
-    if not planned and not kept:
-        reasons = "; ".join(f"{r.source}: {r.reason}" for r in refused[:3])
-        more = f"; and {len(refused) - 3} more" if len(refused) > 3 else ""
-        raise InputError(f"no usable cell ({reasons}{more})" if refused else "no cells", "CELL")
-    agree(estimate)
-    if out is None:
-        return Made(None, estimate, tuple(refused))
-    return _write(out, old, planned, estimate, recipe, digest, spool, workers, stage, force)
+    with Spool() as spool:
+        with stage("plan") as report:
+            planned, bad = plan_cells(todo, recipe, spool, workers, report)
+        refused += bad
+        estimate = Estimate(
+            crystals=len(planned),
+            jobs=sum(p.member.jobs for p in planned),
+            files=sum(p.files for p in planned),
+            bytes=sum(p.bytes for p in planned),
+            kept=len(kept),
+            refused=tuple(refused),
+            laue_classes=_counted([*kept, *(p.member for p in planned)]),
+        )
+        if not planned and not kept:
+            reasons = "; ".join(f"{r.source}: {r.reason}" for r in refused[:3])
+            more = f"; and {len(refused) - 3} more" if len(refused) > 3 else ""
+            raise InputError(f"no usable cell ({reasons}{more})" if refused else "no cells", "CELL")
+        agree(estimate)
+        if out is None:
+            return Made(None, estimate, tuple(refused))
+        return _write(out, old, planned, estimate, recipe, digest, spool, workers, stage, force)
 
 
 def _existing(out: Path, digest: str, force: bool) -> Campaign | None:
@@ -249,7 +249,9 @@ def _write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
     if not fresh:
         return ""
     if recipe.scheduler is None:
-        atomic_write(out / list_name(1), "".join(f"{folder}\n" for folder in every))
+        path, text = out / list_name(1), "".join(f"{folder}\n" for folder in every)
+        if not path.is_file() or path.read_text(encoding="utf-8") != text:
+            atomic_write(path, text)
         return ""
     site = recipe.settings.site
     parts = arrays(fresh, recipe.scheduler, site)

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import pickle
+import shutil
 import tempfile
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import partial
 from pathlib import Path
 from typing import IO, Literal
@@ -42,7 +43,7 @@ class Recipe:
     displaced: bool = False
     formats: tuple[str, ...] | None = None
     deck: str | None = None
-    settings: Settings = Settings()
+    settings: Settings = field(default_factory=Settings)
     kspacing: float | None = None
     scheduler: str | None = None
     read_as: str | None = None
@@ -88,7 +89,13 @@ class Spool:
     """Plans on disk between planning and writing, so that memory does not grow with their number."""
 
     def __init__(self) -> None:
-        self._file: IO[bytes] = tempfile.TemporaryFile()
+        self._file: IO[bytes] = tempfile.TemporaryFile()  # noqa: SIM115 (as long-lived as this object)
+
+    def __enter__(self) -> Spool:
+        return self
+
+    def __exit__(self, *error: object) -> None:
+        self._file.close()
 
     def keep(self, data: bytes) -> tuple[int, int]:
         """Append some bytes and say where."""
@@ -128,11 +135,11 @@ def plan_cells(
         report(len(found), len(cells), path.name)
     planned, refused = [], []
     for path, _ in cells:
-        result = found[path]
-        if isinstance(result, str):
-            refused.append(Refusal(str(path), result))
+        outcome = found[path]
+        if isinstance(outcome, str):
+            refused.append(Refusal(str(path), outcome))
         else:
-            planned.append(Planned(*result))
+            planned.append(Planned(*outcome))
     return planned, refused
 
 
@@ -188,10 +195,11 @@ def write_members(
         for member, where in todo:
             yield folder / member.run, spool.get(where)
 
+    for shard in {(folder / member.run).parent for member, _ in todo}:
+        for left in shard.glob(".*"):  # of a process that was killed
+            shutil.rmtree(left, ignore_errors=True)
     problems: dict[str, str] = {}
-    done = 0
-    for (place, _), result in over_processes(partial(_write, recipe), tasks(), workers):
-        done += 1
+    for done, ((place, _), result) in enumerate(over_processes(partial(_write, recipe), tasks(), workers), 1):
         if isinstance(result, DiskError):
             raise DiskError(
                 f"{result.what}; {done - 1} of {len(todo)} run folders are written",

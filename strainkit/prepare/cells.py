@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
 from glob import glob, has_magic
 from pathlib import Path
 
@@ -20,7 +19,9 @@ _ENDINGS = {".cif", *ENDINGS}
 def is_one_cell(arguments: Sequence[str]) -> bool:
     """Is this a single structure file (or the name of one that is not there)?"""
     return len(arguments) == 1 and not (
-        arguments[0].startswith("@") or Path(arguments[0]).is_dir() or (has_magic(arguments[0]) and not Path(arguments[0]).exists())
+        arguments[0].startswith("@")
+        or Path(arguments[0]).is_dir()
+        or (has_magic(arguments[0]) and not Path(arguments[0]).exists())
     )
 
 

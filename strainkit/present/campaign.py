@@ -2,16 +2,29 @@
 
 from __future__ import annotations
 
+import csv
+import io
+import json
+import math
 import shlex
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from pathlib import Path
+from typing import Any
 
 from strainkit.prepare.assemble import Estimate, Made
 from strainkit.present.text import columns, heading, paragraph
 from strainkit.run.campaign import Refusal
 
-__all__ = ["estimate_text", "made_text", "size_text", "tally_text"]
+__all__ = [
+    "estimate_text",
+    "findings_tally",
+    "made_text",
+    "next_text",
+    "screening_files",
+    "size_text",
+    "tally_text",
+]
 
 #: problems shown on a terminal; the JSON has them all
 _SHOWN = 20
@@ -19,16 +32,15 @@ _SHOWN = 20
 
 def size_text(size: float) -> str:
     """Bytes in a handy unit."""
-    for unit in ("kB", "MB", "GB"):
-        size /= 1000.0
-        if size < 999.5:
-            break
-    return f"{size:.3g} {unit}"
+    power = next((p for p in (1, 2) if size < 999.5 * 1000**p), 3)
+    return f"{size / 1000**power:.3g} {('kB', 'MB', 'GB')[power - 1]}"
 
 
 def estimate_text(estimate: Estimate) -> str:
     """What is about to be written, on one line."""
     kept = f"; {estimate.kept} crystals are there already" if estimate.kept else ""
+    if not estimate.crystals:
+        return f"nothing to write{kept}"
     return (
         f"{estimate.crystals} crystals, {estimate.jobs} jobs: {estimate.files} files, about {size_text(estimate.bytes)} "
         f"of disk{kept}"
@@ -74,3 +86,33 @@ def findings_tally(codes: Mapping[str, int]) -> str:
     """Finding codes with the number of crystals that have them."""
     ranked = Counter(codes).most_common()
     return ", ".join(f"{code} {count}" for code, count in ranked)
+
+
+def next_text(again: int, folder: Path, scripted: bool, asked: bool, written: Mapping[str, Any] | None) -> list[str]:
+    """What to type to run jobs again."""
+    if not again:
+        return []
+    place = shlex.quote(str(folder))
+    lines = ["", f"  {again} jobs are worth another run"]
+    if written:
+        lines += [f"  wrote {' '.join(written['lists'])}; submit them yourself:", f"    cd {place} && {written['submit']}"]
+    elif scripted:
+        ask = "" if asked else " --queue"
+        lines += ["  to write a list and a script for them:", f"    strainkit progress {place}{ask} --resubmit"]
+    return lines
+
+
+def screening_files(rows: Sequence[Mapping[str, Any]], header: Sequence[str]) -> dict[str, str]:
+    """screening.csv and screening.jsonl: unknown numbers are empty or null, all digits are kept."""
+    buffer = io.StringIO()
+    writer = csv.writer(buffer, lineterminator="\n")
+    writer.writerow(header)
+    known = [{name: _known(row[name]) for name in header} for row in rows]
+    for row in known:
+        writer.writerow(["" if row[name] is None else row[name] for name in header])
+    lines = "".join(json.dumps(row, ensure_ascii=False, allow_nan=False) + "\n" for row in known)
+    return {"screening.csv": buffer.getvalue(), "screening.jsonl": lines}
+
+
+def _known(value: Any) -> Any:
+    return None if isinstance(value, float) and not math.isfinite(value) else value

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import os
 import signal
+import threading
+import time
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
@@ -67,7 +69,7 @@ def _with_pool(
     function: Callable[[Item], Result], source: Iterator[Item], workers: int, chunk: int, suspects: list[Item]
 ) -> Iterator[tuple[Item, Result | Died]]:
     """Results until the source is empty or the pool breaks; what was under way then is left in `suspects`."""
-    pool = ProcessPoolExecutor(workers, mp_context=get_context("spawn"), initializer=_leave_interrupts_to_parent)
+    pool = ProcessPoolExecutor(workers, mp_context=get_context("spawn"), initializer=_begin, initargs=(os.getpid(),))
     waiting: dict[Future[list[Result]], list[Item]] = {}
     broken = False
     try:
@@ -101,5 +103,13 @@ def _each(function: Callable[[Item], Result], batch: list[Item]) -> list[Result]
     return [function(item) for item in batch]
 
 
-def _leave_interrupts_to_parent() -> None:
+def _begin(parent: int) -> None:
+    """A worker leaves interruptions to its parent, and ends when the parent is gone, also when that was killed."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
+
+    def watch() -> None:
+        while os.getppid() == parent:
+            time.sleep(1.0)
+        os._exit(1)
+
+    threading.Thread(target=watch, daemon=True).start()
