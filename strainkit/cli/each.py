@@ -17,6 +17,8 @@ from strainkit.errors import DiskError, StrainkitError
 if TYPE_CHECKING:
     from strainkit.design.model import Order
     from strainkit.fit.residual import ReferenceStress
+    from strainkit.fit.result import Fit
+    from strainkit.run.plan import Plan
     from strainkit.run.queues import Queued
 
 __all__ = ["FitOptions", "collect_one", "derive_one", "fit_one", "progress_one"]
@@ -77,19 +79,12 @@ def collect_one(again: bool, run: Path) -> Summary:
 def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
     """Stiffness of a run; kept when table, plan and options are those it was made from."""
     from strainkit import __version__
-    from strainkit.collect.table import TABLE, load_table
-    from strainkit.fit.result import FITTED, fit_run
+    from strainkit.fit.result import FITTED
     from strainkit.run.files import atomic_write, checksum, dump_json, load_json
-    from strainkit.run.plan import MANIFEST, load_plan
+    from strainkit.run.plan import load_plan
     from strainkit.run.state import INPUTS
 
-    try:
-        inputs = (run / TABLE).read_bytes(), (run / MANIFEST).read_bytes()
-    except OSError:
-        load_plan(run)
-        load_table(run)
-        raise
-    digest = checksum(b"".join(inputs) + f"{options} {__version__}".encode())
+    digest = checksum(_inputs(run) + f"{options} {__version__}".encode())
     path = run / FITTED
     if not again and path.is_file():
         try:
@@ -98,10 +93,26 @@ def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
             data = {}
         if data.get(INPUTS) == digest:
             return _fitted(data) | {"kept": True}
-    result = fit_run(load_plan(run), load_table(run), options.order, options.noise, (), options.reading)
+    result = _fit(load_plan(run), run, options)
     data = result.to_dict(options.frame) | {INPUTS: digest}
     atomic_write(path, dump_json(data))
     return _fitted(data) | {"kept": False}
+
+
+def _inputs(run: Path) -> bytes:
+    """Everything that a fit of this run is made from; the table holds the checksums of the outputs behind ions.json."""
+    from strainkit.collect.table import TABLE
+    from strainkit.run.plan import MANIFEST
+
+    return b"".join((run / name).read_bytes() for name in (MANIFEST, TABLE) if (run / name).is_file())
+
+
+def _fit(plan: Plan, run: Path, options: FitOptions) -> Fit:
+    from strainkit.collect.table import load_table
+    from strainkit.fit.result import fit_run
+
+    table = load_table(run, ions=plan.ions == "clamped")
+    return fit_run(plan, table, options.order, options.noise, (), options.reading)
 
 
 def _fitted(data: dict[str, Any]) -> Summary:
@@ -129,15 +140,13 @@ def progress_one(queued: dict[str, dict[str, Queued]] | None, run: Path) -> Summ
 @_guarded
 def derive_one(options: FitOptions, run: Path) -> Summary:
     """Row of the screening table of a run; one without a tensor has its descriptors."""
-    from strainkit.collect.table import load_table
     from strainkit.derive.screen import screening_row
     from strainkit.errors import InputError, NoTensorError
-    from strainkit.fit.result import fit_run
     from strainkit.run.plan import load_plan
 
     plan = load_plan(run)
     try:
-        fit = fit_run(plan, load_table(run), options.order, options.noise, (), options.reading)
+        fit = _fit(plan, run, options)
     except (InputError, NoTensorError) as error:
         return {"row": screening_row(plan, None, error.what), "problem": error.what, "exit": error.exit_code}
     row = screening_row(plan, fit)
