@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 
 import typer
 
-from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver, note
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver, note
 
 if TYPE_CHECKING:
     from strainkit.run.plan import Plan
@@ -19,6 +19,14 @@ Aim = Annotated[
 ]
 Noise = Annotated[float, typer.Option(help="Stress noise to expect, GPa (standard deviation of one component).")]
 
+Cells = Annotated[
+    list[str] | None,
+    typer.Argument(
+        metavar="CELL...",
+        help="Structure file of the relaxed cell; none with --extend. Several files, a folder, a pattern in quotes or @FILE "
+        "(a list, one path a line) make a campaign: one run folder each, one job list.",
+    ),
+]
 Deck = Annotated[
     str | None, typer.Option(help="Input deck: qe, vasp, abinit, cp2k, castep, aims, gpaw, or your own folder or file.")
 ]
@@ -30,8 +38,9 @@ SchedulerName = Annotated[str | None, typer.Option(help="Job script for slurm, p
 
 
 def prepare(
-    cell: Annotated[Path | None, typer.Argument(help="Structure file of the relaxed cell; none with --extend.")] = None,
-    out: Annotated[Path | None, typer.Option(help="Run folder to make.")] = None,
+    cell: Cells = None,
+    out: Annotated[Path | None, typer.Option(help="Run folder to make, or campaign folder for several cells.")] = None,
+    campaign: Annotated[bool, typer.Option("--campaign", help="Make a campaign also of a single cell.")] = False,
     magnitude: Annotated[
         list[float] | None, typer.Option(help="Largest principal strain, percent; repeatable. [default: 1.0]")
     ] = None,
@@ -81,14 +90,17 @@ def prepare(
     symprec: Symprec = 1e-3,
     dry_run: Annotated[bool, typer.Option("--dry-run", help="Print the plan and write nothing.")] = False,
     force: Annotated[bool, typer.Option("--force", help="Move an existing run folder of another set aside.")] = False,
+    yes: Annotated[bool, typer.Option("--yes", help="Write a large campaign without asking.")] = False,
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
-    """Strained cells for one relaxed crystal: the fewest jobs that fix every constant."""
-    from strainkit.cli.calculate import chosen_calculation
+    """Strained cells for relaxed crystals: the fewest jobs that fix every constant."""
+    from strainkit.cli.calculate import check_calculation, chosen_calculation
     from strainkit.crystal.read import read_crystal
     from strainkit.design.strainset import Wish
     from strainkit.errors import UsageError
+    from strainkit.prepare.cells import is_one_cell
     from strainkit.prepare.runfolder import plan_run, plan_with_files, write_run
     from strainkit.prepare.writers import cell_formats
     from strainkit.present.terminal import plan_text
@@ -97,7 +109,7 @@ def prepare(
     cell_formats(format or [])
     magnitudes = tuple(m / 100.0 for m in magnitude or ())
     if extend is not None:
-        if cell is not None or out is not None or [more is not None, bool(magnitudes), finer is not None].count(True) != 1:
+        if cell or campaign or out is not None or [more is not None, bool(magnitudes), finer is not None].count(True) != 1:
             raise UsageError(
                 "--extend goes with one of --magnitude, --more and --finer",
                 "--extend",
@@ -107,14 +119,26 @@ def prepare(
             raise UsageError("--deck and its options are the run's own", "--extend", "Leave them out.")
         _extend(extend, magnitudes, more, finer, format, dry_run, json, quiet)
         return
-    if cell is None:
+    if not cell:
         raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
     if out is None and not dry_run:
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
-    plan = plan_run(
-        read_crystal(cell, read_as), wish, ions, symprec, atoms, symmetrize, displaced=displaced and ions == "clamped"
-    )
+    moved = displaced and ions == "clamped"
+    if campaign or not is_one_cell(cell):
+        if force_constants is not None:
+            raise UsageError("force constants belong to one crystal", "--force-constants", "Prepare that crystal alone.")
+        from strainkit.cli.prepare_campaign import prepare_campaign
+        from strainkit.prepare.campaign import Recipe
+        from strainkit.prepare.settings import read_settings
+
+        check_calculation(deck, settings, kspacing, scheduler)
+        chosen = read_settings(settings or [])
+        formats = None if format is None else tuple(format)
+        recipe = Recipe(wish, ions, symprec, atoms, symmetrize, moved, formats, deck, chosen, kspacing, scheduler, read_as)
+        prepare_campaign(cell, out, recipe, workers, dry_run, force, yes, json, quiet)
+        return
+    plan = plan_run(read_crystal(cell[0], read_as), wish, ions, symprec, atoms, symmetrize, displaced=moved)
     if force_constants is not None:
         if ions == "clamped":
             raise UsageError("clamped ions do not move", "--force-constants", "Give the file to strainkit fit afterwards.")
