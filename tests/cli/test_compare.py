@@ -32,7 +32,7 @@ def silicon_run(cli, folder, name, noise, seed, energy=-1.0):
     assert cli("prepare", write(folder, "POSCAR", SILICON), "--out", run).code == 0
     rng, exact = np.random.default_rng(seed), linear_law(mandel("Si_CRC"))
     plan = load_plan(run)
-    write_returns(run, plan, lambda strain: exact(strain) + noise * from_mandel(rng.standard_normal(6)))
+    write_returns(run, plan, lambda strain: exact(strain) + noise * from_mandel(rng.standard_normal(6)), energy=energy)
     write_return(
         run / job_folder("reference"), plan.crystal, np.zeros((3, 3)), energy=energy, engine="lj epsilon=1.0 fmax=0.0002"
     )
