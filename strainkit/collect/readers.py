@@ -126,10 +126,13 @@ def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Ret
     source = read_source(path, within)
     problems: list[tuple[str, str]] = []
     try:
-        if reader.end_mark is not None and not reader.end_mark.search(source.text):
-            problems.append(("unfinished", f"the {reader.program} output has no end-of-job mark"))
-        problems += [(status, message) for mark, status, message in reader.bad_marks if mark.search(source.text)]
-        return _assemble(reader, reader.load(source), problems)
+        try:
+            loaded = reader.load(source)
+        finally:
+            problems += _marks(reader, source.text if reader.end_mark or reader.bad_marks else "")
+        if isinstance(run := getattr(loaded, "text", loaded), str):
+            problems = _marks(reader, run)  # of the last run in the file
+        return _assemble(reader, loaded, problems)
     except Exception as error:  # damaged files make the libraries below raise anything
         if problems:
             raise InputError(problems[0][1], printable(path)) from None
@@ -137,11 +140,21 @@ def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Ret
         raise InputError(f"not readable as {reader.program}: {reason}", printable(path)) from None
 
 
+def _marks(reader: Reader, text: str) -> list[tuple[str, str]]:
+    """The end-of-job mark that is missing and the bad marks that are there."""
+    problems = [(status, message) for mark, status, message in reader.bad_marks if mark.search(text)]
+    if reader.end_mark is not None and not reader.end_mark.search(text):
+        problems.insert(0, ("unfinished", f"the {reader.program} output has no end-of-job mark"))
+    return problems
+
+
 def _assemble(reader: Reader, loaded: Any, problems: list[tuple[str, str]]) -> Returned:
     geometry = reader.geometry(loaded)
     _check(geometry)
     stress, energy, forces = reader.stress(loaded), reader.energy(loaded), reader.forces(loaded)
-    problems += [doubt for doubt in reader.doubts(loaded) if doubt not in problems]
+    for doubt in reader.doubts(loaded):
+        if not any(message.startswith(doubt[1]) for _, message in problems):  # "ions not relaxed: too few steps" says more
+            problems.append(doubt)
     if stress is None:
         problems.append(("unfinished", "no stress in the output"))
     else:

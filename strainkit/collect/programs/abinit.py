@@ -95,7 +95,8 @@ def geometry(text: str) -> Geometry:
     positions = (
         np.zeros((count, 3)) if fractions is None and count == 1 else _needed(after, "xred", 3 * count).reshape(count, 3)
     )
-    precision = 0.5e-10 * float(np.abs(lattice).max()) * Bohr
+    # the value of one bohr differs in the ninth digit between ABINIT and ASE
+    precision = 5e-9 * float(np.abs(lattice).max()) * Bohr
     return Geometry(lattice * Bohr, positions, np.rint(charges[types - 1]).astype(np.int64), precision)
 
 

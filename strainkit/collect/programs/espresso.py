@@ -130,7 +130,7 @@ def doubts(text: str) -> Problems:
     threshold, reached = found(_THRESHOLD, text, "scf threshold"), last_number(_ACCURACY, text)
     if reached is None or reached > 1.01 * number(threshold[1]):
         problems.append(("unconverged", _SCF))
-    if "BFGS Geometry Optimization" in text and "bfgs converged" not in text:
+    if "force convergence thresh." in text and "bfgs converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))
     ends = text.find("Begin final coordinates")
     stepped = last(_MOVED, text[:ends] if ends > 0 else text)
