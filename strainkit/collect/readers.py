@@ -24,7 +24,7 @@ from strainkit.collect.programs import (
     through_ase,
     vasprun,
 )
-from strainkit.collect.programs.through_ase import atoms_from_copy, atoms_from_text
+from strainkit.collect.programs.through_ase import atoms_from_copy, atoms_from_text, last_frame
 from strainkit.collect.returned import Geometry, Reader, Returned, Stress
 from strainkit.collect.source import Source, file_head, printable, read_source
 from strainkit.errors import InputError
@@ -77,7 +77,7 @@ READERS: tuple[Reader, ...] = (
     Reader(
         "extended XYZ",
         _extxyz,
-        atoms_from_text("extxyz"),
+        last_frame,
         **_ASE,
         bad_marks=((re.compile(r"\bconverged=F\b"), "unconverged", "the ions were not relaxed to the tolerance"),),
         checked="run",
@@ -129,7 +129,7 @@ def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Ret
         try:
             loaded = reader.load(source)
         finally:
-            problems += _marks(reader, source.text if reader.end_mark or reader.bad_marks else "")
+            problems += _marks(reader, source.free_text if reader.end_mark or reader.bad_marks else "")
         if isinstance(run := getattr(loaded, "text", loaded), str):
             problems = _marks(reader, run)  # of the last run in the file
         return _assemble(reader, loaded, problems)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from functools import lru_cache
+from math import isfinite
 
 import numpy as np
 from ase.data import atomic_numbers
@@ -13,12 +14,15 @@ from strainkit.tensors.arrays import FloatArray, IntArray
 __all__ = ["NUMBER", "elements", "found", "fractional", "last", "last_number", "lines_after", "number", "rows", "symmetric"]
 
 #: one printed number
-NUMBER = r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eEdD][-+]?\d+)?"
+NUMBER = r"[-+]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eEdD][-+]?\d+)?"
 
 
 def number(word: str) -> float:
-    """A printed number, with Fortran's D exponents."""
-    return float(word.replace("D", "E").replace("d", "e"))
+    """A printed number, with Fortran's D exponents; ValueError when it is beyond any floating-point number."""
+    value = float(word.replace("D", "E").replace("d", "e"))
+    if not isfinite(value):
+        raise ValueError(f"{word[:20]} cannot be read as a finite number")
+    return value
 
 
 def last(pattern: re.Pattern[str], text: str, start: int = 0) -> re.Match[str] | None:

@@ -58,9 +58,9 @@ def _after(text: str) -> str:
 
 def _variable(text: str, name: str, count: int) -> FloatArray | None:
     """A variable of the final list, exactly `count` numbers; None when it is not in the list."""
-    match = re.search(rf"^\s+{name}((?:\s+{NUMBER}){{{count}}})\s+(?![-+]?\.?\d)", text, re.M)
+    match = re.search(rf"^ +{name}((?:\s+{NUMBER}){{{count}}})\s+(?![-+]?\.?\d)", text, re.M)
     if match is None:
-        if re.search(rf"^\s+{name}\s", text, re.M):
+        if re.search(rf"^ +{name}\s", text, re.M):
             raise ValueError(f"{name} cannot be read")
         return None
     return np.array([number(word) for word in match[1].split()])

@@ -39,9 +39,9 @@ BAD_MARKS = (
 _COUNT = re.compile(r"number of atoms/cell\s+=\s+(\d+)\s*$", re.M)
 _ALAT = re.compile(rf"celldm\(1\)=\s*({NUMBER})\s+celldm")
 _AXES = "crystal axes: (cart. coord. in units of alat)"
-_CELL = re.compile(rf"^CELL_PARAMETERS\s+[({{]?\s*(?:alat\s*=\s*({NUMBER})|(angstrom)|(bohr))\s*[)}}]?\s*$", re.M)
+_CELL = re.compile(rf"^CELL_PARAMETERS +[({{]?(?:alat *= *({NUMBER})|(angstrom)|(bohr))[)}}]? *$", re.M)
 _SITES = re.compile(r"^ +site n\. +atom +positions \((alat) units\)", re.M)
-_MOVED = re.compile(r"^ATOMIC_POSITIONS\s+[({]?\s*(alat|bohr|angstrom|crystal)\s*[)}]?\s*$", re.M)
+_MOVED = re.compile(r"^ATOMIC_POSITIONS +[({]?(alat|bohr|angstrom|crystal)[)}]? *$", re.M)
 _SITE = re.compile(rf"\s+\d+\s+(\S+)\s+tau\(\s*\d+\s*\)\s+=\s+\(\s*({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+\)\s*\Z")
 _ATOM = re.compile(rf"\s*(\S+)\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})(?:\s+[01]\s+[01]\s+[01])?\s*\Z")
 _ENERGY = re.compile(rf"^!!?\s+total energy\s+=\s+({NUMBER}) Ry\s*$", re.M)
@@ -130,7 +130,8 @@ def doubts(text: str) -> Problems:
     threshold, reached = found(_THRESHOLD, text, "scf threshold"), last_number(_ACCURACY, text)
     if reached is None or reached > 1.01 * number(threshold[1]):
         problems.append(("unconverged", _SCF))
-    if "force convergence thresh." in text and "bfgs converged" not in text:
+    relaxing = "force convergence thresh." in text or "BFGS Geometry Optimization" in text
+    if relaxing and "bfgs converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))
     ends = text.find("Begin final coordinates")
     stepped = last(_MOVED, text[:ends] if ends > 0 else text)
@@ -142,7 +143,7 @@ def doubts(text: str) -> Problems:
 
 _SETTINGS = {
     "cutoff_Ry": re.compile(rf"kinetic-energy cutoff\s+=\s+({NUMBER})\s+Ry"),
-    "functional": re.compile(r"Exchange-correlation\s*=\s*(.+?)\s*$", re.M),
+    "functional": re.compile(r"Exchange-correlation *= *(\S.*?) *$", re.M),
     "kpoint_count": re.compile(r"number of k points=\s+(\d+)"),
     "smearing": re.compile(r"number of k points= +\d+ +(\S.*?) *$", re.M),
     "dispersion": re.compile(r"(DFT-D3|DFT-D|MBD|XDM|Tkatchenko-Scheffler) (?:Dispersion|dispersion|energy|correction)"),

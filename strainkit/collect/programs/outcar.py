@@ -124,8 +124,9 @@ def doubts(text: str) -> Problems:
 
 
 def settings(text: str) -> Settings:
+    method, width = int(_parameter(text, "ISMEAR", 1)), _parameter(text, r"ISMEAR = +-?\d+; +SIGMA", 0.2)
     result: dict[str, str | float | tuple[float, ...]] = {
-        "smearing": f"ISMEAR {int(_parameter(text, 'ISMEAR', 1))}, {_parameter(text, '.*SIGMA', 0.2):.4g} eV",
+        "smearing": f"ISMEAR {method}, {width:.4g} eV",
         "spin": "polarised" if _parameter(text, "ISPIN", 1) == 2 else "none",
     }
     if cutoff := _parameter(text, "ENCUT", 0.0):
