@@ -159,6 +159,8 @@ def _assemble(reader: Reader, loaded: Any, problems: list[tuple[str, str]]) -> R
         problems.append(("unfinished", "no stress in the output"))
     else:
         problems += _disagreement(stress)
+    if energy is None and reader.end_mark is not None and not problems:
+        problems.append(("broken", "no energy in the output"))
     if energy is not None and not np.isfinite(energy):
         problems.append(("broken", "the energy is not a finite number"))
     if forces is not None and (forces.shape != geometry.positions.shape or not np.isfinite(forces).all()):

@@ -8,7 +8,19 @@ import numpy as np
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, lines_after, number, rows, symmetric
+from strainkit.collect.text import (
+    NUMBER,
+    elements,
+    found,
+    fractional,
+    last,
+    last_number,
+    lines_after,
+    needed,
+    number,
+    rows,
+    symmetric,
+)
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import EV_PER_A3_IN_GPA
 
@@ -61,7 +73,7 @@ def stress(text: str) -> Stress | None:
     heading = last(_STRESS, text)
     if heading is None:
         return None
-    matrix = rows(text, heading.start(), 3, r"\|...[xyz]...#...#...#...\|", "stress", skip=4)
+    matrix = rows(text, heading.start(), 3, r"\|...@...#...#...#...\|", "stress", 4, "xyz")
     pressure = _PRESSURE.search(text, heading.start())
     if pressure is None or abs(np.trace(matrix) / 3 + number(pressure[1])) > 1.1e-8:
         raise ValueError("the stress does not agree with the pressure printed below it")
@@ -70,12 +82,14 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Electronic free energy, with the dispersion correction where there is one."""
-    return last_number(re.compile(rf"^ *\| Electronic free energy +: +(?:{NUMBER} Ha +)?({NUMBER}) eV\s*$", re.M), text)
+    cycle = max(text.rfind("Begin self-consistency loop"), 0)
+    value = last_number(re.compile(rf"^ *\| Electronic free energy +: +(?:{NUMBER} Ha +)?({NUMBER}) eV\s*$", re.M), text, cycle)
+    return needed(value, "electronic free energy")
 
 
 def forces(text: str) -> FloatArray | None:
     start = text.rfind("Total atomic forces (unitary forces")
-    return None if start < 0 else rows(text, start, _atom_count(text), r"\|...\d+...#...#...#", "forces")
+    return None if start < 0 else rows(text, start, _atom_count(text), r"\|...@...#...#...#", "forces")
 
 
 def doubts(text: str) -> Problems:

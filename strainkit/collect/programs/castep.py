@@ -80,7 +80,7 @@ def stress(text: str) -> Stress | None:
     if unit is None or unit[1] != "GPa":
         raise ValueError("the unit of the stress is not GPa")
     body = text.find(" x             y             z", heading.start())
-    matrix = rows(text, body, 3, r"\*...[xyz]...#...#...#...\*", "stress", skip=1) if body > 0 else np.zeros((0, 3))
+    matrix = rows(text, body, 3, r"\*...@...#...#...#...\*", "stress", 1, "xyz") if body > 0 else np.zeros((0, 3))
     pressure = _PRESSURE.search(text, heading.start())
     if not len(matrix) or pressure is None or abs(np.trace(matrix) / 3 + number(pressure[1])) > 1.1e-4:
         raise ValueError("the stress does not agree with the pressure printed below it")
@@ -89,8 +89,9 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Free energy, with the dispersion correction where there is one."""
-    value = last_number(_FREE, text)
-    return last_number(_FINAL, text) if value is None else value
+    cycle = max(text.rfind("<-- SCF"), 0)
+    value = last_number(_FREE, text, cycle)
+    return last_number(_FINAL, text, cycle) if value is None else value
 
 
 def forces(text: str) -> FloatArray | None:

@@ -15,7 +15,19 @@ from ase.units import Bohr, Hartree
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source, read_source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, lines_after, number, rows, symmetric
+from strainkit.collect.text import (
+    NUMBER,
+    elements,
+    found,
+    fractional,
+    last,
+    last_number,
+    lines_after,
+    needed,
+    number,
+    rows,
+    symmetric,
+)
 from strainkit.errors import InputError
 from strainkit.tensors.arrays import FloatArray
 
@@ -40,7 +52,9 @@ _VECTOR = re.compile(
 )
 _ANGLE = re.compile(rf"^ CELL\| Angle .*\[degree\]: *({NUMBER})\s*$", re.M)
 _SITES = re.compile(r"^ MODULE QUICKSTEP:\s+ATOMIC COORDINATES IN ANGSTROM\s*$", re.M | re.I)
-_SITE = re.compile(rf"\s+\d+\s+\d+\s+([A-Z][a-z]?)\s+\d+\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s*\Z")
+_SITE = re.compile(
+    rf"\s+(\d+)\s+\d+\s+([A-Z][a-z]?)\s+\d+\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s*\Z"
+)
 _ENERGY = re.compile(rf"^ ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[\S+?\]:? +({NUMBER})\s*$", re.M)
 _STRESS = re.compile(r"^ STRESS\| Analytical stress tensor \[GPa\]\s*$|^ STRESS TENSOR \[GPa\]\s*$", re.M)
 _FORCES = re.compile(r"^ ATOMIC FORCES in \[a\.u\.\]\s*$|^ FORCES\| Atomic forces \[hartree/bohr\]\s*$", re.M)
@@ -135,11 +149,11 @@ def geometry(output: Output) -> Geometry:
     if heading is None:
         raise ValueError("no atomic coordinates")
     lines = [line for line in lines_after(text, heading.start(), count + 3) if line.strip() and "Element" not in line][:count]
-    sites = [match for line in lines if (match := _SITE.match(line))]
+    sites = [match for row, line in enumerate(lines) if (match := _SITE.match(line)) and match[1] == str(row + 1)]
     if len(sites) != count:
         raise ValueError("the atomic coordinates cannot be read")
-    numbers = elements([site[1] for site in sites])
-    positions = fractional(np.array([[number(site[i]) for i in (2, 3, 4)] for site in sites]), lattice)
+    numbers = elements([site[2] for site in sites])
+    positions = fractional(np.array([[number(site[i]) for i in (3, 4, 5)] for site in sites]), lattice)
     moved = _STEP.search(text) is not None
     final = _restart_positions(restart, count, lattice) if moved else None
     return Geometry(lattice, positions if final is None else final, numbers, precision, not moved or final is not None)
@@ -164,7 +178,7 @@ def stress(output: Output) -> Stress | None:
     start = heading.start() + 1
     older = "STRESS|" not in heading[0]
     mark = "" if older else r"STRESS\| +"
-    matrix = rows(output.text, start, 3, mark + r"[xyzXYZ]...#...#...#", "stress", skip=2 if older else 1)
+    matrix = rows(output.text, start, 3, mark + "@...#...#...#", "stress", 2 if older else 1, "XYZ" if older else "xyz")
     if not older:
         trace = last_number(re.compile(rf"^ STRESS\| 1/3 Trace +({NUMBER})\s*$", re.M), output.text, start)
         if trace is None or abs(np.trace(matrix) / 3 - trace) > 1e-6 * np.abs(matrix).max() + 1e-9:
@@ -174,8 +188,8 @@ def stress(output: Output) -> Stress | None:
 
 def energy(output: Output) -> float | None:
     """The energy that the forces belong to: the free energy where there is smearing."""
-    value = last_number(_ENERGY, output.text)
-    return None if value is None else value * Hartree
+    cycle = last(_CYCLE, output.text)
+    return float(needed(last_number(_ENERGY, output.text, cycle.start() if cycle else 0), "total energy") * Hartree)
 
 
 def forces(output: Output) -> FloatArray | None:
@@ -184,7 +198,7 @@ def forces(output: Output) -> FloatArray | None:
         return None
     count = int(found(re.compile(r"- Atoms: +(\d+)\s*$", re.M), output.text, "number of atoms")[1])
     newer = "FORCES|" in heading[0]
-    form = rf"FORCES\| +\d+...#...#...#...{NUMBER}" if newer else r"\d+...\d+...[A-Z][a-z]?...#...#...#"
+    form = rf"FORCES\| +@...#...#...#...{NUMBER}" if newer else r"@...\d+...[A-Z][a-z]?...#...#...#"
     values = rows(output.text, heading.start(), count, form, "forces", skip=1 if newer else 2)
     return np.asarray(values * Hartree / Bohr)
 
@@ -197,8 +211,10 @@ def doubts(output: Output) -> Problems:
         problems.append(("unconverged", "electronic steps did not converge"))
     if re.search(r"STARTING (GEOMETRY|CELL) OPTIMIZATION", text) and "GEOMETRY OPTIMIZATION COMPLETED" not in text:
         problems.append(("unconverged", "ions not relaxed"))
-    printed, again = last(_STRESS, text), last(_CYCLE, text)
-    if printed and again and again.start() > printed.start() and "Reevaluating energy at the minimum" not in text:
+    # once the ions are relaxed, CP2K computes the energy again, but neither forces nor stress
+    moving = text[: text.find("Reevaluating energy at the minimum")] if "Reevaluating energy" in text else text
+    printed, again = last(_STRESS, text), last(_CYCLE, moving)
+    if printed and again and again.start() > printed.start():
         problems.append(("unfinished", "the stress is of an earlier ionic step than the last geometry"))
     return tuple(problems)
 

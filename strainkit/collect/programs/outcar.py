@@ -91,7 +91,7 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Free energy TOTEN of the last ionic step."""
-    heading = text.rfind("FREE ENERGIE OF THE ION-ELECTRON SYSTEM")
+    heading = text.find("FREE ENERGIE OF THE ION-ELECTRON SYSTEM", max(text.rfind(" Iteration "), 0))
     return None if heading < 0 else last_number(_ENERGY, text, heading)
 
 

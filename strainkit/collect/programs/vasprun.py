@@ -133,7 +133,9 @@ def stress(document: Document) -> Stress | None:
 
 def energy(document: Document) -> float | None:
     """The free energy of the last ionic step."""
-    return document.energies[-1] if document.energies and np.isfinite(document.energies[-1]) else None
+    if not document.energies or not np.isfinite(document.energies[-1]):
+        raise ValueError("no free energy in the last ionic step")
+    return document.energies[-1]
 
 
 def forces(document: Document) -> FloatArray | None:
