@@ -27,7 +27,7 @@ __all__ = [
     "version",
 ]
 
-END_MARK = re.compile(r"^ *Calculation completed\.", re.M)
+END_MARK = re.compile(r"Calculation completed\.")
 BAD_MARKS = ((re.compile(r"was not enough Broyd/MD steps to converge"), "unconverged", "ions not relaxed: too few steps"),)
 _AFTER = "-outvars: echo values of variables after computation"
 _BLOCK = r"-? *sigma\({0} {0}\)= *#...sigma\({1}\)= *#"
@@ -58,9 +58,9 @@ def _after(text: str) -> str:
 
 def _variable(text: str, name: str, count: int) -> FloatArray | None:
     """A variable of the final list, exactly `count` numbers; None when it is not in the list."""
-    match = re.search(rf"^ +{name}((?:\s+{NUMBER}){{{count}}})\s+(?![-+]?\.?\d)", text, re.M)
+    match = re.search(rf" {name}((?:\s+{NUMBER}){{{count}}})\s+(?![-+]?\.?\d)", text)
     if match is None:
-        if re.search(rf"^ +{name}\s", text, re.M):
+        if re.search(rf" {name}\s", text):
             raise ValueError(f"{name} cannot be read")
         return None
     return np.array([number(word) for word in match[1].split()])
@@ -75,7 +75,7 @@ def _needed(text: str, name: str, count: int) -> FloatArray:
 
 def _atom_count(text: str) -> int:
     """From the head of the output; the final list has it too, but for a single atom."""
-    count = int(found(re.compile(r"^ +natom = +(\d+) ", re.M), text, "number of atoms")[1])
+    count = int(found(re.compile(r" natom = +(\d+) "), text, "number of atoms")[1])
     value = _variable(_after(text), "natom", 1)
     if int(value[0] if value is not None else 1) != count:
         raise ValueError("natom is printed twice and differs")
@@ -159,7 +159,7 @@ def doubts(text: str) -> Problems:
     """The words about the last electronic cycle, and the words of a finished relaxation."""
     problems = []
     cycle = text[max(text.rfind("SELF-CONSISTENT-FIELD CONVERGENCE"), 0) :]
-    if "not enough SCF cycles to converge" in cycle or not re.search(r"^ At SCF step +\d+.*converged", cycle, re.M):
+    if "not enough SCF cycles to converge" in cycle or not re.search(r" At SCF step +\d+.*converged", cycle):
         problems.append(("unconverged", "electronic steps did not converge"))
     if "=== [ionmov=" in text and "gradients are converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))

@@ -26,9 +26,9 @@ from strainkit.units import EV_PER_A3_IN_GPA
 
 END_MARK = re.compile(r"Have a nice day\.")
 BAD_MARKS = ((re.compile(r"Self-consistency cycle not converged"), "unconverged", "electronic steps did not converge"),)
-_STRESS = re.compile(r"^ *\| +(?:(?:Analytical|Numerical) stress tensor - Symmetrized|Numerical stress tensor) +\|\s*$", re.M)
+_STRESS = re.compile(r" stress tensor(?: - Symmetrized)? +\| *\n")
 _PRESSURE = re.compile(rf"^ *\| +Pressure: +({NUMBER}) +\[eV/A\*\*3\] +\|\s*$", re.M)
-_MOVED = re.compile(r"^ *(?:Updated|Final) atomic structure:\s*$", re.M)
+_MOVED = re.compile(r" (?:Updated|Final) atomic structure: *\n")
 _AXIS = re.compile(rf"^ *lattice_vector +({NUMBER}) +({NUMBER}) +({NUMBER})\s*$", re.M)
 _ATOM = re.compile(rf"^ *atom +({NUMBER}) +({NUMBER}) +({NUMBER}) +(\S+)\s*$", re.M)
 _SITE = re.compile(rf"\s*\| *\d+: Species (\S+) +({NUMBER}) +({NUMBER}) +({NUMBER})\s*\Z")
@@ -83,7 +83,7 @@ def stress(text: str) -> Stress | None:
 def energy(text: str) -> float | None:
     """Electronic free energy, with the dispersion correction where there is one."""
     cycle = max(text.rfind("Begin self-consistency loop"), 0)
-    value = last_number(re.compile(rf"^ *\| Electronic free energy +: +(?:{NUMBER} Ha +)?({NUMBER}) eV\s*$", re.M), text, cycle)
+    value = last_number(re.compile(rf"\| Electronic free energy +: +(?:{NUMBER} Ha +)?({NUMBER}) eV\s*$", re.M), text, cycle)
     return needed(value, "electronic free energy")
 
 
@@ -100,16 +100,16 @@ def doubts(text: str) -> Problems:
     if "Geometry optimization: Attempting to predict" in text and "Present geometry is converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))
     printed = last(_STRESS, text)
-    if printed and "Numerical" not in printed[0] and printed.start() < cycle:
+    if printed and "Numerical" not in text[printed.start() - 10 : printed.start()] and printed.start() < cycle:
         problems.append(("unfinished", "the stress is of an earlier ionic step than the last one begun"))
     return tuple(problems)
 
 
 _SETTINGS = {
-    "functional": re.compile(r"^ *XC: +(?:Using )?(.*?)\.? *$", re.M),
-    "kpoints": re.compile(r"^ *Found k-point grid: +(\d+ +\d+ +\d+)", re.M),
+    "functional": re.compile(r" XC: +(?:Using )?(.*?)\.? *$", re.M),
+    "kpoints": re.compile(r" Found k-point grid: +(\d+ +\d+ +\d+)", re.M),
     "kpoint_count": re.compile(r"\| Number of k-points +: +(\d+)"),
-    "smearing": re.compile(r"^ *Occupation type: +(.*?)\.? *$", re.M),
+    "smearing": re.compile(r" Occupation type: +(.*?)\.? *$", re.M),
     "dispersion": re.compile(r"(Tkatchenko-Scheffler|many-body dispersion|MBD)"),
 }
 

@@ -25,7 +25,7 @@ __all__ = [
     "version",
 ]
 
-END_MARK = re.compile(r"^Total time +=", re.M)
+END_MARK = re.compile(r"Total time +=")
 BAD_MARKS = (
     (
         re.compile(r"SCF cycles performed but system has not reached|electronic minimi[sz]ation.* has not converged"),
@@ -36,11 +36,11 @@ BAD_MARKS = (
     (re.compile(r"Starting MD iteration"), "unconverged", "ions moved by dynamics"),
 )
 _BANNER = b"CCC   AA    SSS  TTTTT  EEEEE  PPPP"
-_AXES = re.compile(r"^ +Real Lattice\(A\) +Reciprocal Lattice\(1/A\)\s*$", re.M)
-_SITES = re.compile(r"x +Element +Atom +Fractional coordinates of atoms +x\s*$", re.M)
+_AXES = re.compile(r" Real Lattice\(A\) +Reciprocal Lattice\(1/A\) *\n")
+_SITES = re.compile(r" Fractional coordinates of atoms +x *\n")
 _SITE = re.compile(rf"\s*x +([A-Z][a-z]?)\S* +\d+ +({NUMBER}) +({NUMBER}) +({NUMBER}) +x\s*\Z")
-_STRESS = re.compile(r"^ \*+ (?:Symmetrised )?Stress Tensor \*+\s*$", re.M)
-_FORCES = re.compile(r"^ \*+ (?:Symmetrised |Constrained )*Forces \*+\s*$", re.M)
+_STRESS = re.compile(r" Stress Tensor \*+ *\n")
+_FORCES = re.compile(r" Forces \*+ *\n")
 _FREE = re.compile(rf"^ *(?:Dispersion corrected final|Final) free energy \(E-TS\) *= +({NUMBER}) +eV\s*$", re.M)
 _FINAL = re.compile(rf"^ *(?:Dispersion corrected final energy\*?|Final energy(?:, E)?) *= +({NUMBER}) +eV\s*$", re.M)
 _PRESSURE = re.compile(rf"\* +Pressure: +({NUMBER}) +\*\s*$", re.M)
@@ -114,7 +114,7 @@ def doubts(text: str) -> Problems:
 
 
 _SETTINGS = {
-    "functional": re.compile(r"^ using functional +: (.*?) *$", re.M),
+    "functional": re.compile(r" using functional +: (.*?) *$", re.M),
     "dispersion": re.compile(r"dispersion correction +: (\S.*?) *$", re.M),
     "smearing": re.compile(r"smearing scheme +: (\S.*?) *$", re.M),
     "kpoints": re.compile(r"MP grid size for SCF calculation is +(\d+ +\d+ +\d+)"),

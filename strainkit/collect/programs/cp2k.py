@@ -48,16 +48,16 @@ __all__ = [
 END_MARK = re.compile(r"PROGRAM ENDED AT")
 BAD_MARKS = ((re.compile(r"MAXIMUM NUMBER OF OPTIMIZATION STEPS REACHED"), "unconverged", "ions not relaxed: too few steps"),)
 _VECTOR = re.compile(
-    rf"^ CELL\| Vector ([abc]) \[angstrom\]: *({NUMBER}) +({NUMBER}) +({NUMBER}) +\|\1\| += *({NUMBER})\s*$", re.M
+    rf" CELL\| Vector ([abc]) \[angstrom\]: *({NUMBER}) +({NUMBER}) +({NUMBER}) +\|\1\| += *({NUMBER})\s*$", re.M
 )
-_ANGLE = re.compile(rf"^ CELL\| Angle .*\[degree\]: *({NUMBER})\s*$", re.M)
-_SITES = re.compile(r"^ MODULE QUICKSTEP:\s+ATOMIC COORDINATES IN ANGSTROM\s*$", re.M | re.I)
+_ANGLE = re.compile(rf" CELL\| Angle .*\[degree\]: *({NUMBER})\s*$", re.M)
+_SITES = re.compile(r" MODULE QUICKSTEP: +ATOMIC COORDINATES IN (?:ANGSTROM|angstrom) *\n")
 _SITE = re.compile(
     rf"\s+(\d+)\s+\d+\s+([A-Z][a-z]?)\s+\d+\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s*\Z"
 )
-_ENERGY = re.compile(rf"^ ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[\S+?\]:? +({NUMBER})\s*$", re.M)
-_STRESS = re.compile(r"^ STRESS\| Analytical stress tensor \[GPa\]\s*$|^ STRESS TENSOR \[GPa\]\s*$", re.M)
-_FORCES = re.compile(r"^ ATOMIC FORCES in \[a\.u\.\]\s*$|^ FORCES\| Atomic forces \[hartree/bohr\]\s*$", re.M)
+_ENERGY = re.compile(rf" ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[\S+?\]:? +({NUMBER})\s*$", re.M)
+_STRESS = re.compile(r" STRESS(?:\| Analytical stress tensor| TENSOR) \[GPa\] *\n")
+_FORCES = re.compile(r" (?:ATOMIC FORCES in \[a\.u\.\]|FORCES\| Atomic forces \[hartree/bohr\]) *\n")
 _SCF = re.compile(r"SCF run (NOT )?converged")
 _CYCLE = re.compile(r"SCF WAVEFUNCTION OPTIMIZATION")
 _STEP = re.compile(r"OPTIMIZATION STEP:\s+(\d+)\s*$", re.M)
@@ -95,7 +95,7 @@ def _beside(output: Output, name: str) -> str:
 
 def _restart(output: Output) -> str:
     """The restart file, if it was written by this run at its last step."""
-    project = re.search(r"^ GLOBAL\| Project name +(\S+)$", output.text, re.M)
+    project = re.search(r" GLOBAL\| Project name +(\S+)$", output.text, re.M)
     text = _beside(output, f"{project[1]}-1.restart") if project else ""
     written = re.search(rf"# current date {_TIME}", text)
     start, end = re.search(rf"PROGRAM STARTED AT +{_TIME}", output.text), re.search(rf"PROGRAM ENDED AT +{_TIME}", output.text)
@@ -137,7 +137,7 @@ def geometry(output: Output) -> Geometry:
     text = output.text
     printed = _printed_cell(text)
     restart = _restart(output)
-    named = re.search(r"^ CP2K\| Input file name +(\S+)$", text, re.M)
+    named = re.search(r" CP2K\| Input file name +(\S+)$", text, re.M)
     lattice, precision = printed, _ROUNDING
     for other in (restart, _beside(output, named[1]) if named else ""):
         cell = _cell_of(other)
@@ -175,12 +175,12 @@ def stress(output: Output) -> Stress | None:
     heading = last(_STRESS, output.text)
     if heading is None:
         return None
-    start = heading.start() + 1
+    start = heading.start()
     older = "STRESS|" not in heading[0]
     mark = "" if older else r"STRESS\| +"
     matrix = rows(output.text, start, 3, mark + "@...#...#...#", "stress", 2 if older else 1, "XYZ" if older else "xyz")
     if not older:
-        trace = last_number(re.compile(rf"^ STRESS\| 1/3 Trace +({NUMBER})\s*$", re.M), output.text, start)
+        trace = last_number(re.compile(rf" STRESS\| 1/3 Trace +({NUMBER})\s*$", re.M), output.text, start)
         if trace is None or abs(np.trace(matrix) / 3 - trace) > 1e-6 * np.abs(matrix).max() + 1e-9:
             raise ValueError("the stress does not agree with the trace printed below it")
     return Stress(symmetric(-matrix, 1e-5 * float(np.abs(matrix).max()) + 1e-7))
@@ -220,7 +220,7 @@ def doubts(output: Output) -> Problems:
 
 
 _SETTINGS = {
-    "functional": re.compile(r"^ FUNCTIONAL\| (\S+?):", re.M),
+    "functional": re.compile(r" FUNCTIONAL\| (\S+?):"),
     "smearing": re.compile(r"Smear method: +(\S+)"),
     "dispersion": re.compile(r"vdW POTENTIAL\| +(DFT-D\S+)"),
     "kpoints": re.compile(r"BRILLOUIN\| K-Point grid +(\d+ +\d+ +\d+)"),

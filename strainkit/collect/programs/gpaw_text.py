@@ -41,11 +41,11 @@ __all__ = [
     "version",
 ]
 
-END_MARK = re.compile(r"^Total: +[\d.]+ +100\.0%\s*\n(?:.*\n){0,4}Date: ", re.M)
+END_MARK = re.compile(r"\nTotal: +[\d.]+ +100\.0% *\n(?:.*\n){0,4}Date: ")
 BAD_MARKS: tuple[tuple[re.Pattern[str], str, str], ...] = ()
-_BANNER = re.compile(r"^ \|__ \|  _\|___\|_____\| +(\S+) *$", re.M)
+_BANNER = re.compile(r" \|__ \|  _\|___\|_____\| +(\S+) *\n")
 _SITE = re.compile(rf"\s*(\d+) +([A-Z][a-z]?) +({NUMBER}) +({NUMBER}) +({NUMBER})(?: +\(.*\))?\s*\Z")
-_CYCLE = re.compile(r"^iter: +1 ", re.M)
+_CYCLE = re.compile(r"\niter: +1 ")
 
 
 def recognises(head: bytes) -> bool:
@@ -60,7 +60,7 @@ def load(source: Source) -> str:
 
 
 def _atom_count(text: str) -> int:
-    return int(found(re.compile(r"^Number of atoms: (\d+)\s*$", re.M), text, "number of atoms")[1])
+    return int(found(re.compile(r"\nNumber of atoms: (\d+) *\n"), text, "number of atoms")[1])
 
 
 def geometry(text: str) -> Geometry:
@@ -88,7 +88,7 @@ def stress(text: str) -> Stress | None:
 def energy(text: str) -> float | None:
     """Free energy, relative to the reference atoms as GPAW gives it everywhere."""
     cycle = last(_CYCLE, text)
-    return last_number(re.compile(rf"^Free energy: +({NUMBER})\s*$", re.M), text, cycle.start() if cycle else 0)
+    return last_number(re.compile(rf"\nFree energy: +({NUMBER}) *\n"), text, cycle.start() if cycle else 0)
 
 
 def forces(text: str) -> FloatArray | None:
@@ -104,7 +104,7 @@ def forces(text: str) -> FloatArray | None:
 def doubts(text: str) -> Problems:
     problems = []
     cycle = last(_CYCLE, text)
-    if cycle is None or not re.compile(r"^Converged after \d+ iterations", re.M).search(text, cycle.start()):
+    if cycle is None or not re.compile(r"\nConverged after \d+ iterations").search(text, cycle.start()):
         problems.append(("unconverged", "electronic steps did not converge"))
     moved = text.rfind("\nPositions:")
     if 0 <= text.rfind("\nStress tensor:") < moved:
@@ -115,10 +115,10 @@ def doubts(text: str) -> Problems:
 
 
 _SETTINGS = {
-    "kpoint_count": re.compile(r"^(\d+) k-points? in the [Ii]rreducible", re.M),
-    "kpoints": re.compile(r"^\d+ k-points?: (\d+ x \d+ x \d+)", re.M),
+    "kpoint_count": re.compile(r"\n(\d+) k-points? in the [Ii]rreducible"),
+    "kpoints": re.compile(r"\n\d+ k-points?: (\d+ x \d+ x \d+)"),
     "functional": re.compile(r"Using the (\S+) Exchange-Correlation functional"),
-    "dispersion": re.compile(r"^(vdW\S+|DFT-?D\S+)", re.M),
+    "dispersion": re.compile(r"\n(vdW\S+|DFT-?D\S+)"),
 }
 
 
