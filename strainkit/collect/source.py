@@ -16,7 +16,7 @@ from typing import IO, cast
 
 from strainkit.errors import InputError
 
-__all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "file_head", "printable", "read_source"]
+__all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "file_head", "read_source"]
 
 #: bytes looked at to tell what a file is
 HEAD = 16384
@@ -61,11 +61,6 @@ class Source:
         return self.content.decode("utf-8", errors="replace").replace("\r\n", "\n")
 
 
-def printable(path: Path) -> str:
-    """A path on one line, whatever is in its name."""
-    return "".join(letter if letter.isprintable() else "?" for letter in str(path))
-
-
 def _open(path: Path) -> IO[bytes]:
     """Open a regular file; never waits on a pipe or device."""
     number = os.open(path, os.O_RDONLY | os.O_NONBLOCK | getattr(os, "O_CLOEXEC", 0))
@@ -108,7 +103,7 @@ def read_source(path: Path, within: Path | None = None) -> Source:
     InputError
         When it cannot be read, leads out of the folder or holds more than LARGEST bytes.
     """
-    where = printable(path)
+    where = path
     if within is not None and not path.resolve().is_relative_to(within.resolve()):
         raise InputError("a symbolic link leads out of the run folder", where)
     try:

@@ -141,7 +141,7 @@ def relax_ions(
     try:
         response = _response(plan, records, jobs_used)
         moved = [] if constants is not None else [Displacement(*job.moved) for job in displaced if job.moved is not None]
-        origin = f"from {len(moved)} displaced cells" if moved else "from a phonopy file"
+        origin = f"from {len(moved)} displaced cell{'s' * (len(moved) > 1)}" if moved else "from a phonopy file"
         if constants is None:
             rest = _forces(records.get(plan.jobs[0].label), len(plan.crystal.numbers))
             pulls = np.array([_forces(records[job.label], len(plan.crystal.numbers)) - rest for job in displaced])
