@@ -49,6 +49,8 @@ _ASE: dict[str, Any] = {
     "energy": through_ase.energy,
     "forces": through_ase.forces,
 }
+#: of formats that hold whatever the script that wrote them had at that moment
+_MUTE = _ASE | {"tells_relaxed": False}
 
 
 def _extxyz(head: bytes) -> bool:
@@ -91,11 +93,11 @@ READERS: tuple[Reader, ...] = (
     Reader("CASTEP", **_columns(castep), checked="real"),
     Reader("SIESTA", **_columns(siesta)),
     Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_ASE),
-    Reader("GPAW gpw", _starts(b"- of UlmGPAW"), atoms_from_copy("gpw"), **_ASE, checked="run"),
-    Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_ASE, checked="run"),
-    Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_ASE, checked="run"),
-    Reader("ASE JSON", _json, atoms_from_text("json"), **_ASE, checked="run"),
-    Reader("GPAW text", **_columns(gpaw_text), checked="run"),
+    Reader("GPAW gpw", _starts(b"- of UlmGPAW"), atoms_from_copy("gpw"), **_MUTE, checked="run"),
+    Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_MUTE, checked="run"),
+    Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_MUTE, checked="run"),
+    Reader("ASE JSON", _json, atoms_from_text("json"), **_MUTE, checked="run"),
+    Reader("GPAW text", **_columns(gpaw_text), tells_relaxed=False, checked="run"),
     Reader("pickle", _pickle, _refuse_pickle, **_ASE),
 )
 

@@ -9,6 +9,8 @@ import pytest
 from support.outputs import OUTPUTS, content, slow_abinit, slow_cp2k, slow_gpaw, slow_qe, unpack
 
 from strainkit.collect.readers import READERS, read_returned, recognise
+from strainkit.collect.readjob import read_outputs
+from strainkit.collect.scan import scan
 from strainkit.errors import InputError
 
 #: kept output -> statuses of its problems in order; what each job was is in the README beside the files
@@ -258,3 +260,19 @@ def test_an_appended_restart_counts_as_the_last_run(tmp_path):
     np.testing.assert_allclose(returned.stress, read("qe/relaxed.out", tmp_path).stress, atol=1e-12)
     path.write_bytes(content("qe/relaxed.out") + content("qe/relaxed.out")[:5000])
     assert is_problem(path)
+
+
+def test_a_file_that_cannot_tell_does_not_overrule_one_that_can(tmp_path):
+    """GPAW jobs leave returned.extxyz, which says whether the ions are relaxed, beside files that never do."""
+    folder = tmp_path / "jobs" / "one"
+    folder.mkdir(parents=True)
+    line = 'Lattice="0 2.7 2.7 2.7 0 2.7 2.7 2.7 0" stress="1 0 0 0 1 0 0 0 1" converged={0} pbc="T T T"'
+    unpack("gpaw/single.txt", folder)
+    unpack("gpaw/single.gpw", folder)
+    alone = read_outputs(tmp_path, scan(tmp_path, "jobs/one"))
+    assert [output.program for output in alone] == ["GPAW gpw", "GPAW text"]
+    for word, programs in (("F", ["extended XYZ"]), ("T", ["extended XYZ", "GPAW gpw"])):
+        (folder / "returned.extxyz").write_text(f"1\n{line.format(word)}\nSi 0 0 0\n")
+        outputs = read_outputs(tmp_path, scan(tmp_path, "jobs/one"))
+        assert [output.program for output in outputs] == programs
+        assert outputs[0].finished == (word == "T")
