@@ -252,6 +252,16 @@ def is_problem(path: Path) -> bool:
         return True
 
 
+def test_the_log_of_abinit_is_not_its_output(tmp_path):
+    """The log repeats the main output below two lines of its own."""
+    path = tmp_path / "log"
+    path.write_bytes(
+        b"  ABINIT 9.6.2\n  \n-instrng: 30 lines of input have been read from file single.abi\n\n"
+        + content("abinit/single.abo")
+    )
+    assert recognise(path) is None
+
+
 def test_an_appended_restart_counts_as_the_last_run(tmp_path):
     path = tmp_path / "both.out"
     path.write_bytes(content("qe/few-steps.out") + content("qe/relaxed.out"))

@@ -261,6 +261,40 @@ def test_older_cp2k_heading(tmp_path):
     np.testing.assert_allclose(returned.stress, -np.array([[1, 0.2, 0.3], [0.2, 4, 0.5], [0.3, 0.5, 6]]))
 
 
+def test_newer_cp2k_words(tmp_path):
+    """Later versions give the stress in bar unless told otherwise, forces and energy under other words (from memory)."""
+    from support.outputs import content
+
+    text = content("cp2k/single.out").decode()
+    path = tmp_path / "file"
+    path.write_text(text)
+    plain = read_returned(path, recognise(path))
+    rows = [line for line in text.splitlines() if line.startswith((" STRESS|      x", " STRESS|      y", " STRESS|      z"))][
+        :3
+    ]
+    for row in [*rows, *(line for line in text.splitlines() if "1/3 Trace" in line)]:
+        words = row.split()
+        first = next(i for i, word in enumerate(words) if "E+" in word or "E-" in word)
+        inbar = words[:first] + [f"{1e4 * float(word):.11E}" for word in words[first:]]
+        text = text.replace(row, " " + " ".join(inbar))
+    text = text.replace("Analytical stress tensor [GPa]", "Analytical stress tensor [bar]").replace(
+        "energy [a.u.]:", "energy [hartree]"
+    )
+    forces = text[text.index(" ATOMIC FORCES in") : text.index(" SUM OF ATOMIC FORCES")]
+    newer = " FORCES| Atomic forces [hartree/bohr]\n FORCES| Atom x y z |f|\n"
+    for number, (x, y, z) in enumerate((line.split()[3:] for line in forces.splitlines()[3:5]), 1):
+        newer += f" FORCES| {number} {x} {y} {z} 1.0E-02\n"
+    path.write_text(text.replace(forces, newer))
+    returned = read_returned(path, recognise(path))
+    assert not returned.problems
+    np.testing.assert_allclose(returned.stress, plain.stress, rtol=1e-9)
+    np.testing.assert_allclose(returned.forces, plain.forces)
+    assert returned.energy == plain.energy
+    path.write_text(text.replace("Analytical stress tensor [bar]", "Analytical stress tensor [furlong]"))
+    with pytest.raises(InputError, match="furlong"):
+        read_returned(path, recognise(path))
+
+
 def test_electronvolt_unit():
     """CODATA: the elementary charge, exact since 2019, makes the unit of the readers that print eV/A^3."""
     assert pytest.approx(160.2176634, rel=1e-7) == EV_PER_A3_IN_GPA

@@ -37,7 +37,8 @@ _NO_FUNCTIONAL = re.compile(r"- ixc\s*=\s*(-?\d+)")
 
 
 def recognises(head: bytes) -> bool:
-    return b"ABINIT" in head and b".Version" in head
+    """The main output; the log, which holds much of it too, begins otherwise."""
+    return head.lstrip().startswith(b".Version") and b"ABINIT" in head
 
 
 def load(source: Source) -> str:

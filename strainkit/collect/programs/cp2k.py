@@ -1,4 +1,4 @@
-"""CP2K: stress in GPa, positive in compression; cell vectors to three decimals only, so the files beside the output are asked.
+"""CP2K: stress positive in compression; cell vectors to three decimals only, so the files beside the output are asked.
 
 The output holds the lengths and angles of the cell to six decimals but its orientation to three, and only the positions
 from which a relaxation began. The restart file of the same run holds both to sixteen digits, the input file the cell.
@@ -30,6 +30,7 @@ from strainkit.collect.text import (
 )
 from strainkit.errors import InputError
 from strainkit.tensors.arrays import FloatArray
+from strainkit.units import STRESS_UNITS_IN_GPA
 
 __all__ = [
     "BAD_MARKS",
@@ -55,10 +56,10 @@ _SITES = re.compile(r" MODULE QUICKSTEP: +ATOMIC COORDINATES IN (?:ANGSTROM|angs
 _SITE = re.compile(
     rf"\s+(\d+)\s+\d+\s+([A-Z][a-z]?)\s+\d+\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s*\Z"
 )
-_ENERGY = re.compile(rf" ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[\S+?\]:? +({NUMBER})\s*$", re.M)
-_STRESS = re.compile(r" STRESS(?:\| Analytical stress tensor| TENSOR) \[GPa\] *\n")
+_ENERGY = re.compile(rf" ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[(?:a\.u\.|hartree)\]:? +({NUMBER})\s*$", re.M)
+_STRESS = re.compile(r" STRESS(?:\| Analytical stress tensor| TENSOR) \[(\S+?)\] *\n")
 _FORCES = re.compile(r" (?:ATOMIC FORCES in \[a\.u\.\]|FORCES\| Atomic forces \[hartree/bohr\]) *\n")
-_SCF = re.compile(r"SCF run (NOT )?converged")
+_SCF = re.compile(r"SCF (?:run|loop) (NOT |FAILED to )?converge")
 _CYCLE = re.compile(r"SCF WAVEFUNCTION OPTIMIZATION")
 _STEP = re.compile(r"OPTIMIZATION STEP:\s+(\d+)\s*$", re.M)
 _TIME = r"(\d{4}-\d\d-\d\d \d\d:\d\d:\d\d)"
@@ -176,14 +177,16 @@ def stress(output: Output) -> Stress | None:
     if heading is None:
         return None
     start = heading.start()
-    older = "STRESS|" not in heading[0]
+    older, unit = "STRESS|" not in heading[0], STRESS_UNITS_IN_GPA.get(heading[1])
+    if unit is None:
+        raise ValueError(f"stress in {heading[1][:20]}")
     mark = "" if older else r"STRESS\| +"
     matrix = rows(output.text, start, 3, mark + "@...#...#...#", "stress", 2 if older else 1, "XYZ" if older else "xyz")
     if not older:
         trace = last_number(re.compile(rf" STRESS\| 1/3 Trace +({NUMBER})\s*$", re.M), output.text, start)
         if trace is None or abs(np.trace(matrix) / 3 - trace) > 1e-6 * np.abs(matrix).max() + 1e-9:
             raise ValueError("the stress does not agree with the trace printed below it")
-    return Stress(symmetric(-matrix, 1e-5 * float(np.abs(matrix).max()) + 1e-7))
+    return Stress(unit * symmetric(-matrix, 1e-5 * float(np.abs(matrix).max()) + 1e-7))
 
 
 def energy(output: Output) -> float | None:
