@@ -52,6 +52,8 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
     found.sort(key=lambda pair: READERS.index(pair[1]))
     outputs: list[Output] = []
     for name, reader in found:
+        if not reader.tells_relaxed and any(output.returned is not None and output.returned.problems for output in outputs):
+            continue  # a trajectory beside a job that says it is not relaxed
         outputs.append(_read(run, f"{folder.name}/{name}", reader))
         if sum(output.finished for output in outputs) == 2:
             break
