@@ -22,6 +22,7 @@ from strainkit.cli.inspect import inspect
 from strainkit.cli.prepare import prepare
 from strainkit.cli.progress import progress
 from strainkit.cli.relax import relax
+from strainkit.cli.report import report
 
 __all__ = ["app", "main"]
 
@@ -33,7 +34,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     add_completion=False,
 )
-for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, demo):
+for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, report, demo):
     app.command()(command)
 
 

@@ -9,7 +9,7 @@ from typing import Any
 
 from strainkit.present.text import heading, paragraph
 
-__all__ = ["calculation_lines"]
+__all__ = ["calculation_lines", "setting_text"]
 
 _TASKS = {
     "cell": "cell and ions relaxed",
@@ -33,7 +33,7 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
     pseudopotentials = ", ".join(f"{symbol} = {name}" for symbol, name in calculation["pseudopotentials"].items())
     if pseudopotentials:
         lines.append(paragraph(f"pseudo    {pseudopotentials}", "  "))
-    values = ", ".join(f"{key} {_value(value)}" for key, value in calculation["settings"].items() if value not in ({}, 0.0))
+    values = ", ".join(f"{key} {setting_text(value)}" for key, value in calculation["settings"].items() if value not in ({}, 0.0))
     lines.append(paragraph(f"settings  {values}", "  "))
     if "submit" in calculation:
         place = f"cd {shlex.quote(str(out))} && " if out is not None else ""
@@ -41,7 +41,8 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
     return lines
 
 
-def _value(value: object) -> str:
+def setting_text(value: object) -> str:
+    """A value of a settings file."""
     if isinstance(value, dict):
         return "{" + ", ".join(f"{key} {item}" for key, item in value.items()) + "}"
     return f"{value:g}" if isinstance(value, float) else str(value)

@@ -1,0 +1,121 @@
+"""The verdict of a report in sentences: how precise, what it cannot see, whether finer settings were tried, is it stable."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from strainkit.collect.table import StressTable
+from strainkit.derive.derived import Derived
+from strainkit.findings import Finding, worst
+from strainkit.fit.finer import FinerChange
+from strainkit.fit.result import Fit
+from strainkit.present.report_page import Tone
+from strainkit.tensors.arrays import FloatArray
+
+__all__ = ["BLIND", "Verdict", "precision", "verdict"]
+
+#: what no error bar of a fit sees
+BLIND = (
+    "What these error bars cannot see: everything that is smooth in strain, such as cutoff, k-mesh, grid, functional and ions "
+    "that are not fully relaxed."
+)
+
+
+@dataclass(frozen=True)
+class Verdict:
+    """Sentences, their tone, and the precision in percent (None when unknown)."""
+
+    tone: Tone
+    sentences: tuple[str, ...]
+    precision_percent: float | None
+
+
+def precision(fit: Fit) -> tuple[float, str] | None:
+    """Largest standard error of a constant, percent of that constant or of a tenth of the largest one, and its name.
+
+    None without an error estimate.
+    """
+    r = fit.regression
+    if r.covariance is None:
+        return None
+    part = np.sqrt(np.diag(r.covariance)) / _scale(r.values)
+    at = int(np.nanargmax(part))
+    return 100.0 * float(part[at]), fit.plan.basis.names[at]
+
+
+def _scale(values: FloatArray) -> FloatArray:
+    return np.maximum(np.abs(values), 0.1 * np.nanmax(np.abs(values)))
+
+
+def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: str, findings: Sequence[Finding]) -> Verdict:
+    """Verdict on a run.
+
+    Parameters
+    ----------
+    fit : Fit or None
+        None when the jobs give no tensor; `why` says why.
+    derived : Derived or None
+        None without a whole tensor.
+    table : StressTable
+    why : str
+    findings : sequence of Finding
+        Those of the page.
+    """
+    came = f"{len(table.usable)} of {len(table.records)} jobs are usable."
+    if fit is None:
+        return Verdict("bad", (f"No tensor: {why}.", came), None)
+    known = precision(fit)
+    tail = (*_precise(fit, known), BLIND, _finer(fit))
+    percent = None if known is None else known[0]
+    if fit.undetermined:
+        names = ", ".join(fit.undetermined)
+        head = f"Incomplete: the jobs that came back do not determine {names}."
+        return Verdict("bad", (head, came, *tail), percent)
+    assert derived is not None
+    if not derived.stability.stable:
+        smallest = f"{derived.stability.eigenvalues[0]:.3g} GPa"
+        head = f"Not mechanically stable: the smallest eigenvalue of the stiffness is {smallest}. Moduli have no meaning for it."
+        return Verdict("bad", (head, *tail), percent)
+    sentences = [*tail, _stable(derived)]
+    if fit.plan.ions == "clamped":
+        sentences.append("Ions are clamped: this is not the stiffness that a crystal shows, but an upper bound of its moduli.")
+    gravest = worst(findings)
+    return Verdict("good" if gravest in (None, "info") and known is not None else "doubt", tuple(sentences), percent)
+
+
+def _precise(fit: Fit, known: tuple[float, str] | None) -> tuple[str, ...]:
+    if known is None:
+        return ("The precision of the fit is unknown: no spare degrees of freedom to estimate the noise from.",)
+    percent, name = known
+    return (
+        f"The fit is precise to {_percent(percent)} %.",
+        f"That is one standard error of the worst constant, {name}, relative to it or to a tenth of the largest constant.",
+    )
+
+
+def _percent(value: float) -> str:
+    return f"{value:.0f}" if value >= 9.5 else f"{value:.1f}" if value >= 0.1 else f"{value:.1g}"
+
+
+def _finer(fit: Fit) -> str:
+    if fit.finer is None:
+        return "Finer settings were not tried."
+    return f"Finer settings were tried on {len(fit.finer.labels)} jobs: they move {_largest_change(fit.finer, fit)}."
+
+
+def _largest_change(finer: FinerChange, fit: Fit) -> str:
+    part = np.abs(finer.change) / _scale(fit.regression.values)
+    at = int(part.argmax())
+    name = fit.plan.basis.names[at]
+    return f"no constant by more than {_percent(100 * float(part[at]))} % ({name}, {finer.change[at]:+.2g} GPa)"
+
+
+def _stable(derived: Derived) -> str:
+    chance = derived.stability.probability
+    if chance is None:
+        return "Mechanically stable."
+    words = "above 99.9 %" if chance > 0.999 else f"{100 * chance:.1f} %"
+    return f"Mechanically stable (probability {words} under the error bars)."
