@@ -38,12 +38,14 @@ def report(
     from strainkit.collect.table import load_table
     from strainkit.crystal.lattice import parse_indices
     from strainkit.errors import NoTensorError
-    from strainkit.present.report import REPORT, report_run, write_figures
+    from strainkit.present.report import REPORT, refuse_foreign, report_run, write_figures
     from strainkit.present.reported import report_text
     from strainkit.run.plan import load_plan
 
     planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
     directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
+    path = out or run / REPORT
+    refuse_foreign(path, force)
     fit, why = None, ""
     try:
         fit = fitted(run, order, noise, drop, frame, reference_stress)
@@ -51,7 +53,6 @@ def report(
         why = error.what
     plan = load_plan(run) if fit is None else fit.plan
     made = report_run(plan, load_table(run), fit, frame, planes, directions, indices == "given", run, why)
-    path = out or run / REPORT
     made.save(path, force)
     note(f"wrote {path}", quiet)
     files = [] if figures is None else write_figures(made.figures.values(), figures, figure_format, force)

@@ -29,6 +29,8 @@ _STYLE: dict[str, Any] = {
     "font.family": "DejaVu Sans",
     "font.size": 8.5,
     "mathtext.fontset": "dejavusans",
+    "mathtext.default": "regular",
+    "axes.facecolor": "none",
     "axes.edgecolor": MUTED,
     "axes.labelcolor": INK,
     "axes.linewidth": 0.7,
@@ -59,13 +61,17 @@ def style() -> Any:
     return rc_context(_STYLE)
 
 
-def new_figure(width: float, height: float) -> Any:
-    """An empty matplotlib figure of a size in inches that no display ever sees; make it inside `style()`."""
+def new_figure(
+    width: float, height: float, left: float = 0.62, right: float = 0.08, bottom: float = 0.5, top: float = 0.1
+) -> Any:
+    """An empty matplotlib figure of a size and margins in inches that no display ever sees; make it inside `style()`."""
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(width, height), layout="constrained")
+    figure = Figure(figsize=(width, height))
     FigureCanvasAgg(figure)
+    edges = {"left": left / width, "right": 1 - right / width, "bottom": bottom / height, "top": 1 - top / height}
+    figure.subplots_adjust(**edges, hspace=0.12)
     return figure
 
 
@@ -132,9 +138,12 @@ class Drawing:
         width, height = view[1].split()[2:]
         size = "" if page else f' width="{width}pt" height="{height}pt"'
         name_spaces = 'xmlns="http://www.w3.org/2000/svg" xmlns:xlink="http://www.w3.org/1999/xlink"'
-        words = f'<title id="{prefix}-title">{escape(self.title)}</title><desc id="{prefix}-desc">{escape(self.description)}</desc>'
+        words = (
+            f'<title id="{prefix}-title">{escape(self.title)}</title><desc id="{prefix}-desc">{escape(self.description)}</desc>'
+        )
         labels = f'aria-labelledby="{prefix}-title" aria-describedby="{prefix}-desc"'
-        return f'<svg {name_spaces} viewBox="{view[1]}"{size} {attributes} {labels}>{words}{body}'
+        by = "" if page else f' data-generator="strainkit {__version__}"'
+        return f'<svg {name_spaces} viewBox="{view[1]}"{size}{by} {attributes} {labels}>{words}{body}'
 
 
 def _rounded(path: re.Match[str]) -> str:

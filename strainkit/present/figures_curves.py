@@ -12,7 +12,7 @@ from strainkit.fit.regression import Regression
 from strainkit.fit.result import Fit
 from strainkit.present.figures import INK, LINE, MUTED, SERIES, Drawing, drawing, new_figure, style
 from strainkit.present.numbers import plain
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.rotations import rotation6
 from strainkit.tensors.sixvectors import COMPONENTS, from_mandel, strain_to_voigt, stress_to_voigt
 
@@ -85,7 +85,7 @@ def shape_data(fit: Fit, frame: str = "ieee") -> list[ShapeData]:
     return found
 
 
-def _in_shape(r: Regression, index: int, jobs: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _in_shape(r: Regression, index: int, jobs: IntArray) -> tuple[FloatArray, FloatArray]:
     """Data and model (jobs, 6), Mandel, GPa, in the space that the shape allows and in its own orientation."""
     model = r.estimator.model
     shape = model.shapes[index]
@@ -126,7 +126,7 @@ def stress_strain(fit: Fit, frame: str = "ieee") -> list[Drawing]:
 
 def _one_shape(shape: ShapeData, noise: float | None, frame: str) -> Drawing:
     with style():
-        figure = new_figure(4.3, 3.9)
+        figure = new_figure(4.3, 3.9, top=0.32)
         above, below = figure.subplots(2, 1, sharex=True, height_ratios=[2.6, 1])
         percent = 100 * shape.strain
         if noise is not None:
@@ -142,8 +142,9 @@ def _one_shape(shape: ShapeData, noise: float | None, frame: str) -> Drawing:
         above.set_ylabel("stress, GPa")
         below.set_ylabel("residual, MPa")
         above.margins(x=0.02)
-        figure.legend(loc="outside upper center", ncols=6, frameon=False, handletextpad=0.1, columnspacing=1.2)
-        figure.align_ylabels([above, below])
+        figure.legend(loc="upper center", ncols=6, frameon=False, handletextpad=0.1, columnspacing=1.2)
+        for axes in (above, below):
+            axes.yaxis.set_label_coords(-0.13, 0.5)
     strains = ", ".join(f"{c} {plain(x, 2)}" for c, x in zip(COMPONENTS, shape.unit, strict=True) if abs(x) > 5e-3)
     largest = 1e3 * float(np.abs(shape.residual).max())
     words = [
@@ -166,7 +167,7 @@ def magnitude_shifts(found: Convergence) -> Drawing | None:
     fits.append(("all", found.common))
     rows = np.arange(len(found.names))[::-1]
     with style():
-        figure = new_figure(4.3, 1.1 + 0.2 * len(rows))
+        figure = new_figure(4.3, 1.0 + 0.2 * len(rows), left=0.5, top=0.34)
         axes = figure.add_subplot()
         axes.axvline(0, color=MUTED, linewidth=0.7)
         for k, (label, fit) in enumerate(fits):
@@ -179,13 +180,17 @@ def magnitude_shifts(found: Convergence) -> Drawing | None:
         axes.set_yticks(rows, found.names)
         axes.set_xlabel("constant less its value at zero strain, GPa")
         axes.grid(axis="y")
-        figure.legend(loc="outside upper center", ncols=len(fits), frameon=False)
+        figure.legend(loc="upper center", ncols=len(fits), frameon=False)
+        axes.set_ylim(-0.7, len(rows) - 0.3)
     worst = int(np.abs(found.common.values - found.zero.values).argmax())
     shift = found.common.values[worst] - found.zero.values[worst]
-    words = [f"Shift of {len(rows)} constants from zero strain.", f"Largest for all jobs: {found.names[worst]}, {shift:+.3g} GPa."]
+    words = [
+        f"Shift of {len(rows)} constants from zero strain.",
+        f"Largest for all jobs: {found.names[worst]}, {shift:+.3g} GPa.",
+    ]
     caption = (
-        "Each constant from the jobs of one magnitude, and from all jobs, less its value at zero strain (fit with cubic terms). "
-        "Bars: one standard error of the fit at that magnitude."
+        "Each constant from the jobs of one magnitude, and from all jobs, less its value at zero strain (fit with cubic "
+        "terms). Bars: one standard error of the fit at that magnitude."
     )
     return drawing("magnitude-shifts", "Constants against strain magnitude", words, caption, figure)
 

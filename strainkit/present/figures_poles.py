@@ -77,8 +77,11 @@ def projected(vectors: FloatArray) -> FloatArray:
     return np.column_stack([scale * n[:, 1], -scale * n[:, 0]])
 
 
-def poles(elastic: ElasticCrystal) -> tuple[list[Pole], Room]:
-    """Poles of planes and directions with no index above one, the simplest first; both ends of those on the rim; and what is still free."""
+def poles(elastic: ElasticCrystal, room: Room) -> list[Pole]:
+    """Poles of planes and directions with no index above one, the simplest first; both ends of those on the rim.
+
+    Labels go where there is room, and take it.
+    """
     axes, frame = elastic.axes, elastic.frame.rotation
     assert axes is not None
     indices = low_indices(1)
@@ -94,7 +97,7 @@ def poles(elastic: ElasticCrystal) -> tuple[list[Pole], Room]:
         else:
             marks.append(_Mark(normal, ("plane",), indices[i], "()"))
     marks += [_Mark(d, ("direction",), indices[j], "[]") for j, d in enumerate(directions) if j not in taken]
-    return _with_room(sorted(marks, key=lambda mark: int(np.abs(mark.indices).sum())))
+    return _with_room(sorted(marks, key=lambda mark: int(np.abs(mark.indices).sum())), room)
 
 
 @dataclass(frozen=True)
@@ -105,7 +108,7 @@ class _Mark:
     brackets: str
 
 
-def _with_room(marks: list[_Mark]) -> tuple[list[Pole], Room]:
+def _with_room(marks: list[_Mark], room: Room) -> list[Pole]:
     """Every mark, and labels beside them as long as they touch neither marks nor other labels."""
     ends = []
     for mark in marks:
@@ -113,7 +116,9 @@ def _with_room(marks: list[_Mark]) -> tuple[list[Pole], Room]:
         upright = bool(mark.vector[2] >= -1e-9)
         names = [_named(sign * mark.indices, mark.brackets) for sign in ((1, -1) if upright else (-1, 1))]
         ends.append([(place, names[0])] + ([(-place, names[1])] if abs(mark.vector[2]) < 1e-6 else []))
-    room = Room([place for spots in ends for place, _ in spots])
+    for spots in ends:
+        for place, _ in spots:
+            room.take(place, (_MARK, _MARK))
     found = []
     for mark, spots in zip(marks, ends, strict=True):
         named = False
@@ -123,7 +128,7 @@ def _with_room(marks: list[_Mark]) -> tuple[list[Pole], Room]:
                 room.take(at)
                 named = True
             found.append(Pole(place, mark.kinds, "" if at is None else label, place if at is None else at))
-    return found, room
+    return found
 
 
 def _beside(place: FloatArray) -> list[FloatArray]:
@@ -137,7 +142,6 @@ def _beside(place: FloatArray) -> list[FloatArray]:
 
 
 def _named(indices: IntArray, brackets: str) -> str:
-    """Indices as mathtext with bars over negative ones."""
-    inside = "".join(rf"\overline{{{-i}}}" if i < 0 else str(i) for i in map(int, indices))
-    left, right = brackets or ("", "")
-    return rf"$\mathsf{{{left}{inside}{right}}}$"
+    """Indices with bars over negative ones, for matplotlib."""
+    inside = "".join(rf"$\overline{{{-i}}}$" if i < 0 else str(i) for i in map(int, indices))
+    return brackets[:1] + inside + brackets[1:]

@@ -1,8 +1,8 @@
 """Directional quantities on an equal-area projection of the upper hemisphere, as crystallographers draw directions.
 
-J. H. Lambert's azimuthal projection (Schmidt net): a direction at the angle theta from Z lies at sin(theta/2) / sin(45 deg) from the
-middle, so that equal solid angles are equal areas. X points down, Y to the right and Z at the reader, as in the projections
-of the International Tables for Crystallography A. Directions and their opposites are alike.
+J. H. Lambert's azimuthal projection (Schmidt net): a direction at the angle theta from Z lies at sin(theta/2) / sin(45 deg)
+from the middle, so that equal solid angles are equal areas. X points down, Y to the right and Z at the reader, as in the
+projections of the International Tables for Crystallography A. Directions and their opposites are alike.
 """
 
 from __future__ import annotations
@@ -82,16 +82,16 @@ def projection(derived: Derived, name: str) -> Drawing | None:
     if np.ptp(values) <= _EVEN * np.abs(values).max():
         return None
     with style():
-        figure = new_figure(4.3, 4.75)
-        axes = figure.add_subplot()
+        figure = new_figure(4.3, 4.9)
+        axes = figure.add_axes((0.01, 0.185, 0.98, 0.81))
         filled, lines = _contours(axes, x, y, values)
-        room = _rim(axes, derived)
-        _mark_extremes(axes, derived, quantity, room)
+        room = Room(_mark_extremes(axes, derived, quantity))
+        _rim(axes, derived, room)
         _label_contours(axes, lines, room)
-        bar = figure.colorbar(filled, ax=axes, orientation="horizontal", shrink=0.8, aspect=34, pad=0.02)
+        bar = figure.colorbar(filled, cax=figure.add_axes((0.11, 0.1, 0.78, 0.022)), orientation="horizontal")
         bar.outline.set_visible(False)
         bar.set_label(f"{quantity.title}, {quantity.unit}")
-        axes.set_xlabel(_key(elastic.axes is not None), color=MUTED, fontsize=7)
+        figure.text(0.5, 0.15, _key(elastic.axes is not None), color=MUTED, fontsize=7, ha="center")
     what = "of the plane normal" if quantity.of_plane else "of the direction"
     caption = (
         f"{quantity.title} as a function {what}: equal-area projection of the upper hemisphere in frame "
@@ -155,7 +155,7 @@ def _chip(axes: Any, place: FloatArray, text: str) -> None:
     axes.text(*place, text, fontsize=6.4, color=INK_ON_MAP, ha="center", va="center", bbox=ground, zorder=5)
 
 
-def _rim(axes: Any, derived: Derived) -> Room:
+def _rim(axes: Any, derived: Derived, room: Room) -> None:
     """The circle, the axes of the frame, and poles of low-index planes and directions."""
     from matplotlib.patches import Circle
 
@@ -167,12 +167,9 @@ def _rim(axes: Any, derived: Derived) -> Room:
         start = place / np.hypot(*place)
         axes.plot(*np.transpose([start, 1.05 * start]), color=MUTED, linewidth=0.9, clip_on=False)
         axes.text(*place, letter, color=MUTED, ha="center", va="center", fontweight="bold", fontsize=8)
-    if derived.elastic.axes is None:
-        return Room()
-    marks, room = poles(derived.elastic)
-    for pole in marks:
-        _pole(axes, pole)
-    return room
+    if derived.elastic.axes is not None:
+        for pole in poles(derived.elastic, room):
+            _pole(axes, pole)
 
 
 def _pole(axes: Any, pole: Pole) -> None:
@@ -186,17 +183,19 @@ def _pole(axes: Any, pole: Pole) -> None:
         _chip(axes, pole.label_at, pole.label)
 
 
-def _mark_extremes(axes: Any, derived: Derived, quantity: _Quantity, room: Room) -> None:
-    """Triangles where the crystal's own least and most lie, and at the places that symmetry makes alike."""
-    elastic = derived.elastic
+def _mark_extremes(axes: Any, derived: Derived, quantity: _Quantity) -> list[FloatArray]:
+    """Triangles where the crystal's own least and most lie, and at the places that symmetry makes alike; those places."""
+    elastic, found = derived.elastic, []
     for end in quantity.ends:
         vector = derived.extremes[quantity.extreme][end].along.vector
         alike = vector[None] if elastic.axes is None else elastic.axes.alike(vector[None])[:, 0]
-        spots = np.unique(np.round(projected(alike @ elastic.frame.rotation.T), 4), axis=0)
+        places = projected(alike @ elastic.frame.rotation.T)
+        rim = places[np.hypot(*places.T) > 1.0 - 1e-6]
+        spots = np.unique(np.round(np.concatenate([places, -rim]), 4), axis=0)
         mark = {"marker": "^" if end else "v", "linestyle": "none", "markersize": 5.5, "markeredgewidth": 0.9}
         axes.plot(*spots.T, color=GROUND, markeredgecolor=INK_ON_MAP, clip_on=False, zorder=6, **mark)
-        for spot in spots:
-            room.take(spot, (0.035, 0.035))
+        found += list(spots)
+    return found
 
 
 def _key(indexed: bool) -> str:
@@ -217,4 +216,3 @@ def _words(derived: Derived, quantity: _Quantity, values: FloatArray) -> list[st
         value = uncertain(extreme.value.value, extreme.value.error)
         sentences.append(f"{('Least', 'Most')[end]} {value} {quantity.unit} at {where(extreme)}.")
     return sentences
-

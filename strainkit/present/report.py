@@ -25,7 +25,7 @@ from strainkit.present.report_verdict import Verdict, verdict
 from strainkit.run.files import atomic_write
 from strainkit.run.plan import Plan
 
-__all__ = ["REPORT", "Report", "report_run", "write_figures"]
+__all__ = ["REPORT", "Report", "refuse_foreign", "report_run", "write_figures"]
 
 #: name of the report in its run folder
 REPORT = "report.html"
@@ -151,7 +151,9 @@ def report_run(
     sections = [*_fitted(fit, frame), magnitude_section(found), *_energies(fit), moduli_section(derived)]
     sections += [directions_section(derived), provenance_section(plan, table, run), cautions_section()]
     symmetry = plan.symmetry
-    subtitle = f"{plan.crystal.formula}, {symmetry.space_group}, Laue class {symmetry.laue_class}: {len(plan.basis.names)} constants"
+    subtitle = (
+        f"{plan.crystal.formula}, {symmetry.space_group}, Laue class {symmetry.laue_class}: {len(plan.basis.names)} constants"
+    )
     title = f"{plan.crystal.name}: elastic stiffness"
     return Report(plan, fit, derived, said, Page(title, subtitle, said.tone, said.sentences, findings, tuple(sections)))
 
@@ -200,6 +202,13 @@ def save_own(path: Path, content: bytes, force: bool) -> None:
     InputError
         A foreign file is there, and `force` is not given.
     """
-    if not force and path.exists() and (path.is_dir() or b"strainkit" not in path.read_bytes()):
-        raise InputError("exists and was not written by strainkit; left as it is", path, "Choose another place, or --force.")
+    refuse_foreign(path, force)
     atomic_write(path, content)
+
+
+def refuse_foreign(path: Path, force: bool) -> None:
+    """Raise InputError where a folder, or without `force` a file that does not bear strainkit's name, is in the way."""
+    if path.is_dir():
+        raise InputError("is a folder", path, "Name a file.")
+    if not force and path.exists() and b"strainkit" not in path.read_bytes():
+        raise InputError("exists and was not written by strainkit; left as it is", path, "Choose another place, or --force.")

@@ -9,7 +9,7 @@ from strainkit.derive.spread import WithError
 from strainkit.present.derived import AVERAGED, places
 from strainkit.present.figures_projection import projections
 from strainkit.present.planes import PLASTICITY
-from strainkit.present.report_page import Block, Cell, Facts, Figures, Paragraph, Section, Table, number
+from strainkit.present.report_page import Block, Cell, Facts, Figures, Paragraph, Row, Section, Table, number
 from strainkit.present.rows import indices_text, near_text, value_text
 from strainkit.tensors.averages import AVERAGES, SCHEMES
 
@@ -31,7 +31,7 @@ def moduli_section(derived: Derived | None) -> Section:
     if missing is not None or derived is None or derived.averages is None:
         return Section("moduli", title, (Paragraph(missing or ""),))
     means = derived.averages
-    rows = []
+    rows: list[Row] = []
     for i, name in enumerate(AVERAGES):
         errors = [None] * 3 if means.errors is None else means.errors[i]
         digits = 3 if name == "poisson" else 2
@@ -40,17 +40,18 @@ def moduli_section(derived: Derived | None) -> Section:
     caption = "A solid of fine grains in all orientations: bounds of Voigt and Reuss, and Hill's mean"
     blocks: list[Block] = [Table.of("averages", caption, ["", *(s.capitalize() for s in SCHEMES)], rows, sortable=False)]
     blocks.append(_extremes(derived))
-    facts = [
-        ("Universal anisotropy index", value_text(WithError(means.anisotropy, means.anisotropy_error)), "zero for an isotropic solid"),
-        ("K/G (Hill)", value_text(WithError(means.pugh, means.pugh_error)), ""),
-    ]
-    facts += [(f"{n.replace('-', ' - ')}", f"{value_text(v)} GPa", "zero for central forces (Cauchy)") for n, v in derived.cauchy.items()]
-    if derived.heat is not None:
-        heat = derived.heat
-        if heat.atoms is not None:
-            facts.append(("Debye temperature", f"{value_text(heat.atoms, 1)} K", "counting atoms; exact average of the speeds of sound"))
-        if heat.molecules is not None:
-            facts.append(("", f"{value_text(heat.molecules, 1)} K", f"counting molecules, {heat.molecules_in_cell} in the cell"))
+    index = WithError(means.anisotropy, means.anisotropy_error)
+    facts = [("Universal anisotropy index", value_text(index), "zero for an isotropic solid")]
+    facts.append(("K/G (Hill)", value_text(WithError(means.pugh, means.pugh_error)), ""))
+    for name, value in derived.cauchy.items():
+        facts.append((name.replace("-", " - "), f"{value_text(value)} GPa", "zero for central forces (Cauchy)"))
+    heat = derived.heat
+    if heat is not None and heat.atoms is not None:
+        note = "counting atoms; exact average of the speeds of sound"
+        facts.append(("Debye temperature", f"{value_text(heat.atoms, 1)} K", note))
+    if heat is not None and heat.molecules is not None:
+        note = f"counting molecules, {heat.molecules_in_cell} in the cell"
+        facts.append(("", f"{value_text(heat.molecules, 1)} K", note))
     blocks.append(Facts(tuple(facts)))
     return Section("moduli", title, tuple(blocks))
 
@@ -64,14 +65,14 @@ def _missing(derived: Derived | None) -> str | None:
 
 
 def _extremes(derived: Derived) -> Table:
-    rows = []
+    rows: list[Row] = []
     for name, (label, digits) in _EXTREMES.items():
         if name not in derived.extremes:
             continue
         for word, end in zip(("least", "most"), derived.extremes[name], strict=True):
-            rows.append([label, word, number(end.value.value, end.value.error, digits), _where(derived, name, end)])
-    header = ["over all directions", "", "value", "where"]
-    return Table.of("extremes", "Extremes over all directions", header, rows, left=2, sortable=False)
+            rows.append([label, word, _where(derived, name, end), number(end.value.value, end.value.error, digits)])
+    header = ["quantity", "", "where", "value"]
+    return Table.of("extremes", "Least and most over all directions", header, rows, left=3, sortable=False)
 
 
 def _where(derived: Derived, name: str, end: Extreme) -> str:
@@ -92,12 +93,12 @@ def directions_section(derived: Derived | None) -> Section:
         return Section("directions", title, (Paragraph(missing or ""),))
     words = derived.elastic.axes.words if derived.elastic.axes is not None else "no cell"
     text = (
-        "Maps of directions: the middle is the Z axis, the rim is everything at right angles to it, and equal areas are equal solid "
-        f"angles. (hkl) and [uvw] refer to {words}."
+        "Maps of directions: the middle is the Z axis, the rim is everything at right angles to it, and equal areas are equal "
+        f"solid angles. (hkl) and [uvw] refer to {words}."
     )
     blocks: list[Block] = [Paragraph(text), Figures(tuple(projections(derived)))]
     if derived.averages is not None:
-        rows = [_direction(name, note, what) for name, note, what in places(derived)]
+        rows: list[Row] = [_direction(name, note, what) for name, note, what in places(derived)]
         header = ["along", "", "E, GPa", "compressibility, 1/TPa", "Poisson, least", "Poisson, most", "sound, m/s"]
         blocks.append(Table.of("directions", "Along cell axes, and along what was asked for", header, rows, left=2))
     planes = (*derived.planes, *derived.low_index_planes)
@@ -120,7 +121,7 @@ def _direction(name: str, note: str, what: Along) -> list[Cell | str]:
 
 
 def _planes(planes: tuple[OnPlane, ...]) -> Table:
-    rows = []
+    rows: list[Row] = []
     for plane in planes:
         cut, slip = plane.cut, plane.least_indices
         along = "any" if slip is None else indices_text(slip[0], False) + (f" {slip[1]:.0f} deg" if slip[1] >= 0.5 else "")
@@ -137,9 +138,9 @@ def _planes(planes: tuple[OnPlane, ...]) -> Table:
             ]
         )
     caption = (
-        "Planes. d: distance of lattice planes; bonds: covalent bonds (near neighbours in metals and salts) a nm^2 that the easiest flat cut "
-        "crosses; gap: distance of the atoms on its two sides, negative where molecules interlock; G: shear modulus on the plane, least "
-        "(and the lattice direction nearest to its own) and most; E: Young's modulus across"
+        "Planes. d: distance of lattice planes; bonds: covalent bonds (near neighbours in metals and salts) a nm^2 that the "
+        "easiest flat cut crosses; gap: distance of the atoms on its two sides, negative where molecules interlock; G: shear "
+        "modulus on the plane, least (and the lattice direction nearest to its own) and most; E: Young's modulus across"
     )
     header = ["plane", "d, A", "bonds, 1/nm^2", "gap, A", "least G, GPa", "along", "most G, GPa", "E across, GPa"]
     return Table.of("planes", caption, header, rows)

@@ -9,7 +9,7 @@ from strainkit.fit.regression import Regression
 from strainkit.fit.result import Fit
 from strainkit.present.figures_curves import expected_error, magnitude_shifts, shape_data, stress_strain
 from strainkit.present.numbers import plain, uncertain
-from strainkit.present.report_page import Block, Cell, Facts, Figures, Paragraph, Section, Table, number
+from strainkit.present.report_page import Block, Cell, Facts, Figures, Paragraph, Row, Section, Table, number
 from strainkit.tensors.sixvectors import COMPONENTS, stress_to_voigt
 
 __all__ = ["energy_section", "magnitude_section", "shapes_section", "tensor_section"]
@@ -19,7 +19,7 @@ def tensor_section(fit: Fit, frame: str) -> Section:
     """Constants with errors and intervals, the matrix in a frame, noise and reference stress."""
     data, chosen, r = fit.to_dict(frame), fit.plan.frames[frame], fit.regression
     header = ["constant", "GPa", "standard error", "95 % interval"] + (["finer settings"] if fit.finer else [])
-    rows = []
+    rows: list[Row] = []
     for i, constant in enumerate(data["constants"]):
         value, error, (low, high) = constant["value_GPa"], constant["standard_error_GPa"], constant["interval95_GPa"]
         known = bool(np.isfinite(value))
@@ -35,9 +35,10 @@ def tensor_section(fit: Fit, frame: str) -> Section:
             row.append(Cell(fixed + uncertain(float(fit.finer.change[i]), spread), float(fit.finer.change[i])))
         rows.append(row)
     note = "; change at finer settings, ~ where the finer jobs do not fix it by themselves" if fit.finer else ""
-    constants = Table.of("constants", f"Independent constants, named in IEEE axes ({fit.plan.frames['ieee'].axes}){note}", header, rows)
-    matrix = [
-        [c, *(number(v, e) for v, e in zip(values, errors, strict=True))]
+    caption = f"Independent constants, named in IEEE axes ({fit.plan.frames['ieee'].axes}){note}"
+    constants = Table.of("constants", caption, header, rows)
+    matrix: list[Row] = [
+        [c, *(_element(v, e) for v, e in zip(values, errors, strict=True))]
         for c, values, errors in zip(COMPONENTS, data["stiffness_GPa"], data["standard_error_GPa"], strict=True)
     ]
     caption = f"Stiffness, GPa, with one standard error in the last digits; frame {chosen.name}: {chosen.axes}"
@@ -54,33 +55,38 @@ def tensor_section(fit: Fit, frame: str) -> Section:
             ("Measure", data["measure"], "at the reference cell"),
         )
     )
-    blocks: list[Block] = [constants, whole, facts]
+    blocks: list[Block] = [whole, constants, facts]
     if fit.checks.treatments:
         blocks.append(_readings(fit))
     return Section("tensor", "Stiffness tensor", tuple(blocks))
 
 
+def _element(value: float, error: float) -> Cell:
+    """An element of the matrix; plain zero where symmetry makes it vanish, error and all."""
+    return Cell("0", 0.0) if abs(value) < 1e-9 and not error > 1e-9 else number(value, error)
+
+
 def _readings(fit: Fit) -> Table:
     """Smallest and largest diagonal constants under each reading of the reference stress, given frame."""
-    rows = [[t.name, *(number(float(t.voigt[i, i])) for i in range(6))] for t in fit.checks.treatments]
+    rows: list[Row] = [[t.name, *(number(float(t.voigt[i, i])) for i in range(6))] for t in fit.checks.treatments]
     caption = "Diagonal of the tensor, GPa, given frame, under each reading of the reference stress"
     return Table.of("readings", caption, ["reading", *COMPONENTS], rows, sortable=False)
 
 
 def shapes_section(fit: Fit, frame: str) -> Section:
     """A figure for every strain shape, and the residuals of every job."""
-    rows = []
+    rows: list[Row] = []
     for shape in shape_data(fit, frame):
         for label, t, residual in zip(shape.labels, shape.strain, shape.residual, strict=True):
             if t == 0 and any(row[0] == label for row in rows):
                 continue
             worst = int(np.abs(residual).argmax())
             size = 1e3 * float(residual[worst])
-            rows.append(
-                [label, shape.name if t else "-", Cell(f"{100 * t:g}", float(t)), Cell(f"{size:+.2g}", size), COMPONENTS[worst]]
-            )
+            text = f"{size:+.2g}" if abs(size) >= 1e-3 else "0"
+            place = [label, shape.name if t else "-", COMPONENTS[worst] if text != "0" else "-"]
+            rows.append([*place, Cell(f"{100 * t:g}", float(t)), Cell(text, size)])
     caption = "Largest residual of every job, MPa, and its component"
-    table = Table.of("residuals", caption, ["job", "shape", "strain, %", "residual, MPa", "component"], rows, left=2)
+    table = Table.of("residuals", caption, ["job", "shape", "component", "strain, %", "residual, MPa"], rows, left=3)
     text = (
         "One panel for each strain shape. A straight row of points is a linear response; residuals that bend together are a "
         "nonlinear one; one that stands alone is a bad job."
@@ -92,7 +98,7 @@ def magnitude_section(found: Convergence | None) -> Section:
     """Constants against the strain magnitude, or that there is one only."""
     title = "Strain magnitude"
     if found is None:
-        return Section("magnitude", title, (Paragraph("Not examined: the jobs that came back do not determine every constant."),))
+        return Section("magnitude", title, (Paragraph("Not examined: that needs every constant."),))
     words = found.findings[0].message if found.findings else "No doubt about the strain magnitude."
     blocks: list[Block] = [Paragraph(words[0].upper() + words[1:] + ("" if words.endswith(".") else "."))]
     drawings = tuple(d for d in (magnitude_shifts(found), expected_error(found)) if d is not None)
@@ -108,7 +114,7 @@ def magnitude_section(found: Convergence | None) -> Section:
 def _magnitudes(found: Convergence) -> Table:
     heads = [f"{100 * m:g} %" for m in found.magnitudes] + ["all jobs"] + (["zero strain"] if found.zero else [])
     fits: list[Regression | None] = [*found.each, found.common, *([found.zero] if found.zero else [])]
-    rows = [[name, *(_constant(fit, i) for fit in fits)] for i, name in enumerate(found.names)]
+    rows: list[Row] = [[name, *(_constant(fit, i) for fit in fits)] for i, name in enumerate(found.names)]
     return Table.of("magnitudes", "Constants, GPa, from the jobs of each magnitude", ["constant", *heads], rows)
 
 
@@ -127,10 +133,10 @@ def energy_section(fit: Fit) -> Section:
     text = (
         "The energies of the same jobs give the same stiffness as their stresses."
         if fine
-        else "The energies of the same jobs do NOT give the same stiffness or reference stress as their stresses. Causes that cannot be "
-        "told apart here: a basis-set (Pulay) stress, ions not fully relaxed, a term missing from the stress."
+        else "The energies of the same jobs do NOT give the same stiffness or reference stress as their stresses. Causes that "
+        "cannot be told apart here: a basis-set (Pulay) stress, ions not fully relaxed, a term missing from the stress."
     )
-    rows = []
+    rows: list[Row] = []
     for p in check.pairs:
         away = p.curvature_energy - p.curvature_stress
         rows.append(
@@ -144,6 +150,6 @@ def energy_section(fit: Fit) -> Section:
                 number(p.slope_stress, digits=4),
             ]
         )
-    header = ["job", "strain, %", "curvature, energies", "curvature, stresses", "difference", "slope, energies", "slope, stresses"]
+    header = ["job", "strain, %", "curvature, energies", "stresses", "difference", "slope, energies", "slope, stresses"]
     caption = "Second and first derivative of the energy along each shape, GPa: from energies, and from the fit of stresses"
     return Section("energies", title, (Paragraph(text), Table.of("energies", caption, header, rows)))

@@ -18,7 +18,7 @@ from strainkit.findings import Finding
 from strainkit.present.figures import DARK_GROUND, SERIES, Drawing
 from strainkit.present.numbers import uncertain
 
-__all__ = ["GENERATOR", "Cell", "Facts", "Figures", "Page", "Paragraph", "Section", "Table", "number", "render"]
+__all__ = ["GENERATOR", "Block", "Cell", "Facts", "Figures", "Page", "Paragraph", "Row", "Section", "Table", "number", "render"]
 
 #: what the page says it was made by
 GENERATOR = f"strainkit {__version__}"
@@ -81,7 +81,7 @@ class Table:
     sortable: bool = True
 
     @classmethod
-    def of(cls, name: str, caption: str, header: Sequence[str], rows: Iterable[Sequence[Cell | str]], **more: Any) -> Table:
+    def of(cls, name: str, caption: str, header: Sequence[str], rows: Iterable[Row], **more: Any) -> Table:
         """Table of cells and plain texts."""
         cells = tuple(tuple(c if isinstance(c, Cell) else Cell(c) for c in row) for row in rows)
         return cls(name, caption, tuple(header), cells, **more)
@@ -100,6 +100,7 @@ class Figures:
     drawings: tuple[Drawing, ...]
 
 
+Row = Sequence[Cell | str]
 Block = Paragraph | Facts | Table | Figures
 
 

@@ -11,8 +11,8 @@ from typing import Any
 
 from strainkit import __version__
 from strainkit.collect.table import STATUSES, TABLE, StressTable
-from strainkit.present.calculation import setting_text
-from strainkit.present.report_page import Block, Cell, Facts, Paragraph, Section, Table
+from strainkit.present.calculation import settings_text
+from strainkit.present.report_page import Block, Cell, Facts, Paragraph, Row, Section, Table
 from strainkit.present.terminal import molecules_text
 from strainkit.run.files import checksum
 from strainkit.run.plan import MANIFEST, Plan
@@ -21,9 +21,10 @@ __all__ = ["CAUTIONS", "cautions_section", "provenance_section"]
 
 CAUTIONS = (
     "The numbers are static 0 K values of a perfect, infinite crystal, as good as the functional behind them.",
-    "Values at room temperature are usually lower, for molecular crystals by roughly 10 to 40 % (from memory of the literature).",
-    "Elastic constants indicate and do not decide how a powder compacts: they are not a tablet strength, not a milling or handling "
-    "limit, not a pressure rating and not a safety case. Measurement, local codes and licensed practice decide.",
+    "Values at room temperature are usually lower, for molecular crystals by roughly 10 to 40 % (from memory of the "
+    "literature).",
+    "Elastic constants indicate and do not decide how a powder compacts: they are not a tablet strength, not a milling or "
+    "handling limit, not a pressure rating and not a safety case. Measurement, local codes and licensed practice decide.",
 )
 
 _PACKAGES = ("numpy", "scipy", "spglib", "ase", "phonopy", "matplotlib")
@@ -39,14 +40,16 @@ def provenance_section(plan: Plan, table: StressTable, run: Path | None) -> Sect
     crystal, symmetry = plan.crystal, plan.symmetry
     a, b, c, alpha, beta, gamma = crystal.cell_lengths_angles
     cell = f"{a:.4f} {b:.4f} {c:.4f} A, {alpha:.3f} {beta:.3f} {gamma:.3f} deg"
+    group = f"Laue class {symmetry.laue_class}, within {symmetry.tolerance:g} A"
     facts = [
         ("Crystal", f"{crystal.name}: {crystal.formula}", f"{len(crystal.numbers)} atoms"),
         ("Cell", cell, f"{crystal.volume:.2f} A^3, {crystal.density:.0f} kg/m^3"),
-        ("Space group", f"{symmetry.space_group} (No. {symmetry.number})", f"Laue class {symmetry.laue_class}, within {symmetry.tolerance:g} A"),
+        ("Space group", f"{symmetry.space_group} (No. {symmetry.number})", group),
     ]
     if plan.molecules is not None:
         facts.append(("Molecules", molecules_text(plan.molecules), ""))
-    facts.append(("Strain set", f"aim {plan.aim}", f"{len(plan.strain_set) - 1} strained jobs and the reference, ions {plan.ions}"))
+    jobs = f"{len(plan.strain_set) - 1} strained jobs and the reference, ions {plan.ions}"
+    facts.append(("Strain set", f"aim {plan.aim}", jobs))
     programs = Counter(record.program for record in table.records if record.program)
     facts.append(("Outputs read as", ", ".join(f"{name} ({count})" for name, count in programs.items()) or "none", ""))
     facts += _calculation(plan.calculation)
@@ -67,8 +70,7 @@ def _calculation(calculation: Mapping[str, Any]) -> list[tuple[str, str, str]]:
     files = ", ".join(f"{symbol} = {name}" for symbol, name in calculation["pseudopotentials"].items())
     if files:
         facts.append(("Pseudopotentials", files, ""))
-    values = ", ".join(f"{k} {setting_text(v)}" for k, v in calculation["settings"].items() if v not in ({}, 0.0))
-    return [*facts, ("Settings", values, "")]
+    return [*facts, ("Settings", settings_text(calculation["settings"]), "")]
 
 
 def _files(run: Path) -> list[tuple[str, str, str]]:
@@ -93,12 +95,16 @@ def _versions() -> list[str]:
 
 
 def _jobs(table: StressTable) -> Table:
-    rows = []
+    rows: list[Row] = []
     for record in table.records:
         force = "-" if record.max_force is None else Cell(f"{record.max_force:.2g}", record.max_force)
         energy = "-" if record.energy is None else Cell(f"{record.energy:.6f}", record.energy)
         digest = Cell(record.file_sha256[:16] or "-", whole=record.file_sha256)
-        rows.append([record.label, Cell(record.status, whole=STATUSES[record.status]), record.file or "-", digest, energy, force])
-    caption = "What came back: status, file, the first digits of its SHA-256 (all of them in stresses.json), free energy, largest force"
+        status = Cell(record.status, whole=STATUSES[record.status])
+        rows.append([record.label, status, record.file or "-", digest, energy, force])
+    caption = (
+        "What came back: status, file, the first digits of its SHA-256 (all of them in stresses.json), free energy, largest "
+        "force"
+    )
     header = ["job", "status", "file", "SHA-256", "energy, eV", "force, eV/A"]
     return Table.of("jobs", caption, header, rows, left=4)

@@ -15,13 +15,10 @@ from strainkit.fit.result import Fit
 from strainkit.present.report_page import Tone
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["BLIND", "Verdict", "precision", "verdict"]
+__all__ = ["Verdict", "precision", "verdict"]
 
 #: what no error bar of a fit sees
-BLIND = (
-    "What these error bars cannot see: everything that is smooth in strain, such as cutoff, k-mesh, grid, functional and ions "
-    "that are not fully relaxed."
-)
+_BLIND = "errors that are smooth in strain (cutoff, k-mesh, grid, functional, ions not fully relaxed)"
 
 
 @dataclass(frozen=True)
@@ -47,7 +44,7 @@ def precision(fit: Fit) -> tuple[float, str] | None:
 
 
 def _scale(values: FloatArray) -> FloatArray:
-    return np.maximum(np.abs(values), 0.1 * np.nanmax(np.abs(values)))
+    return np.asarray(np.maximum(np.abs(values), 0.1 * np.nanmax(np.abs(values))))
 
 
 def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: str, findings: Sequence[Finding]) -> Verdict:
@@ -68,7 +65,7 @@ def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: s
     if fit is None:
         return Verdict("bad", (f"No tensor: {why}.", came), None)
     known = precision(fit)
-    tail = (*_precise(fit, known), BLIND, _finer(fit))
+    tail = _precise(fit, known)
     percent = None if known is None else known[0]
     if fit.undetermined:
         names = ", ".join(fit.undetermined)
@@ -77,7 +74,7 @@ def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: s
     assert derived is not None
     if not derived.stability.stable:
         smallest = f"{derived.stability.eigenvalues[0]:.3g} GPa"
-        head = f"Not mechanically stable: the smallest eigenvalue of the stiffness is {smallest}. Moduli have no meaning for it."
+        head = f"Not mechanically stable: the smallest eigenvalue of the stiffness is {smallest}. It has no moduli."
         return Verdict("bad", (head, *tail), percent)
     sentences = [*tail, _stable(derived)]
     if fit.plan.ions == "clamped":
@@ -87,12 +84,15 @@ def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: s
 
 
 def _precise(fit: Fit, known: tuple[float, str] | None) -> tuple[str, ...]:
+    """One sentence on precision, its limits and finer settings, and what the percentage is."""
     if known is None:
-        return ("The precision of the fit is unknown: no spare degrees of freedom to estimate the noise from.",)
+        head = "The precision of the fit is unknown, for want of spare degrees of freedom"
+        return (f"{head}; it cannot see {_BLIND} anyway, and {_finer(fit)}.",)
     percent, name = known
     return (
-        f"The fit is precise to {_percent(percent)} %.",
-        f"That is one standard error of the worst constant, {name}, relative to it or to a tenth of the largest constant.",
+        f"The fit is precise to {_percent(percent)} %; it cannot see {_BLIND}, and {_finer(fit)}.",
+        f"{_percent(percent)} % is one standard error of the worst constant, {name}, relative to it or, where that is more, "
+        "to a tenth of the largest constant.",
     )
 
 
@@ -102,8 +102,8 @@ def _percent(value: float) -> str:
 
 def _finer(fit: Fit) -> str:
     if fit.finer is None:
-        return "Finer settings were not tried."
-    return f"Finer settings were tried on {len(fit.finer.labels)} jobs: they move {_largest_change(fit.finer, fit)}."
+        return "finer settings were not tried"
+    return f"finer settings, tried on {len(fit.finer.labels)} jobs, move {_largest_change(fit.finer, fit)}"
 
 
 def _largest_change(finer: FinerChange, fit: Fit) -> str:
