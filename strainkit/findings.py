@@ -62,6 +62,10 @@ CODES: dict[str, tuple[Severity, str]] = {
     "not-positive-definite": ("error", "the stiffness has an eigenvalue that is not positive"),
     "residual-stress": ("warning", "the reference stress exceeds 5 % of the smallest diagonal constant"),
     "reference-stress-unknown": ("warning", "no usable job determines the reference stress"),
+    "ions-unanswered": ("warning", "the relaxed-ion stiffness cannot be given beside the clamped-ion one"),
+    "unstable-reference": ("error", "the reference cell has modes without a restoring force"),
+    "soft-modes-noisy": ("warning", "the noise of the forces is not small against the softest mode"),
+    "clamped-ions": ("warning", "the stiffness is that of ions held at their affine places"),
     "finer-settings-matter": ("warning", "finer settings change a constant by more than its error bar and one percent"),
     "energy-mismatch": ("warning", "energies and stresses of the same jobs give different stiffness"),
     "energy-slope-mismatch": ("warning", "energies and stresses of the same jobs give different reference stress"),
@@ -77,6 +81,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "magnitude-matters": ("warning", "a statistically real cubic response that shifts a constant by more than 1 %"),
     "convergence-unclear": ("info", "the shift to zero strain is known too poorly for a verdict"),
     # what is derived
+    "acoustic-mismatch": ("warning", "sound speeds of the force constants differ from those of the stiffness"),
     "axes-assumed": ("info", "a tensor file does not name its axes: taken to be the IEEE ones of the cell"),
     "asymmetric-coefficients": ("warning", "the reference stress makes the stress-strain coefficients asymmetric"),
     "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),

@@ -23,6 +23,10 @@ Frame = Annotated[str, typer.Option(help="Printed axes: given, ieee, crystal (x|
 Indices = Annotated[
     Literal["conventional", "given"], typer.Option(help="Cell that planes and directions refer to.", show_default=True)
 ]
+ForceConstants = Annotated[
+    Path | None,
+    typer.Option(help="phonopy.yaml with force constants of the same cell: compare its sound speeds with the stiffness."),
+]
 
 
 def derive(
@@ -39,6 +43,7 @@ def derive(
     noise: KnownNoise = None,
     drop: Drop = None,
     reference_stress: Reading = "real",
+    force_constants: ForceConstants = None,
     frame: Frame = "ieee",
     json: Json = False,
     quiet: Quiet = False,
@@ -64,9 +69,15 @@ def derive(
         assert run is not None
         if cell is not None or density is not None:
             raise UsageError("--cell and --density belong to --tensor: a run folder has its own", "derive")
-        elastic = from_fit(fitted(run, order, noise, drop, "ieee", reference_stress), frame, indices == "given")
+        found = fitted(run, order, noise, drop, "ieee", reference_stress, force_constants)
+        elastic = from_fit(found, frame, indices == "given")
         blind = BLIND_SPOT
-    derived = derive_properties(elastic, planes, directions)
+    study = None
+    if force_constants is not None:
+        from strainkit.dynamics.phonons import load_phonopy
+
+        study = load_phonopy(force_constants)
+    derived = derive_properties(elastic, planes, directions, study)
     deliver(derived.to_dict, lambda: derived_text(derived, blind), json)
     if not derived.stability.stable:
         raise typer.Exit(5)

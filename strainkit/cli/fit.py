@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Annotated, Literal
 
 import typer
@@ -15,6 +16,9 @@ Reading = Annotated[
     Literal["real", "offset"],
     typer.Option(help="Is a stress on the reference real, or an offset of the basis set to be removed?"),
 ]
+ForceConstants = Annotated[
+    Path | None, typer.Option(help="phonopy.yaml with force constants, for clamped ions in place of displaced cells.")
+]
 
 
 def fit(
@@ -23,16 +27,20 @@ def fit(
     noise: KnownNoise = None,
     drop: Drop = None,
     reference_stress: Reading = "real",
+    force_constants: ForceConstants = None,
     frame: Frame = "ieee",
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
     """Stiffness with error bars and findings (stiffness.json)."""
     from strainkit.cli.load import fitted
+    from strainkit.errors import UsageError
     from strainkit.fit.result import FITTED
     from strainkit.present.terminal import fit_text
 
-    result = fitted(run, order, noise, drop, frame, reference_stress)
+    result = fitted(run, order, noise, drop, frame, reference_stress, force_constants)
+    if force_constants is not None and result.plan.ions != "clamped":
+        raise UsageError("force constants are for runs with clamped ions", "--force-constants", "See derive --force-constants.")
     result.save(run, frame)
     note(f"wrote {run / FITTED}", quiet)
     deliver(lambda: result.to_dict(frame), lambda: fit_text(result, frame), json)

@@ -19,7 +19,13 @@ __all__ = ["fitted", "usable"]
 
 
 def fitted(
-    run: Path, order: Order, noise: float | None, drop: list[str] | None, frame: str, reading: ReferenceStress = "real"
+    run: Path,
+    order: Order,
+    noise: float | None,
+    drop: list[str] | None,
+    frame: str,
+    reading: ReferenceStress = "real",
+    constants: Path | None = None,
 ) -> Fit:
     """Fit a run from its stress table, with the options checked."""
     from strainkit.collect.table import load_table
@@ -33,7 +39,13 @@ def fitted(
         raise UsageError(f"a noise of {noise:g} GPa is not possible", "--noise", "Give a positive number.")
     plan = load_plan(run)
     _check_labels(plan, drop)
-    return fit_run(plan, load_table(run), order, noise, tuple(drop or ()), reading)
+    matrix = None
+    if constants is not None and plan.ions == "clamped":
+        from strainkit.dynamics.phonons import gamma_constants, load_phonopy
+
+        matrix = gamma_constants(load_phonopy(constants), plan.crystal)
+    table = load_table(run, ions=plan.ions == "clamped")
+    return fit_run(plan, table, order, noise, tuple(drop or ()), reading, matrix)
 
 
 def usable(run: Path, drop: list[str] | None) -> tuple[Plan, list[StrainJob], FloatArray]:

@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import TYPE_CHECKING, Annotated, Literal
 
 import typer
 
 from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver, note
+
+if TYPE_CHECKING:
+    from strainkit.run.plan import Plan
+    from strainkit.tensors.arrays import FloatArray
 
 Aim = Annotated[
     Literal["fewest", "symmetric", "sharpest"],
@@ -53,6 +57,9 @@ def prepare(
     symmetrize: Annotated[
         bool, typer.Option("--symmetrize", help="Move atoms and cell onto the group found at --symprec first.")
     ] = False,
+    force_constants: Annotated[
+        Path | None, typer.Option(help="phonopy.yaml of the same cell: jobs start where its force constants move the ions.")
+    ] = None,
     displaced: Annotated[
         bool, typer.Option(help="With clamped ions: displaced cells too, for the relaxed-ion stiffness.")
     ] = True,
@@ -104,6 +111,10 @@ def prepare(
     plan = plan_run(
         read_crystal(cell, read_as), wish, ions, symprec, atoms, symmetrize, displaced=displaced and ions == "clamped"
     )
+    if force_constants is not None:
+        if ions == "clamped":
+            raise UsageError("clamped ions do not move", "--force-constants", "Give the file to strainkit fit afterwards.")
+        plan = _predicted(plan, force_constants)
     calculation = chosen_calculation(deck, plan, settings, kspacing, scheduler, symprec)
     if out is None or dry_run:
         plan, _ = plan_with_files(plan, format, calculation, scheduler)
@@ -111,6 +122,28 @@ def prepare(
         plan, what = write_run(plan, out, format, force, calculation, scheduler)
         note(f"{out}: {what}", quiet)
     deliver(plan.to_dict, lambda: plan_text(plan, out), json)
+
+
+def _moved(run: Path) -> dict[str, FloatArray]:
+    """Displacements of the ions in the jobs that have been collected, by label."""
+    from strainkit.collect.table import TABLE, load_table
+
+    if not (run / TABLE).is_file():
+        return {}
+    return {r.label: r.displacements for r in load_table(run, ions=True).usable if r.displacements is not None}
+
+
+def _predicted(plan: Plan, path: Path) -> Plan:
+    """The plan with starting positions from force constants."""
+    from dataclasses import replace
+
+    from strainkit.dynamics.internal import internal_strain
+    from strainkit.dynamics.phonons import gamma_constants, load_phonopy, strain_response
+    from strainkit.prepare.starts import predicted_starts
+
+    study = load_phonopy(path)
+    answer = internal_strain(plan.crystal, gamma_constants(study, plan.crystal), strain_response(study, plan.crystal))
+    return replace(plan, starts=predicted_starts(plan, plan.strain_set, answer.displacements))
 
 
 def _extend(
@@ -130,15 +163,18 @@ def _extend(
     from strainkit.run.plan import load_plan
 
     old = load_plan(run)
+    moved = _moved(run)
     if finer is not None:
-        plan = at_finer_settings(old, read_settings([finer]))
+        plan = at_finer_settings(old, read_settings([finer]), moved)
     elif more is None:
-        plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry))
+        plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry), moved)
     else:
-        plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry))
+        plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry), moved)
     if not dry_run:
         plan = write_extension(run, old, plan, formats)
         note(f"{run}: {len(plan.jobs) - len(old.jobs)} more job folders", quiet)
+        if learned := len(plan.starts) - len(old.starts):
+            note(f"{learned} of them start from what the ions did in the {len(moved)} jobs collected", quiet)
         if "scheduler" in plan.calculation:
             note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
     deliver(plan.to_dict, lambda: plan_text(plan), json)

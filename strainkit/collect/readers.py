@@ -1,97 +1,54 @@
-"""Readers: a table of programs, each recognised by content, with its end-of-job and convergence marks.
+"""Readers: a table of programs, each recognised by content, with its marks and with where it prints each number.
 
-ASE parses where it is right (FHI-aims, CASTEP, Quantum ESPRESSO, VASP, its own formats); none of its readers checks that
-a job ended, so that is done here, before a number is believed.
+No number is believed before the job's end and its convergence were seen; what is damaged, hostile or not the program's
+is an InputError with a reason, never a traceback.
 """
 
 from __future__ import annotations
 
 import re
-import warnings
-from collections.abc import Callable
-from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import Any
 
 import numpy as np
 
+from strainkit.collect.programs import (
+    abinit,
+    aims,
+    castep,
+    cp2k,
+    espresso,
+    gpaw_text,
+    outcar,
+    siesta,
+    through_ase,
+    vasprun,
+)
+from strainkit.collect.programs.through_ase import atoms_from_copy, atoms_from_text
+from strainkit.collect.returned import Geometry, Reader, Returned, Stress
+from strainkit.collect.source import Source, file_head, printable, read_source
 from strainkit.errors import InputError
-from strainkit.tensors.arrays import FloatArray, IntArray
-from strainkit.units import EV_PER_A3_IN_GPA
-
-if TYPE_CHECKING:
-    from ase import Atoms
 
 __all__ = ["READERS", "Reader", "Returned", "read_returned", "recognise"]
 
-#: bytes looked at to tell what a file is
-_HEAD = 4096
 
-
-@dataclass(frozen=True)
-class Returned:
-    """What one output file says.
-
-    Attributes
-    ----------
-    program : str
-        Key of the reader.
-    lattice : (3, 3)
-        Rows, angstrom.
-    positions : (n, 3)
-        Fractional.
-    numbers : (n,)
-        Atomic numbers.
-    stress : (3, 3) or None
-        Cauchy stress in the output's own frame, GPa, positive in tension.
-    energy : float or None
-        Free energy of the cell, eV.
-    forces : (n, 3) or None
-        On the atoms, eV/A, in the output's own frame and order.
-    problems : tuple of (status, message)
-        Why the numbers must not be used; empty for a finished, converged job.
-    """
-
-    program: str
-    lattice: FloatArray
-    positions: FloatArray
-    numbers: IntArray
-    stress: FloatArray | None
-    energy: float | None
-    forces: FloatArray | None
-    problems: tuple[tuple[str, str], ...] = ()
-
-
-@dataclass(frozen=True)
-class Reader:
-    """One kind of output.
-
-    Attributes
-    ----------
-    program : str
-        Name in messages.
-    recognises : callable
-        Whether the first bytes of a file are of this kind.
-    ase_format : str
-        Format name for ase.io.read.
-    end_mark : pattern or None
-        Found in every output of a job that ended by itself; None for formats that are complete or unreadable.
-    bad_marks : tuple of (pattern, status, message)
-        Words that say the numbers are not converged.
-    amend : callable, optional
-        Mends what ASE gets wrong: (text, atoms) -> atoms.
-    """
-
-    program: str
-    recognises: Callable[[bytes], bool]
-    ase_format: str
-    end_mark: re.Pattern[str] | None = None
-    bad_marks: tuple[tuple[re.Pattern[str], str, str], ...] = ()
-    amend: Callable[[str, Atoms], Atoms] | None = None
-
-
-def _has(*words: bytes) -> Callable[[bytes], bool]:
+def _has(*words: bytes) -> Any:
     return lambda head: all(word in head for word in words)
+
+
+def _columns(module: Any) -> dict[str, Any]:
+    """The columns of a program that has a module of its own."""
+    names = ("recognises", "load", "geometry", "stress", "energy", "forces", "settings", "version", "doubts")
+    marks = {"end_mark": module.END_MARK, "bad_marks": module.BAD_MARKS}
+    return {name: getattr(module, name) for name in names} | marks
+
+
+_ASE: dict[str, Any] = {
+    "geometry": through_ase.geometry,
+    "stress": through_ase.stress,
+    "energy": through_ase.energy,
+    "forces": through_ase.forces,
+}
 
 
 def _extxyz(head: bytes) -> bool:
@@ -99,154 +56,136 @@ def _extxyz(head: bytes) -> bool:
     return len(lines) > 1 and lines[0].strip().isdigit() and b"lattice=" in lines[1].lower()
 
 
-def _abinit_cell(text: str, atoms: Atoms) -> Atoms:
-    """ASE ignores acell and bohr: take the lattice from the last R(1), R(2), R(3) lines, and xred with it."""
-    from ase.units import Bohr
-
-    rows = re.findall(r"R\([123]\)=\s*(\S+)\s+(\S+)\s+(\S+)", text)
-    if len(rows) < 3:
-        raise ValueError("no lattice vectors R(1), R(2), R(3)")
-    fractions = atoms.get_scaled_positions(wrap=False)
-    atoms.set_cell(np.array(rows[-3:], dtype=float) * Bohr)
-    results = atoms.calc.results if atoms.calc is not None else {}
-    atoms.set_scaled_positions(fractions)
-    if atoms.calc is not None:
-        atoms.calc.atoms = atoms.copy()
-        atoms.calc.results = results
-    return atoms
+def _starts(word: bytes) -> Any:
+    return lambda head: head.startswith(word)
 
 
-_NOT_CONVERGED = "electronic steps did not converge"
+def _json(head: bytes) -> bool:
+    return head.lstrip().startswith(b"{") and b'"1":' in head and b'"calculator' in head
+
+
+def _pickle(head: bytes) -> bool:
+    return (head[:1] == b"\x80" and head[1:2] in b"\2\3\4\5" and len(head) > 2) or head.startswith(b"PickleTrajectory")
+
+
+def _refuse_pickle(source: Source) -> Any:
+    raise ValueError("a pickle can run any program when it is opened; return one of the other formats")
+
 
 #: in the order in which they are tried, and preferred when a folder holds several kinds
 READERS: tuple[Reader, ...] = (
     Reader(
         "extended XYZ",
         _extxyz,
-        "extxyz",
+        atoms_from_text("extxyz"),
+        **_ASE,
         bad_marks=((re.compile(r"\bconverged=F\b"), "unconverged", "the ions were not relaxed to the tolerance"),),
+        checked="run",
     ),
-    Reader("VASP vasprun.xml", _has(b"<modeling>", b"vasp"), "vasp-xml", re.compile(r"</modeling>\s*\Z")),
-    Reader(
-        "VASP OUTCAR",
-        lambda head: head.lstrip().startswith(b"vasp."),
-        "vasp-out",
-        re.compile(r"General timing and accounting informations for this job"),
-    ),
-    Reader(
-        "Quantum ESPRESSO",
-        _has(b"Program PWSCF"),
-        "espresso-out",
-        re.compile(r"JOB DONE\."),
-        (
-            (re.compile(r"convergence NOT achieved"), "unconverged", _NOT_CONVERGED),
-            (re.compile(r"The maximum number of steps has been reached"), "unconverged", "ions not relaxed: too few steps"),
-        ),
-    ),
-    Reader(
-        "ABINIT",
-        _has(b"ABINIT", b".Version"),
-        "abinit-out",
-        re.compile(r"Calculation completed"),
-        (
-            (re.compile(r"was not enough SCF cycles to converge"), "unconverged", _NOT_CONVERGED),
-            (re.compile(r"not enough Broyd/MD steps to converge"), "unconverged", "ions not relaxed: too few steps"),
-        ),
-        _abinit_cell,
-    ),
-    Reader(
-        "FHI-aims",
-        lambda head: b"FHI-aims" in head or _has(b"| Number of atoms ", b"| Number of spin channels ")(head),
-        "aims-output",
-        re.compile(r"Have a nice day\."),
-        ((re.compile(r"Self-consistency cycle not converged"), "unconverged", _NOT_CONVERGED),),
-    ),
-    Reader(
-        "CASTEP",
-        _has(b"CCC   AA    SSS  TTTTT  EEEEE  PPPP"),
-        "castep-castep",
-        re.compile(r"Total time\s*="),
-        (
-            (re.compile(r"has not converged|SCF cycles performed but system has not reached"), "unconverged", _NOT_CONVERGED),
-            (re.compile(r"Geometry optimization failed to converge"), "unconverged", "ions not relaxed"),
-        ),
-    ),
-    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), "castep-geom"),
-    Reader("ASE trajectory", lambda head: head.startswith(b"- of UlmASE-Trajectory"), "traj"),
-    Reader("ASE database", lambda head: head.startswith(b"SQLite format 3\0"), "db"),
-    Reader("ASE JSON", lambda head: head.lstrip().startswith(b"{") and b'"1":' in head and b'"calculator' in head, "json"),
+    Reader("VASP vasprun.xml", **_columns(vasprun), checked="real"),
+    Reader("VASP OUTCAR", **_columns(outcar), checked="real"),
+    Reader("Quantum ESPRESSO", **_columns(espresso), checked="run"),
+    Reader("ABINIT", **_columns(abinit), checked="run"),
+    Reader("CP2K", **_columns(cp2k), checked="run"),
+    Reader("FHI-aims", **_columns(aims), checked="real"),
+    Reader("CASTEP", **_columns(castep), checked="real"),
+    Reader("SIESTA", **_columns(siesta)),
+    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_ASE),
+    Reader("GPAW gpw", _starts(b"- of UlmGPAW"), atoms_from_copy("gpw"), **_ASE, checked="run"),
+    Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_ASE, checked="run"),
+    Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_ASE, checked="run"),
+    Reader("ASE JSON", _json, atoms_from_text("json"), **_ASE, checked="run"),
+    Reader("GPAW text", **_columns(gpaw_text), checked="run"),
+    Reader("pickle", _pickle, _refuse_pickle, **_ASE),
 )
 
 
 def recognise(path: Path) -> Reader | None:
-    """The reader of a file, by its content; None for anything that is not a program's output."""
-    try:
-        with path.open("rb") as file:
-            head = file.read(_HEAD)
-    except OSError:
-        return None
+    """The reader of a file, by its content, unpacked if need be; None for anything that is not a program's output."""
+    head = file_head(path)
     return next((reader for reader in READERS if reader.recognises(head)), None)
 
 
-def read_returned(path: Path, reader: Reader) -> Returned:
+def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Returned:
     """Read one output file.
+
+    Parameters
+    ----------
+    path : path
+        The file, plain or packed with gzip, xz or bzip2.
+    reader : Reader
+        Its kind, from `recognise`.
+    within : path, optional
+        Folder out of which no symbolic link may lead.
 
     Raises
     ------
     InputError
         When it cannot be parsed; the message says why.
     """
-    from ase import Atoms
-    from ase.io import read
-
-    text = "" if reader.end_mark is None and not reader.bad_marks else path.read_text("utf-8", errors="replace")
-    problems = []
-    if reader.end_mark is not None and not reader.end_mark.search(text):
-        problems.append(("unfinished", f"the {reader.program} output has no end-of-job mark"))
-    problems += [(status, message) for mark, status, message in reader.bad_marks if mark.search(text)]
+    source = read_source(path, within)
+    problems: list[tuple[str, str]] = []
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # remarks of ASE's readers to their developers
-            atoms = read(path, format=reader.ase_format, index=-1)
-        if not isinstance(atoms, Atoms):
-            raise ValueError("no structure in it")
-        if reader.amend:
-            atoms = reader.amend(text, atoms)
-        return _from_atoms(atoms, reader.program, problems)
-    except (Exception, StopIteration) as error:
+        if reader.end_mark is not None and not reader.end_mark.search(source.text):
+            problems.append(("unfinished", f"the {reader.program} output has no end-of-job mark"))
+        problems += [(status, message) for mark, status, message in reader.bad_marks if mark.search(source.text)]
+        return _assemble(reader, reader.load(source), problems)
+    except Exception as error:  # damaged files make the libraries below raise anything
         if problems:
-            raise InputError(problems[0][1], path) from None
+            raise InputError(problems[0][1], printable(path)) from None
         reason = " ".join(str(error).split())[:200] or type(error).__name__
-        raise InputError(f"not readable as {reader.program}: {reason}", path) from None
+        raise InputError(f"not readable as {reader.program}: {reason}", printable(path)) from None
 
 
-def _from_atoms(atoms: Atoms, program: str, problems: list[tuple[str, str]]) -> Returned:
-    results = dict(atoms.calc.results) if atoms.calc is not None else {}
-    stress, forces = results.get("stress"), results.get("forces")
-    if stress is None and "virial" in atoms.info:
-        stress = -np.asarray(atoms.info["virial"], dtype=float).reshape(3, 3) / atoms.get_volume()
+def _assemble(reader: Reader, loaded: Any, problems: list[tuple[str, str]]) -> Returned:
+    geometry = reader.geometry(loaded)
+    _check(geometry)
+    stress, energy, forces = reader.stress(loaded), reader.energy(loaded), reader.forces(loaded)
+    problems += [doubt for doubt in reader.doubts(loaded) if doubt not in problems]
     if stress is None:
         problems.append(("unfinished", "no stress in the output"))
-    elif not np.isfinite(stress).all():
-        problems.append(("broken", "the stress is not a finite number"))
-        stress = None
-    energy = results.get("free_energy", results.get("energy"))
+    else:
+        problems += _disagreement(stress)
+    if energy is not None and not np.isfinite(energy):
+        problems.append(("broken", "the energy is not a finite number"))
+    if forces is not None and (forces.shape != geometry.positions.shape or not np.isfinite(forces).all()):
+        problems.append(("broken", "the forces are not finite numbers, one row an atom"))
+        forces = None
+    finite = stress is not None and bool(np.isfinite(stress.value).all())
     return Returned(
-        program=program,
-        lattice=np.array(atoms.cell.array, dtype=float),
-        positions=atoms.get_scaled_positions(wrap=False),
-        numbers=np.array(atoms.numbers, dtype=np.int64),
-        stress=None if stress is None else _full(np.asarray(stress, dtype=float)) * EV_PER_A3_IN_GPA,
-        energy=None if energy is None else float(energy),
-        forces=None if forces is None else np.array(forces, dtype=float),
+        program=reader.program,
+        lattice=geometry.lattice,
+        positions=geometry.positions,
+        numbers=geometry.numbers,
+        stress=stress.value if stress is not None and finite else None,
+        energy=energy if energy is not None and np.isfinite(energy) else None,
+        forces=forces,
         problems=tuple(problems),
+        version=reader.version(loaded),
+        settings=reader.settings(loaded),
+        stress_repeat=stress.repeat if stress is not None and finite else None,
+        lattice_precision=geometry.precision,
+        positions_known=geometry.positions_known,
     )
 
 
-def _full(stress: FloatArray) -> FloatArray:
-    """Symmetric (3, 3) from Voigt (6,) or (3, 3)."""
-    if stress.shape == (6,):
-        xx, yy, zz, yz, xz, xy = stress
-        return np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]])
-    full = stress.reshape(3, 3)
-    return 0.5 * (full + full.T)
+def _check(geometry: Geometry) -> None:
+    """ValueError for what is no crystal."""
+    if not (np.isfinite(geometry.lattice).all() and np.isfinite(geometry.positions).all()):
+        raise ValueError("the cell or the positions are not finite numbers")
+    lengths = np.linalg.norm(geometry.lattice, axis=1)
+    if lengths.min() <= 0 or abs(np.linalg.det(geometry.lattice)) < 1e-3 * np.prod(lengths):
+        raise ValueError("the cell has no volume")
+    if geometry.positions.shape != (len(geometry.numbers), 3) or not len(geometry.numbers):
+        raise ValueError("no atoms, or not three coordinates each")
+
+
+def _disagreement(stress: Stress) -> list[tuple[str, str]]:
+    if not np.isfinite(stress.value).all():
+        return [("broken", "the stress is not a finite number")]
+    if stress.repeat is None:
+        return []
+    apart = float(np.abs(stress.value - stress.repeat).max())
+    if apart <= stress.rounding:
+        return []
+    return [("broken", f"the stress is printed twice and differs by {apart:.3g} GPa")]

@@ -14,7 +14,7 @@ import numpy as np
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.spacegroup import space_group_data, spglib_raises
 from strainkit.errors import InputError
-from strainkit.tensors.arrays import FloatArray, IntArray
+from strainkit.tensors.arrays import BoolArray, FloatArray, IntArray
 
 __all__ = ["Operations", "crystal_operations"]
 
@@ -41,6 +41,14 @@ class Operations:
         """Mean (..., c, 3) over each class of fields on the atoms (..., n, 3)."""
         share = (self.classes[None, :] == np.arange(self.permutations.shape[1])[:, None]).astype(float)
         return np.asarray((share / share.sum(axis=1, keepdims=True)) @ fields)
+
+    def project(self, field: FloatArray, keeps: BoolArray) -> FloatArray:
+        """The part of a field on the atoms (n, 3) that the operations marked in `keeps` (m,), a group, leave unchanged."""
+        means = self.average(field)
+        total = np.zeros_like(means)
+        for rotation, permutation in zip(self.cartesian[keeps], self.permutations[keeps], strict=True):
+            total[permutation] += means @ rotation.T
+        return np.asarray(total[self.classes] / keeps.sum())
 
 
 def crystal_operations(crystal: Crystal, symprec: float) -> Operations:

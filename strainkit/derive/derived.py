@@ -4,10 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from strainkit.derive.acoustic import AcousticCheck, acoustic_check
 from strainkit.derive.averages import Averages, averages
 from strainkit.derive.elastic import ElasticCrystal, from_fit
 from strainkit.derive.extremes import Extreme, extremes, ratio
@@ -22,6 +23,9 @@ from strainkit.fit.result import Fit
 from strainkit.tensors.averages import AVERAGES
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import stiffness_to_voigt, stress_to_voigt
+
+if TYPE_CHECKING:
+    from phonopy import Phonopy
 
 __all__ = ["Derived", "Direction", "derive_properties"]
 
@@ -66,6 +70,8 @@ class Derived:
     heat : Heat or None
     cauchy : dict
         "C12-C44" and the like, GPa, of the thermodynamic stiffness: zero for central forces.
+    acoustic : AcousticCheck or None
+        Where force constants were given.
     findings : tuple of Finding
     """
 
@@ -79,6 +85,7 @@ class Derived:
     low_index_planes: tuple[OnPlane, ...]
     heat: Heat | None
     cauchy: dict[str, WithError]
+    acoustic: AcousticCheck | None
     findings: tuple[Finding, ...]
 
     def to_dict(self) -> dict[str, Any]:
@@ -115,6 +122,7 @@ class Derived:
             "directions": [_direction(d, e) for d in self.directions],
             "low_index_planes": [plane.to_dict(r) for plane in self.low_index_planes],
             "debye": None if self.heat is None else self.heat.to_dict(),
+            "acoustic_check": None if self.acoustic is None else self.acoustic.to_dict(),
             "findings": [f.to_dict() for f in self.findings],
         }
 
@@ -127,7 +135,12 @@ def _direction(direction: Direction, elastic: ElasticCrystal) -> dict[str, Any]:
     return {"direction": list(direction.indices), "length_A": direction.length, **along}
 
 
-def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), directions: Sequence[Indices] = ()) -> Derived:
+def derive_properties(
+    elastic: ElasticCrystal,
+    planes: Sequence[Indices] = (),
+    directions: Sequence[Indices] = (),
+    study: Phonopy | None = None,
+) -> Derived:
     """Derive everything; an unstable tensor gives its stability and nothing else.
 
     Parameters
@@ -136,6 +149,8 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
         A fit, printed in IEEE axes; or from `strainkit.derive.elastic.from_fit` or `from_tensor_file`, in other axes.
     planes, directions : sequences of (h, k, l) and [u, v, w]
         What to look at besides the cell axes and the low-index planes.
+    study : Phonopy, optional
+        Force constants of the same cell, whose sound speeds are compared.
 
     Raises
     ------
@@ -149,11 +164,12 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
     verdict = stability(elastic.moduli)
     findings = (*elastic.findings, *_doubts(verdict, elastic))
     if not verdict.stable:
-        return Derived(elastic, verdict, None, {}, (), (), (), (), None, {}, findings)
+        return Derived(elastic, verdict, None, {}, (), (), (), (), None, {}, None, findings)
     bonds = molecules = None
     if elastic.crystal is not None:
         bonds, molecules = bonds_and_molecules(elastic.crystal)
     named = elastic.axes is not None
+    acoustic = None if study is None else acoustic_check(elastic, study)
     return Derived(
         elastic=elastic,
         stability=verdict,
@@ -165,7 +181,8 @@ def derive_properties(elastic: ElasticCrystal, planes: Sequence[Indices] = (), d
         low_index_planes=tuple(low_index_planes(elastic, bonds, molecules)) if named else (),
         heat=heat_of(elastic, None if molecules is None else len(molecules.kinds)),
         cauchy=_cauchy(elastic),
-        findings=findings,
+        acoustic=acoustic,
+        findings=findings if acoustic is None else (*findings, *acoustic.findings),
     )
 
 

@@ -108,13 +108,14 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
     plan = fit.plan
     stress = np.nan_to_num(fit.reference_stress)
     moduli = fit.effective
-    asymmetry = _asymmetry(fit.stiffness, stress)
+    asymmetry = _asymmetry(fit.answer, stress)
+    ions = f"ions {plan.ions}" if fit.relaxed is None else "clamped ions and their answer to strain"
     removed = ", reference stress removed as an offset" if fit.reading == "offset" else ""
     return ElasticCrystal(
         name=plan.crystal.name,
-        origin=f"fit of {len(fit.jobs_used)} jobs, ions {plan.ions}, order {fit.order}{removed}",
+        origin=f"fit of {len(fit.jobs_used)} jobs, {ions}, order {fit.order}{removed}",
         moduli=moduli,
-        waves=fit.stiffness,
+        waves=fit.answer,
         stress=stress,
         frame=chosen_frame(frame, plan.symmetry),
         laue_class=plan.symmetry.laue_class,

@@ -10,8 +10,7 @@ import numpy as np
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.spacegroup import spglib_raises
-from strainkit.errors import InputError
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, IntArray
 
 if TYPE_CHECKING:
     from phonopy import Phonopy
@@ -86,31 +85,36 @@ def force_constants(crystal: Crystal, moved: Sequence[Displacement], forces: Flo
         Undisplaced, its forces zero by symmetry or small.
     moved : sequence of Displacement
         A set from `displacements`.
-    forces : (len(moved), n, 3)
+    forces : (..., len(moved), n, 3)
         eV/A, forces of the undisplaced crystal subtracted.
     symprec : float
         The tolerance that the set was made with, angstrom.
 
     Returns
     -------
-    (3 n, 3 n), eV/A^2, symmetric, three zero eigenvalues for the translations.
+    (..., 3 n, 3 n), eV/A^2, symmetric, three zero eigenvalues for the translations.
     """
     study = _phonopy(crystal, symprec)
+    size = 3 * len(crystal.numbers)
+    sets = np.asarray(forces, dtype=float)
+    matrices = [_solve(study, moved, one) for one in sets.reshape(-1, *sets.shape[-3:])]
+    return np.array(matrices).reshape(*sets.shape[:-3], size, size)
+
+
+def _solve(study: Phonopy, moved: Sequence[Displacement], forces: FloatArray) -> FloatArray:
+    """Force constants (3 n, 3 n) of one set of forces (len(moved), n, 3)."""
+    count = forces.shape[1]
     study.dataset = {
-        "natom": len(crystal.numbers),
+        "natom": count,
         "first_atoms": [{"number": m.atom, "displacement": m.vector, "forces": f} for m, f in zip(moved, forces, strict=True)],
     }
     study.produce_force_constants(show_drift=False)
     study.symmetrize_force_constants(show_drift=False)
-    found = study.force_constants
-    if found is None:
-        raise InputError("no force constants from these displaced cells", crystal.name)
-    size = 3 * len(crystal.numbers)
-    matrix = np.asarray(found, dtype=float).transpose(0, 2, 1, 3).reshape(size, size)
+    matrix = np.asarray(study.force_constants, dtype=float).transpose(0, 2, 1, 3).reshape(3 * count, 3 * count)
     return np.asarray(0.5 * (matrix + matrix.T))
 
 
-def frequencies(constants: FloatArray, numbers: FloatArray) -> tuple[FloatArray, FloatArray]:
+def frequencies(constants: FloatArray, numbers: IntArray) -> tuple[FloatArray, FloatArray]:
     """Zone-centre frequencies (3 n,), THz, ascending, imaginary ones negative; and eigenvectors (3 n, 3 n) as columns.
 
     Parameters

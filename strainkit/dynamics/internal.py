@@ -18,7 +18,7 @@ from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.rotations import rotation6
 from strainkit.units import EV_PER_A3_IN_GPA
 
-__all__ = ["InternalStrain", "force_response", "internal_strain"]
+__all__ = ["ForceResponse", "InternalStrain", "force_response", "internal_strain", "ions_answer"]
 
 #: modes softer than this part of the stiffest one count as translations or as unstable (force constants)
 _SOFT = 1e-5
@@ -40,25 +40,38 @@ class InternalStrain:
     displacements: FloatArray
 
 
-def force_response(strains: FloatArray, forces: FloatArray, operations: Operations) -> tuple[FloatArray, float]:
+@dataclass(frozen=True)
+class ForceResponse:
+    """Forces on the ions per unit strain, at their affine places.
+
+    Attributes
+    ----------
+    matrix : (3 n, 6)
+        eV/A per unit Mandel strain, given frame, no net force.
+    noise : float or None
+        Standard deviation of one force component, eV/A; None without spare degrees of freedom.
+    degrees_of_freedom : int
+    """
+
+    matrix: FloatArray
+    noise: float | None
+    degrees_of_freedom: int
+
+
+def force_response(strains: FloatArray, forces: FloatArray, operations: Operations) -> ForceResponse:
     """Force response L to strain from a few strained cells and the crystal's symmetry.
 
-    Every calculation is copied by all operations, the odd part of opposite strains is taken, and L follows by least squares.
+    Every calculation is copied by all operations; copies that fall on one strain are averaged; L follows from the odd part of
+    opposite strains by least squares. The degrees of freedom are those of forces that obey the symmetry of each strained
+    cell, so that programs which symmetrise and programs which do not get the same error bars.
 
     Parameters
     ----------
     strains : (jobs, 6)
         Green-Lagrange strains, Mandel, given frame; zero rows (the reference) are left out.
     forces : (jobs, n, 3)
-        Forces on the ions at their affine places, eV/A, given frame.
+        Forces on the ions at their affine places, eV/A, pulled back to the reference frame (F^T f), given frame.
     operations : Operations
-
-    Returns
-    -------
-    response : (3 n, 6)
-        eV/A per unit Mandel strain.
-    noise : float
-        Root mean square of what is left over, eV/A.
 
     Raises
     ------
@@ -67,33 +80,76 @@ def force_response(strains: FloatArray, forces: FloatArray, operations: Operatio
     """
     q = rotation6(operations.cartesian)
     keep = np.linalg.norm(strains, axis=1) > 1e-9
-    eta = np.einsum("gij,sj->sgi", q, strains[keep]).reshape(-1, 6)
+    eta = np.einsum("gij,sj->sgi", q, strains[keep])
     turned = np.einsum("gij,snj->sgni", operations.cartesian, operations.average(forces[keep]))
     copies = np.empty_like(turned)
     for g, permutation in enumerate(operations.permutations):
         copies[:, g, permutation] = turned[:, g]
-    copies = copies.reshape(len(eta), -1)
-    rows, data = _odd_parts(eta, copies)
+    copies -= copies.mean(axis=2, keepdims=True)
+    points, fields = eta.reshape(-1, 6), copies.reshape(-1, 3 * copies.shape[2])
+    groups = _equal_strains(points)
+    means = {key: fields[rows].mean(axis=0) for key, rows in groups.items()}
+    keys = [key for key in groups if key > _opposite(key) and _opposite(key) in groups]
+    weights = np.array([2.0 / sum(1.0 / len(groups[k]) for k in (key, _opposite(key))) for key in keys])
+    rows = np.array([points[groups[key][0]] for key in keys]).reshape(-1, 6)
     if np.linalg.matrix_rank(rows, tol=1e-6 * np.abs(rows).max(initial=1e-12)) < 6:
         raise NoTensorError("the strained cells do not determine the force response to strain", remedy="Use the whole set.")
-    solution = np.linalg.lstsq(rows, data, rcond=None)[0]
-    left = data - rows @ solution
+    data = np.array([0.5 * (means[key] - means[_opposite(key)]) for key in keys])
+    root = np.sqrt(weights)[:, None]
+    solution = np.linalg.lstsq(root * rows, root * data, rcond=None)[0]
+    freedom = _spare(points, [points[groups[key][0]] for key in keys], operations)
+    squares = float((weights * ((data - rows @ solution) ** 2).sum(axis=1)).sum()) * 2.0 / len(operations.cartesian)
+    share = len(operations.classes) / operations.permutations.shape[1]
+    noise = (squares * share / freedom) ** 0.5 if freedom > 0 else None
     response = solution.reshape(6, -1, 3)[:, operations.classes]
-    return response.reshape(6, -1).T, float(np.sqrt((left**2).mean()))
+    return ForceResponse(response.reshape(6, -1).T, noise, freedom)
 
 
-def _odd_parts(eta: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Strains (k, 6) and odd parts (k, ...) of values at opposite strains; strains without an opposite are left out."""
-    size = np.abs(eta).max()
-    keys = {tuple(np.round(row / size, 5) + 0.0): i for i, row in enumerate(eta)}
-    rows, data, seen = [], [], set()
-    for key, i in keys.items():
-        other = tuple(-x + 0.0 for x in key)
-        if other in keys and key not in seen:
-            seen |= {key, other}
-            rows.append(eta[i])
-            data.append(0.5 * (values[i] - values[keys[other]]))
-    return np.array(rows).reshape(-1, 6), np.array(data).reshape(len(rows), -1)
+def _opposite(key: tuple[float, ...]) -> tuple[float, ...]:
+    return tuple(-x + 0.0 for x in key)
+
+
+def _equal_strains(points: FloatArray) -> dict[tuple[float, ...], list[int]]:
+    """Rows of points (m, 6) by their rounded strain."""
+    groups: dict[tuple[float, ...], list[int]] = {}
+    for i, row in enumerate(np.round(points / np.abs(points).max(initial=1e-12), 5) + 0.0):
+        groups.setdefault(tuple(row.tolist()), []).append(i)
+    return groups
+
+
+def _spare(points: FloatArray, strains: list[FloatArray], operations: Operations) -> int:
+    """Independent odd force data at the strains, some of them images of others, less the independent elements of the response.
+
+    Both are dimensions of invariant spaces, counted by characters.
+    """
+    q, character = rotation6(operations.cartesian), _field_characters(operations)
+    size = np.abs(points).max()
+    left, data = list(strains), 0
+    while left:
+        images = q @ left[0]
+        sign = (np.abs(images - left[0]).max(axis=1) < 1e-4 * size) * 1.0
+        sign -= np.abs(images + left[0]).max(axis=1) < 1e-4 * size
+        data += round(float((sign * character).sum() / np.abs(sign).sum()))
+        orbit = np.concatenate([images, -images])
+        left = [other for other in left if np.abs(orbit - other).max(axis=1).min() > 1e-4 * size]
+    return data - _free_elements(operations)
+
+
+def _field_characters(operations: Operations) -> FloatArray:
+    """Characters (m,) of the representation on fields of vectors on the atoms, translations left out."""
+    fixed = (operations.permutations == np.arange(operations.permutations.shape[1])).sum(axis=1)
+    return np.asarray((fixed - 1) * np.trace(operations.cartesian, axis1=1, axis2=2))
+
+
+def _free_elements(operations: Operations) -> int:
+    """Independent elements of the response of such a field to strain."""
+    strains = np.trace(rotation6(operations.cartesian), axis1=1, axis2=2)
+    return round(float((_field_characters(operations) * strains).mean()))
+
+
+def ions_answer(operations: Operations) -> bool:
+    """Does symmetry allow the ions to leave their affine places under some strain?"""
+    return _free_elements(operations) > 0
 
 
 def internal_strain(crystal: Crystal, constants: FloatArray, response: FloatArray) -> InternalStrain:

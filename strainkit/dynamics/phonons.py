@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import product
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -10,14 +11,15 @@ import numpy as np
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.spacegroup import spglib_raises
 from strainkit.errors import InputError
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.rotations import polar
+from strainkit.tensors.sixvectors import to_mandel
 from strainkit.tensors.strain import gradient_between
 
 if TYPE_CHECKING:
     from phonopy import Phonopy
 
-__all__ = ["crystal_of", "gamma_constants", "load_phonopy", "sound_speeds"]
+__all__ = ["crystal_of", "gamma_constants", "load_phonopy", "rotation_to", "sound_speeds", "strain_response"]
 
 #: distance from q = 0 at which slopes are taken, in units of 2 pi / A
 _STEP = 1e-3
@@ -98,8 +100,8 @@ def sound_speeds(study: Phonopy, directions: FloatArray) -> FloatArray:
     return np.sort(speeds, axis=1)
 
 
-def gamma_constants(study: Phonopy, crystal: Crystal) -> FloatArray:
-    """Force constants at q = 0 (3 n, 3 n), eV/A^2, of the run's crystal in its own frame, summed over the supercell.
+def _blocks(study: Phonopy, crystal: Crystal) -> tuple[FloatArray, IntArray, FloatArray]:
+    """Force constants (n, N, 3, 3) between unit cell and supercell, owners (N,) in the unit cell, rotation to phonopy's frame.
 
     Raises
     ------
@@ -113,15 +115,52 @@ def gamma_constants(study: Phonopy, crystal: Crystal) -> FloatArray:
     same = np.array_equal(cell.numbers, crystal.numbers)
     if not same or np.linalg.norm(shift @ crystal.lattice, axis=1).max() > 0.1:
         raise InputError("the atoms of the force constants are not those of the run, in the same order", "--force-constants")
-    full = np.asarray(study.force_constants, dtype=float)
     supercell: Any = study.supercell
     owner = np.array([supercell.u2u_map[i] for i in supercell.s2u_map])
-    first = np.array(supercell.u2s_map)
+    full = np.asarray(study.force_constants, dtype=float)[np.array(supercell.u2s_map)]
+    return np.einsum("ia,mnij,jb->mnab", rotation, full, rotation), owner, rotation
+
+
+def gamma_constants(study: Phonopy, crystal: Crystal) -> FloatArray:
+    """Force constants at q = 0 (3 n, 3 n), eV/A^2, of the run's crystal in its own frame, summed over the supercell.
+
+    Raises
+    ------
+    InputError
+        When the unit cells differ, or their atoms stand in another order.
+    """
+    blocks, owner, _ = _blocks(study, crystal)
     n = len(crystal.numbers)
     summed = np.zeros((n, n, 3, 3))
-    for i, row in enumerate(first):
-        for column in range(len(owner)):
-            summed[i, owner[column]] += full[row, column]
-    turned = np.einsum("ia,mnij,jb->mnab", rotation, summed, rotation)
-    matrix = turned.transpose(0, 2, 1, 3).reshape(3 * n, 3 * n)
+    for column, atom in enumerate(owner):
+        summed[:, atom] += blocks[:, column]
+    matrix = summed.transpose(0, 2, 1, 3).reshape(3 * n, 3 * n)
     return np.asarray(0.5 * (matrix + matrix.T))
+
+
+def strain_response(study: Phonopy, crystal: Crystal) -> FloatArray:
+    """Forces (3 n, 6), eV/A per unit Mandel strain, on ions at their affine places: the first moments of the force constants.
+
+    Pairs are taken at their shortest distance in the supercell, averaged over images that are equally far, so the supercell
+    must be larger than the reach of the forces (Born & Huang, Dynamical Theory of Crystal Lattices, 1954, sections 26 and 27).
+
+    Raises
+    ------
+    InputError
+        When the unit cells differ, or their atoms stand in another order.
+    """
+    blocks, _, rotation = _blocks(study, crystal)
+    supercell: Any = study.supercell
+    lattice, places = np.array(supercell.cell), np.array(supercell.scaled_positions)
+    images = np.array(list(product((-1, 0, 1), repeat=3))) @ lattice
+    response = np.empty((len(crystal.numbers), 3, 6))
+    for i, atom in enumerate(supercell.u2s_map):
+        apart = places - places[atom]
+        ways = (apart - np.round(apart))[:, None, :] @ lattice + images
+        far = np.linalg.norm(ways, axis=2)
+        shortest = far < far.min(axis=1, keepdims=True) + 1e-4
+        mean = (ways * shortest[:, :, None]).sum(axis=1) / shortest.sum(axis=1)[:, None] @ rotation
+        moment = -np.einsum("nab,nc->abc", blocks[i], mean)
+        response[i] = to_mandel(0.5 * (moment + moment.transpose(0, 2, 1)))
+    response -= response.mean(axis=0)
+    return response.reshape(-1, 6)

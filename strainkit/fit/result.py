@@ -16,6 +16,7 @@ from strainkit.errors import NoTensorError
 from strainkit.findings import Finding, finding
 from strainkit.fit.checks import Checks, examine
 from strainkit.fit.finer import FinerChange, finer_change
+from strainkit.fit.ions import RelaxedIons, relax_ions
 from strainkit.fit.judge import judge
 from strainkit.fit.regression import Regression, regress
 from strainkit.fit.residual import ReferenceStress, remove_offset
@@ -51,6 +52,8 @@ class Fit:
         Energies, curvature, outliers, readings of the reference stress.
     finer : FinerChange or None
         What the pairs at finer settings change; None when there are none.
+    relaxed : RelaxedIons or None
+        With clamped ions: the answer of the ions and the relaxed-ion stiffness, where the run holds what it takes.
     findings : tuple of Finding
     """
 
@@ -62,6 +65,7 @@ class Fit:
     reading: ReferenceStress
     checks: Checks
     finer: FinerChange | None
+    relaxed: RelaxedIons | None
     findings: tuple[Finding, ...]
 
     @property
@@ -72,7 +76,7 @@ class Fit:
 
     @property
     def stiffness(self) -> Stiffness:
-        """Thermodynamic stiffness C in the given frame, with covariance.
+        """Thermodynamic stiffness C as fitted to the jobs (clamped ions stay clamped), in the given frame, with covariance.
 
         Raises
         ------
@@ -92,12 +96,17 @@ class Fit:
         return from_mandel(self.regression.reference_stress)
 
     @property
+    def answer(self) -> Stiffness:
+        """The stiffness that all else is derived from, given frame: with the answer of the ions where that is known."""
+        return self.stiffness if self.relaxed is None else self.relaxed.stiffness
+
+    @property
     def effective(self) -> Stiffness:
         """Symmetric part of the stress-strain coefficients B, given frame: what stability and moduli are made of.
 
-        Equal to C for a crystal without residual stress; the errors are those of C.
+        Equal to `answer` for a crystal without residual stress; the errors are those of that.
         """
-        plain = self.stiffness
+        plain = self.answer
         stress = np.nan_to_num(self.reference_stress)
         b = stress_strain_coefficients(plain.mandel, stress)
         return Stiffness(0.5 * (b + b.T), plain.covariance, plain.degrees_of_freedom)
@@ -147,6 +156,7 @@ class Fit:
             "undetermined": list(self.undetermined),
             "reference_stress_reading": self.reading,
             **self.checks.to_dict(plan.basis.names),
+            "relaxed_ion": None if self.relaxed is None else self.relaxed.to_dict(chosen.rotation),
             "finer_settings": None if self.finer is None else self.finer.to_dict(plan.basis.names),
             "findings": [f.to_dict() for f in self.findings],
         }
@@ -197,6 +207,7 @@ def fit_run(
     noise: float | None = None,
     drop: tuple[str, ...] = (),
     reading: ReferenceStress = "real",
+    constants: FloatArray | None = None,
 ) -> Fit:
     """Fit the stiffness of a run from its stress table.
 
@@ -212,6 +223,8 @@ def fit_run(
         Labels of jobs to leave out; recorded in the result.
     reading : "real" or "offset"
         Whether a stress on the reference is real, or an offset of the basis set to be removed.
+    constants : (3 n, 3 n), optional
+        Force constants at q = 0, eV/A^2, given frame, for the answer of clamped ions, in place of displaced cells.
 
     Raises
     ------
@@ -230,16 +243,19 @@ def fit_run(
     checks = examine(plan, jobs, stresses, [energies[job.label] for job in jobs], regression, order)
     finer = finer_change(plan, table, regression)
     changes = [] if finer is None else finer.findings(plan.basis.names, regression.values)
+    used = tuple(job.label for job in jobs)
+    relaxed, remarks = relax_ions(plan, table, regression, used, constants)
     return Fit(
         plan=plan,
         regression=regression,
         order=order,
-        jobs_used=tuple(job.label for job in jobs),
+        jobs_used=used,
         dropped=tuple(drop),
         reading=reading,
         checks=checks,
         finer=finer,
-        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings, *changes),
+        relaxed=relaxed,
+        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
     )
 
 

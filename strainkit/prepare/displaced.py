@@ -8,33 +8,18 @@ from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.operations import crystal_operations
 from strainkit.design.jobs import StrainJob
 from strainkit.dynamics.gamma import displacements
+from strainkit.dynamics.internal import ions_answer
 from strainkit.findings import Finding, finding
-from strainkit.tensors.rotations import rotation6
 
-__all__ = ["STEPS_MOLECULAR", "STEPS_OTHER", "cost_finding", "displaced_jobs", "ions_answer"]
+__all__ = ["STEPS_MOLECULAR", "STEPS_OTHER", "cost_finding", "displaced_jobs"]
 
 #: relaxation steps a job that are assumed: molecular crystals (README measures 26 to 141), all others
 STEPS_MOLECULAR, STEPS_OTHER = 50, 12
 
 
-def ions_answer(crystal: Crystal, symprec: float) -> bool:
-    """Does symmetry allow the ions to leave their affine places under some strain?"""
-    if len(crystal.numbers) == 1:
-        return False
-    operations = crystal_operations(crystal, symprec)
-    count = operations.permutations.shape[1]
-    response = np.random.default_rng(0).normal(size=(count, 3, 6))
-    q = rotation6(operations.cartesian * np.round(np.linalg.det(operations.cartesian))[:, None, None])
-    mean = np.zeros_like(response)
-    for g, permutation in enumerate(operations.permutations):
-        mean[permutation] += np.einsum("ij,cja,ba->cib", operations.cartesian[g], response, q[g]) / len(q)
-    mean -= mean.mean(axis=0)
-    return bool(np.abs(mean).max() > 1e-6)
-
-
 def displaced_jobs(crystal: Crystal, symprec: float) -> list[StrainJob]:
     """The fewest cells with one atom displaced that give the force constants at q = 0; none where ions cannot answer."""
-    if not ions_answer(crystal, symprec):
+    if not ions_answer(crystal_operations(crystal, symprec)):
         return []
     return [
         StrainJob(f"d{number}", 0, 0.0, np.eye(3), "displaced", (moved.atom, moved.vector))

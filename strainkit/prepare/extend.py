@@ -14,6 +14,7 @@ from strainkit.errors import InputError
 from strainkit.prepare.calculation import recorded_calculation
 from strainkit.prepare.runfolder import files_of
 from strainkit.prepare.settings import Settings
+from strainkit.prepare.starts import learned_starts
 from strainkit.prepare.writers import default_formats
 from strainkit.run.files import atomic_write, checksum
 from strainkit.run.plan import Plan, job_folder
@@ -22,24 +23,27 @@ from strainkit.tensors.arrays import FloatArray
 __all__ = ["at_finer_settings", "extend_plan", "write_extension"]
 
 
-def extend_plan(plan: Plan, new: Sequence[StrainJob], starts: Mapping[str, FloatArray] | None = None) -> Plan:
+def extend_plan(plan: Plan, new: Sequence[StrainJob], displacements: Mapping[str, FloatArray] | None = None) -> Plan:
     """The plan with further jobs behind the old ones, and what the whole strain set promises.
 
     Parameters
     ----------
     plan : Plan
     new : sequence of StrainJob
-    starts : mapping, optional
-        Label -> fractional positions (n, 3) that a new job starts from.
+    displacements : mapping, optional
+        What relaxed in the finished jobs, as `learned_starts` takes it.
     """
-    longer = replace(plan, jobs=(*plan.jobs, *new), starts={**plan.starts, **(starts or {})})
+    starts = learned_starts(plan, new, displacements or {})
+    longer = replace(plan, jobs=(*plan.jobs, *new), starts={**plan.starts, **starts})
     promise, doubts = expect(longer.strain_set, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
     kept = tuple(f for f in plan.findings if f.code not in ("few-spare-degrees", "target-error"))
     return replace(longer, expectation=promise, findings=(*kept, *doubts))
 
 
-def at_finer_settings(plan: Plan, settings: Settings) -> Plan:
+def at_finer_settings(plan: Plan, settings: Settings, displacements: Mapping[str, FloatArray] | None = None) -> Plan:
     """The plan with one or two pairs once more, at finer settings of the deck or of the local engine.
+
+    `displacements` are those of the finished jobs, as `extend_plan` takes them.
 
     Raises
     ------
@@ -62,7 +66,7 @@ def at_finer_settings(plan: Plan, settings: Settings) -> Plan:
         finer["calculation"] = {**record, "settings": {**record["settings"], **changed}, "kmesh": kmesh}
         if finer["calculation"] == record:
             raise InputError("these are the settings that the run has", settings.source, "Give finer ones.")
-    return replace(extend_plan(plan, finer_jobs(plan.strain_set)), finer=finer)
+    return replace(extend_plan(plan, finer_jobs(plan.strain_set), displacements), finer=finer)
 
 
 def write_extension(run: Path, old: Plan, plan: Plan, formats: Sequence[str] | None = None) -> Plan:

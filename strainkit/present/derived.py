@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from strainkit.derive.acoustic import AcousticCheck
 from strainkit.derive.averages import Averages
 from strainkit.derive.derived import Derived, Direction
 from strainkit.derive.elastic import ElasticCrystal
@@ -175,7 +176,26 @@ def _sound(derived: Derived) -> list[str]:
         lines.append(row("", value_text(heat.molecules, 1), f"counting molecules, {count} in the cell"))
     if heat.shortcut is not None:
         lines.append(row("", plain(heat.shortcut, 1), "Anderson's shortcut, counting atoms"))
-    return [*lines, ""]
+    return [*lines, *_acoustic(derived.acoustic), ""]
+
+
+def _acoustic(check: AcousticCheck | None) -> list[str]:
+    """Speeds of the force constants beside those of the stiffness."""
+    if check is None:
+        return []
+    table = []
+    for i, indices in enumerate(check.directions):
+        errors = [None] * 3 if check.errors is None else check.errors[i]
+        own = [uncertain(float(v), None if e is None else float(e)) for v, e in zip(check.elastic[i], errors, strict=True)]
+        table.append([f"[{' '.join(map(str, indices))}]", *own, *(plain(v, 3) for v in check.phonons[i])])
+    worst = 100 * float(np.abs(check.difference).max())
+    verdict = "agree" if not check.findings else "do NOT agree: see the findings"
+    return [
+        "",
+        "  against force constants, at zero electric field, km/s",
+        columns(table, ["", "from the stiffness", "", "", "from phonons", "", ""]),
+        f"  they {verdict} (largest difference {worst:.1f} %)",
+    ]
 
 
 def _axes(e: ElasticCrystal) -> list[str]:

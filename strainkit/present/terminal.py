@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 from strainkit.collect.table import STATUSES, StressTable
 from strainkit.crystal.crystal import Crystal
@@ -187,6 +188,7 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
     lines = [
         heading(f"{fit.plan.crystal.name}: stiffness, {len(fit.jobs_used)} jobs, ions {fit.plan.ions}, order {fit.order}"),
         columns(rows, ["IEEE axes", "GPa", "95 % interval", "" if fit.finer is None else "finer settings"]),
+        *_relaxed_ions(fit, data["relaxed_ion"]),
         "",
         paragraph(f"6x6 in GPa, frame {chosen.name}: {chosen.axes}", "  "),
         columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
@@ -203,6 +205,22 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         findings_text(fit.findings),
     ]
     return "\n".join(lines)
+
+
+def _relaxed_ions(fit: Fit, data: dict[str, Any] | None) -> list[str]:
+    """Constants with the answer of the ions, the matrix, and the modes at the zone centre."""
+    if fit.relaxed is None or data is None:
+        return []
+    rows = [[c["name"], uncertain(c["value_GPa"], c["standard_error_GPa"])] for c in data["constants"]]
+    modes = fit.relaxed.frequencies
+    noise = "unknown" if fit.relaxed.force_noise is None else f"{fit.relaxed.force_noise:.2g} eV/A"
+    return [
+        "",
+        heading(f"with the answer of the ions, {fit.relaxed.origin}"),
+        columns(rows, ["IEEE axes", "GPa"]),
+        columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
+        f"  zone-centre modes  {modes[3]:.2f} to {modes[-1]:.2f} THz; noise of a force component {noise}",
+    ]
 
 
 def _changes(finer: FinerChange) -> list[str]:

@@ -4,37 +4,19 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from ase import Atoms
 from ase.build import bulk
+from support.crystals import random_rotation
+from support.phonons import phonopy_file
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.dynamics.gamma import frequencies
-from strainkit.dynamics.phonons import crystal_of, gamma_constants, load_phonopy, sound_speeds
+from strainkit.dynamics.phonons import crystal_of, gamma_constants, load_phonopy, sound_speeds, strain_response
 from strainkit.errors import InputError
 from strainkit.evaluate.engines import Engine
 from strainkit.tensors.stiffness import Stiffness
 
 DIRECTIONS = np.array([[1.0, 0, 0], [1, 1, 0], [1, 1, 1], [1, 2, 3]])
 DIRECTIONS /= np.linalg.norm(DIRECTIONS, axis=1)[:, None]
-
-
-def phonopy_file(folder, atoms, engine, repeats):
-    """A phonopy_params.yaml with force constants, made here with the engine."""
-    from phonopy import Phonopy
-    from phonopy.structure.atoms import PhonopyAtoms
-
-    cell = PhonopyAtoms(symbols=list(atoms.symbols), cell=atoms.cell.array, scaled_positions=atoms.get_scaled_positions())
-    study = Phonopy(cell, supercell_matrix=np.eye(3, dtype=int) * repeats, primitive_matrix=np.eye(3), log_level=0)
-    study.generate_displacements(distance=0.01)
-    calculator = engine.calculator()
-    forces = []
-    for moved in study.supercells_with_displacements:
-        image = Atoms(moved.symbols, cell=moved.cell, scaled_positions=moved.scaled_positions, pbc=True, calculator=calculator)
-        forces.append(image.get_forces())
-    study.forces = forces
-    study.produce_force_constants(show_drift=False)
-    study.save(folder / "phonopy_params.yaml", settings={"force_constants": True})
-    return folder / "phonopy_params.yaml"
 
 
 def christoffel(constants, density):
@@ -94,3 +76,23 @@ def test_another_cell_and_broken_files_are_refused(tmp_path):
     path.write_text("not: [a phonopy file")
     with pytest.raises(InputError, match="not readable by phonopy"):
         load_phonopy(path)
+
+
+@pytest.mark.parametrize("seed", [0, 1])
+def test_force_response_from_force_constants_and_from_strained_cells(tmp_path, seed):
+    """Tersoff silicon, phonopy's cell turned against the run's: first moments of force constants and clamped cells."""
+    from strainkit.crystal.operations import crystal_operations
+    from strainkit.dynamics.internal import force_response
+    from strainkit.evaluate.single import evaluate_cell
+    from strainkit.prepare.runfolder import plan_run
+    from strainkit.tensors.sixvectors import to_mandel
+
+    engine, atoms = Engine("tersoff"), bulk("Si", a=5.432)
+    turned = atoms.copy()
+    turned.set_cell(atoms.cell.array @ random_rotation(np.random.default_rng(seed)).T, scale_atoms=True)
+    crystal = Crystal.from_atoms(turned)
+    found = strain_response(load_phonopy(phonopy_file(tmp_path, atoms, engine, 3)), crystal)
+    jobs = plan_run(crystal, [0.0005], "clamped").strain_set
+    forces = np.array([evaluate_cell(crystal.deformed(job.gradient), engine, relax=False).forces for job in jobs])
+    expected = force_response(to_mandel(np.array([job.strain for job in jobs])), forces, crystal_operations(crystal, 1e-4))
+    np.testing.assert_allclose(found, expected.matrix, rtol=0, atol=2e-3 * np.abs(expected.matrix).max())

@@ -12,11 +12,16 @@ import numpy as np
 import pytest
 from support.crystals import random_rotation, random_unimodular, rewritten
 
+from strainkit.collect.table import load_table
+from strainkit.crystal.operations import crystal_operations
 from strainkit.crystal.read import read_crystal
-from strainkit.prepare.writers import FORMATS
+from strainkit.evaluate.engines import Engine
+from strainkit.evaluate.single import evaluate_cell
+from strainkit.prepare.runfolder import plan_run
+from strainkit.run.plan import load_plan
 from strainkit.shipped import shipped_folder
-from strainkit.tensors.rotations import rotate_matrix
-from strainkit.tensors.sixvectors import stiffness_from_voigt, stiffness_to_voigt
+from strainkit.tensors.sixvectors import stiffness_from_voigt, stress_from_voigt
+from strainkit.units import EV_PER_A3_IN_GPA
 
 #: naphthalene P2_1/c, 36 atoms a cell, as a 1x2x1 supercell (in one cell at Gamma its molecules join to chains):
 #: sample_cells/naphthalene.cif relaxed with GFN1-xTB by strainkit relax
@@ -54,13 +59,16 @@ def test_dry_ice_and_its_noise(cli, need, tmp_path):
 
 @pytest.mark.slow
 def test_monoclinic_molecular_crystal_the_same_however_it_is_written(cli, need, tmp_path):
-    """13 constants from 8 strained jobs, positive definite; turned, in another basis and order: equal within the errors."""
+    """13 constants from 8 strained jobs, positive definite; turned, permuted, in another basis: the same jobs and stresses.
+
+    Two of the nine jobs are computed again, for time; all nine, fitted, agreed within the error bars when run by hand.
+    """
     need("tblite")
-    first = fitted(cli, NAPHTHALENE, tmp_path / "first", "--magnitude", 0.5)
+    run = tmp_path / "first"
+    first = fitted(cli, NAPHTHALENE, run, "--magnitude", 0.5)
     assert len(first["constants"]) == 13
     assert len(first["jobs_used"]) == 9
-    matrix, error = (np.array(first[key]) for key in ("stiffness_GPa", "standard_error_GPa"))
-    assert np.linalg.eigvalsh(stiffness_from_voigt(matrix)).min() > 0
+    assert np.linalg.eigvalsh(stiffness_from_voigt(np.array(first["stiffness_GPa"]))).min() > 0
     assert all(c["standard_error_GPa"] > 0 for c in first["constants"])
     assert first["energy_check"]["curvature_agrees"]
 
@@ -68,9 +76,18 @@ def test_monoclinic_molecular_crystal_the_same_however_it_is_written(cli, need, 
     crystal = read_crystal(NAPHTHALENE)
     turn = random_rotation(rng)
     other = rewritten(crystal, turn, random_unimodular(rng), rng.permutation(len(crystal.numbers)))
-    cell = tmp_path / "other.extxyz"
-    cell.write_text(FORMATS["extxyz"].write(other, "the same crystal"))
-    second = fitted(cli, cell, tmp_path / "second", "--magnitude", 0.5)
-    back = stiffness_to_voigt(rotate_matrix(turn.T, stiffness_from_voigt(np.array(second["stiffness_GPa"]))))
-    # the engine sums over another basis and the optimiser takes another path: differences of the order of the errors
-    assert (np.abs(back - matrix) < 5 * error + 0.02).all()
+    plan = plan_run(other, [0.005])
+    records = {r.label: r for r in load_table(run).records}
+    before = {job.label: job for job in load_plan(run).jobs}
+    assert [job.label for job in plan.jobs] == list(records)
+    operations = turn @ crystal_operations(crystal, 1e-3).cartesian
+    for job in plan.jobs[:2]:
+        mine = before[job.label]
+        images = [r @ mine.gradient @ r.T for r in operations]
+        image = np.argmin([np.abs(g - job.gradient).max() for g in images])
+        np.testing.assert_allclose(images[image], job.gradient, rtol=0, atol=1e-7)
+        operation = operations[image]
+        found = evaluate_cell(plan.starting_cell(job), Engine("gfn1-xtb"), relax=True).stress * EV_PER_A3_IN_GPA
+        expected = operation @ stress_from_voigt(records[job.label].stress) @ operation.T
+        # the optimiser takes another path to 2e-4 eV/A: the noise of this set is a few MPa
+        np.testing.assert_allclose(found, expected, rtol=0, atol=6 * first["noise_GPa"])
