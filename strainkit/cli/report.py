@@ -7,7 +7,7 @@ from typing import Annotated, Literal
 
 import typer
 
-from strainkit.cli.derive import Directions, Indices, Planes
+from strainkit.cli.derive import Directions, ForceConstants, Indices, Planes
 from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
 from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
 
@@ -28,6 +28,7 @@ def report(
     noise: KnownNoise = None,
     drop: Drop = None,
     reference_stress: Reading = "real",
+    force_constants: ForceConstants = None,
     frame: Frame = "ieee",
     force: Annotated[bool, typer.Option("--force", help="Replace files that strainkit did not write.")] = False,
     json: Json = False,
@@ -48,11 +49,16 @@ def report(
     refuse_foreign(path, force)
     fit, why = None, ""
     try:
-        fit = fitted(run, order, noise, drop, frame, reference_stress)
+        fit = fitted(run, order, noise, drop, frame, reference_stress, force_constants)
     except NoTensorError as error:
         why = error.what
     plan = load_plan(run) if fit is None else fit.plan
-    made = report_run(plan, load_table(run), fit, frame, planes, directions, indices == "given", run, why)
+    study = None
+    if force_constants is not None:
+        from strainkit.dynamics.phonons import load_phonopy
+
+        study = load_phonopy(force_constants)
+    made = report_run(plan, load_table(run), fit, frame, planes, directions, indices == "given", study, run, why)
     made.save(path, force)
     note(f"wrote {path}", quiet)
     files = [] if figures is None else write_figures(made.figures.values(), figures, figure_format, force)

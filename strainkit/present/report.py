@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from functools import cached_property
 from html import escape
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from strainkit.collect.table import StressTable
 from strainkit.derive.derived import Derived, derive_properties
@@ -24,6 +24,9 @@ from strainkit.present.report_provenance import cautions_section, provenance_sec
 from strainkit.present.report_verdict import Verdict, verdict
 from strainkit.run.files import atomic_write
 from strainkit.run.plan import Plan
+
+if TYPE_CHECKING:
+    from phonopy import Phonopy
 
 __all__ = ["REPORT", "Report", "refuse_foreign", "report_run", "write_figures"]
 
@@ -114,6 +117,7 @@ def report_run(
     planes: Sequence[Indices] = (),
     directions: Sequence[Indices] = (),
     given_indices: bool = False,
+    study: Phonopy | None = None,
     run: Path | None = None,
     why: str = "",
 ) -> Report:
@@ -131,6 +135,8 @@ def report_run(
         What to look at besides the cell axes and the low-index planes.
     given_indices : bool
         Take (hkl) and [uvw] in the cell as given even when that is not a conventional one.
+    study : Phonopy, optional
+        Force constants of the same cell, whose sound speeds are compared.
     run : Path, optional
         The run folder, for the checksums of its files.
     why : str
@@ -143,7 +149,7 @@ def report_run(
             why = error.what
     derived = found = None
     if fit is not None and not fit.undetermined:
-        derived = derive_properties(from_fit(fit, frame, given_indices), planes, directions)
+        derived = derive_properties(from_fit(fit, frame, given_indices), planes, directions, study)
         jobs, stresses = usable_jobs(plan, table, fit.dropped)
         found = converge(plan, jobs, stresses, fit.regression.noise if fit.regression.degrees_of_freedom is None else None)
     findings = _findings(plan, table, fit, derived, found)

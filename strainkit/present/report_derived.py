@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import numpy as np
+
+from strainkit.derive.acoustic import AcousticCheck
 from strainkit.derive.derived import Derived
 from strainkit.derive.extremes import Extreme
 from strainkit.derive.planes import Along, OnPlane
@@ -53,7 +56,22 @@ def moduli_section(derived: Derived | None) -> Section:
         note = f"counting molecules, {heat.molecules_in_cell} in the cell"
         facts.append(("", f"{value_text(heat.molecules, 1)} K", note))
     blocks.append(Facts(tuple(facts)))
+    if derived.acoustic is not None:
+        blocks.append(_acoustic(derived.acoustic))
     return Section("moduli", title, tuple(blocks))
+
+
+def _acoustic(check: AcousticCheck) -> Table:
+    """Speeds of the force constants beside those of the stiffness."""
+    rows: list[Row] = []
+    for i, indices in enumerate(check.directions):
+        errors = [None] * 3 if check.errors is None else check.errors[i]
+        own = [number(float(v), None if e is None else float(e)) for v, e in zip(check.elastic[i], errors, strict=True)]
+        rows.append([indices_text(indices, False), *own, *(number(float(v), digits=3) for v in check.phonons[i])])
+    worst = 100 * float(np.abs(check.difference).max())
+    caption = f"Speeds of sound, km/s, from the stiffness and from force constants (largest difference {worst:.1f} %)"
+    header = ["along", *(f"{word} {k}" for word in ("stiffness", "phonons") for k in ("slow", "middle", "fast"))]
+    return Table.of("acoustic", caption, header, rows)
 
 
 def _missing(derived: Derived | None) -> str | None:

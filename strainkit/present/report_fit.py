@@ -19,6 +19,8 @@ def tensor_section(fit: Fit, frame: str) -> Section:
     """Constants with errors and intervals, the matrix in a frame, noise and reference stress."""
     data, chosen, r = fit.to_dict(frame), fit.plan.frames[frame], fit.regression
     header = ["constant", "GPa", "standard error", "95 % interval"] + (["finer settings"] if fit.finer else [])
+    header += ["ions relaxed"] if fit.relaxed else []
+    relaxed = data["relaxed_ion"]
     rows: list[Row] = []
     for i, constant in enumerate(data["constants"]):
         value, error, (low, high) = constant["value_GPa"], constant["standard_error_GPa"], constant["interval95_GPa"]
@@ -33,6 +35,8 @@ def tensor_section(fit: Fit, frame: str) -> Section:
             spread = None if fit.finer.error is None else float(fit.finer.error[i])
             fixed = "" if fit.finer.determined[i] else "~"
             row.append(Cell(fixed + uncertain(float(fit.finer.change[i]), spread), float(fit.finer.change[i])))
+        if relaxed is not None:
+            row.append(number(relaxed["constants"][i]["value_GPa"], relaxed["constants"][i]["standard_error_GPa"]))
         rows.append(row)
     note = "; change at finer settings, ~ where the finer jobs do not fix it by themselves" if fit.finer else ""
     caption = f"Independent constants, named in IEEE axes ({fit.plan.frames['ieee'].axes}){note}"
@@ -41,7 +45,8 @@ def tensor_section(fit: Fit, frame: str) -> Section:
         [c, *(_element(v, e) for v, e in zip(values, errors, strict=True))]
         for c, values, errors in zip(COMPONENTS, data["stiffness_GPa"], data["standard_error_GPa"], strict=True)
     ]
-    caption = f"Stiffness, GPa, with one standard error in the last digits; frame {chosen.name}: {chosen.axes}"
+    held = " of clamped ions" if fit.plan.ions == "clamped" else ""
+    caption = f"Stiffness{held}, GPa, with one standard error in the last digits; frame {chosen.name}: {chosen.axes}"
     whole = Table.of("stiffness", caption, ["", *COMPONENTS], matrix, sortable=False)
     dof = r.degrees_of_freedom
     source = "given" if dof is None else f"from {dof} spare degrees of freedom"
@@ -56,9 +61,31 @@ def tensor_section(fit: Fit, frame: str) -> Section:
         )
     )
     blocks: list[Block] = [whole, constants, facts]
+    if fit.relaxed is not None:
+        blocks = [*_relaxed(fit, frame), *blocks]
     if fit.checks.treatments:
         blocks.append(_readings(fit))
     return Section("tensor", "Stiffness tensor", tuple(blocks))
+
+
+def _relaxed(fit: Fit, frame: str) -> list[Block]:
+    """The matrix with the answer of the ions, and where it comes from."""
+    assert fit.relaxed is not None
+    chosen, found = fit.plan.frames[frame], fit.relaxed
+    stiffness = found.stiffness.rotated(chosen.rotation, chosen.name)
+    errors = stiffness.standard_errors
+    rows: list[Row] = []
+    for i, c in enumerate(COMPONENTS):
+        spread = np.full(6, np.nan) if errors is None else errors[i]
+        rows.append([c, *(_element(v, e) for v, e in zip(stiffness.voigt[i], spread, strict=True))])
+    modes = found.frequencies
+    text = (
+        f"The jobs hold their ions; the answer of the ions is added, {found.origin}. Zone-centre modes from {modes[3]:.2f} to "
+        f"{modes[-1]:.2f} THz. All that follows is derived from the tensor with relaxed ions."
+    )
+    caption = f"Stiffness with relaxed ions, GPa; frame {chosen.name}: {chosen.axes}"
+    table = Table.of("relaxed-stiffness", caption, ["", *COMPONENTS], rows, sortable=False)
+    return [Paragraph(text), table]
 
 
 def _element(value: float, error: float) -> Cell:

@@ -31,14 +31,14 @@ class Verdict:
 
 
 def precision(fit: Fit) -> tuple[float, str] | None:
-    """Largest standard error of a constant, percent of that constant or of a tenth of the largest one, and its name.
+    """Largest standard error of a constant and its name; with relaxed ions where these are known.
 
-    None without an error estimate.
+    In percent of that constant, or of a tenth of the largest one where that is more. None without an error estimate.
     """
-    r = fit.regression
-    if r.covariance is None:
+    found = fit.regression if fit.relaxed is None else fit.relaxed
+    if found.covariance is None:
         return None
-    part = np.sqrt(np.diag(r.covariance)) / _scale(r.values)
+    part = np.sqrt(np.diag(found.covariance)) / _scale(found.values)
     at = int(np.nanargmax(part))
     return 100.0 * float(part[at]), fit.plan.basis.names[at]
 
@@ -77,8 +77,10 @@ def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: s
         head = f"Not mechanically stable: the smallest eigenvalue of the stiffness is {smallest}. It has no moduli."
         return Verdict("bad", (head, *tail), percent)
     sentences = [*tail, _stable(derived)]
-    if fit.plan.ions == "clamped":
-        sentences.append("Ions are clamped: this is not the stiffness that a crystal shows, but an upper bound of its moduli.")
+    if fit.relaxed is not None:
+        sentences.append(f"The jobs hold their ions; the answer of the ions is added, {fit.relaxed.origin}.")
+    elif fit.plan.ions == "clamped":
+        sentences.append("Ions are clamped: this is stiffer than the crystal, whose ions relax.")
     gravest = worst(findings)
     return Verdict("good" if gravest in (None, "info") and known is not None else "doubt", tuple(sentences), percent)
 

@@ -8,17 +8,20 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from support.files import write
+from support.files import SILICON, write
 from support.published import mandel
 from support.returned import linear_law, write_returns
 from support.runs import returned_run
 
 import strainkit
 from strainkit.collect.table import load_table
+from strainkit.derive.derived import derive_properties
 from strainkit.errors import InputError
 from strainkit.fit.result import fit_run
 from strainkit.present.report import write_figures
+from strainkit.present.report_fit import tensor_section
 from strainkit.present.report_page import Page, Paragraph, Section, Table, number, render
+from strainkit.present.report_verdict import verdict
 from strainkit.present.reported import report_text
 from strainkit.run.plan import load_plan
 
@@ -262,3 +265,21 @@ def test_the_same_from_a_notebook(silicon):
     assert "<td>" in constants._repr_html_()
     assert 'srcdoc="&lt;!DOCTYPE html&gt;' in report._repr_html_()
     assert report.html == strainkit.report_run(load_plan(run), load_table(run), fit).html  # same data, same page
+
+
+def test_clamped_ions_are_told_from_relaxed_ones(tmp_path, cli):
+    """Tersoff silicon, C44 118.8 and 69.0 GPa: published 119 (Tersoff 1989), 69.0 (npj Comput. Mater. 10, 218, 2024)."""
+    run = tmp_path / "run"
+    assert cli("prepare", write(tmp_path, "POSCAR", SILICON), "--ions", "clamped", "--magnitude", "0.3", "--out", run).code == 0
+    assert cli("evaluate", run, "--engine", "tersoff", "--workers", 1).code == 0
+    assert cli("collect", run).code == 0
+    fit = fit_run(load_plan(run), load_table(run, ions=True))
+    tables = {block.name: block for block in tensor_section(fit, "ieee").blocks if isinstance(block, Table)}
+    assert tables["relaxed-stiffness"].rows[3][4].key == pytest.approx(69.0, rel=2e-3)
+    assert tables["stiffness"].rows[3][4].key == pytest.approx(118.8, rel=2e-3)
+    assert "clamped" in tables["stiffness"].caption
+    row = tables["constants"].rows[2]
+    assert (row[1].key, row[4].key) == pytest.approx((118.8, 69.0), rel=2e-3)
+    derived = derive_properties(fit)
+    said = " ".join(verdict(fit, derived, load_table(run), "", fit.findings).sentences)
+    assert "answer of the ions is added" in said
