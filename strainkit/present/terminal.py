@@ -165,8 +165,8 @@ def table_text(table: StressTable, every: bool = False) -> str:
             [r.label, r.status, *(plain(None if r.stress is None else r.stress[i]) for i in range(6))] for r in table.records
         ]
         lines += ["", columns(rows, ["job", "status", *COMPONENTS], left=2), "  Cauchy stress, GPa, positive in tension"]
-    bad = [f for record in table.records for f in record.findings]
-    again = [record.label for record in table.records if record.status != "done"]
+    bad = [*table.findings, *(f for record in table.records for f in record.findings)]
+    again = [record.label for record in table.records if record.status not in ("done", "mismatch", "suspect")]
     if again:
         lines.append(paragraph(f"to run again: {' '.join(again)}", "  "))
     return "\n".join([*lines, "", findings_text(bad)])
@@ -194,7 +194,7 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
         "",
         f"  stress noise      {'unknown' if noise is None else f'{noise:.3g} GPa, {source}'}",
-        f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
+        paragraph(f"reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)", "  "),
         f"  energies          {_energy_words(fit)}",
         f"  curvature         {fit.checks.verdict}",
         f"  finer settings    {_finer_words(fit)}",
