@@ -28,6 +28,7 @@ if TYPE_CHECKING:
     from strainkit.findings import Finding
     from strainkit.fit.result import fit_run
     from strainkit.prepare.runfolder import plan_run, write_run
+    from strainkit.present.report import report_run
     from strainkit.run.plan import load_plan
     from strainkit.tensors.stiffness import Stiffness
 
@@ -49,6 +50,7 @@ __all__ = [
     "plan_run",
     "read_crystal",
     "relax_reference",
+    "report_run",
     "write_run",
 ]
 
@@ -68,6 +70,7 @@ _HOME = {
     "plan_run": "prepare.runfolder",
     "read_crystal": "crystal.read",
     "relax_reference": "evaluate.reference",
+    "report_run": "present.report",
     "write_run": "prepare.runfolder",
 }
 
