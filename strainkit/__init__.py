@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import find_symmetry
     from strainkit.derive.averages import averages
+    from strainkit.derive.comparison import compare_crystals
     from strainkit.derive.derived import derive_properties
     from strainkit.errors import StrainkitError
     from strainkit.evaluate.engines import Engine
@@ -41,6 +42,7 @@ __all__ = [
     "StrainkitError",
     "averages",
     "collect_run",
+    "compare_crystals",
     "derive_properties",
     "evaluate_run",
     "find_symmetry",
@@ -60,6 +62,7 @@ _HOME = {
     "StrainkitError": "errors",
     "averages": "derive.averages",
     "collect_run": "collect.gather",
+    "compare_crystals": "derive.comparison",
     "derive_properties": "derive.derived",
     "evaluate_run": "evaluate.runset",
     "find_symmetry": "crystal.symmetry",

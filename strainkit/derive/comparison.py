@@ -8,13 +8,14 @@ from typing import Any
 
 from strainkit.derive.differences import Column, Difference, Ranking, column_of, lettered, ranked, tested
 from strainkit.derive.formation import Composition, Reaction, energies_of
-from strainkit.derive.member import Member, named_apart
+from strainkit.derive.member import Member, member_of_fit, named_apart
 from strainkit.derive.quantities import QUANTITIES, Quantity
 from strainkit.derive.sameaxes import common_names, obstacle
 from strainkit.derive.significance import LEVEL
 from strainkit.derive.spread import WithError
 from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
+from strainkit.fit.result import Fit
 
 __all__ = ["Comparison", "compare_crystals"]
 
@@ -98,13 +99,14 @@ def _softest(member: Member) -> dict[str, Any] | None:
     return member.moduli.ends["shear_GPa"][0].to_dict(member.elastic.frame.rotation)
 
 
-def compare_crystals(members: Sequence[Member], by: str = "young", baseline: str | None = None) -> Comparison:
+def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseline: str | None = None) -> Comparison:
     """Compare crystals.
 
     Parameters
     ----------
-    members : sequence of Member
-        From `member_of_fit` and `member_of_file`; labels are made different.
+    crystals : sequence of Member or Fit
+        Members come from `member_of_fit` and `member_of_file`, and know energies and settings; a fit alone has none. Labels
+        are made different.
     by : str
         What to rank by: a key of `QUANTITIES`, or a constant such as "C11" that all members share.
     baseline : str, optional
@@ -115,9 +117,9 @@ def compare_crystals(members: Sequence[Member], by: str = "young", baseline: str
     UsageError
         Fewer than two members, one of them twice, an unknown quantity or baseline.
     """
-    if len(members) < 2:
+    if len(crystals) < 2:
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
-    members = named_apart(members)
+    members = named_apart([member_of_fit(c) if isinstance(c, Fit) else c for c in crystals])
     base = None if baseline is None else _found(members, baseline)
     moduli = _moduli_columns(members)
     groups, apart = _groups(members)
@@ -139,7 +141,7 @@ def compare_crystals(members: Sequence[Member], by: str = "young", baseline: str
         ranking=ranked(_wanted(every, by)),
         compositions=tuple(compositions),
         reactions=tuple(reactions),
-        findings=(*_temperatures(members), *_untested(members), *doubts),
+        findings=(*_temperatures(members), *_clamped(members), *doubts, *_methods(members), *_untested(members)),
     )
 
 
@@ -216,3 +218,24 @@ def _untested(members: Sequence[Member]) -> list[Finding]:
     bare = [m.label for m in members if m.elastic.moduli.covariance is None]
     text = "no errors: no test, no probability"
     return [finding("no-test", ", ".join(bare), text)] if bare else []
+
+
+def _clamped(members: Sequence[Member]) -> list[Finding]:
+    held = [m.label for m in members if m.clamped]
+    if not held or len(held) == len(members):
+        return []
+    text = "these ions are clamped, those of the others relax: constants of molecular crystals then differ manifold"
+    return [finding("ions-differ", ", ".join(held), text)]
+
+
+def _methods(members: Sequence[Member]) -> list[Finding]:
+    """Runs computed otherwise than the first one."""
+    computed = [m for m in members if m.method is not None]
+    found = []
+    for m in computed[1:]:
+        assert m.method is not None
+        assert computed[0].method is not None
+        if unlike := computed[0].method.differences(m.method):
+            text = f"computed otherwise than {computed[0].label}: {'; '.join(unlike)}"
+            found.append(finding("methods-differ", m.label, text))
+    return found

@@ -63,6 +63,8 @@ def kind_text(member: Member) -> str:
         words.append(f"at {member.temperature:g} K")
     elif member.computed:
         words.append("static")
+    if member.method is not None and member.method.words:
+        words.append(f"by {member.method.words}")
     if member.source:
         words.append(member.source)
     if member.place.rstrip("/") != member.label and member.computed:

@@ -8,6 +8,8 @@ from html.parser import HTMLParser
 
 import numpy as np
 import pytest
+from ase.calculators.emt import EMT
+from ase.spacegroup import crystal
 from support.files import SILICON, write
 from support.published import mandel
 from support.returned import linear_law, write_return, write_returns
@@ -103,6 +105,33 @@ def test_a_tensor_with_its_cell(cli, runs, tmp_path):
     assert data["crystals"][1]["formula"] == "Si2"
     assert data["crystals"][1]["softest_shear"]["along"]["nearest_plane"] is not None
     assert len(data["constants"][0]["constants"]) == 3
+
+
+def test_alloy_formed_from_its_metals(cli, tmp_path):
+    """Copper, gold and AuCu3 of the effective-medium potential; the energies again straight from ASE."""
+    cubes = {"Cu": [("Cu", (0, 0, 0))], "Au": [("Au", (0, 0, 0))], "AuCu3": [("Au", (0, 0, 0)), ("Cu", (0, 0.5, 0.5))]}
+    lengths = {"Cu": 3.59, "Au": 4.06, "AuCu3": 3.73}
+    groups = {"Cu": 225, "Au": 225, "AuCu3": 221}
+    energies, runs = {}, []
+    for name, sites in cubes.items():
+        symbols, basis = zip(*sites, strict=True)
+        atoms = crystal(symbols, basis, spacegroup=groups[name], cellpar=[lengths[name]] * 3 + [90] * 3)
+        atoms.calc = EMT()
+        energies[name] = atoms.get_potential_energy() / 4  # four atoms in every one of these cubes
+        atoms.write(tmp_path / f"{name}.vasp", direct=True)
+        run = tmp_path / name
+        assert cli("prepare", tmp_path / f"{name}.vasp", "--out", run, "--ions", "clamped", "--no-displaced").code == 0
+        assert cli("evaluate", run, "--engine", "emt", "--workers", 1).code == 0
+        assert cli("collect", run).code == 0
+        runs.append(run)
+    data = cli("compare", *runs, "--json").json
+    (formed,) = data["energies"]
+    assert formed["product"] == "AuCu3"
+    assert formed["parents"] == [{"crystal": "Cu", "formula_units": "3"}, {"crystal": "Au", "formula_units": "1"}]
+    expected = 4 * energies["AuCu3"] - 3 * energies["Cu"] - energies["Au"]
+    assert formed["energy_eV"] == pytest.approx(expected, rel=0, abs=1e-6)
+    assert [c["method"]["engine"] for c in data["crystals"]] == ["emt"] * 3
+    assert "settings-unverified" not in {f["code"] for f in data["findings"]}
 
 
 class _Page(HTMLParser):

@@ -173,3 +173,26 @@ def test_labels():
         compare_crystals([a, b], baseline="x")
     with pytest.raises(UsageError, match="ranked by 'hardness'"):
         compare_crystals([a, b], by="hardness")
+
+
+def test_a_notebook_compares_fits():
+    """Fits without folders: numbered where their names are the same."""
+    from strainkit.collect.table import StressRecord, StressTable
+    from strainkit.fit.result import fit_run
+    from strainkit.prepare.runfolder import plan_run
+    from strainkit.tensors.sixvectors import from_mandel, stress_to_voigt, to_mandel
+    from strainkit.tensors.strain import cauchy_from_pk2
+
+    fits = []
+    for seed in (1, 2):
+        plan, rng = plan_run(conventional("m-3m"), [0.01]), np.random.default_rng(seed)
+        records = []
+        for job in plan.jobs:
+            stress = from_mandel(mandel("Si_CRC") @ to_mandel(job.strain) + 0.01 * rng.standard_normal(6))
+            records.append(StressRecord(job.label, "done", stress_to_voigt(cauchy_from_pk2(stress, job.gradient))))
+        fits.append(fit_run(plan, StressTable(tuple(records))))
+    c = compare_crystals(fits)
+    assert c.labels == ["number 1", "number 2"]
+    assert c.tests == 12
+    assert not any(d.distinguishable for d in c.differences)  # the seeds are fixed; false alarms have a test of their own
+    assert not c.reactions
