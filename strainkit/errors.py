@@ -3,13 +3,19 @@
 StrainkitError            exit 1   the root; raised itself only for the unexpected
 +-- UsageError            exit 2   options that contradict each other (also ValueError)
 +-- InputError            exit 3   a file, folder or structure that cannot be used (also ValueError)
+|   +-- DiskError         exit 3   a place that cannot be written: full disk, permissions
 +-- IncompleteError       exit 4   calculations missing or unfinished, constants undetermined (also RuntimeError)
 +-- NoTensorError         exit 5   no stiffness tensor can be given (also RuntimeError)
 """
 
 from __future__ import annotations
 
-__all__ = ["IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError"]
+__all__ = ["DiskError", "IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError", "printable"]
+
+
+def printable(text: str) -> str:
+    """A text in which control characters, line breaks and bytes that are no text are written out, as \\x1b."""
+    return text if text.isprintable() else "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
 class StrainkitError(Exception):
@@ -28,8 +34,9 @@ class StrainkitError(Exception):
     exit_code = 1
 
     def __init__(self, what: str, where: object = "", remedy: str = "") -> None:
-        super().__init__(what, str(where), remedy)
-        self.what, self.where, self.remedy = what, str(where), remedy
+        what, place, remedy = printable(what), printable(str(where)), printable(remedy)
+        super().__init__(what, place, remedy)
+        self.what, self.where, self.remedy = what, place, remedy
 
     def __str__(self) -> str:
         head = f"{self.where}: {self.what}" if self.where else self.what
@@ -46,6 +53,10 @@ class InputError(StrainkitError, ValueError):
     """A file, folder or structure that cannot be used."""
 
     exit_code = 3
+
+
+class DiskError(InputError):
+    """A place that cannot be written: every further attempt would end the same way."""
 
 
 class IncompleteError(StrainkitError, RuntimeError):

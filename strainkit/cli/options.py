@@ -12,13 +12,16 @@ from typing import Annotated, Any
 import typer
 
 __all__ = [
+    "Again",
     "Cell",
     "Frame",
     "Json",
     "Quiet",
     "ReadAs",
     "Run",
+    "RunOrCampaign",
     "Symprec",
+    "Workers",
     "deliver",
     "note",
     "progress",
@@ -26,8 +29,11 @@ __all__ = [
 
 Cell = Annotated[Path, typer.Argument(help="Structure file: CIF, POSCAR, extended XYZ, or any ASE format with --read-as.")]
 Run = Annotated[Path, typer.Argument(help="Run folder made by strainkit prepare.")]
+RunOrCampaign = Annotated[Path, typer.Argument(metavar="RUN", help="Run folder or campaign made by strainkit prepare.")]
 ReadAs = Annotated[str | None, typer.Option(help="Format of CELL: cif, poscar, extxyz or an ASE format name.")]
 Symprec = Annotated[float, typer.Option(help="Distance tolerance of the symmetry search, A.", min=1e-8, max=1.0)]
+Workers = Annotated[int | None, typer.Option(help="Processes, for a campaign. [default: all cores]", min=1)]
+Again = Annotated[bool, typer.Option("--again", help="For a campaign: do crystals anew whose inputs have not changed.")]
 Frame = Annotated[str, typer.Option(help="Axes of printed tensors: given, ieee or crystal (x||a, z||c*).")]
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON object to standard output.")]
 Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress bar; results are printed all the same.")]
