@@ -14,7 +14,7 @@ if TYPE_CHECKING:
 
 Crystals = Annotated[
     list[str] | None,
-    typer.Argument(metavar="RUN...", help="Run folders, and files with typed tensors: FILE, or FILE:CELL with its structure."),
+    typer.Argument(metavar="RUN...", help="Run or campaign folders, and typed tensors: FILE, or FILE:CELL with its structure."),
 ]
 By = Annotated[
     str,
@@ -38,15 +38,18 @@ def compare(
     quiet: Quiet = False,
 ) -> None:
     """Crystals side by side: what differs beyond the error bars, which ranking is right, what forms from what."""
-    from strainkit.derive.comparison import compare_crystals
+    from strainkit.derive.comparison import MOST, compare_crystals
     from strainkit.errors import UsageError
     from strainkit.present.comparison import comparison_text
     from strainkit.present.comparison_csv import comparison_csv
     from strainkit.run.files import atomic_write
 
-    if len(crystals or []) < 2:
+    places = [place for text in crystals or [] for place in _places(text)]
+    if len(places) < 2:
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
-    result = compare_crystals([_member(text, symprec) for text in crystals or []], by, baseline)
+    if len(places) > MOST:
+        raise UsageError(f"{len(places)} crystals are too many to set side by side", "compare", f"Choose at most {MOST}.")
+    result = compare_crystals([_member(place, symprec) for place in places], by, baseline)
     if csv is not None:
         atomic_write(csv, comparison_csv(result))
         note(f"wrote {csv}", quiet)
@@ -58,6 +61,15 @@ def compare(
     deliver(result.to_dict, lambda: comparison_text(result), json)
     if any(m.moduli is None for m in result.members):
         raise typer.Exit(5)
+
+
+def _places(text: str) -> list[str]:
+    """The run folders of a campaign, or the one place."""
+    from strainkit.run.campaign import is_campaign, load_campaign
+
+    if not is_campaign(Path(text)):
+        return [text]
+    return [str(Path(text) / member.run) for member in load_campaign(Path(text)).members]
 
 
 def _member(text: str, symprec: float) -> Member:

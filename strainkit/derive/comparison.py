@@ -17,7 +17,10 @@ from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
 from strainkit.fit.result import Fit
 
-__all__ = ["Comparison", "compare_crystals"]
+__all__ = ["MOST", "Comparison", "compare_crystals"]
+
+#: most crystals in one comparison
+MOST = 50
 
 
 @dataclass(frozen=True)

@@ -8,9 +8,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from strainkit.collect.readers import read_returned, recognise
 from strainkit.collect.table import StressRecord
-from strainkit.errors import InputError
 from strainkit.run.extxyz import RETURNED, recorded_engine
 from strainkit.run.plan import Plan
 
@@ -53,7 +51,7 @@ class Method:
     settings, pseudopotentials : dict
         Of the deck; empty without one.
     printed : mapping
-        What the output of the reference says of its settings; see `strainkit.collect.returned.Returned`.
+        What the output of the reference says of its settings; see `strainkit.collect.table.StressRecord`.
     kspacing : float or None
         1/A, 2 pi included.
     kmesh : tuple of int
@@ -162,19 +160,8 @@ def method_of(plan: Plan, record: StressRecord | None, run: Path) -> Method:
         pseudopotentials={} if engine is not None else dict(deck.get("pseudopotentials", {})),
         kspacing=None if engine is not None else deck.get("kspacing_per_A"),
         kmesh=() if engine is not None else tuple(deck.get("kmesh", ())),
-        printed={} if engine is not None or record is None else _printed(run / record.file),
+        printed={} if engine is not None or record is None else record.settings,
     )
-
-
-def _printed(path: Path) -> Mapping[str, Any]:
-    """Settings in an output; none when the file is gone or says nothing."""
-    reader = recognise(path) if path.is_file() else None
-    if reader is None:
-        return {}
-    try:
-        return read_returned(path, reader).settings
-    except InputError:
-        return {}
 
 
 def _unlike(mine: dict[str, Any], theirs: dict[str, Any], what: str = "", shared: bool = False) -> list[str]:

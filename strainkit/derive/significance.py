@@ -10,6 +10,7 @@ frequent as they should be (a million simulated pairs).
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
+from string import ascii_letters
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -121,5 +122,5 @@ def letters(order: Sequence[int], different: Iterable[tuple[int, int]]) -> dict[
         sets = [g for g in unique if not any(g < other for other in unique)]
     place = {member: k for k, member in enumerate(order)}
     sets.sort(key=lambda group: sorted(place[m] for m in group))
-    names = [chr(ord("a") + k) if k < 26 else f"a{k - 25}" for k in range(len(sets))]
-    return {m: "".join(name for name, group in zip(names, sets, strict=True) if m in group) for m in order}
+    names = [*ascii_letters, *(f"({k})" for k in range(len(sets)))]
+    return {m: "".join(name for name, group in zip(names, sets, strict=False) if m in group) for m in order}

@@ -8,14 +8,17 @@ from html.parser import HTMLParser
 
 import numpy as np
 import pytest
+from ase.build import bulk
 from ase.calculators.emt import EMT
 from ase.spacegroup import crystal
 from support.files import SILICON, write
 from support.published import mandel
-from support.returned import linear_law, write_return, write_returns
+from support.returned import write_return
 
 from strainkit.run.plan import job_folder, load_plan
-from strainkit.tensors.sixvectors import from_mandel
+from strainkit.tensors.sixvectors import from_mandel, to_mandel
+from strainkit.tensors.strain import cauchy_from_pk2
+from strainkit.units import EV_PER_A3_IN_GPA
 
 MEASURED = """name measured
 laue m-3m
@@ -29,15 +32,16 @@ C44 79.6(2)
 
 
 def silicon_run(cli, folder, name, noise, seed, energy=-1.0):
-    """A run whose stresses follow the published tensor of silicon (CRC) with Gaussian noise, GPa."""
-    run = folder / name
+    """A run whose energies (eV) and stresses follow the published tensor of silicon (CRC); Gaussian noise in GPa."""
+    run, stiffness, rng = folder / name, mandel("Si_CRC"), np.random.default_rng(seed)
     assert cli("prepare", write(folder, "POSCAR", SILICON), "--out", run).code == 0
-    rng, exact = np.random.default_rng(seed), linear_law(mandel("Si_CRC"))
     plan = load_plan(run)
-    write_returns(run, plan, lambda strain: exact(strain) + noise * from_mandel(rng.standard_normal(6)))
-    write_return(
-        run / job_folder("reference"), plan.crystal, np.zeros((3, 3)), energy=energy, engine="lj epsilon=1.0 fmax=0.0002"
-    )
+    for job in plan.jobs:
+        strain = to_mandel(job.strain)
+        sigma = cauchy_from_pk2(from_mandel(stiffness @ strain + noise * rng.standard_normal(6)), job.gradient)
+        stored = 0.5 * strain @ stiffness @ strain * plan.crystal.volume / EV_PER_A3_IN_GPA
+        cell = plan.crystal.deformed(job.gradient)
+        write_return(run / job_folder(job.label), cell, sigma, energy=energy + stored, engine="lj fmax=0.0002")
     assert cli("collect", run).code == 0
     return run
 
@@ -204,3 +208,18 @@ def test_an_unstable_crystal(cli, tmp_path):
     assert page.code == 5
     assert "C11, GPa" in page.out
     assert cli("compare", soft, tmp_path / "measured.txt").code == 2  # no modulus to rank by
+
+
+def test_a_campaign_is_its_crystals(cli, tmp_path):
+    copper = bulk("Cu", "fcc", a=3.59)
+    copper.write(tmp_path / "one.vasp", direct=True)
+    copper.set_cell(1.001 * copper.cell, scale_atoms=True)
+    copper.write(tmp_path / "two.vasp", direct=True)
+    cells, campaign = [tmp_path / f"{name}.vasp" for name in ("one", "two")], tmp_path / "campaign"
+    assert cli("prepare", *cells, "--out", campaign, "--ions", "clamped", "--no-displaced").code == 0
+    for run in (campaign / "runs" / "001").iterdir():
+        assert cli("evaluate", run, "--engine", "emt", "--workers", 1).code == 0
+        assert cli("collect", run).code == 0
+    data = cli("compare", campaign, "--json").json
+    assert [c["label"] for c in data["crystals"]] == ["one", "two"]
+    assert len(data["energies"]) == 1  # the same metal twice: one form against the lower one
