@@ -29,6 +29,8 @@ if TYPE_CHECKING:
     from strainkit.findings import Finding
     from strainkit.fit.result import fit_run
     from strainkit.prepare.runfolder import plan_run, write_run
+    from strainkit.present.comparison_page import comparison_page
+    from strainkit.present.report import report_run
     from strainkit.run.plan import load_plan
     from strainkit.tensors.stiffness import Stiffness
 
@@ -43,6 +45,7 @@ __all__ = [
     "averages",
     "collect_run",
     "compare_crystals",
+    "comparison_page",
     "derive_properties",
     "evaluate_run",
     "find_symmetry",
@@ -51,6 +54,7 @@ __all__ = [
     "plan_run",
     "read_crystal",
     "relax_reference",
+    "report_run",
     "write_run",
 ]
 
@@ -63,6 +67,7 @@ _HOME = {
     "averages": "derive.averages",
     "collect_run": "collect.gather",
     "compare_crystals": "derive.comparison",
+    "comparison_page": "present.comparison_page",
     "derive_properties": "derive.derived",
     "evaluate_run": "evaluate.runset",
     "find_symmetry": "crystal.symmetry",
@@ -71,6 +76,7 @@ _HOME = {
     "plan_run": "prepare.runfolder",
     "read_crystal": "crystal.read",
     "relax_reference": "evaluate.reference",
+    "report_run": "present.report",
     "write_run": "prepare.runfolder",
 }
 

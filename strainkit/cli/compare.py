@@ -34,6 +34,7 @@ def compare(
     csv: Csv = None,
     html: Html = None,
     symprec: Symprec = 1e-3,
+    force: Annotated[bool, typer.Option("--force", help="Replace files that strainkit did not write.")] = False,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
@@ -41,8 +42,7 @@ def compare(
     from strainkit.derive.comparison import MOST, compare_crystals
     from strainkit.errors import UsageError
     from strainkit.present.comparison import comparison_text
-    from strainkit.present.comparison_csv import comparison_csv
-    from strainkit.run.files import atomic_write
+    from strainkit.present.comparison_csv import save_csv
 
     places = [place for text in crystals or [] for place in _places(text)]
     if len(places) < 2:
@@ -51,12 +51,14 @@ def compare(
         raise UsageError(f"{len(places)} crystals are too many to set side by side", "compare", f"Choose at most {MOST}.")
     result = compare_crystals([_member(place, symprec) for place in places], by, baseline)
     if csv is not None:
-        atomic_write(csv, comparison_csv(result))
+        save_csv(result, csv, force)
         note(f"wrote {csv}", quiet)
     if html is not None:
         from strainkit.present.comparison_page import comparison_page
+        from strainkit.present.report import save_own
+        from strainkit.present.report_page import render
 
-        atomic_write(html, comparison_page(result))
+        save_own(html, render(comparison_page(result)).encode(), force)
         note(f"wrote {html}", quiet)
     deliver(result.to_dict, lambda: comparison_text(result), json)
     if any(m.moduli is None for m in result.members):

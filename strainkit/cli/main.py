@@ -23,6 +23,7 @@ from strainkit.cli.inspect import inspect
 from strainkit.cli.prepare import prepare
 from strainkit.cli.progress import progress
 from strainkit.cli.relax import relax
+from strainkit.cli.report import report
 
 __all__ = ["app", "main"]
 
@@ -34,7 +35,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     add_completion=False,
 )
-for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, compare, demo):
+for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, report, compare, demo):
     app.command()(command)
 
 

@@ -3,16 +3,15 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import replace
 
 from strainkit.derive.comparison import Comparison
 from strainkit.derive.differences import Column, Difference
-from strainkit.findings import Finding
 from strainkit.present.comparison_words import (
     MEANING,
     all_findings,
     change_cell,
     clean,
+    cleaned,
     kind_text,
     order_text,
     probability_text,
@@ -47,15 +46,11 @@ def comparison_text(comparison: Comparison) -> str:
     if c.reactions:
         lines += ["", heading("Static energies of the reference cells, per formula unit of the first")]
         lines += [paragraph(clean(reaction_text(c, reaction)), "  ") for reaction in c.reactions]
-    return "\n".join([*lines, "", findings_text([_cleaned(f) for f in all_findings(c)])])
+    return "\n".join([*lines, "", findings_text([cleaned(f) for f in all_findings(c)])])
 
 
 def _meaning(c: Comparison) -> str:
     return MEANING.format(tests=c.tests)
-
-
-def _cleaned(found: Finding) -> Finding:
-    return replace(found, where=clean(found.where), message=clean(found.message))
 
 
 def _crystals(c: Comparison) -> list[str]:
@@ -131,6 +126,6 @@ def _ranked(c: Comparison) -> list[str]:
         rows.append([f"{place + 1}. {_short(c, i, 34)}", value_cell(column, i), above])
     width = max(len(row[2]) for row in rows)
     lines = [heading(f"Ranked by {r.quantity.title}"), columns([[a, b, note.ljust(width)] for a, b, note in rows])]
-    if len(r.order) > 2:
+    if len(r.order) > 2 and r.probability is not None:
         lines.append(f"  {order_text(r)}")
     return lines

@@ -19,6 +19,7 @@ __all__ = [
     "all_findings",
     "change_cell",
     "clean",
+    "cleaned",
     "kind_text",
     "order_text",
     "probability_text",
@@ -40,6 +41,11 @@ _DIGITS = {"poisson": 3}
 def clean(text: str) -> str:
     """Text of a file without what could steer a terminal: control and invisible characters become question marks."""
     return "".join(c if c.isprintable() else "?" for c in text)
+
+
+def cleaned(found: Finding) -> Finding:
+    """The same finding with nothing in it that could steer a terminal."""
+    return replace(found, where=clean(found.where), message=clean(found.message))
 
 
 def all_findings(comparison: Comparison) -> list[Finding]:
@@ -103,7 +109,8 @@ def probability_text(probability: float | None) -> str:
 
 def order_text(ranking: Ranking) -> str:
     """Is the whole ranking right?"""
-    return f"the whole order is right: {probability_text(ranking.probability)}"
+    chance = probability_text(ranking.probability)
+    return f"the whole order is right with a probability {chance if chance.startswith('above') else f'of {chance}'}"
 
 
 def reaction_text(c: Comparison, reaction: Reaction) -> str:

@@ -83,8 +83,25 @@ def test_page_and_files(cli, runs, tmp_path):
     assert len([r for r in rows if r["kind"] == "difference"]) == len(data["differences"]) == data["tests"]
 
 
-def test_baseline_and_other_ranking(cli, runs):
-    page = cli("compare", *runs, "--baseline", "fine", "--by", "C44")
+def test_files_of_others_are_left_alone(cli, tmp_path):
+    pair = [write(tmp_path, f"{name}.txt", MEASURED.replace("measured", name)) for name in ("a", "b")]
+    for option in ("--csv", "--html"):
+        mine = write(tmp_path, "mine", "dear diary")
+        refused = cli("compare", *pair, option, mine)
+        assert refused.code == 3
+        assert "not written by strainkit" in refused.err
+        assert mine.read_text() == "dear diary"
+        assert cli("compare", *pair, option, mine, "--force").code == 0
+        assert cli("compare", *pair, option, mine).code == 0  # its own file it may replace
+        assert "dear diary" not in mine.read_text()
+
+
+def test_baseline_and_other_ranking(cli, runs, tmp_path):
+    page = cli("compare", *runs, "--baseline", "fine", "--by", "C44", "--html", tmp_path / "c.html")
+    html = (tmp_path / "c.html").read_text()
+    assert "Change against fine" in html
+    assert "<svg" in html
+    assert len(html) < 200_000
     assert page.code == 0
     assert narrow(page.out)
     assert "Change against 2 fine" in page.out
@@ -164,8 +181,11 @@ def test_names_cannot_inject_anything(cli, tmp_path):
     assert "\u202e" not in page.out
     html = (tmp_path / "c.html").read_text()
     parsed = _Page(html)
-    assert not {"img", "script", "a", "link", "iframe"} & {tag for tag, _ in parsed.tags}
-    assert not [attrs for _, attrs in parsed.tags if {"src", "href", "onerror"} & set(attrs)]
+    assert not {"img", "iframe", "object"} & {tag for tag, _ in parsed.tags}
+    assert [tag for tag, _ in parsed.tags].count("script") == 1  # the page's own, which sorts tables
+    links = [value for _, attrs in parsed.tags for key, value in attrs.items() if key in ("src", "href", "xlink:href")]
+    assert all(value.startswith(("#", "data:,")) for value in links)
+    assert not [attrs for _, attrs in parsed.tags if any(key.startswith("on") for key in attrs)]
     assert "<img src=x onerror=alert(1)>" in parsed.words
     assert "\x1b" not in html
     cells = {row["crystal"] for row in csv.DictReader(io.StringIO((tmp_path / "c.csv").read_text()))}
