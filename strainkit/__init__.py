@@ -7,6 +7,7 @@ The whole job from a notebook::
     strainkit.evaluate_run(Path("run"), plan, strainkit.Engine("gfn1-xtb"))
     fit = strainkit.fit_run(plan, strainkit.collect_run(Path("run"), plan))
     fit.stiffness, strainkit.averages(fit.effective), strainkit.derive_properties(fit, planes=[(0, 0, 1)])
+    strainkit.comparison_page(strainkit.compare_crystals([fit, other_fit])).tables["moduli"]
 """
 
 from __future__ import annotations

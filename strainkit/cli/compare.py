@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from strainkit.cli.options import Json, Quiet, Symprec, deliver, note
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver, note
 
 if TYPE_CHECKING:
     from strainkit.derive.member import Member
@@ -33,6 +33,7 @@ def compare(
     baseline: Baseline = None,
     csv: Csv = None,
     html: Html = None,
+    read_as: ReadAs = None,
     symprec: Symprec = 1e-3,
     force: Annotated[bool, typer.Option("--force", help="Replace files that strainkit did not write.")] = False,
     json: Json = False,
@@ -49,7 +50,7 @@ def compare(
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
     if len(places) > MOST:
         raise UsageError(f"{len(places)} crystals are too many to set side by side", "compare", f"Choose at most {MOST}.")
-    result = compare_crystals([_member(place, symprec) for place in places], by, baseline)
+    result = compare_crystals([_member(place, read_as, symprec) for place in places], by, baseline)
     if csv is not None:
         save_csv(result, csv, force)
         note(f"wrote {csv}", quiet)
@@ -74,7 +75,7 @@ def _places(text: str) -> list[str]:
     return [str(Path(text) / member.run) for member in load_campaign(Path(text)).members]
 
 
-def _member(text: str, symprec: float) -> Member:
+def _member(text: str, read_as: str | None, symprec: float) -> Member:
     """A run folder, a tensor file, or FILE:CELL."""
     from strainkit.cli.load import fitted_as_saved
     from strainkit.collect.table import load_table
@@ -88,6 +89,6 @@ def _member(text: str, symprec: float) -> Member:
         return member_of_file(read_tensor(path))
     file, separator, cell = text.rpartition(":")
     if separator and not path.exists() and Path(file).is_file():
-        crystal = read_crystal(Path(cell))
+        crystal = read_crystal(Path(cell), read_as)
         return member_of_file(read_tensor(file), crystal, find_symmetry(crystal, symprec))
     return member_of_fit(fitted_as_saved(path), load_table(path), path)

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from strainkit.derive.differences import Column, Difference, Ranking, column_of, lettered, ranked, tested
+from strainkit.derive.doubts import doubts_about
 from strainkit.derive.formation import Composition, Reaction, energies_of
 from strainkit.derive.member import Member, member_of_fit, named_apart
 from strainkit.derive.quantities import QUANTITIES, Quantity
@@ -14,7 +15,7 @@ from strainkit.derive.sameaxes import common_names, obstacle
 from strainkit.derive.significance import LEVEL
 from strainkit.derive.spread import WithError
 from strainkit.errors import UsageError
-from strainkit.findings import Finding, finding
+from strainkit.findings import Finding
 from strainkit.fit.result import Fit
 
 __all__ = ["MOST", "Comparison", "compare_crystals"]
@@ -144,7 +145,7 @@ def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseli
         ranking=ranked(_wanted(every, by)),
         compositions=tuple(compositions),
         reactions=tuple(reactions),
-        findings=(*_temperatures(members), *_clamped(members), *doubts, *_methods(members), *_untested(members)),
+        findings=(*doubts_about(members, moduli), *doubts),
     )
 
 
@@ -199,46 +200,3 @@ def _constant_columns(members: Sequence[Member], group: tuple[int, ...]) -> list
             values[i] = WithError(float(voigt[at]), None if errors is None else float(errors[at]))
         columns.append(column_of(members, Quantity(f"{name}_GPa", name, "GPa", name), values))
     return columns
-
-
-def _temperatures(members: Sequence[Member]) -> list[Finding]:
-    at = {m.label: m.temperature for m in members if m.temperature is not None}
-    computed = [m.label for m in members if m.computed]
-    if at and computed:
-        given = ", ".join(f"{label} at {kelvin:g} K" for label, kelvin in at.items())
-        text = (
-            f"{given}; computed values are static, 0 K without zero-point motion. Warm crystals are softer, molecular ones by "
-            "roughly 10 to 40 % at room temperature (from memory of the literature): such a difference is no error of a method"
-        )
-        return [finding("temperatures-differ", "comparison", text)]
-    if at and max(at.values()) - min(at.values()) > 1.0:
-        given = ", ".join(f"{label} at {kelvin:g} K" for label, kelvin in at.items())
-        return [finding("temperatures-differ", "comparison", given)]
-    return []
-
-
-def _untested(members: Sequence[Member]) -> list[Finding]:
-    bare = [m.label for m in members if m.elastic.moduli.covariance is None]
-    text = "no errors: no test, no probability"
-    return [finding("no-test", ", ".join(bare), text)] if bare else []
-
-
-def _clamped(members: Sequence[Member]) -> list[Finding]:
-    held = [m.label for m in members if m.clamped]
-    if not held or len(held) == len(members):
-        return []
-    text = "these ions are clamped, those of the others relax: constants of molecular crystals then differ manifold"
-    return [finding("ions-differ", ", ".join(held), text)]
-
-
-def _methods(members: Sequence[Member]) -> list[Finding]:
-    """Runs computed otherwise than the first one."""
-    computed = [m for m in members if m.method is not None]
-    found = []
-    for m in computed[1:]:
-        assert m.method is not None
-        assert computed[0].method is not None
-        if unlike := computed[0].method.differences(m.method):
-            text = f"computed otherwise than {computed[0].label}: {'; '.join(unlike)}"
-            found.append(finding("methods-differ", m.label, text))
-    return found

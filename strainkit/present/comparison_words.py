@@ -63,7 +63,7 @@ def kind_text(member: Member) -> str:
     """What a member is, on one line."""
     e = member.elastic
     words = [member.crystal.formula] if member.crystal is not None else []
-    words.append(f"Laue class {e.laue_class}" if member.symmetry is None else member.symmetry.space_group)
+    words.append(f"Laue class {e.laue_class or 'not named'}" if member.symmetry is None else member.symmetry.space_group)
     words.append(e.origin)
     if member.temperature is not None:
         words.append(f"at {member.temperature:g} K")

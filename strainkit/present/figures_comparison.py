@@ -24,12 +24,12 @@ class Mark:
 
 def marks_of(column: Column, labels: Sequence[str], order: Sequence[int]) -> list[Mark]:
     """Values of one quantity in an order of the members, with Student's 95 % intervals."""
-    from scipy.stats import t
+    from scipy.special import stdtrit
 
     marks = []
     for i in order:
         error, nu = column.error(i), column.freedom[i]
-        reach = None if error is None else error * float(t.ppf(0.975, float("inf") if nu is None else nu))
+        reach = None if error is None else error * float(stdtrit(1e9 if nu is None else nu, 0.975))
         marks.append(Mark(labels[i], column.value(i), error, reach))
     return marks
 

@@ -155,6 +155,22 @@ def test_alloy_formed_from_its_metals(cli, tmp_path):
     assert "settings-unverified" not in {f["code"] for f in data["findings"]}
 
 
+def test_many_crystals_with_long_names_keep_to_the_page(cli, tmp_path):
+    """Values that overlap like tiles get several letters each."""
+    files = []
+    for k in range(8):
+        text = MEASURED.replace("measured", f"a crystal with a rather long name, the one with number {k}")
+        text = text.replace("165.8(3)", f"{160 + 2 * k}.0(9)").replace("79.6(2)", f"{70 + k}.0(3)")
+        files.append(write(tmp_path, f"{k}.txt", text))
+    for more in ([], ["--baseline", files[3]], ["--by", "C11"]):
+        page = cli("compare", *files, *more)
+        assert page.code == 0
+        assert narrow(page.out)
+    letters = [v["letters"] for v in cli("compare", *files, "--json").json["constants"][0]["constants"][0]["values"]]
+    assert max(map(len, letters)) > 1
+    assert not set(letters[0]) & set(letters[-1])
+
+
 class _Page(HTMLParser):
     """Tags, attributes and text of a page."""
 

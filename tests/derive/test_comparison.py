@@ -158,6 +158,12 @@ def _without_axes(entry_id: str) -> Member:
     return replace(published(entry_id), axes=None)
 
 
+def test_large_errors_are_said_to_be_too_large_for_tests():
+    vague = member_of_file(parse_tensor("name vague\nlaue m-3m\nC11 10(2)\nC12 5(2)\nC44 3(1)\n", "vague.txt"))
+    c = compare_crystals([vague, published("aragonite_Liu2005")])
+    assert [(f.code, f.where) for f in c.findings] == [("rough-errors", "vague")]
+
+
 def test_labels():
     a, b = published("Kr_10K"), published("Kr_116K")
     same = [replace(m, elastic=replace(m.elastic, name="krypton\x1b[31m")) for m in (a, b)]
