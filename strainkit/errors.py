@@ -3,13 +3,14 @@
 StrainkitError            exit 1   the root; raised itself only for the unexpected
 +-- UsageError            exit 2   options that contradict each other (also ValueError)
 +-- InputError            exit 3   a file, folder or structure that cannot be used (also ValueError)
+|   +-- DiskError         exit 3   a place that cannot be written: full disk, permissions
 +-- IncompleteError       exit 4   calculations missing or unfinished, constants undetermined (also RuntimeError)
 +-- NoTensorError         exit 5   no stiffness tensor can be given (also RuntimeError)
 """
 
 from __future__ import annotations
 
-__all__ = ["IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError", "printable"]
+__all__ = ["DiskError", "IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError", "printable"]
 
 
 def printable(text: str) -> str:
@@ -52,6 +53,10 @@ class InputError(StrainkitError, ValueError):
     """A file, folder or structure that cannot be used."""
 
     exit_code = 3
+
+
+class DiskError(InputError):
+    """A place that cannot be written: every further attempt would end the same way."""
 
 
 class IncompleteError(StrainkitError, RuntimeError):

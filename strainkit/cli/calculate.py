@@ -11,7 +11,7 @@ if TYPE_CHECKING:
     from strainkit.prepare.calculation import Calculation
     from strainkit.run.plan import Plan
 
-__all__ = ["chosen_calculation"]
+__all__ = ["check_calculation", "chosen_calculation"]
 
 
 def chosen_calculation(
@@ -23,9 +23,16 @@ def chosen_calculation(
     symprec: float,
 ) -> Calculation | None:
     """How the jobs of a plan are computed, from the options; None without a deck."""
-    from strainkit.prepare.calculation import plan_calculation
-    from strainkit.prepare.scripts import check_scheduler
+    from strainkit.prepare.calculation import jobs_calculation
     from strainkit.prepare.settings import read_settings
+
+    check_calculation(deck, settings, kspacing, scheduler)
+    return None if deck is None else jobs_calculation(deck, plan, read_settings(settings or []), kspacing, symprec)
+
+
+def check_calculation(deck: str | None, settings: list[Path] | None, kspacing: float | None, scheduler: str | None) -> None:
+    """Refuse options of a deck without a deck, and an unknown scheduler."""
+    from strainkit.prepare.scripts import check_scheduler
 
     if scheduler is not None:
         check_scheduler(scheduler)
@@ -33,13 +40,3 @@ def chosen_calculation(
         for option, given in (("--scheduler", scheduler), ("--settings", settings), ("--kspacing", kspacing)):
             if given is not None:
                 raise UsageError("needs an input deck", option, "Name one with --deck.")
-        return None
-    return plan_calculation(
-        deck,
-        plan.crystal,
-        "ions" if plan.ions == "relaxed" else "single",
-        read_settings(settings or []),
-        kspacing,
-        [plan.crystal.lattice @ job.gradient.T for job in plan.jobs],
-        symprec,
-    )

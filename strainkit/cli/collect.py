@@ -1,4 +1,4 @@
-"""strainkit collect RUN."""
+"""strainkit collect RUN, or a campaign."""
 
 from __future__ import annotations
 
@@ -7,11 +7,11 @@ from typing import Annotated
 
 import typer
 
-from strainkit.cli.options import Json, Quiet, Run, deliver, note
+from strainkit.cli.options import Again, Json, Quiet, RunOrCampaign, Workers, deliver, note
 
 
 def collect(
-    run: Run,
+    run: RunOrCampaign,
     table: Annotated[
         Path | None, typer.Option(help="Read stresses from this CSV table: label, xx, yy, zz, yz, xz, xy.")
     ] = None,
@@ -24,6 +24,11 @@ def collect(
     stress_order: Annotated[
         str | None, typer.Option(help='Order of the columns in the table, such as "xx yy zz xy yz xz". [default: the header]')
     ] = None,
+    export: Annotated[
+        Path | None, typer.Option(help="Write the structures with energies, forces and stresses to this extended XYZ file.")
+    ] = None,
+    again: Again = False,
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
@@ -33,6 +38,7 @@ def collect(
     from strainkit.collect.table import TABLE
     from strainkit.errors import UsageError
     from strainkit.present.terminal import table_text
+    from strainkit.run.campaign import is_campaign
     from strainkit.run.plan import load_plan
 
     convention = Convention.of(stress_unit, stress_sign, stress_order)
@@ -40,11 +46,22 @@ def collect(
         raise UsageError(
             "unit, sign and order go with --table", "--table", "Programs' own outputs are read in their documented units."
         )
+    if is_campaign(run):
+        from strainkit.cli.campaign import collect_campaign
+
+        if table is not None:
+            raise UsageError("a table is of one crystal", "--table", "Give the run folder of that crystal.")
+        collect_campaign(run, export, again, workers, json, quiet)
+        return
     plan = load_plan(run)
     typed = None if table is None else read_csv(table, plan, convention)
     found = collect_run(run, plan, typed)
     found.save(run)
     note(f"wrote {run / TABLE} and stresses.csv", quiet)
+    if export is not None:
+        from strainkit.present.structures import export_structures
+
+        note(f"wrote {export_structures([run], export)} structures to {export}", quiet)
     deliver(found.to_dict, lambda: table_text(found, every=True), json)
     if len(found.usable) < len(found.records):
         raise typer.Exit(4)

@@ -1,4 +1,4 @@
-"""strainkit derive RUN, or derive --tensor FILE."""
+"""strainkit derive RUN, a campaign, or derive --tensor FILE."""
 
 from __future__ import annotations
 
@@ -8,12 +8,17 @@ from typing import TYPE_CHECKING, Annotated, Literal
 import typer
 
 from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
-from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver
 
 if TYPE_CHECKING:
     from strainkit.derive.elastic import ElasticCrystal
 
-Run = Annotated[Path | None, typer.Argument(help="Run folder made by strainkit prepare; or none, with --tensor.")]
+Run = Annotated[
+    Path | None,
+    typer.Argument(
+        help="Run folder made by strainkit prepare, or none with --tensor; of a campaign the screening table is made."
+    ),
+]
 Planes = Annotated[list[str] | None, typer.Option("--plane", help="Plane h,k,l to look at, as 0,1,-2; repeatable.")]
 Directions = Annotated[list[str] | None, typer.Option("--direction", help="Direction u,v,w to look at; repeatable.")]
 Tensor = Annotated[Path | None, typer.Option(help="Derive from this typed tensor: a 6x6 matrix or lines such as C11 165.8.")]
@@ -45,6 +50,7 @@ def derive(
     reference_stress: Reading = "real",
     force_constants: ForceConstants = None,
     frame: Frame = "ieee",
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
@@ -56,7 +62,20 @@ def derive(
     from strainkit.errors import UsageError
     from strainkit.present.derived import derived_text
     from strainkit.present.terminal import BLIND_SPOT
+    from strainkit.run.campaign import is_campaign
 
+    if run is not None and is_campaign(run):
+        from strainkit.cli.campaign import derive_campaign
+        from strainkit.cli.load import fit_options
+
+        if plane or direction or tensor is not None or force_constants is not None or frame != "ieee":
+            raise UsageError(
+                "the screening table has no planes, directions, force constants or other frames",
+                "derive",
+                "Derive one run folder.",
+            )
+        derive_campaign(run, fit_options(order, noise, drop, frame, reference_stress), workers, json, quiet)
+        return
     planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
     directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
     if (run is None) == (tensor is None):

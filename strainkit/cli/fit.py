@@ -1,4 +1,4 @@
-"""strainkit fit RUN."""
+"""strainkit fit RUN, or a campaign."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ from typing import Annotated, Literal
 
 import typer
 
-from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
+from strainkit.cli.options import Again, Frame, Json, Quiet, RunOrCampaign, Workers, deliver, note
 
 Order = Annotated[Literal["linear", "cubic"], typer.Option(help="Fit cubic terms for every shape too?")]
 KnownNoise = Annotated[float | None, typer.Option(help="Known stress noise, GPa; estimated from the residuals if not given.")]
@@ -22,13 +22,15 @@ ForceConstants = Annotated[
 
 
 def fit(
-    run: Run,
+    run: RunOrCampaign,
     order: Order = "linear",
     noise: KnownNoise = None,
     drop: Drop = None,
     reference_stress: Reading = "real",
     force_constants: ForceConstants = None,
     frame: Frame = "ieee",
+    again: Again = False,
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
@@ -37,7 +39,16 @@ def fit(
     from strainkit.errors import UsageError
     from strainkit.fit.result import FITTED
     from strainkit.present.terminal import fit_text
+    from strainkit.run.campaign import is_campaign
 
+    if is_campaign(run):
+        if force_constants is not None:
+            raise UsageError("force constants belong to one crystal", "--force-constants", "Fit its run folder.")
+        from strainkit.cli.campaign import fit_campaign
+        from strainkit.cli.load import fit_options
+
+        fit_campaign(run, fit_options(order, noise, drop, frame, reference_stress), again, workers, json, quiet)
+        return
     result = fitted(run, order, noise, drop, frame, reference_stress, force_constants)
     if force_constants is not None and result.plan.ions != "clamped":
         raise UsageError("force constants are for runs with clamped ions", "--force-constants", "See derive --force-constants.")

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 from strainkit.errors import UsageError
 
 if TYPE_CHECKING:
+    from strainkit.cli.each import FitOptions
     from strainkit.design.jobs import StrainJob
     from strainkit.design.model import Order
     from strainkit.fit.residual import ReferenceStress
@@ -15,7 +16,7 @@ if TYPE_CHECKING:
     from strainkit.run.plan import Plan
     from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["fitted", "usable"]
+__all__ = ["fit_options", "fitted", "fitted_as_saved", "usable"]
 
 
 def fitted(
@@ -29,14 +30,10 @@ def fitted(
 ) -> Fit:
     """Fit a run from its stress table, with the options checked."""
     from strainkit.collect.table import load_table
-    from strainkit.crystal.frames import FRAMES
     from strainkit.fit.result import fit_run
     from strainkit.run.plan import load_plan
 
-    if frame not in FRAMES:
-        raise UsageError(f"unknown frame {frame!r}", "--frame", f"Use one of {', '.join(FRAMES)}.")
-    if noise is not None and not noise > 0:
-        raise UsageError(f"a noise of {noise:g} GPa is not possible", "--noise", "Give a positive number.")
+    _check(noise, frame)
     plan = load_plan(run)
     _check_labels(plan, drop)
     matrix = None
@@ -46,6 +43,40 @@ def fitted(
         matrix = gamma_constants(load_phonopy(constants), plan.crystal)
     table = load_table(run, ions=plan.ions == "clamped")
     return fit_run(plan, table, order, noise, tuple(drop or ()), reading, matrix)
+
+
+def fitted_as_saved(run: Path) -> Fit:
+    """Fit a run as `strainkit fit` last did: its order, dropped jobs, known noise and reading of the reference stress."""
+    from strainkit.fit.result import FITTED
+    from strainkit.run.files import load_json
+
+    if not (run / FITTED).is_file():
+        return fitted(run, "linear", None, None, "ieee")
+    saved = load_json(run / FITTED, "strainkit/stiffness")
+    known = saved.get("noise_GPa") if saved.get("degrees_of_freedom") is None else None
+    reading = saved.get("reference_stress_reading", "real")
+    return fitted(run, saved.get("order", "linear"), known, list(saved.get("jobs_dropped") or []), "ieee", reading)
+
+
+def fit_options(
+    order: Order, noise: float | None, drop: list[str] | None, frame: str, reading: ReferenceStress = "real"
+) -> FitOptions:
+    """How every crystal of a campaign is fitted, with the options checked."""
+    from strainkit.cli.each import FitOptions
+
+    _check(noise, frame)
+    if drop:
+        raise UsageError("jobs are dropped in one run at a time", "--drop", "Give the run folder of that crystal.")
+    return FitOptions(order, noise, reading, frame)
+
+
+def _check(noise: float | None, frame: str) -> None:
+    from strainkit.crystal.frames import FRAMES
+
+    if frame not in FRAMES:
+        raise UsageError(f"unknown frame {frame!r}", "--frame", f"Use one of {', '.join(FRAMES)}.")
+    if noise is not None and not noise > 0:
+        raise UsageError(f"a noise of {noise:g} GPa is not possible", "--noise", "Give a positive number.")
 
 
 def usable(run: Path, drop: list[str] | None) -> tuple[Plan, list[StrainJob], FloatArray]:

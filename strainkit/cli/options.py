@@ -12,13 +12,16 @@ from typing import Annotated, Any
 import typer
 
 __all__ = [
+    "Again",
     "Cell",
     "Frame",
     "Json",
     "Quiet",
     "ReadAs",
     "Run",
+    "RunOrCampaign",
     "Symprec",
+    "Workers",
     "deliver",
     "note",
     "progress",
@@ -26,8 +29,11 @@ __all__ = [
 
 Cell = Annotated[Path, typer.Argument(help="Structure file: CIF, POSCAR, extended XYZ, or any ASE format with --read-as.")]
 Run = Annotated[Path, typer.Argument(help="Run folder made by strainkit prepare.")]
+RunOrCampaign = Annotated[Path, typer.Argument(metavar="RUN", help="Run folder or campaign made by strainkit prepare.")]
 ReadAs = Annotated[str | None, typer.Option(help="Format of CELL: cif, poscar, extxyz or an ASE format name.")]
 Symprec = Annotated[float, typer.Option(help="Distance tolerance of the symmetry search, A.", min=1e-8, max=1.0)]
+Workers = Annotated[int | None, typer.Option(help="Processes, for a campaign. [default: all cores]", min=1)]
+Again = Annotated[bool, typer.Option("--again", help="For a campaign: do crystals anew whose inputs have not changed.")]
 Frame = Annotated[str, typer.Option(help="Axes of printed tensors: given, ieee or crystal (x||a, z||c*).")]
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON object to standard output.")]
 Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress bar; results are printed all the same.")]
@@ -35,10 +41,11 @@ Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress b
 
 def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json: bool) -> None:
     """Print a result to standard output, as JSON or as text; a reader that closes the pipe early is no error."""
+    from strainkit.present.text import printable
     from strainkit.run.files import dump_json
 
     try:
-        sys.stdout.write(dump_json(data()) if as_json else text() + "\n")
+        sys.stdout.write(printable(dump_json(data()) if as_json else text() + "\n", as_json))
         sys.stdout.flush()
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
@@ -47,8 +54,10 @@ def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json
 
 def note(text: str, quiet: bool) -> None:
     """A remark on standard error."""
+    from strainkit.present.text import printable
+
     if not quiet:
-        typer.echo(text, err=True)
+        typer.echo(printable(text), err=True)
 
 
 @contextmanager

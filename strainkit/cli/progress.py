@@ -1,4 +1,4 @@
-"""strainkit progress RUN."""
+"""strainkit progress RUN, or a campaign."""
 
 from __future__ import annotations
 
@@ -6,15 +6,16 @@ from typing import Annotated
 
 import typer
 
-from strainkit.cli.options import Json, Quiet, Run, deliver
+from strainkit.cli.options import Json, Quiet, RunOrCampaign, Workers, deliver
 
 
 def progress(
-    run: Run,
+    run: RunOrCampaign,
     queue: Annotated[bool, typer.Option("--queue", help="Ask the run's scheduler too which jobs wait or run.")] = False,
     resubmit: Annotated[
         bool, typer.Option("--resubmit", help="Write a new list and script for the jobs that are worth another run.")
     ] = False,
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
@@ -23,9 +24,15 @@ def progress(
     from strainkit.errors import InputError
     from strainkit.prepare.resubmit import write_resubmission
     from strainkit.present.progress import progress_text
+    from strainkit.run.campaign import is_campaign
     from strainkit.run.plan import load_plan
     from strainkit.run.queues import ask_queue
 
+    if is_campaign(run):
+        from strainkit.cli.campaign import progress_campaign
+
+        progress_campaign(run, queue, resubmit, workers, json, quiet)
+        return
     plan = load_plan(run)
     queued = None
     if queue:

@@ -18,10 +18,10 @@ from strainkit.crystal.outputs import OUTPUTS, OWN, Output, recognise_output, re
 from strainkit.errors import InputError, StrainkitError
 from strainkit.findings import Finding, finding
 
-__all__ = ["read_crystal"]
+__all__ = ["ENDINGS", "crystal_name", "is_always_called", "read_crystal"]
 
 #: file-name endings whose meaning is beyond doubt -> ASE format
-_ENDINGS = {
+ENDINGS = {
     ".vasp": "vasp",
     ".poscar": "vasp",
     ".extxyz": "extxyz",
@@ -86,7 +86,7 @@ def _from_output(path: Path, text: str, kind: Output) -> Crystal:
             lattice, positions, numbers = OWN[kind.ase_format](text)
         except (ValueError, IndexError, KeyError) as error:
             raise InputError(f"not readable as {kind.ase_format}: {error}", path) from None
-        crystal = Crystal(lattice, positions, np.array(numbers), name=_name(path), source=str(path))
+        crystal = Crystal(lattice, positions, np.array(numbers), name=crystal_name(path), source=str(path))
     else:
         crystal = _through_ase(path, text, kind.ase_format)
     return replace(crystal, remarks=(*crystal.remarks, *relaxation_doubts(kind, text, str(path))))
@@ -106,8 +106,8 @@ def _guess(path: Path, text: str) -> str:
             return format
     if path.suffix.lower() == ".cif":
         return "cif"
-    if path.suffix.lower() in _ENDINGS:
-        return _ENDINGS[path.suffix.lower()]
+    if path.suffix.lower() in ENDINGS:
+        return ENDINGS[path.suffix.lower()]
     raise InputError(
         "cannot tell what kind of file this is", path, "Name its format with --read-as (cif, poscar, extxyz, any ASE one)."
     )
@@ -136,7 +136,7 @@ def _through_ase(path: Path, text: str, format: str) -> Crystal:
         raise InputError(f"not readable as {format}: {reason}", path) from None
     if not isinstance(atoms, Atoms):
         raise InputError(f"no structure found when read as {format}", path)
-    return replace(Crystal.from_atoms(atoms, name=_name(path), source=str(path)), remarks=remarks)
+    return replace(Crystal.from_atoms(atoms, name=crystal_name(path), source=str(path)), remarks=remarks)
 
 
 def _ase_atoms(source: Path | StringIO, format: str) -> Any:
@@ -147,7 +147,11 @@ def _ase_atoms(source: Path | StringIO, format: str) -> Any:
         return read(source, format=format, index=-1)
 
 
-def _name(path: Path) -> str:
+def crystal_name(path: Path) -> str:
     """Name of a crystal after its file, or after the folder of a file that is always called the same."""
-    always = path.name.upper() in _NAMES or _JOB_OUTPUT.fullmatch(path.name)
-    return (path.parent.name if always else path.name.split(".")[0]) or "crystal"
+    return (path.parent.name if is_always_called(path) else path.name.split(".")[0]) or "crystal"
+
+
+def is_always_called(path: Path) -> bool:
+    """Is this a file of a kind that is called the same for every crystal (POSCAR, pw-1.out), so that its folder names it?"""
+    return path.name.upper() in _NAMES or _JOB_OUTPUT.fullmatch(path.name) is not None

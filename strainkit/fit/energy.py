@@ -19,9 +19,11 @@ from typing import Any
 import numpy as np
 
 from strainkit.design.jobs import StrainJob
+from strainkit.design.shapes import same_to_second_order
 from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
 from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.sixvectors import to_mandel
 from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = ["EnergyCheck", "PairCheck", "check_energies"]
@@ -132,15 +134,17 @@ def check_energies(
         if opposite is None:
             continue
         even, cubic = _responses(regression, i, t)
-        unit = _unit(jobs[i], t)
+        unit, apart = _unit(jobs[i], jobs[int(same[0])] if len(same) else None, t)
         a = np.einsum("aij,i,j->a", matrices, unit, unit)
         error = np.nan if regression.covariance is None else float(np.sqrt(max(a @ regression.covariance @ a, 0.0)))
-        slope = scale * (energy - opposite) / (2 * t) - float(unit @ even) * t**2 / 3
+        slope = scale * (energy - opposite) / (2 * t) - float(unit @ even) * t**2 / 3 - t * float(unit @ stiffness @ apart)
+        bend = scale * (energy + opposite - 2 * rest) / t**2 - float(unit @ cubic) * t**2 / 2
+        bend -= float(apart @ stiffness @ apart + 2.0 / t * np.nan_to_num(regression.reference_stress) @ apart)
         pairs.append(
             PairCheck(
                 label=jobs[i].label,
                 magnitude=t,
-                curvature_energy=scale * (energy + opposite - 2 * rest) / t**2 - float(unit @ cubic) * t**2 / 2,
+                curvature_energy=bend,
                 curvature_stress=float(unit @ stiffness @ unit),
                 curvature_error=error,
                 slope_energy=slope,
@@ -152,10 +156,13 @@ def check_energies(
     return _verdict(pairs, _from_slopes(slopes, directions, model.reference_basis))
 
 
-def _unit(job: StrainJob, t: float) -> FloatArray:
-    from strainkit.tensors.sixvectors import to_mandel
-
-    return to_mandel(job.strain) / t
+def _unit(job: StrainJob, other: StrainJob | None, t: float) -> tuple[FloatArray, FloatArray]:
+    """Unit strain u and asymmetry d (6,), Mandel, of a pair with strains t (d + u) and t (d - u)."""
+    plus = to_mandel(job.strain) / t
+    minus = plus if other is None else -to_mandel(other.strain) / t
+    if np.abs(plus - minus).max() > 2.0 * same_to_second_order(t):  # the opposite of an image, in another orientation
+        minus = plus
+    return 0.5 * (plus + minus), 0.5 * (plus - minus)
 
 
 def _responses(regression: Regression, job: int, t: float) -> tuple[FloatArray, FloatArray]:

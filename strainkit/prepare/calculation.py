@@ -18,9 +18,10 @@ from strainkit.prepare.mesh import DEFAULT_KSPACING, fixed_grid, k_mesh
 from strainkit.prepare.pseudopotentials import chosen_pseudopotentials
 from strainkit.prepare.settings import Settings
 from strainkit.prepare.writers import FORMATS, refuse_left_handed
+from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["Calculation", "Task", "plan_calculation", "recorded_calculation"]
+__all__ = ["Calculation", "Task", "jobs_calculation", "plan_calculation", "recorded_calculation"]
 
 #: what a job does: relax cell and ions, relax the ions at fixed cell, or neither
 Task = Literal["cell", "ions", "single"]
@@ -197,6 +198,15 @@ def plan_calculation(
         lattices=cells,
         multiples=translation_denominators(crystal, symprec),
     )
+
+
+def jobs_calculation(
+    deck: str, plan: Plan, settings: Settings, kspacing: float | None = None, symprec: float = 1e-3
+) -> Calculation:
+    """`plan_calculation` for the jobs of a plan."""
+    task: Task = "ions" if plan.ions == "relaxed" else "single"
+    lattices = [plan.crystal.lattice @ job.gradient.T for job in plan.jobs]
+    return plan_calculation(deck, plan.crystal, task, settings, kspacing, lattices, symprec)
 
 
 def recorded_calculation(

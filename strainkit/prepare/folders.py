@@ -8,7 +8,7 @@ import tempfile
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 
-from strainkit.errors import InputError
+from strainkit.errors import DiskError
 
 __all__ = ["write_folder"]
 
@@ -18,7 +18,7 @@ def write_folder(out: Path, files: Mapping[str, str], folders: Iterable[str] = (
 
     Raises
     ------
-    InputError
+    DiskError
         When the place cannot be written; nothing is left behind then.
     """
     try:
@@ -37,4 +37,4 @@ def write_folder(out: Path, files: Mapping[str, str], folders: Iterable[str] = (
             shutil.rmtree(building, ignore_errors=True)
             raise
     except OSError as error:
-        raise InputError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None
+        raise DiskError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None

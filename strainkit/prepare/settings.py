@@ -41,6 +41,7 @@ SITE_KEYS: dict[str, tuple[type, str, Any]] = {
     "tasks": (int, "MPI processes of one task", 1),
     "threads": (int, "OpenMP threads of each process", 1),
     "throttle": (int, "most tasks running at once", None),
+    "array_limit": (int, "most tasks of one job array (Slurm: MaxArraySize less one); 1000 if not set", None),
     "bundle": (int, "jobs that one task runs one after another", 1),
     "grace": (int, "seconds before the time limit at which a task stops and saves", 120),
     "modules": (list, "modules to load", ()),

@@ -11,7 +11,7 @@ import tempfile
 from pathlib import Path
 from typing import Any
 
-from strainkit.errors import InputError
+from strainkit.errors import DiskError, InputError
 
 __all__ = ["atomic_write", "checksum", "dump_json", "load_json"]
 
@@ -21,7 +21,7 @@ def atomic_write(path: Path, content: str | bytes) -> None:
 
     Raises
     ------
-    InputError
+    DiskError
         When the place cannot be written (read-only folder, full disk); the old file is untouched then.
     """
     data = content.encode() if isinstance(content, str) else content
@@ -38,7 +38,7 @@ def atomic_write(path: Path, content: str | bytes) -> None:
     except OSError as error:
         if temporary:
             Path(temporary).unlink(missing_ok=True)
-        raise InputError(f"cannot be written ({error.strerror})", path, "Check free space and permissions.") from None
+        raise DiskError(f"cannot be written ({error.strerror})", path, "Check free space and permissions.") from None
 
 
 def checksum(content: bytes) -> str:

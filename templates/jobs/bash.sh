@@ -3,4 +3,4 @@
 array_task=""
 submitted_from=""
 job_id=""
-{% include "job.sh" %}
+{% include body %}

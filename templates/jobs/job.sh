@@ -5,32 +5,7 @@ bundle={{ site.bundle }}
 cores={{ cores }}
 beat=${STRAINKIT_BEAT:-60} # seconds between signs of life
 
-task=${1:-$array_task}
-here=""
-for place in "$(dirname "$0")" "$submitted_from" "$PWD"; do
-  if [ -n "$place" ] && [ -f "$place/$list" ]; then
-    here=$(cd "$place" && pwd)
-    break
-  fi
-done
-if [ -z "$here" ]; then
-  echo "{{ script }}: no $list here; submit it from inside the run folder" >&2
-  exit 2
-fi
-case $task in
-  all)
-    first=1
-    last=$(wc -l <"$here/$list")
-    ;;
-  '' | *[!0-9]*)
-    echo "usage: {% if submit[:5] != "bash " %}{{ submit }}    or by hand: {% endif %}bash {{ script }} TASK    or: bash {{ script }} all" >&2
-    exit 2
-    ;;
-  *)
-    first=$(((10#$task - 1) * bundle + 1))
-    last=$((10#$task * bundle))
-    ;;
-esac
+{% include "list.sh" %}
 
 {% for name in site.modules %}
 module load {{ name | shell }}
@@ -159,6 +134,6 @@ status=0
 while read -r job; do
   [ -n "$stopped" ] && break
   do_job "$job" </dev/null || status=1
-done < <(sed -n "${first},${last}p" "$here/$list")
+done < <(listed)
 if [ -n "$stopped" ]; then status=1; fi
 exit $status

@@ -1,6 +1,6 @@
 #!/bin/bash
 #BSUB -J "{{ job_name }}[1-{{ tasks }}]{% if site.throttle %}%{{ site.throttle }}{% endif %}"
-#BSUB -o logs/%J_%I.log
+#BSUB -o {{ logs }}/%J_%I.log
 {% if site.account %}
 #BSUB -P {{ site.account }}
 {% endif %}
@@ -26,4 +26,4 @@ array_task=${LSB_JOBINDEX:-}
 if [ "$array_task" = 0 ]; then array_task=""; fi
 submitted_from=${LS_SUBCWD:-}
 job_id=${LSB_JOBID:-}${LSB_JOBINDEX:+_$LSB_JOBINDEX}
-{% include "job.sh" %}
+{% include body %}

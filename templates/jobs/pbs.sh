@@ -3,7 +3,7 @@
 #PBS -J 1-{{ [tasks, 2] | max }}{% if site.throttle %}%{{ site.throttle }}{% endif %}
 
 #PBS -j oe
-#PBS -o logs/
+#PBS -o {{ logs }}/
 {% if site.account %}
 #PBS -A {{ site.account }}
 {% endif %}
@@ -23,4 +23,4 @@
 array_task=${PBS_ARRAY_INDEX:-}
 submitted_from=${PBS_O_WORKDIR:-}
 job_id=${PBS_JOBID:-}
-{% include "job.sh" %}
+{% include body %}

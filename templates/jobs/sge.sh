@@ -7,7 +7,7 @@
 #$ -S /bin/bash
 #$ -cwd
 #$ -j y
-#$ -o logs/
+#$ -o {{ logs }}/
 #$ -notify
 {% if site.account %}
 #$ -P {{ site.account }}
@@ -32,4 +32,4 @@ array_task=${SGE_TASK_ID:-}
 if [ "$array_task" = undefined ]; then array_task=""; fi
 submitted_from=${SGE_O_WORKDIR:-}
 job_id=${JOB_ID:-}${SGE_TASK_ID:+_$SGE_TASK_ID}
-{% include "job.sh" %}
+{% include body %}

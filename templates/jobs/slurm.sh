@@ -2,7 +2,7 @@
 #SBATCH --job-name={{ job_name }}
 #SBATCH --array=1-{{ tasks }}{% if site.throttle %}%{{ site.throttle }}{% endif %}
 
-#SBATCH --output=logs/%A_%a.log
+#SBATCH --output={{ logs }}/%A_%a.log
 #SBATCH --open-mode=append
 {% if site.account %}
 #SBATCH --account={{ site.account }}
@@ -30,4 +30,4 @@
 array_task=${SLURM_ARRAY_TASK_ID:-}
 submitted_from=${SLURM_SUBMIT_DIR:-}
 job_id=${SLURM_ARRAY_JOB_ID:-${SLURM_JOB_ID:-}}${SLURM_ARRAY_TASK_ID:+_$SLURM_ARRAY_TASK_ID}
-{% include "job.sh" %}
+{% include body %}

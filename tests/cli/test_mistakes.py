@@ -48,9 +48,16 @@ def test_unusable_cell(cli, tmp_path, content, code, message, command):
 
 
 def test_a_folder_in_place_of_a_file(cli, tmp_path):
-    result = cli("prepare", tmp_path, "--out", tmp_path / "run")
+    result = cli("inspect", tmp_path)
     assert result.code == 3
     assert "a folder, not a structure file" in result.err
+
+
+def test_a_folder_without_cells(cli, tmp_path):
+    result = cli("prepare", tmp_path, "--out", tmp_path / "run")
+    assert result.code == 3
+    assert "no structure files in it" in result.err
+    assert not (tmp_path / "run").exists()
 
 
 def test_prepare_without_a_place(cli, cell):

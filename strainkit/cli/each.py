@@ -1,0 +1,153 @@
+"""What a campaign does with one run folder, in a worker process. Each writes its own files whole and returns a summary.
+
+A summary is a small dictionary; "problem" says why a crystal has no result, "disk" holds an error that stops everything.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import wraps
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from strainkit.errors import DiskError, StrainkitError
+
+if TYPE_CHECKING:
+    from strainkit.design.model import Order
+    from strainkit.fit.residual import ReferenceStress
+    from strainkit.fit.result import Fit
+    from strainkit.run.plan import Plan
+    from strainkit.run.queues import Queued
+
+__all__ = ["FitOptions", "collect_one", "derive_one", "fit_one", "progress_one"]
+
+Summary = dict[str, Any]
+
+
+@dataclass(frozen=True)
+class FitOptions:
+    """How every crystal is fitted."""
+
+    order: Order = "linear"
+    noise: float | None = None
+    reading: ReferenceStress = "real"
+    frame: str = "ieee"
+
+
+def _guarded(work: Callable[..., Summary]) -> Callable[..., Summary]:
+    """One crystal never stops the others; a disk that cannot be written does."""
+
+    @wraps(work)
+    def guarded(*arguments: Any) -> Summary:
+        try:
+            return work(*arguments)
+        except DiskError as error:
+            return {"disk": error}
+        except StrainkitError as error:
+            return {"problem": f"{error.what}" + (f" ({error.where})" if error.where else ""), "exit": error.exit_code}
+        except OSError as error:
+            return {"problem": f"{error.strerror} ({error.filename})", "exit": 3}
+        except Exception as error:
+            return {"problem": f"unexpected {type(error).__name__}: {error}", "exit": 1}
+
+    return guarded
+
+
+@_guarded
+def collect_one(again: bool, run: Path) -> Summary:
+    """Stress table of a run; kept when nothing in its job folders has changed since."""
+    from strainkit.collect.gather import collect_run
+    from strainkit.collect.table import TABLE
+    from strainkit.run.plan import load_plan
+    from strainkit.run.state import collected_before, mark_collected, output_signature
+
+    signature = output_signature(run)
+    before = None if again or not (run / TABLE).is_file() else collected_before(run, signature)
+    if before is not None:
+        return before | {"kept": True}
+    table = collect_run(run, load_plan(run))
+    table.save(run)
+    counts = Counter(record.status for record in table.records)
+    summary = {"statuses": dict(counts), "usable": len(table.usable), "expected": len(table.records)}
+    mark_collected(run, signature, summary)
+    return summary | {"kept": False}
+
+
+@_guarded
+def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
+    """Stiffness of a run; kept when table, plan and options are those it was made from."""
+    from strainkit import __version__
+    from strainkit.fit.result import FITTED
+    from strainkit.run.files import atomic_write, checksum, dump_json, load_json
+    from strainkit.run.plan import load_plan
+    from strainkit.run.state import INPUTS
+
+    digest = checksum(_inputs(run) + f"{options} {__version__}".encode())
+    path = run / FITTED
+    if not again and path.is_file():
+        try:
+            data = load_json(path, "strainkit/stiffness")
+        except StrainkitError:
+            data = {}
+        if data.get(INPUTS) == digest:
+            return _fitted(data) | {"kept": True}
+    result = _fit(load_plan(run), run, options)
+    data = result.to_dict(options.frame) | {INPUTS: digest}
+    atomic_write(path, dump_json(data))
+    return _fitted(data) | {"kept": False}
+
+
+def _inputs(run: Path) -> bytes:
+    """Everything that a fit of this run is made from; the table holds the checksums of the outputs behind ions.json."""
+    from strainkit.collect.table import TABLE
+    from strainkit.run.plan import MANIFEST
+
+    return b"".join((run / name).read_bytes() for name in (MANIFEST, TABLE) if (run / name).is_file())
+
+
+def _fit(plan: Plan, run: Path, options: FitOptions) -> Fit:
+    from strainkit.collect.table import load_table
+    from strainkit.fit.result import fit_run
+
+    table = load_table(run, ions=plan.ions == "clamped")
+    return fit_run(plan, table, options.order, options.noise, (), options.reading)
+
+
+def _fitted(data: dict[str, Any]) -> Summary:
+    codes = sorted({f["code"] for f in data["findings"] if f["severity"] != "info"})
+    return {"undetermined": data["undetermined"], "findings": codes, "jobs_used": len(data["jobs_used"])}
+
+
+@_guarded
+def progress_one(queued: dict[str, dict[str, Queued]] | None, run: Path) -> Summary:
+    """States of the jobs of a run; `queued` holds what the scheduler says, by run folder."""
+    from strainkit.collect.progress import read_progress
+    from strainkit.run.plan import job_folder, load_plan
+
+    found = read_progress(run, load_plan(run), None if queued is None else queued.get(run.name, {}))
+    return {
+        "states": found.counts,
+        "usable": len(found.table.usable),
+        "expected": len(found.jobs),
+        "resubmit": [job_folder(label) for label in found.resubmit],
+        "core_hours_used": found.core_hours_used,
+        "core_hours_left": found.core_hours_left,
+    }
+
+
+@_guarded
+def derive_one(options: FitOptions, run: Path) -> Summary:
+    """Row of the screening table of a run; one without a tensor has its descriptors."""
+    from strainkit.derive.screen import screening_row
+    from strainkit.errors import InputError, NoTensorError
+    from strainkit.run.plan import load_plan
+
+    plan = load_plan(run)
+    try:
+        fit = _fit(plan, run, options)
+    except (InputError, NoTensorError) as error:
+        return {"row": screening_row(plan, None, error.what), "problem": error.what, "exit": error.exit_code}
+    row = screening_row(plan, fit)
+    return {"row": row, "problem": row["problem"]}

@@ -1,0 +1,118 @@
+"""Campaigns on a terminal: what will be written, where the jobs stand, what came of every crystal."""
+
+from __future__ import annotations
+
+import csv
+import io
+import json
+import math
+import shlex
+from collections import Counter
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+from strainkit.prepare.assemble import Estimate, Made
+from strainkit.present.text import columns, heading, paragraph
+from strainkit.run.campaign import Refusal
+
+__all__ = [
+    "estimate_text",
+    "findings_tally",
+    "made_text",
+    "next_text",
+    "screening_files",
+    "size_text",
+    "tally_text",
+]
+
+#: problems shown on a terminal; the JSON has them all
+_SHOWN = 20
+
+
+def size_text(size: float) -> str:
+    """Bytes in a handy unit."""
+    power = next((p for p in (1, 2) if size < 999.5 * 1000**p), 3)
+    return f"{size / 1000**power:.3g} {('kB', 'MB', 'GB')[power - 1]}"
+
+
+def estimate_text(estimate: Estimate) -> str:
+    """What is about to be written, on one line."""
+    kept = f"; {estimate.kept} crystals are there already" if estimate.kept else ""
+    if not estimate.crystals:
+        return f"nothing to write{kept}"
+    return (
+        f"{estimate.crystals} crystals, {estimate.jobs} jobs: {estimate.files} files, about {size_text(estimate.bytes)} "
+        f"of disk{kept}"
+    )
+
+
+def made_text(made: Made, out: Path | None) -> str:
+    """The campaign, its classes, the refused cells with reasons, and how its jobs are submitted."""
+    estimate = made.estimate
+    place = "" if out is None else f" in {out}"
+    lines = [heading(f"Campaign of {estimate.crystals + estimate.kept} crystals{place}"), f"  {estimate_text(estimate)}"]
+    lines.append("  Laue classes: " + ", ".join(f"{count} x {name}" for name, count in estimate.laue_classes.items()))
+    if made.submit and out is not None:
+        lines += ["  submit it yourself:", f"    cd {shlex.quote(str(out))} && {made.submit}"]
+    return "\n".join([*lines, *_refused_lines(made.refused)])
+
+
+def _refused_lines(refused: Sequence[Refusal]) -> list[str]:
+    if not refused:
+        return []
+    lines = ["", heading(f"{len(refused)} cells cannot be used")]
+    lines += [paragraph(f"{r.source}: {r.reason}", "  ") for r in refused[:_SHOWN]]
+    return lines + ([f"  and {len(refused) - _SHOWN} more (see --json)"] if len(refused) > _SHOWN else [])
+
+
+def tally_text(
+    title: str, counts: Mapping[str, tuple[int, str]], problems: Mapping[str, str], notes: Sequence[str] = ()
+) -> str:
+    """A title, counts with their meaning, and the crystals that need a look, each with its reason."""
+    lines = [heading(title)]
+    if counts:
+        lines.append(columns([[word, str(count), meaning] for word, (count, meaning) in counts.items()], left=1))
+    lines += [paragraph(note, "  ") for note in notes]
+    if problems:
+        lines += ["", heading(f"{len(problems)} crystals to look at")]
+        lines += [paragraph(f"{name}: {reason}", "  ") for name, reason in list(problems.items())[:_SHOWN]]
+        if len(problems) > _SHOWN:
+            lines.append(f"  and {len(problems) - _SHOWN} more (see --json)")
+    return "\n".join(lines)
+
+
+def findings_tally(codes: Mapping[str, int]) -> str:
+    """Finding codes with the number of crystals that have them."""
+    ranked = Counter(codes).most_common()
+    return ", ".join(f"{code} {count}" for code, count in ranked)
+
+
+def next_text(again: int, folder: Path, scripted: bool, asked: bool, written: Mapping[str, Any] | None) -> list[str]:
+    """What to type to run jobs again."""
+    if not again:
+        return []
+    place = shlex.quote(str(folder))
+    lines = ["", f"  {again} jobs are worth another run"]
+    if written:
+        lines += [f"  wrote {' '.join(written['lists'])}; submit them yourself:", f"    cd {place} && {written['submit']}"]
+    elif scripted:
+        ask = "" if asked else " --queue"
+        lines += ["  to write a list and a script for them:", f"    strainkit progress {place}{ask} --resubmit"]
+    return lines
+
+
+def screening_files(rows: Sequence[Mapping[str, Any]], header: Sequence[str]) -> dict[str, str]:
+    """screening.csv and screening.jsonl: unknown numbers are empty or null, all digits are kept."""
+    buffer = io.StringIO()
+    writer = csv.writer(buffer, lineterminator="\n")
+    writer.writerow(header)
+    known = [{name: _known(row[name]) for name in header} for row in rows]
+    for row in known:
+        writer.writerow(["" if row[name] is None else row[name] for name in header])
+    lines = "".join(json.dumps(row, ensure_ascii=False, allow_nan=False) + "\n" for row in known)
+    return {"screening.csv": buffer.getvalue(), "screening.jsonl": lines}
+
+
+def _known(value: Any) -> Any:
+    return None if isinstance(value, float) and not math.isfinite(value) else value
