@@ -10,19 +10,24 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from pathlib import Path
 
 import numpy as np
 
-from strainkit.collect.readjob import Output, record_of
+from strainkit.collect.readjob import Output, read_outputs, record_of
 from strainkit.collect.returned import Returned
-from strainkit.collect.scan import Folder
+from strainkit.collect.scan import Folder, scan
 from strainkit.collect.table import StressTable
 from strainkit.collect.trust import judge_set
+from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import crystal_frame
 from strainkit.errors import StrainkitError
+from strainkit.evaluate.engines import Engine
+from strainkit.evaluate.reference import relax_reference
+from strainkit.evaluate.runset import evaluate_run
 from strainkit.fit.result import Fit, fit_run
-from strainkit.prepare.runfolder import plan_run
-from strainkit.run.plan import Plan
+from strainkit.prepare.runfolder import plan_run, write_run
+from strainkit.run.plan import Plan, job_folder
 from strainkit.tensors.rotations import rotate_matrix, rotation6
 from strainkit.tensors.sixvectors import from_mandel, to_mandel
 from strainkit.tensors.strain import cauchy_from_pk2
@@ -131,6 +136,26 @@ def clean_set(
             settings=dict(SETTINGS),
         )
     return CleanSet(plan, outputs, clamped)
+
+
+def computed_set(crystal: Crystal, engine: Engine, magnitudes: tuple[float, ...], folder: Path) -> CleanSet:
+    """A set that a local engine computed: real energies, forces, relaxed ions and noise, read back from its files."""
+    relaxed = relax_reference(crystal, engine, fmax=1e-4).crystal
+    plan, _ = write_run(plan_run(relaxed, magnitudes), folder)
+    evaluate_run(folder, plan, engine, fmax=1e-4, workers=1)
+    outputs: dict[str, Returned] = {}
+    for job in plan.jobs:
+        found = read_outputs(folder, scan(folder, job_folder(job.label), plan.files))[0].returned
+        assert found is not None
+        outputs[job.label] = replace(found, settings=dict(SETTINGS), version="1")
+    # with the ions where they started: only of use for injected faults of the ions
+    clamped = {job.label: 1.5 * _stress_of(outputs[job.label]) for job in plan.jobs}
+    return CleanSet(plan, outputs, clamped)
+
+
+def _stress_of(output: Returned) -> np.ndarray:
+    assert output.stress is not None
+    return output.stress
 
 
 def collected(case: Faulty) -> StressTable:
