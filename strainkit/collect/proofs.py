@@ -28,10 +28,9 @@ from strainkit.tensors.strain import pk2_from_cauchy
 
 __all__ = ["prove"]
 
-#: misfit that the set is weighed in, as a part of its typical stress
-WEIGHT = 0.01
-#: even response at the largest strain: this part of the typical stress, or this many times the strain
-EVEN, EVEN_PER_STRAIN = 0.2, 20.0
+#: weight of an even response, in units of the typical stress, against a misfit of the same size: this at strains up to the
+#: second number, less beyond (even responses of some times the strain are usual: common practice, no source)
+EVEN, EVEN_UP_TO = 0.2, 0.01
 #: a change must take the misfit (root of the sum of squares) down to this part of it, and to this part of the typical stress
 PART, CLEAN = 0.35, 0.15
 #: a single stress that is changed must be so many times larger than what is left per job
@@ -58,7 +57,6 @@ class _Set:
     to_second: FloatArray
     model: LinearModel
     basis: FloatArray
-    signal: float
     rest: int | None
     spare: int
 
@@ -69,19 +67,17 @@ class _Set:
         cauchy = to_mandel(stress_from_voigt(np.array([record.stress for record in records])))
         to_second = _to_second(gradients)
         model = build_model(np.array([job.strain for job in jobs]), plan.symmetry.rotations, plan.basis.matrices)
-        second = np.einsum("jab,jb->ja", to_second, cauchy)
-        signal = float(_typical(second))
         largest = float(np.abs(model.signed_magnitudes).max())
         width = model.matrix.shape[1]
         even = np.arange(width)[model.even]
         prior = np.zeros((len(even), width))
-        prior[np.arange(len(even)), even] = WEIGHT / max(EVEN, EVEN_PER_STRAIN * largest)
+        prior[np.arange(len(even)), even] = EVEN * EVEN_UP_TO / max(EVEN_UP_TO, largest)
         stacked = np.vstack([model.matrix, prior])
         u, s, _ = np.linalg.svd(stacked / np.maximum(np.linalg.norm(stacked, axis=0), 1e-300), full_matrices=False)
         basis = u[: len(model.matrix), s > 1e-9 * s[0]]
         rest = next((i for i, job in enumerate(jobs) if not job.shape), None)
         spare = 6 * len(jobs) - factorise(model.matrix).rank
-        return cls(records, jobs, cauchy, to_second, model, basis, signal, rest, spare)
+        return cls(records, jobs, cauchy, to_second, model, basis, rest, spare)
 
     def misfits(self, cauchy: FloatArray) -> FloatArray:
         """Roots (k,) of the sums of squares of all that does not fit in sets (k, jobs, 6), in units of the typical stress."""
@@ -93,9 +89,7 @@ class _Set:
         at_rest = second[:, self.rest] if self.rest is not None else second.mean(axis=1)
         work = np.einsum("ja,kja->kj", self.directions, second - at_rest[:, None])
         negative = (np.minimum(work, 0.0) ** 2).sum(axis=1)
-        # stresses made small do not fit better, and large ones do not make the others small
-        typical = np.minimum(self.signal, _typical(second))
-        return np.asarray(np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical)
+        return np.asarray(np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / _typical(second, self.rest))
 
     @cached_property
     def directions(self) -> FloatArray:
@@ -111,11 +105,13 @@ def _to_second(gradients: FloatArray) -> FloatArray:
     return np.array([to_mandel(pk2_from_cauchy(units, np.broadcast_to(f, (6, 3, 3)))).T for f in gradients])
 
 
-def _typical(second: FloatArray) -> FloatArray:
-    """Typical change of stress (norm, GPa) of sets (..., jobs, 6), whatever single jobs do; the unstrained job counts not."""
-    apart = np.linalg.norm(second - np.median(second, axis=-2, keepdims=True), axis=-1)
-    middle = np.nanmedian(np.where(apart > 0, apart, np.nan), axis=-1)
-    return np.asarray(np.maximum(np.nan_to_num(middle), 1e-9))
+def _typical(second: FloatArray, rest: int | None) -> FloatArray:
+    """Typical change of stress (norm, GPa) of sets (..., jobs, 6): the geometric mean, which no single job rules."""
+    at_rest = np.median(second, axis=-2, keepdims=True) if rest is None else second[..., rest : rest + 1, :]
+    apart = np.linalg.norm(second - at_rest, axis=-1)
+    apart = apart if rest is None else np.delete(apart, rest, axis=-1)
+    floor = np.maximum(1e-4 * apart.max(axis=-1, keepdims=True), 1e-9)
+    return np.asarray(np.exp(np.log(np.maximum(apart, floor)).mean(axis=-1)))
 
 
 @dataclass(frozen=True)
@@ -141,6 +137,7 @@ def prove(plan: Plan, done: Sequence[tuple[StrainJob, StressRecord]]) -> list[Re
         best, rivals = _search(
             group, start, mends(group.records, np.array([plan.crystal.lattice @ j.gradient.T for j in group.jobs]))
         )
+        best, rivals = _by_their_energies(plan, group, best, rivals)
         found = _report(group, start, best, rivals)
     return found + _by_energy(plan, group, best.cauchy)
 
@@ -167,7 +164,8 @@ def _search(group: _Set, start: _Try, choices: list[Mend]) -> tuple[_Try, list[_
 
 def _tells(group: _Set, found: _Try) -> bool:
     """Are the changed stresses more than noise? Making a stress of noise smaller always helps."""
-    noise = found.misfit * group.signal / len(group.jobs) ** 0.5
+    second = np.einsum("jab,jb->ja", group.to_second, found.cauchy)
+    noise = found.misfit * float(_typical(second, group.rest)) / len(group.jobs) ** 0.5
     return all(np.linalg.norm(found.cauchy[place]) > LOUD * noise for place, _ in found.steps if place is not None)
 
 
@@ -248,12 +246,28 @@ def _remedy(group: _Set, place: int | None, mend: Mend) -> str:
     return "; the stress must be in the axes of the cell beside it, in a table in those of the reference cell"
 
 
-def _by_energy(plan: Plan, group: _Set, cauchy: FloatArray) -> list[Refused]:
-    """A factor common to all stresses (jobs, 6), Mandel, from the energies of the same jobs."""
+def _ratios(plan: Plan, group: _Set, cauchy: FloatArray) -> FloatArray:
+    """Strain energies by energies over those by stresses (jobs, 6), Mandel."""
     voigt = stress_to_voigt(from_mandel(cauchy))
     records = [replace(record, stress=stress) for record, stress in zip(group.records, voigt, strict=True)]
-    ratios = energy_ratios(plan, list(zip(group.jobs, records, strict=True)))
-    values = np.array([ratio for ratio in ratios.values() if ratio > 0])
+    return np.array(list(energy_ratios(plan, list(zip(group.jobs, records, strict=True))).values()))
+
+
+def _by_their_energies(plan: Plan, group: _Set, best: _Try, rivals: list[_Try]) -> tuple[_Try, list[_Try]]:
+    """Of explanations that are equally good for the stresses, those that are best for the energies."""
+    tries = [best, *rivals]
+    ratios = [_ratios(plan, group, t.cauchy) for t in tries]
+    if not rivals or not all(len(r) and (r > 0).all() for r in ratios):
+        return best, rivals
+    off = [abs(float(np.median(np.log10(r)))) for r in ratios]
+    order = sorted(range(len(tries)), key=off.__getitem__)
+    return tries[order[0]], [tries[i] for i in order[1:] if off[i] < off[order[0]] + 0.3]
+
+
+def _by_energy(plan: Plan, group: _Set, cauchy: FloatArray) -> list[Refused]:
+    """A factor common to all stresses (jobs, 6), Mandel, from the energies of the same jobs."""
+    ratios = _ratios(plan, group, cauchy)
+    values = np.array([ratio for ratio in ratios if ratio > 0])
     if len(values) < 0.75 * len(ratios) or not len(values):
         return []
     logs = np.log10(values)
@@ -266,7 +280,7 @@ def _by_energy(plan: Plan, group: _Set, cauchy: FloatArray) -> list[Refused]:
         return []
     option = unit_words(group.records[0], 10**nearest)
     word = f"{10**-middle:.4g} times what" if middle < 0 else f"1/{10**middle:.4g} of what"
-    text = f"the stresses are {word} the energies of the same jobs ask for ({len(values)} comparisons agree)"
+    text = f"the stresses are {word} the energies of the same jobs ask for (comparisons: {len(values)})"
     text += f": give {option}" if option else ""
     text += _other_reading(plan, middle)
     return [(finding("stress-unit", "strain set", text), tuple(job.label for job in group.jobs))]
