@@ -255,8 +255,14 @@ def fit_run(
         checks=checks,
         finer=finer,
         relaxed=relaxed,
-        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
+        findings=(*_carried(table, used), *doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
     )
+
+
+def _carried(table: StressTable, used: tuple[str, ...]) -> list[Finding]:
+    """What collect doubted about the set and the jobs that are used."""
+    own = [f for record in table.records if record.label in used for f in record.findings]
+    return [f for f in (*table.findings, *own) if f.severity != "info"]
 
 
 def _without_offset(jobs: list[StrainJob], gradients: FloatArray, stresses: FloatArray) -> tuple[FloatArray, list[Finding]]:
