@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections import Counter
+
 import numpy as np
 
 from strainkit.derive.acoustic import AcousticCheck
@@ -41,7 +43,7 @@ def derived_text(derived: Derived, blind_spot: str = "") -> str:
         lines += _sound(derived)
     else:
         lines += ["Nothing else is derived: moduli of an unstable crystal have no meaning.", ""]
-    return "\n".join([*lines, *_axes(e)])
+    return "\n".join([*lines, *_axes(e), "", findings_text(derived.findings)])
 
 
 def _believed(derived: Derived, blind_spot: str) -> list[str]:
@@ -61,7 +63,9 @@ def _believed(derived: Derived, blind_spot: str) -> list[str]:
         lines.append(row("reference stress, GPa", f"{push:.2g}", f"moduli use B, up to {change:.2g} off C"))
     if blind_spot and e.moduli.covariance is not None:
         lines.append(paragraph(blind_spot, "  "))
-    return [*lines, findings_text(derived.findings), ""]
+    counts = Counter(f.severity for f in derived.findings)
+    doubts = ", ".join(f"{counts[s]} {s}{'s' * (counts[s] > 1)}" for s in ("error", "warning") if counts[s])
+    return [*lines, row("doubts", doubts or "none", "at the end of this page" if doubts else ""), ""]
 
 
 def _softest(derived: Derived) -> str:

@@ -49,14 +49,17 @@ class Room:
         self._taken: list[tuple[FloatArray, tuple[float, float]]] = [(place, (_MARK, _MARK)) for place in marks]
         self._taken += [(place, (0.05, 0.05)) for place in AXIS_LETTERS.values()]
 
-    def clearance(self, place: FloatArray, size: tuple[float, float] = _LABEL) -> float:
-        """How far a box (half width, half height) around a place is from the nearest one taken; negative where they touch."""
-        gaps = [np.max(np.abs(place - other) - np.add(size, room)) for other, room in self._taken]
-        return float(min(gaps, default=1.0))
+    def clearance(self, places: FloatArray, size: tuple[float, float] = _LABEL) -> FloatArray:
+        """How far boxes (half width, half height) around places (k, 2) are from what is taken (k,); negative: they touch."""
+        if not self._taken:
+            return np.ones(len(places))
+        others, rooms = (np.array(part) for part in zip(*self._taken, strict=True))
+        gaps = np.abs(places[:, None] - others) - (rooms + np.array(size))
+        return np.asarray(gaps.max(axis=2).min(axis=1))
 
     def free(self, place: FloatArray, size: tuple[float, float] = _LABEL) -> bool:
         """Is there room for a box around this place?"""
-        return self.clearance(place, size) > 0
+        return bool(self.clearance(place[None], size)[0] > 0)
 
     def take(self, place: FloatArray, size: tuple[float, float] = _LABEL) -> None:
         """Take this room."""

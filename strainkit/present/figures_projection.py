@@ -132,9 +132,11 @@ def _label_contours(axes: Any, lines: Any, room: Room) -> None:
         labelled = 0
         for segment in sorted(path.to_polygons(closed_only=False), key=len, reverse=True):
             inside = segment[np.hypot(*segment.T) < 0.95]
-            gaps = [room.clearance(place, size) for place in inside]
-            if labelled < _LABELS and len(inside) > 5 and max(gaps) > 0:
-                place = inside[int(np.argmax(gaps))]
+            if labelled == _LABELS or len(inside) < 6:
+                continue
+            gaps = room.clearance(inside, size)
+            place = inside[int(gaps.argmax())]
+            if gaps.max() > 0:
                 _chip(axes, place, text)
                 room.take(place, size)
                 labelled += 1
