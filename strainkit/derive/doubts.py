@@ -49,10 +49,11 @@ def _untested(members: Sequence[Member]) -> list[Finding]:
 
 def _clamped(members: Sequence[Member]) -> list[Finding]:
     held = [m.label for m in members if m.clamped]
-    if not held or len(held) == len(members):
+    if not held:
         return []
-    text = "these ions are clamped, those of the others relax: constants of molecular crystals then differ manifold"
-    return [finding("ions-differ", ", ".join(held), text)]
+    others = "" if len(held) == len(members) else ", those of the others relax"
+    text = f"clamped ions without their answer to strain{others}: molecular crystals are manifold too stiff so"
+    return [finding("clamped-compared", ", ".join(held), text)]
 
 
 def _methods(members: Sequence[Member]) -> list[Finding]:
