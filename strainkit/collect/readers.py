@@ -67,7 +67,9 @@ def _json(head: bytes) -> bool:
 
 
 def _pickle(head: bytes) -> bool:
-    return (head[:1] == b"\x80" and head[1:2] in b"\2\3\4\5" and len(head) > 2) or head.startswith(b"PickleTrajectory")
+    """Protocols 2 to 5, whose first operation is never a zero byte as in a record of Fortran, or ASE's old trajectories."""
+    modern = len(head) > 2 and head[0] == 0x80 and 2 <= head[1] <= 5 and head[2] != 0
+    return modern or head.startswith(b"PickleTrajectory")
 
 
 def _refuse_pickle(source: Source) -> Any:

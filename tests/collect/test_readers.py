@@ -112,7 +112,17 @@ def test_unusable_extended_xyz(tmp_path, text, status):
     assert read(path).problems[0][0] == status
 
 
-@pytest.mark.parametrize("text", ["", "hello\n", "\0\1\2", '{"a": 1}', "5\nno lattice here\n"])
+@pytest.mark.parametrize(
+    "text",
+    [
+        "",
+        "hello\n",
+        "#  FHI-aims code project\n#  VB, Fritz-Haber Institut, 2009\n",
+        "\0\1\2",
+        '{"a": 1}',
+        "5\nno lattice here\n",
+    ],
+)
 def test_other_files_are_not_outputs(tmp_path, text):
     path = tmp_path / "file"
     path.write_text(text)
