@@ -31,6 +31,7 @@ BLOCKS = {
     "abinit/single.abo": ("stress tensor (GPa)", "tolvrs"),
     "cp2k/single.out": ("STRESS| Analytical", "DBCSR STATISTICS"),
     "gpaw/single.txt": ("Stress tensor:\n", "Writing to"),
+    "gpaw26/single.txt": ("Stress tensor  #", "Stress computation"),
     "vasp/OUTCAR_example_1": ("FORCE on cell", "VOLUME and BASIS"),
     "vasp/vasprun_pstress.xml": ('<varray name="stress"', "<time"),
     "aims/relax.out": ("Analytical stress tensor - Symm", "Energy and forces in"),
@@ -154,6 +155,7 @@ def test_every_cut_through_the_stress_is_seen(name, tmp_path):
 #: numbers that a program prints once can be replaced by others of the same form: GPAW's diagonal stresses and its forces, every
 #: number of vasprun.xml, the energy of the others; all other silent damage would be new
 PRINTED_ONCE = {
+    "gpaw26/single.txt": {"stress", "forces", "energy", "lattice", "positions"},
     "gpaw/single.txt": {"stress", "forces", "energy", "lattice", "positions"},
     "vasp/vasprun_pstress.xml": {"stress", "forces", "energy", "lattice", "positions"},
 }
