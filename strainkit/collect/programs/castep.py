@@ -27,11 +27,7 @@ __all__ = [
 
 END_MARK = re.compile(r"Total time +=")
 BAD_MARKS = (
-    (
-        re.compile(r"SCF cycles performed but system has not reached|electronic minimi[sz]ation.* has not converged"),
-        "unconverged",
-        "electronic steps did not converge",
-    ),
+    (re.compile(r"SCF cycles performed but system has not reached"), "unconverged", "electronic steps did not converge"),
     (re.compile(r"Geometry optimi[sz]ation failed to converge"), "unconverged", "ions not relaxed"),
     (re.compile(r"Starting MD iteration"), "unconverged", "ions moved by dynamics"),
 )
