@@ -23,6 +23,7 @@ from strainkit.cli.inspect import inspect
 from strainkit.cli.prepare import prepare
 from strainkit.cli.progress import progress
 from strainkit.cli.relax import relax
+from strainkit.cli.report import report
 
 __all__ = ["app", "main"]
 
@@ -34,7 +35,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     add_completion=False,
 )
-for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, compare, demo):
+for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, report, compare, demo):
     app.command()(command)
 
 
@@ -54,18 +55,19 @@ def _options(
 def main() -> None:
     """Run the command line; exit codes are in README."""
     from strainkit.errors import StrainkitError
+    from strainkit.present.text import printable
 
     try:
         app()
     except StrainkitError as error:
-        typer.echo(f"strainkit: {error}", err=True)
+        typer.echo(printable(f"strainkit: {error}"), err=True)
         sys.exit(error.exit_code)
     except Exception as error:
         if "STRAINKIT_DEBUG" in os.environ:
             raise
         typer.echo(
-            f"strainkit: unexpected {type(error).__name__}: {error}\n"
-            "This is a fault of strainkit. Set STRAINKIT_DEBUG=1 for the traceback and report it.",
+            printable(f"strainkit: unexpected {type(error).__name__}: {error}\n")
+            + "This is a fault of strainkit. Set STRAINKIT_DEBUG=1 for the traceback and report it.",
             err=True,
         )
         sys.exit(1)

@@ -41,10 +41,11 @@ Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress b
 
 def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json: bool) -> None:
     """Print a result to standard output, as JSON or as text; a reader that closes the pipe early is no error."""
+    from strainkit.present.text import printable
     from strainkit.run.files import dump_json
 
     try:
-        sys.stdout.write(dump_json(data()) if as_json else text() + "\n")
+        sys.stdout.write(printable(dump_json(data()) if as_json else text() + "\n", as_json))
         sys.stdout.flush()
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
@@ -53,8 +54,10 @@ def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json
 
 def note(text: str, quiet: bool) -> None:
     """A remark on standard error."""
+    from strainkit.present.text import printable
+
     if not quiet:
-        typer.echo(text, err=True)
+        typer.echo(printable(text), err=True)
 
 
 @contextmanager

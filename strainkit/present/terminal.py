@@ -194,7 +194,7 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
         "",
         f"  stress noise      {'unknown' if noise is None else f'{noise:.3g} GPa, {source}'}",
-        f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
+        paragraph(f"reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)", "  "),
         f"  energies          {_energy_words(fit)}",
         f"  curvature         {fit.checks.verdict}",
         f"  finer settings    {_finer_words(fit)}",
