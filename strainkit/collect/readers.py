@@ -18,6 +18,7 @@ from strainkit.collect.programs import (
     castep,
     cp2k,
     espresso,
+    gpaw_new,
     gpaw_text,
     outcar,
     siesta,
@@ -67,7 +68,9 @@ def _json(head: bytes) -> bool:
 
 
 def _pickle(head: bytes) -> bool:
-    return (head[:1] == b"\x80" and head[1:2] in b"\2\3\4\5" and len(head) > 2) or head.startswith(b"PickleTrajectory")
+    """Protocols 2 to 5, whose first operation is never a zero byte as in a record of Fortran, or ASE's old trajectories."""
+    modern = len(head) > 2 and head[0] == 0x80 and 2 <= head[1] <= 5 and head[2] != 0
+    return modern or head.startswith(b"PickleTrajectory")
 
 
 def _refuse_pickle(source: Source) -> Any:
@@ -93,10 +96,11 @@ READERS: tuple[Reader, ...] = (
     Reader("CASTEP", **_columns(castep), checked="real"),
     Reader("SIESTA", **_columns(siesta)),
     Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_ASE),
-    Reader("GPAW gpw", _starts(b"- of UlmGPAW"), atoms_from_copy("gpw"), **_MUTE, checked="run"),
+    Reader("GPAW gpw", lambda head: head[:12].lower() == b"- of ulmgpaw", atoms_from_copy("gpw"), **_MUTE, checked="run"),
     Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_MUTE, checked="run"),
     Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_MUTE, checked="run"),
     Reader("ASE JSON", _json, atoms_from_text("json"), **_MUTE, checked="run"),
+    Reader("GPAW text, new", **_columns(gpaw_new), tells_relaxed=False, checked="run"),
     Reader("GPAW text", **_columns(gpaw_text), tells_relaxed=False, checked="run"),
     Reader("pickle", _pickle, _refuse_pickle, **_ASE),
 )
