@@ -19,7 +19,7 @@ from typing import Literal
 
 import numpy as np
 
-from strainkit.design.shapes import Shape, largest_principal_of, same_to_second_order
+from strainkit.design.shapes import Shape, largest_principal_of, same_magnitude, same_to_second_order
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_vectors
@@ -137,7 +137,7 @@ def _common_magnitudes(placed: list[tuple[int, float, FloatArray]]) -> list[tupl
     groups: dict[int, list[list[float]]] = {}
     for index, t, _ in placed:
         known = groups.setdefault(index, [])
-        close = (group for group in known if abs(abs(t) - group[0]) <= same_to_second_order(group[0]) * group[0])
+        close = (group for group in known if same_magnitude(group[0], abs(t)))
         group = next(close, None)
         if group is None:
             known.append([abs(t)])

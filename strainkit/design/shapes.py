@@ -22,6 +22,7 @@ __all__ = [
     "largest_principal_of",
     "one_of_each",
     "reflection_strains",
+    "same_magnitude",
     "same_to_second_order",
     "smallest_directions",
     "tidy_strains",
@@ -34,10 +35,16 @@ SAME_SHAPE = 1e-5
 def same_to_second_order(size: float) -> float:
     """How close unit strains of this magnitude must be to be opposites or repeats of each other.
 
-    Cells deformed by plus and minus a small-strain matrix e have Lagrangian strains e + e^2/2 and -e + e^2/2: a pair to second
-    order, and as good as one, since what sets them apart times the stiffness is in the model.
+    Cells deformed by plus and minus a small-strain matrix e have Lagrangian strains e + e^2/2 and -e + e^2/2, and those
+    made to keep the volume differ by up to twice e^2: pairs to second order, and as good as exact ones, since what sets them
+    apart times the stiffness is in the model.
     """
-    return max(SAME_SHAPE, 2.0 * size)
+    return max(SAME_SHAPE, 2.5 * size)
+
+
+def same_magnitude(one: float, other: float) -> bool:
+    """Are two magnitudes those of plus and minus the same small-strain matrix?"""
+    return abs(one - other) <= max(1e-9, 1.2 * min(one, other) ** 2)
 
 
 @dataclass(frozen=True)
