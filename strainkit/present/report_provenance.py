@@ -66,7 +66,13 @@ def _outputs(plan: Plan, table: StressTable, run: Path | None) -> list[tuple[str
     members = {job.label for job in plan.strain_set}
     records = [r for r in table.records if r.label in members and r.program]
     programs = Counter(f"{r.program} {r.version}".strip() for r in records)
-    facts = [("Program", ", ".join(f"{name} ({count} outputs)" for name, count in programs.items()) or "no output yet", "")]
+    facts = [
+        (
+            "Program",
+            ", ".join(f"{name} ({count} of {len(members)} jobs)" for name, count in programs.items()) or "no output yet",
+            "",
+        )
+    ]
     said: dict[str, dict[str, None]] = {}
     for record in records:
         for key, value in record.settings.items():
