@@ -9,6 +9,7 @@ The whole job from a notebook::
     fit = strainkit.fit_run(plan, table)
     report = strainkit.report_run(plan, table, fit)  # shows itself in a notebook; report.figures, report.tables, report.save
     fit.stiffness, strainkit.averages(fit.effective), strainkit.derive_properties(fit, planes=[(0, 0, 1)])
+    strainkit.comparison_page(strainkit.compare_crystals([fit, other_fit])).tables["moduli"]
 """
 
 from __future__ import annotations
@@ -22,6 +23,7 @@ if TYPE_CHECKING:
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import find_symmetry
     from strainkit.derive.averages import averages
+    from strainkit.derive.comparison import compare_crystals
     from strainkit.derive.derived import derive_properties
     from strainkit.errors import StrainkitError
     from strainkit.evaluate.engines import Engine
@@ -30,6 +32,7 @@ if TYPE_CHECKING:
     from strainkit.findings import Finding
     from strainkit.fit.result import fit_run
     from strainkit.prepare.runfolder import plan_run, write_run
+    from strainkit.present.comparison_page import comparison_page
     from strainkit.present.report import report_run
     from strainkit.run.plan import load_plan
     from strainkit.tensors.stiffness import Stiffness
@@ -44,6 +47,8 @@ __all__ = [
     "StrainkitError",
     "averages",
     "collect_run",
+    "compare_crystals",
+    "comparison_page",
     "derive_properties",
     "evaluate_run",
     "find_symmetry",
@@ -64,6 +69,8 @@ _HOME = {
     "StrainkitError": "errors",
     "averages": "derive.averages",
     "collect_run": "collect.gather",
+    "compare_crystals": "derive.comparison",
+    "comparison_page": "present.comparison_page",
     "derive_properties": "derive.derived",
     "evaluate_run": "evaluate.runset",
     "find_symmetry": "crystal.symmetry",

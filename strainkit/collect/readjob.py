@@ -20,8 +20,6 @@ from strainkit.tensors.sixvectors import stress_to_voigt
 
 __all__ = ["Output", "read_outputs", "record_of"]
 
-#: displacements below this (A) are rounding, and not worth keeping without forces
-_AT_REST = 1e-3
 #: ions that had to stay moved farther than this (A)
 _MOVED = 5e-3
 #: two finished outputs of one job differ when their stresses do by more than this part of the larger, and this many GPa
@@ -54,6 +52,8 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
     found.sort(key=lambda pair: READERS.index(pair[1]))
     outputs: list[Output] = []
     for name, reader in found:
+        if not reader.tells_relaxed and any(output.returned is not None and output.returned.problems for output in outputs):
+            continue  # a trajectory beside a job that says it is not relaxed
         outputs.append(_read(run, f"{folder.name}/{name}", reader))
         if sum(output.finished for output in outputs) == 2:
             break
@@ -117,7 +117,7 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
 def _placed(plan: Plan, job: StrainJob, blank: StressRecord, returned: Returned, found: Match) -> StressRecord:
     """The record with everything in the planned frame and order."""
     turn = found.rotation
-    keep = returned.positions_known and (returned.forces is not None or found.farthest > _AT_REST)
+    keep = returned.positions_known
     record = replace(
         blank,
         stress=None if returned.stress is None else stress_to_voigt(turn.T @ returned.stress @ turn),

@@ -356,7 +356,10 @@ def test_progress_and_resubmission_across_the_campaign(cli, made, tmp_path):
     state = cli("progress", out, "--resubmit", "--json")
     assert state.code == 4
     finished = {*listed[4:6], *lists[-1].read_text().split()}
-    assert state.json["states"] == {"done": len(finished), "missing": campaign.jobs - len(finished)}
+    # the pretended program gives every cell the same stress, which is noticed where several jobs of a crystal are done
+    counts = state.json["states"]
+    assert counts["done"] + counts.get("suspect", 0) == len(finished)
+    assert counts["missing"] == campaign.jobs - len(finished)
     assert state.json["resubmit"] == [job for job in listed if job not in finished]
     new = state.json["resubmission"]["lists"]
     assert [line for name in new for line in (out / name).read_text().split()] == state.json["resubmit"]
@@ -366,4 +369,4 @@ def test_progress_and_resubmission_across_the_campaign(cli, made, tmp_path):
     assert (out / "logs" / str(count + 1)).is_dir()
     typed = state.json["resubmission"]["submit"].replace('sbatch "$script"', 'bash "$script" all')
     assert subprocess.run(["bash", "-c", typed], cwd=out).returncode == 0
-    assert cli("progress", out, "--json").json["states"] == {"done": campaign.jobs}
+    assert sum(cli("progress", out, "--json").json["states"].get(word, 0) for word in ("done", "suspect")) == campaign.jobs

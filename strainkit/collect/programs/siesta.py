@@ -101,7 +101,7 @@ def energy(text: str) -> float | None:
 
 def forces(text: str) -> FloatArray | None:
     start = text.rfind("\nsiesta: Atomic forces (eV/Ang):")
-    return None if start < 0 else rows(text, start + 1, _atom_count(text), r"siesta:...\d+...#...#...#", "forces")
+    return None if start < 0 else rows(text, start + 1, _atom_count(text), r"siesta:...@...#...#...#", "forces")
 
 
 def doubts(text: str) -> Problems:

@@ -13,6 +13,7 @@ from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
 from strainkit.collect.text import elements, number, symmetric
 from strainkit.tensors.arrays import FloatArray
+from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = [
     "BAD_MARKS",
@@ -132,8 +133,11 @@ def stress(document: Document) -> Stress | None:
 
 
 def energy(document: Document) -> float | None:
-    """The free energy of the last ionic step."""
-    return document.energies[-1] if document.energies and np.isfinite(document.energies[-1]) else None
+    """The free energy of the last ionic step; with PSTRESS (kbar), VASP writes the enthalpy, so that p V is taken off."""
+    if not document.energies or not np.isfinite(document.energies[-1]):
+        raise ValueError("no free energy in the last ionic step")
+    volume = abs(float(np.linalg.det(geometry(document).lattice)))
+    return document.energies[-1] - 0.1 * _parameter(document, "PSTRESS", 0.0) * volume / EV_PER_A3_IN_GPA
 
 
 def forces(document: Document) -> FloatArray | None:
