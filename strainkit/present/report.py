@@ -182,7 +182,7 @@ def _findings(
 ) -> tuple[Finding, ...]:
     """Everything that the cell, the jobs, the fit, the magnitude and the tensor have to say, gravest first, each once."""
     parts: list[Iterable[Finding]] = [f.findings for f in (derived, fit, found) if f is not None]
-    parts += [plan.findings, *(record.findings for record in table.records)]
+    parts += [plan.findings, table.findings, *(record.findings for record in table.records)]
     unique = dict.fromkeys(f for part in parts for f in part)
     order = ("error", "warning", "info")
     return tuple(sorted(unique, key=lambda f: order.index(f.severity)))
