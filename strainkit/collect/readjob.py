@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from hashlib import file_digest
 from pathlib import Path
 
 import numpy as np
@@ -15,6 +14,7 @@ from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError, printable
 from strainkit.findings import Finding, finding
+from strainkit.run.files import checksum
 from strainkit.run.plan import Plan
 from strainkit.tensors.sixvectors import stress_to_voigt
 
@@ -63,9 +63,8 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
 def _read(run: Path, name: str, reader: Reader) -> Output:
     path = run / name
     try:
-        returned = read_returned(path, reader, run)
-        with path.open("rb") as file:
-            return Output(name, reader.program, file_digest(file, "sha256").hexdigest(), returned)
+        returned = read_returned(path, reader)  # refuses what is too large to be held
+        return Output(name, reader.program, checksum(path.read_bytes()), returned)
     except InputError as error:
         return Output(name, reader.program, "", None, error.what)
     except OSError as error:
@@ -104,7 +103,7 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
         findings=tuple(finding(f"job-{status}", job.label, f"{name}: {text}") for status, text in returned.problems),
     )
     try:
-        found = match(plan.crystal.deformed(job.gradient), returned)
+        found = match(plan.crystal, returned, job.gradient)
     except MismatchError as error:
         doubt = finding(error.code, job.label, f"{name}: {error.what}")
         return replace(blank, status="mismatch", findings=(*blank.findings, doubt))
