@@ -13,7 +13,7 @@ the space that the job's own residual symmetry allows; the others are exact zero
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Literal
 
@@ -101,6 +101,27 @@ class LinearModel:
     def odd_part(self, values: FloatArray) -> FloatArray:
         """What is left of rows (rows, ...) after every even response is projected out."""
         return values - self.even_basis @ (self.even_basis.T @ values)
+
+    def turned(self, rotation: FloatArray) -> LinearModel:
+        """The same jobs of the same crystal seen in other axes, the rows of `rotation` (3, 3): the design matrix stays."""
+        q = rotation6(rotation)
+        twin = replace(
+            self,
+            projections=tuple(q @ p for p in self.projections),
+            reference_basis=q @ self.reference_basis,
+            shapes=tuple(shape.turned(q) for shape in self.shapes),
+        )
+        twin.__dict__["odd_matrix"] = self.odd_matrix
+        return twin
+
+    def with_constants(self, change: FloatArray) -> LinearModel:
+        """The same model for other constants: present ones = change (n, n) @ new ones."""
+        matrix, odd = self.matrix.copy(), self.odd_matrix.copy()
+        matrix[:, self.constants] = matrix[:, self.constants] @ change
+        odd[:, : len(change)] = odd[:, : len(change)] @ change
+        twin = replace(self, matrix=matrix)
+        twin.__dict__["odd_matrix"] = odd
+        return twin
 
 
 def _place(vectors: FloatArray, rotations: FloatArray) -> tuple[list[Shape], list[tuple[int, float, FloatArray]]]:

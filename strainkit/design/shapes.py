@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 from itertools import product
 from math import gcd
@@ -70,6 +70,10 @@ class Shape:
         signs = np.where(same, 1.0, -1.0)[both]
         even, odd = invariant_vectors(rotations[both]), invariant_vectors(rotations[both], signs)
         return cls(unit, allowed, even, odd, residual, True)
+
+    def turned(self, q: FloatArray) -> Shape:
+        """The same shape in other axes, for the 6x6 Mandel matrix q of their rotation."""
+        return replace(self, unit=q @ self.unit, allowed=q @ self.allowed, even=q @ self.even, odd=q @ self.odd)
 
     @property
     def jobs(self) -> int:

@@ -94,14 +94,14 @@ def examine(
     order : "linear" or "cubic"
     """
     gradients = np.array([job.gradient for job in jobs])
-    rotations, matrices = plan.symmetry.rotations, plan.basis.matrices
+    rotations, matrices, axes = plan.symmetry.rotations, plan.basis.matrices, plan.standard_axes
     second = second_stresses(gradients, stresses)
     energy = check_energies(jobs, energies, plan.crystal.volume, regression, matrices)
     findings = list(energy.findings)
     sizes = magnitudes_of(jobs)
     other = cubic = None
     if len(sizes) > 1:
-        other = regress(gradients, stresses, rotations, matrices, "cubic" if order == "linear" else "linear")
+        other = regress(gradients, stresses, rotations, matrices, "cubic" if order == "linear" else "linear", axes=axes)
         cubic = other if order == "linear" else regression
         cubic = cubic if cubic.determined.all() else None
     findings += find_outliers(cubic or regression, jobs, second)
@@ -110,7 +110,7 @@ def examine(
     findings += _even_findings(bent, MATTERS * signal)
     p, verdict = None, "cannot be told from one magnitude"
     if len(sizes) > 1:
-        quintic = regress(gradients, stresses, rotations, matrices, "quintic") if len(sizes) > 2 and cubic else None
+        quintic = regress(gradients, stresses, rotations, matrices, "quintic", axes=axes) if len(sizes) > 2 and cubic else None
         linear = regression if order == "linear" else other
         p, verdict, doubts = _curvature(plan, second, linear, cubic, quintic, order, bent)
         findings += doubts
@@ -181,7 +181,9 @@ def _readings(
     if np.isnan(stress).any() or not regression.determined.all() or regression.covariance is None:
         return [], []
     offset = stress_to_voigt(from_mandel(stress))
-    found = treatments(regression, gradients, stresses, offset, plan.symmetry.rotations, plan.basis.matrices, order)
+    found = treatments(
+        regression, gradients, stresses, offset, plan.symmetry.rotations, plan.basis.matrices, order, plan.standard_axes
+    )
     spread = max(float(np.abs(a.voigt - b.voigt).max()) for a in found for b in found)
     bar = 2.0 * float(np.sqrt(np.diag(regression.covariance).max()))
     smallest = float(np.diag(found[0].voigt).min())

@@ -129,7 +129,15 @@ def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise:
 
     def fit(keep: Sequence[int], order: str = "linear", known: float | None = noise) -> Regression:
         chosen = list(keep)
-        return regress(gradients[chosen], stresses[chosen], rotations, matrices, order, known)  # type: ignore[arg-type]
+        return regress(
+            gradients[chosen],
+            stresses[chosen],
+            rotations,
+            matrices,
+            order,  # type: ignore[arg-type]
+            known,
+            axes=plan.standard_axes,
+        )
 
     everything = range(len(jobs))
     common = fit(everything)

@@ -68,8 +68,7 @@ def responses(regression: Regression, jobs: Sequence[StrainJob], kind: Literal["
         Its jobs.
     kind : "even" or "cubic"
     """
-    from scipy.stats import chi2
-    from scipy.stats import f as f_distribution
+    from scipy.special import chdtrc, fdtrc
 
     model, whole, noise = regression.estimator.model, regression.estimator.whole, regression.noise
     if not noise:
@@ -83,9 +82,9 @@ def responses(regression: Regression, jobs: Sequence[StrainJob], kind: Literal["
         terms = regression.parameters[columns]
         statistic = float(terms @ np.linalg.solve(noise**2 * whole.inverse[columns, columns], terms))
         if regression.degrees_of_freedom is None:
-            p = float(chi2.sf(statistic, len(terms)))
+            p = float(chdtrc(len(terms), statistic))
         else:
-            p = float(f_distribution.sf(statistic / len(terms), len(terms), regression.degrees_of_freedom))
+            p = float(fdtrc(len(terms), regression.degrees_of_freedom, statistic / len(terms)))
         stress = stress_to_voigt(from_mandel(basis @ terms))
         label = next(job.label for i, job in enumerate(jobs) if model.shape_of_job[i] == index)
         found.append(Response(label.split("-")[0], kind, stress, COMPONENTS[int(np.abs(stress).argmax())], p))
@@ -118,7 +117,7 @@ def extra_terms_test(smaller: Regression, larger: Regression, second: FloatArray
     -------
     F and its p-value; None where the test cannot be made.
     """
-    from scipy.stats import f as f_distribution
+    from scipy.special import fdtrc
 
     freedom = larger.estimator.odd_freedom
     extra = smaller.estimator.odd_freedom - freedom
@@ -127,4 +126,4 @@ def extra_terms_test(smaller: Regression, larger: Regression, second: FloatArray
     without, _ = smaller.estimator.squares(smaller.estimator.model.rows(second))
     with_more, _ = larger.estimator.squares(larger.estimator.model.rows(second))
     value = float((without - with_more) / extra) / max(float(with_more) / freedom, 1e-300)
-    return value, float(f_distribution.sf(value, extra, freedom))
+    return value, float(fdtrc(extra, freedom, value))

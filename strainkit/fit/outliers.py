@@ -35,25 +35,20 @@ def outlier_tests(regression: Regression, rows: FloatArray) -> tuple[FloatArray,
     sizes : (jobs,)
         How far a job's stress (norm, GPa) is from what the others predict, as far as they predict it.
     """
-    from scipy.stats import f as f_distribution
+    from scipy.special import fdtrc
 
-    model, whole = regression.estimator.model, regression.estimator.whole
-    left = np.eye(len(rows)) - model.matrix @ whole.solver
+    left, tests = regression.estimator.leverage
     residual = left @ rows
-    squares, freedom = float(residual @ residual), len(rows) - whole.rank
-    p_values, sizes = np.full((2, len(model.projections)), np.nan)
-    for job in range(len(p_values)):
-        mine = model.job_of_row == job
-        values, vectors = np.linalg.eigh(left[np.ix_(mine, mine)])
-        keep = values > 1e-8
-        rank = int(keep.sum())
-        if not rank or freedom - rank < 1:
+    squares, freedom = float(residual @ residual), len(rows) - regression.estimator.whole.rank
+    p_values, sizes = np.full((2, len(tests)), np.nan)
+    for job, test in enumerate(tests):
+        if test is None:
             continue
-        along = vectors[:, keep].T @ residual[mine]
-        part = float((along**2 / values[keep]).sum())
+        along = test.combinations @ residual[test.rows]
+        part = float((along**2 / test.shares).sum())
         rest = max(squares - part, 1e-300)
-        p_values[job] = f_distribution.sf((part / rank) / (rest / (freedom - rank)), rank, freedom - rank)
-        sizes[job] = float(np.linalg.norm(along / values[keep]))
+        p_values[job] = fdtrc(test.rank, freedom - test.rank, (part / test.rank) / (rest / (freedom - test.rank)))
+        sizes[job] = float(np.linalg.norm(along / test.shares))
     return p_values, sizes
 
 

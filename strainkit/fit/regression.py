@@ -13,8 +13,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from strainkit.design.model import LinearModel, Order, build_model
+from strainkit.fit.estimator import Estimator, kept_estimator
 from strainkit.tensors.arrays import BoolArray, FloatArray
-from strainkit.tensors.leastsquares import LeastSquares, factorise
 from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
 from strainkit.tensors.strain import green_lagrange, pk2_from_cauchy
 
@@ -24,64 +24,6 @@ __all__ = ["Estimator", "Regression", "regress", "second_stresses"]
 def second_stresses(gradients: FloatArray, stresses: FloatArray) -> FloatArray:
     """Second Piola-Kirchhoff stresses (jobs, 6), Mandel, of Cauchy stresses (jobs, 6), Voigt, GPa, under F (jobs, 3, 3)."""
     return to_mandel(pk2_from_cauchy(stress_from_voigt(stresses), gradients))
-
-
-@dataclass(frozen=True)
-class Estimator:
-    """A factorised linear model: everything about a fit that does not depend on the stresses.
-
-    Attributes
-    ----------
-    model : LinearModel
-    whole, odd : LeastSquares
-        Of all rows, and of the rows with every even response projected out.
-    odd_freedom, even_freedom : int
-        Spare degrees of freedom of the odd part, and of the rest.
-    """
-
-    model: LinearModel
-    whole: LeastSquares
-    odd: LeastSquares
-    odd_freedom: int
-    even_freedom: int
-
-    @classmethod
-    def of(cls, model: LinearModel) -> Estimator:
-        """Factorise a model."""
-        whole, odd = factorise(model.matrix), factorise(model.odd_matrix)
-        rows = len(model.matrix)
-        odd_freedom = rows - model.even_basis.shape[1] - odd.rank
-        return cls(model, whole, odd, odd_freedom, rows - whole.rank - odd_freedom)
-
-    @property
-    def determined(self) -> BoolArray:
-        """Which constants (n,) the jobs determine."""
-        return self.whole.determined[self.model.constants]
-
-    @property
-    def unit_covariance(self) -> FloatArray:
-        """Covariance (n, n) of the constants for unit noise; NaN where undetermined."""
-        return self.whole.inverse[self.model.constants, self.model.constants]
-
-    def estimate(self, rows: FloatArray) -> FloatArray:
-        """All parameters (parameters, ...) from data rows (rows, ...)."""
-        return self.whole.solver @ rows
-
-    def squares(self, rows: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Sums of squared residuals (...,) of data rows (rows, ...): odd part, and the rest."""
-        odd = self.model.odd_part(rows)
-        odd_left = ((odd - self.model.odd_matrix @ (self.odd.solver @ odd)) ** 2).sum(axis=0)
-        all_left = ((rows - self.model.matrix @ (self.whole.solver @ rows)) ** 2).sum(axis=0)
-        return odd_left, np.maximum(all_left - odd_left, 0.0)
-
-    def noise_variance(self, rows: FloatArray) -> tuple[FloatArray | None, int | None]:
-        """Variance (...,) of one Mandel component and its degrees of freedom; None without spare degrees of freedom."""
-        odd, rest = self.squares(rows)
-        if self.odd_freedom > 0:
-            return odd / self.odd_freedom, self.odd_freedom
-        if self.even_freedom > 0:
-            return (odd + rest) / self.even_freedom, self.even_freedom
-        return None, None
 
 
 @dataclass(frozen=True)
@@ -136,6 +78,7 @@ def regress(
     order: Order = "linear",
     noise: float | None = None,
     weights: FloatArray | None = None,
+    axes: FloatArray | None = None,
 ) -> Regression:
     """Fit the constants.
 
@@ -154,8 +97,15 @@ def regress(
         Known standard deviation of one Mandel component, GPa; estimated from the residuals when left out.
     weights : (jobs,), optional
         Inverse variances in units of the common one.
+    axes : (3, 3), optional
+        Rows: the crystal's standard axes in the given frame. Crystals that have the same strains in them share one
+        factorisation, which is kept; the numbers are those of a factorisation of their own.
     """
-    estimator = Estimator.of(build_model(green_lagrange(gradients), rotations, matrices, order, weights))
+    strains = green_lagrange(gradients)
+    if axes is None or weights is not None:
+        estimator = Estimator.of(build_model(strains, rotations, matrices, order, weights))
+    else:
+        estimator = kept_estimator(strains, rotations, matrices, order, axes)
     return _solve(estimator, second_stresses(gradients, stresses), noise)
 
 

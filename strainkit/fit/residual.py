@@ -55,6 +55,7 @@ def treatments(
     rotations: FloatArray,
     matrices: FloatArray,
     order: Order,
+    axes: FloatArray | None = None,
 ) -> list[Treatment]:
     """All readings side by side.
 
@@ -66,12 +67,12 @@ def treatments(
         As for `regress`.
     offset : (6,)
         Offset of the reference, Voigt, GPa.
-    rotations, matrices, order
+    rotations, matrices, order, axes
         As for `regress`.
     """
     plain = np.tensordot(regression.values, matrices, axes=1)
     t = from_mandel(np.nan_to_num(regression.reference_stress))
-    cleared = regress(gradients, remove_offset(stresses, gradients, offset), rotations, matrices, order)
+    cleared = regress(gradients, remove_offset(stresses, gradients, offset), rotations, matrices, order, axes=axes)
     return [
         Treatment("C as fitted", stiffness_to_voigt(plain)),
         Treatment("B, stress real", stiffness_to_voigt(stress_strain_coefficients(plain, t))),

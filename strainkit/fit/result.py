@@ -113,13 +113,13 @@ class Fit:
 
     def intervals(self) -> FloatArray:
         """95 % intervals of the constants (n, 2), GPa; NaN without an error estimate."""
-        from scipy.stats import norm, t
+        from scipy.special import ndtri, stdtrit
 
         r = self.regression
         if r.covariance is None:
             return np.full((len(r.values), 2), np.nan)
         dof = r.degrees_of_freedom
-        reach = float(norm.ppf(0.975) if dof is None else t.ppf(0.975, dof)) * np.sqrt(np.diag(r.covariance))
+        reach = float(ndtri(0.975) if dof is None else stdtrit(dof, 0.975)) * np.sqrt(np.diag(r.covariance))
         return np.column_stack([r.values - reach, r.values + reach])
 
     def to_dict(self, frame: str = "ieee") -> dict[str, Any]:
@@ -236,7 +236,9 @@ def fit_run(
     doubts: list[Finding] = []
     if reading == "offset":
         stresses, doubts = _without_offset(jobs, gradients, stresses)
-    regression = regress(gradients, stresses, plan.symmetry.rotations, plan.basis.matrices, order, noise)
+    regression = regress(
+        gradients, stresses, plan.symmetry.rotations, plan.basis.matrices, order, noise, axes=plan.standard_axes
+    )
     if not regression.determined.any():
         raise NoTensorError("the usable jobs determine no constant", plan.crystal.name, "See: strainkit progress RUN")
     energies = {record.label: record.energy for record in table.records}

@@ -12,7 +12,7 @@ import numpy as np
 
 from strainkit import __version__
 from strainkit.crystal.crystal import Crystal
-from strainkit.crystal.frames import FRAMES, Frame
+from strainkit.crystal.frames import FRAMES, Frame, standard_axes
 from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.expect import Expectation
@@ -108,6 +108,11 @@ class Plan:
     def basis(self) -> ConstantBasis:
         """Independent constants, named in IEEE axes, with their matrices in the given frame."""
         return constant_basis(self.symmetry.invariants, self.frames["ieee"].rotation)
+
+    @property
+    def standard_axes(self) -> FloatArray:
+        """Rows (3, 3): axes in the given frame in which crystals of one Laue class have the same strains."""
+        return standard_axes(self.symmetry)
 
     def to_dict(self) -> dict[str, Any]:
         """The manifest, and what `prepare --json` prints."""
