@@ -48,7 +48,7 @@ class LinearModel:
     job_of_row : (rows,)
         Index of the job that each row belongs to.
     projections : tuple of (6, d)
-        Columns that turn a job's Mandel stress into its rows, one a job.
+        Columns that turn a job's Mandel stress into its rows, one a job, in the axes that the model was built in.
     weights : (jobs,)
         Weight of each job's rows: inverse variance in units of the common one.
     reference, constants, even, cubic : slice
@@ -65,6 +65,8 @@ class LinearModel:
         t of each job.
     even_of_shape, cubic_of_shape : tuple of slice
         Columns of each shape's even and cubic terms, in units of the response at the largest magnitude.
+    turn : (6, 6) or None
+        From the axes that the model was built in to those it is seen in, for Mandel vectors; None when they are the same.
     """
 
     matrix: FloatArray
@@ -82,11 +84,32 @@ class LinearModel:
     signed_magnitudes: FloatArray
     even_of_shape: tuple[slice, ...]
     cubic_of_shape: tuple[slice, ...]
+    turn: FloatArray | None = None
+
+    @cached_property
+    def projector(self) -> FloatArray:
+        """(rows, 6 jobs): all projections side by side, with the roots of the weights."""
+        out = np.zeros((len(self.matrix), 6 * len(self.projections)))
+        first = 0
+        for job, (projection, weight) in enumerate(zip(self.projections, self.weights, strict=True)):
+            last = first + projection.shape[1]
+            out[first:last, 6 * job : 6 * job + 6] = weight**0.5 * projection.T
+            first = last
+        return out
 
     def rows(self, stresses: FloatArray) -> FloatArray:
         """Data (rows, ...) of Mandel second Piola-Kirchhoff stresses (jobs, 6, ...)."""
-        parts = [w**0.5 * (p.T @ s) for p, s, w in zip(self.projections, stresses, self.weights, strict=True)]
-        return np.concatenate(parts) if parts else np.zeros(0)
+        if self.turn is not None:
+            stresses = np.einsum("ij,ni...->nj...", self.turn, stresses) if stresses.ndim > 2 else stresses @ self.turn
+        return np.asarray(self.projector @ stresses.reshape(-1, *stresses.shape[2:]))
+
+    def spread(self, values: FloatArray) -> FloatArray:
+        """Mandel stresses (jobs, 6, ...) whose data are these rows (rows, ...), without what no row sees."""
+        flat = (self.projector.T @ values).reshape(len(self.projections), 6, *values.shape[1:])
+        flat = flat / self.weights.reshape(-1, *[1] * values.ndim)
+        if self.turn is None:
+            return flat
+        return np.einsum("ij,nj...->ni...", self.turn, flat) if flat.ndim > 2 else flat @ self.turn.T
 
     @property
     def odd_degrees_of_freedom(self) -> int:
@@ -107,11 +130,12 @@ class LinearModel:
         q = rotation6(rotation)
         twin = replace(
             self,
-            projections=tuple(q @ p for p in self.projections),
             reference_basis=q @ self.reference_basis,
             shapes=tuple(shape.turned(q) for shape in self.shapes),
+            turn=q if self.turn is None else q @ self.turn,
         )
-        twin.__dict__["odd_matrix"] = self.odd_matrix
+        # what axes do not change is worked out once
+        twin.__dict__.update(odd_matrix=self.odd_matrix, projector=self.projector)
         return twin
 
     def with_constants(self, change: FloatArray) -> LinearModel:
@@ -120,7 +144,7 @@ class LinearModel:
         matrix[:, self.constants] = matrix[:, self.constants] @ change
         odd[:, : len(change)] = odd[:, : len(change)] @ change
         twin = replace(self, matrix=matrix)
-        twin.__dict__["odd_matrix"] = odd
+        twin.__dict__.update(odd_matrix=odd, projector=self.projector)
         return twin
 
 

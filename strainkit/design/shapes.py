@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cache
 from itertools import product
 from math import gcd
@@ -73,7 +73,10 @@ class Shape:
 
     def turned(self, q: FloatArray) -> Shape:
         """The same shape in other axes, for the 6x6 Mandel matrix q of their rotation."""
-        return replace(self, unit=q @ self.unit, allowed=q @ self.allowed, even=q @ self.even, odd=q @ self.odd)
+        unit, allowed = q @ self.unit, q @ self.allowed
+        even = allowed if self.even is self.allowed else q @ self.even
+        odd = allowed if self.odd is self.allowed else q @ self.odd
+        return Shape(unit, allowed, even, odd, self.residual, self.has_image)
 
     @property
     def jobs(self) -> int:

@@ -19,9 +19,11 @@ from typing import Any
 import numpy as np
 
 from strainkit.design.jobs import StrainJob
+from strainkit.design.model import LinearModel
 from strainkit.findings import Finding, finding
-from strainkit.fit.regression import Regression
+from strainkit.fit.regression import Layout, Regression
 from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.sixvectors import to_mandel
 from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = ["EnergyCheck", "PairCheck", "check_energies"]
@@ -96,7 +98,7 @@ class EnergyCheck:
 
 
 def check_energies(
-    jobs: Sequence[StrainJob], energies: Sequence[float | None], volume: float, regression: Regression, matrices: FloatArray
+    jobs: Sequence[StrainJob], energies: Sequence[float | None], volume: float, regression: Regression, layout: Layout
 ) -> EnergyCheck:
     """Compare energies with stresses.
 
@@ -109,85 +111,81 @@ def check_energies(
     volume : float
         Of the reference cell, A^3.
     regression : Regression
-    matrices : (n, 6, 6)
-        Mandel matrices of the constants, given frame.
+    layout : Layout
+        Its strains and matrices.
     """
     rest = next((e for job, e in zip(jobs, energies, strict=True) if not job.shape), None)
     if rest is None or not regression.determined.all():
         return EnergyCheck((), None, None, None, ())
     model = regression.estimator.model
+    found = _opposites(model, energies)
+    if not found:
+        return EnergyCheck((), None, None, None, ())
+    at = [i for i, _, _ in found]
+    up, down = (np.array([pair[side] for pair in found]) for side in (1, 2))
+    t = model.signed_magnitudes[at]
+    unit = to_mandel(layout.strains[at]) / t[:, None]
+    even, cubic = (_along(regression, columns, at, unit) / t**power for columns, power in ((model.even, 2), (model.cubic, 3)))
     scale = EV_PER_A3_IN_GPA / volume
-    known = {i: e for i, e in enumerate(energies) if e is not None}
-    stiffness = np.tensordot(regression.values, matrices, axes=1)
-    pairs: list[PairCheck] = []
-    slopes: list[float] = []
-    directions: list[FloatArray] = []
-    for i, energy in known.items():
-        t, index = float(model.signed_magnitudes[i]), int(model.shape_of_job[i])
-        if index < 0 or t <= 0:
-            continue
-        shape = model.shapes[index]
-        same = np.flatnonzero((model.shape_of_job == index) & (np.abs(model.signed_magnitudes + t) < 1e-6 * t))
-        opposite = known.get(int(same[0])) if len(same) else energy if shape.has_image else None
-        if opposite is None:
-            continue
-        even, cubic = _responses(regression, i, t)
-        unit = _unit(jobs[i], t)
-        a = np.einsum("aij,i,j->a", matrices, unit, unit)
-        error = np.nan if regression.covariance is None else float(np.sqrt(max(a @ regression.covariance @ a, 0.0)))
-        slope = scale * (energy - opposite) / (2 * t) - float(unit @ even) * t**2 / 3
-        pairs.append(
-            PairCheck(
-                label=jobs[i].label,
-                magnitude=t,
-                curvature_energy=scale * (energy + opposite - 2 * rest) / t**2 - float(unit @ cubic) * t**2 / 2,
-                curvature_stress=float(unit @ stiffness @ unit),
-                curvature_error=error,
-                slope_energy=slope,
-                slope_stress=float(unit @ regression.reference_stress),
-            )
-        )
-        slopes.append(slope)
-        directions.append(unit @ model.reference_basis)
-    return _verdict(pairs, _from_slopes(slopes, directions, model.reference_basis))
+    a = (unit[:, :, None] * unit[:, None, :]).reshape(-1, 36) @ layout.matrices.reshape(-1, 36).T
+    errors = np.full(len(at), np.nan)
+    if regression.covariance is not None:
+        errors = np.sqrt(np.maximum(((a @ regression.covariance) * a).sum(axis=1), 0.0))
+    slopes = scale * (up - down) / (2 * t) - even * t**2 / 3
+    columns = (
+        t,
+        scale * (up + down - 2 * rest) / t**2 - cubic * t**2 / 2,
+        a @ regression.values,
+        errors,
+        slopes,
+        unit @ regression.reference_stress,
+    )
+    pairs = [PairCheck(jobs[i].label, *map(float, row)) for i, *row in zip(at, *columns, strict=True)]
+    return _verdict(pairs, _from_slopes(slopes, unit @ model.reference_basis, model.reference_basis))
 
 
-def _unit(job: StrainJob, t: float) -> FloatArray:
-    from strainkit.tensors.sixvectors import to_mandel
-
-    return to_mandel(job.strain) / t
-
-
-def _responses(regression: Regression, job: int, t: float) -> tuple[FloatArray, FloatArray]:
-    """Even and cubic stress responses q and c (6,), Mandel, GPa, of a job's shape, in the job's own orientation."""
-    model = regression.estimator.model
-    rows = model.job_of_row == job
-    weight = model.weights[job] ** 0.5
+def _opposites(model: LinearModel, energies: Sequence[float | None]) -> list[tuple[int, float, float]]:
+    """Job on the positive side, its energy and that of the opposite strain, for every pair or job with an image, eV."""
+    place = {
+        (int(shape), round(float(t), 9)): i
+        for i, (shape, t) in enumerate(zip(model.shape_of_job, model.signed_magnitudes, strict=True))
+    }
     found = []
-    for columns, power in ((model.even, 2), (model.cubic, 3)):
-        part = model.projections[job] @ (model.matrix[rows, columns] @ regression.parameters[columns])
-        found.append(part / weight / t**power)
-    return found[0], found[1]
+    for (shape, t), i in place.items():
+        energy = energies[i]
+        if shape < 0 or t <= 0 or energy is None:
+            continue
+        other = place.get((shape, -t))
+        opposite = energies[other] if other is not None else energy if model.shapes[shape].has_image else None
+        if opposite is not None:
+            found.append((i, energy, opposite))
+    return found
 
 
-def _from_slopes(slopes: list[float], directions: list[FloatArray], basis: FloatArray) -> FloatArray | None:
-    if not slopes:
-        return None
-    values, _, rank, _ = np.linalg.lstsq(np.array(directions), np.array(slopes), rcond=1e-6)
+def _along(regression: Regression, columns: slice, at: Sequence[int], unit: FloatArray) -> FloatArray:
+    """Stress response (jobs,), GPa, that some columns of the model give along the unit strains (jobs, 6) of these jobs."""
+    model = regression.estimator.model
+    response = model.spread(model.matrix[:, columns] @ regression.parameters[columns])
+    return np.asarray((response[list(at)] * unit).sum(axis=1))
+
+
+def _from_slopes(slopes: FloatArray, directions: FloatArray, basis: FloatArray) -> FloatArray | None:
+    values, _, rank, _ = np.linalg.lstsq(directions, slopes, rcond=1e-6)
     return None if rank < basis.shape[1] else basis @ values
 
 
-def _verdict(pairs: list[PairCheck], energy_stress: FloatArray | None) -> EnergyCheck:
-    if not pairs:
-        return EnergyCheck((), None, None, None, ())
+def _or_zero(value: float) -> float:
+    return 0.0 if np.isnan(value) else value
 
+
+def _verdict(pairs: list[PairCheck], energy_stress: FloatArray | None) -> EnergyCheck:
     def off(p: PairCheck) -> float:
         return abs(p.curvature_energy - p.curvature_stress)
 
     def slope_off(p: PairCheck) -> float:
         return abs(p.slope_energy - p.slope_stress)
 
-    bent = [p for p in pairs if off(p) > max(PART * abs(p.curvature_stress), SIGMAS * np.nan_to_num(p.curvature_error), LEAST)]
+    bent = [p for p in pairs if off(p) > max(PART * abs(p.curvature_stress), SIGMAS * _or_zero(p.curvature_error), LEAST)]
     # a slope is wrong by so much as makes a difference of PART at one percent strain
     tilted = [p for p in pairs if slope_off(p) > max(PART * 0.01 * abs(p.curvature_stress), 0.02)]
     findings = []

@@ -20,7 +20,7 @@ from strainkit.tensors.leastsquares import LeastSquares, factorise
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import stiffness_to_voigt
 
-__all__ = ["Estimator", "JobLeverage", "kept_estimator"]
+__all__ = ["Estimator", "JobLeverage", "Layout"]
 
 
 @dataclass(frozen=True)
@@ -73,7 +73,10 @@ class Estimator:
 
     def noise_variance(self, rows: FloatArray) -> tuple[FloatArray | None, int | None]:
         """Variance (...,) of one Mandel component and its degrees of freedom; None without spare degrees of freedom."""
-        odd, rest = self.squares(rows)
+        return self.variance(*self.squares(rows))
+
+    def variance(self, odd: FloatArray, rest: FloatArray) -> tuple[FloatArray | None, int | None]:
+        """The same from sums of squared residuals (...,)."""
         if self.odd_freedom > 0:
             return odd / self.odd_freedom, self.odd_freedom
         if self.even_freedom > 0:
@@ -99,6 +102,26 @@ class Estimator:
             tests.append(JobLeverage(mine, vectors[:, keep].T, values[keep], rank) if testable else None)
         return left, tuple(tests)
 
+    @cached_property
+    def term_weights(self) -> tuple[list[FloatArray | None], list[FloatArray | None]]:
+        """Inverse covariance, for unit noise, of the even and of the cubic terms of every shape; None where undetermined."""
+
+        def of(columns: slice) -> FloatArray | None:
+            if columns.start == columns.stop or not self.whole.determined[columns].all():
+                return None
+            return np.linalg.inv(self.whole.inverse[columns, columns])
+
+        return [of(c) for c in self.model.even_of_shape], [of(c) for c in self.model.cubic_of_shape]
+
+    @cached_property
+    def alone(self) -> IntArray:
+        """Jobs whose opposite is not there, though no rotation supplies it."""
+        model = self.model
+        t, shape = model.signed_magnitudes, model.shape_of_job
+        opposite = (shape[:, None] == shape) & (np.abs(t[:, None] + t) < 1e-6 * np.abs(t)[:, None])
+        image = np.array([index < 0 or model.shapes[index].has_image for index in shape])
+        return np.flatnonzero(~(opposite.any(axis=1) | image))
+
     def turned(self, rotation: FloatArray, change: FloatArray | None = None) -> Estimator:
         """The same of the same jobs in other axes (rows of `rotation` (3, 3) in the present frame), and for other constants.
 
@@ -116,7 +139,8 @@ class Estimator:
             whole = _changed(whole, self.model.constants, change)
             odd = _changed(odd, slice(0, count), change)
         twin = replace(self, model=model, whole=whole, odd=odd)
-        twin.__dict__["leverage"] = self.leverage  # neither axes nor constants matter to it
+        # neither axes nor constants matter to these
+        twin.__dict__.update(leverage=self.leverage, term_weights=self.term_weights, alone=self.alone)
         return twin
 
 
@@ -145,35 +169,68 @@ _KEPT: OrderedDict[tuple[str, bytes, bytes], tuple[Estimator, tuple[str, ...]]] 
 _MOST_KEPT = 256
 
 
-def kept_estimator(
-    strains: FloatArray, rotations: FloatArray, matrices: FloatArray, order: Order, axes: FloatArray
-) -> Estimator:
-    """Estimator of some jobs, from a store that knows those of all crystals with the same strains in standard axes.
+@dataclass(frozen=True)
+class Layout:
+    """What a fit depends on besides the stresses.
 
-    Parameters
+    Attributes
     ----------
-    strains, rotations, matrices, order
-        As for `build_model`, given frame.
-    axes : (3, 3)
-        Rows: standard axes in the given frame.
+    strains : (jobs, 3, 3)
+        Green-Lagrange, given frame.
+    rotations : (m, 3, 3)
+        Proper rotations of the Laue group, given frame.
+    matrices : (n, 6, 6)
+        Mandel matrices of the constants, given frame.
+    axes : (3, 3) or None
+        Rows: the crystal's standard axes in the given frame. With them estimators come from a store that knows those of all
+        crystals with the same strains in these axes; their numbers are those of a factorisation of this crystal's own.
     """
-    turned, group = axes @ strains @ axes.T, axes @ rotations @ axes.T
-    key = order, _rounded(turned), _rounded(group)
-    if key in _KEPT:
+
+    strains: FloatArray
+    rotations: FloatArray
+    matrices: FloatArray
+    axes: FloatArray | None = None
+
+    def estimator(self, order: Order) -> Estimator:
+        """Estimator of an order."""
+        if self.axes is None:
+            return Estimator.of(build_model(self.strains, self.rotations, self.matrices, order))
+        turned, group, strains_key, group_key = self._standard
+        key = str(order), strains_key, group_key
+        found = _KEPT.get(key)
+        if found is None:
+            basis = constant_basis(invariant_matrices(group), np.eye(3))
+            found = Estimator.of(build_model(turned, group, basis.matrices, order)), basis.names
+            if len(_KEPT) >= _MOST_KEPT:
+                _KEPT.popitem(last=False)
+            _KEPT[key] = found
         _KEPT.move_to_end(key)
-    else:
-        basis = constant_basis(invariant_matrices(group), np.eye(3))
-        _KEPT[key] = Estimator.of(build_model(turned, group, basis.matrices, order)), basis.names
-        if len(_KEPT) > _MOST_KEPT:
-            _KEPT.popitem(last=False)
-    estimator, names = _KEPT[key]
-    if not estimator.determined.all():
-        return Estimator.of(build_model(strains, rotations, matrices, order))
-    # constants named in standard axes are elements of the matrices, which are named in axes that the cell's setting chooses
-    voigt = stiffness_to_voigt(rotate_matrix(axes, matrices))
-    change = np.array([voigt[:, int(name[1]) - 1, int(name[2]) - 1] for name in names])
-    same = np.abs(change - np.eye(len(change))).max() < 1e-13
-    return estimator.turned(axes.T, None if same else change)
+        estimator, names = found
+        if not estimator.determined.all():
+            return Estimator.of(build_model(self.strains, self.rotations, self.matrices, order))
+        return estimator.turned(self.axes.T, self._change(names))
+
+    @cached_property
+    def _standard(self) -> tuple[FloatArray, FloatArray, bytes, bytes]:
+        """Strains and rotations in standard axes, and the same without rounding errors, as a key."""
+        axes = self.axes
+        assert axes is not None
+        turned, group = axes @ self.strains @ axes.T, axes @ self.rotations @ axes.T
+        return turned, group, _rounded(turned), _rounded(group)
+
+    @cached_property
+    def _elements(self) -> FloatArray:
+        """Voigt matrices (n, 6, 6) of the constants in standard axes."""
+        assert self.axes is not None
+        return stiffness_to_voigt(rotate_matrix(self.axes, self.matrices))
+
+    def _change(self, names: tuple[str, ...]) -> FloatArray | None:
+        """Constants named in standard axes = (n, n) @ those of the layout; None where they are the same.
+
+        The cell's setting chooses the axes that the layout's are named in. A constant is an element of the matrix.
+        """
+        change = self._elements[:, [int(name[1]) - 1 for name in names], [int(name[2]) - 1 for name in names]].T
+        return None if np.abs(change - np.eye(len(change))).max() < 1e-13 else change
 
 
 def _rounded(values: FloatArray) -> bytes:

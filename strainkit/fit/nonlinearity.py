@@ -70,17 +70,19 @@ def responses(regression: Regression, jobs: Sequence[StrainJob], kind: Literal["
     """
     from scipy.special import chdtrc, fdtrc
 
-    model, whole, noise = regression.estimator.model, regression.estimator.whole, regression.noise
+    model, noise = regression.estimator.model, regression.noise
+    weights = regression.estimator.term_weights[0 if kind == "even" else 1]
     if not noise:
         return []
     found = []
     for index, shape in enumerate(model.shapes):
         columns = model.even_of_shape[index] if kind == "even" else model.cubic_of_shape[index]
         basis = shape.even if kind == "even" else shape.odd
-        if not basis.shape[1] or not whole.determined[columns].all():
+        weight = weights[index]
+        if weight is None:
             continue
         terms = regression.parameters[columns]
-        statistic = float(terms @ np.linalg.solve(noise**2 * whole.inverse[columns, columns], terms))
+        statistic = float(terms @ weight @ terms) / noise**2
         if regression.degrees_of_freedom is None:
             p = float(chdtrc(len(terms), statistic))
         else:
@@ -103,15 +105,13 @@ def _holm(found: list[Response]) -> list[Response]:
     return corrected
 
 
-def extra_terms_test(smaller: Regression, larger: Regression, second: FloatArray) -> tuple[float | None, float | None]:
+def extra_terms_test(smaller: Regression, larger: Regression) -> tuple[float | None, float | None]:
     """F-test, on the odd part of the data, that the extra odd terms of a larger model are nothing.
 
     Parameters
     ----------
     smaller, larger : Regression
         Fits of the same jobs.
-    second : (jobs, 6)
-        Second Piola-Kirchhoff stresses, Mandel, GPa.
 
     Returns
     -------
@@ -123,7 +123,6 @@ def extra_terms_test(smaller: Regression, larger: Regression, second: FloatArray
     extra = smaller.estimator.odd_freedom - freedom
     if extra < 1 or freedom < 1:
         return None, None
-    without, _ = smaller.estimator.squares(smaller.estimator.model.rows(second))
-    with_more, _ = larger.estimator.squares(larger.estimator.model.rows(second))
-    value = float((without - with_more) / extra) / max(float(with_more) / freedom, 1e-300)
+    without, with_more = smaller.odd_squares, larger.odd_squares
+    value = (without - with_more) / extra / max(with_more / freedom, 1e-300)
     return value, float(fdtrc(extra, freedom, value))

@@ -52,7 +52,7 @@ def outlier_tests(regression: Regression, rows: FloatArray) -> tuple[FloatArray,
     return p_values, sizes
 
 
-def find_outliers(regression: Regression, jobs: Sequence[StrainJob], second: FloatArray) -> list[Finding]:
+def find_outliers(regression: Regression, jobs: Sequence[StrainJob], second: FloatArray, signal: float) -> list[Finding]:
     """Proposals: jobs that stand out at a family-wise level of one percent, and by an amount that matters.
 
     Parameters
@@ -62,12 +62,13 @@ def find_outliers(regression: Regression, jobs: Sequence[StrainJob], second: Flo
         Its jobs.
     second : (jobs, 6)
         Their second Piola-Kirchhoff stresses, Mandel, GPa.
+    signal : float
+        Typical length of such a stress, GPa.
     """
     p, sizes = outlier_tests(regression, regression.estimator.model.rows(second))
     tested = int(np.isfinite(p).sum())
     if not tested:
         return []
-    signal = float(np.median(np.linalg.norm(second - np.nan_to_num(regression.reference_stress), axis=1)))
     worst = float(np.nanmin(p))
     # the two jobs of a pair at one magnitude cannot be told apart by the odd part
     found = [i for i, value in enumerate(p) if value <= worst * (1 + 1e-6) + 1e-300]

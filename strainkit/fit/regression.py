@@ -12,13 +12,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from strainkit.design.model import LinearModel, Order, build_model
-from strainkit.fit.estimator import Estimator, kept_estimator
+from strainkit.design.model import Order, build_model
+from strainkit.fit.estimator import Estimator, Layout
 from strainkit.tensors.arrays import BoolArray, FloatArray
 from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
 from strainkit.tensors.strain import green_lagrange, pk2_from_cauchy
 
-__all__ = ["Estimator", "Regression", "regress", "second_stresses"]
+__all__ = ["Estimator", "Layout", "Regression", "regress", "second_stresses", "solve"]
 
 
 def second_stresses(gradients: FloatArray, stresses: FloatArray) -> FloatArray:
@@ -50,6 +50,10 @@ class Regression:
         Root mean square of the components that symmetry forbids or ties, GPa; zero for programs that symmetrise.
     residuals : (jobs, 6)
         Data less model, Mandel, GPa, in the allowed space of each job.
+    odd_squares : float
+        Sum of squared residuals of the odd part, GPa^2.
+    second : (jobs, 6)
+        The data: second Piola-Kirchhoff stresses, Mandel, GPa, given frame.
     estimator : Estimator
     """
 
@@ -62,6 +66,8 @@ class Regression:
     even_noise: float | None
     forbidden_noise: float | None
     residuals: FloatArray
+    odd_squares: float
+    second: FloatArray
     estimator: Estimator
 
     @property
@@ -101,24 +107,26 @@ def regress(
         Rows: the crystal's standard axes in the given frame. Crystals that have the same strains in them share one
         factorisation, which is kept; the numbers are those of a factorisation of their own.
     """
-    strains = green_lagrange(gradients)
-    if axes is None or weights is not None:
-        estimator = Estimator.of(build_model(strains, rotations, matrices, order, weights))
-    else:
-        estimator = kept_estimator(strains, rotations, matrices, order, axes)
-    return _solve(estimator, second_stresses(gradients, stresses), noise)
+    layout = Layout(green_lagrange(gradients), rotations, matrices, axes)
+    second = second_stresses(gradients, stresses)
+    if weights is None:
+        return solve(layout.estimator(order), second, noise)
+    return solve(Estimator.of(build_model(layout.strains, rotations, matrices, order, weights)), second, noise)
 
 
-def _solve(estimator: Estimator, second: FloatArray, noise: float | None) -> Regression:
+def solve(estimator: Estimator, second: FloatArray, noise: float | None = None) -> Regression:
+    """The fit of second Piola-Kirchhoff stresses (jobs, 6), Mandel, GPa, given frame; `noise` as for `regress`."""
     model = estimator.model
     rows = model.rows(second)
     parameters = estimator.estimate(rows)
+    odd, rest = estimator.squares(rows)
     dof: int | None = None
     if noise is None:
-        variance, dof = estimator.noise_variance(rows)
+        variance, dof = estimator.variance(odd, rest)
         noise = None if variance is None else float(variance**0.5)
-    rest = float(estimator.squares(rows)[1])
     at_rest = estimator.whole.determined[model.reference].all()
+    hidden = second.size - len(rows)
+    forbidden = float(((second - model.spread(rows)) ** 2).sum())
     return Regression(
         values=np.where(estimator.determined, parameters[model.constants], np.nan),
         covariance=None if noise is None else noise**2 * estimator.unit_covariance,
@@ -126,24 +134,11 @@ def _solve(estimator: Estimator, second: FloatArray, noise: float | None) -> Reg
         reference_stress=model.reference_basis @ parameters[model.reference] if at_rest else np.full(6, np.nan),
         noise=noise,
         degrees_of_freedom=dof,
-        even_noise=(rest / estimator.even_freedom) ** 0.5 if estimator.even_freedom > 0 else None,
-        forbidden_noise=_forbidden(model, second),
-        residuals=_by_job(model, rows - model.matrix @ parameters),
+        even_noise=(float(rest) / estimator.even_freedom) ** 0.5 if estimator.even_freedom > 0 else None,
+        # root mean square of what lies outside the allowed space of each job
+        forbidden_noise=(forbidden / hidden) ** 0.5 if hidden else None,
+        residuals=model.spread(rows - model.matrix @ parameters),
+        odd_squares=float(odd),
+        second=second,
         estimator=estimator,
     )
-
-
-def _forbidden(model: LinearModel, second: FloatArray) -> float | None:
-    """Root mean square of what lies outside the allowed space of each job."""
-    squares, count = 0.0, 0
-    for projection, stress in zip(model.projections, second, strict=True):
-        squares += float(((stress - projection @ (projection.T @ stress)) ** 2).sum())
-        count += 6 - projection.shape[1]
-    return (squares / count) ** 0.5 if count else None
-
-
-def _by_job(model: LinearModel, residual: FloatArray) -> FloatArray:
-    out = np.zeros((len(model.projections), 6))
-    for job, projection in enumerate(model.projections):
-        out[job] = projection @ residual[model.job_of_row == job] / model.weights[job] ** 0.5
-    return out
