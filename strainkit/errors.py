@@ -10,7 +10,12 @@ StrainkitError            exit 1   the root; raised itself only for the unexpect
 
 from __future__ import annotations
 
-__all__ = ["DiskError", "IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError"]
+__all__ = ["DiskError", "IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError", "printable"]
+
+
+def printable(text: str) -> str:
+    """A text in which control characters, line breaks and bytes that are no text are written out, as \\x1b."""
+    return text if text.isprintable() else "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
 class StrainkitError(Exception):
@@ -29,8 +34,9 @@ class StrainkitError(Exception):
     exit_code = 1
 
     def __init__(self, what: str, where: object = "", remedy: str = "") -> None:
-        super().__init__(what, str(where), remedy)
-        self.what, self.where, self.remedy = what, str(where), remedy
+        what, place, remedy = printable(what), printable(str(where)), printable(remedy)
+        super().__init__(what, place, remedy)
+        self.what, self.where, self.remedy = what, place, remedy
 
     def __str__(self) -> str:
         head = f"{self.where}: {self.what}" if self.where else self.what

@@ -9,7 +9,7 @@ from collections.abc import Iterable
 from dataclasses import asdict, dataclass
 from typing import Any, Literal
 
-from strainkit.errors import StrainkitError
+from strainkit.errors import StrainkitError, printable
 
 __all__ = ["CODES", "Finding", "Severity", "finding", "worst"]
 
@@ -54,6 +54,24 @@ CODES: dict[str, tuple[Severity, str]] = {
     "job-unconverged": ("error", "a job's electronic steps or ions did not converge"),
     "job-broken": ("error", "a job's output holds impossible numbers"),
     "cell-mismatch": ("error", "a job's output is of another cell or crystal than planned"),
+    "cell-drifted": ("error", "a job's output has not the planned cell: relaxed by mistake, or of another strain"),
+    "ions-moved": ("error", "ions that had to stay where they were have moved"),
+    "output-of-other-job": ("error", "a job's folder holds an output with the cell of another job"),
+    "unmatched-output": ("warning", "an output in a folder of no job cannot be given to one"),
+    "matched-by-cell": ("info", "an output lay in another folder and was given to the job whose cell it has"),
+    "outputs-disagree": ("warning", "two finished outputs of one job differ"),
+    "link-not-followed": ("warning", "a symbolic link in a job folder is not followed"),
+    "reference-missing": ("warning", "there is no usable reference job"),
+    "mixed-settings": ("error", "jobs of one set were computed with different settings or programs"),
+    "mixed-versions": ("warning", "jobs of one set were computed with different versions of a program"),
+    "identical-outputs": ("error", "different jobs returned identical numbers"),
+    "stress-sign": ("error", "the data prove that the sign of a stress is reversed"),
+    "stress-unit": ("error", "the data prove that a stress is in another unit"),
+    "stress-order": ("error", "the data prove that the components of a stress are in another order"),
+    "stress-frame": ("error", "the data prove that a stress is in other axes than its cell"),
+    "energy-jump": ("warning", "the energy of a job is not the one that the stresses lead to"),
+    "ions-elsewhere": ("warning", "the ions of a job left the line of its shape"),
+    "forces-left": ("warning", "forces left on the ions can put the stress off"),
     # the fit
     "undetermined-constants": ("error", "the usable jobs do not determine some constants"),
     "jobs-not-used": ("warning", "some planned jobs are missing, unusable or dropped"),
@@ -86,6 +104,10 @@ CODES: dict[str, tuple[Severity, str]] = {
     "asymmetric-coefficients": ("warning", "the reference stress makes the stress-strain coefficients asymmetric"),
     "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),
     "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
+    # the comparison
+    "temperatures-differ": ("warning", "values of different temperatures, or static and measured ones, are compared"),
+    "no-test": ("info", "a tensor without errors takes no part in tests and probabilities"),
+    "settings-unverified": ("warning", "energies are subtracted whose settings are not recorded, or may differ in sampling"),
 }
 
 
@@ -104,10 +126,10 @@ class Finding:
 
 
 def finding(code: str, where: str, message: str) -> Finding:
-    """Make a finding of a documented code; its severity is the documented one."""
+    """Make a finding of a documented code; its severity is the documented one. File names in it cannot steer a terminal."""
     if code not in CODES:
         raise StrainkitError(f"finding code {code!r} is not documented", "strainkit.findings")
-    return Finding(code, CODES[code][0], where, message)
+    return Finding(code, CODES[code][0], printable(where), printable(message))
 
 
 def worst(findings: Iterable[Finding]) -> Severity | None:

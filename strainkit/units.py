@@ -7,10 +7,12 @@ from __future__ import annotations
 
 from ase import units as _ase
 
-__all__ = ["AMU_PER_A3_IN_KG_M3", "EV_PER_A3_IN_GPA", "HBAR_OVER_K_IN_K_S", "STRESS_UNITS_IN_GPA"]
+__all__ = ["AMU_PER_A3_IN_KG_M3", "EV_IN_KJ_PER_MOL", "EV_PER_A3_IN_GPA", "HBAR_OVER_K_IN_K_S", "STRESS_UNITS_IN_GPA"]
 
 #: one eV/A^3 in GPa
 EV_PER_A3_IN_GPA: float = 1.0 / _ase.GPa
+#: one eV a formula unit in kJ/mol
+EV_IN_KJ_PER_MOL: float = _ase.mol / _ase.kJ
 #: one atomic mass unit per cubic angstrom in kg/m^3
 AMU_PER_A3_IN_KG_M3: float = _ase._amu * 1e30
 #: the quantum of an angular frequency of 1/s as a temperature, K s

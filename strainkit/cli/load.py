@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from strainkit.run.plan import Plan
     from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["fit_options", "fitted", "usable"]
+__all__ = ["fit_options", "fitted", "fitted_as_saved", "usable"]
 
 
 def fitted(
@@ -43,6 +43,19 @@ def fitted(
         matrix = gamma_constants(load_phonopy(constants), plan.crystal)
     table = load_table(run, ions=plan.ions == "clamped")
     return fit_run(plan, table, order, noise, tuple(drop or ()), reading, matrix)
+
+
+def fitted_as_saved(run: Path) -> Fit:
+    """Fit a run as `strainkit fit` last did: its order, dropped jobs, known noise and reading of the reference stress."""
+    from strainkit.fit.result import FITTED
+    from strainkit.run.files import load_json
+
+    if not (run / FITTED).is_file():
+        return fitted(run, "linear", None, None, "ieee")
+    saved = load_json(run / FITTED, "strainkit/stiffness")
+    known = saved.get("noise_GPa") if saved.get("degrees_of_freedom") is None else None
+    reading = saved.get("reference_stress_reading", "real")
+    return fitted(run, saved.get("order", "linear"), known, list(saved.get("jobs_dropped") or []), "ieee", reading)
 
 
 def fit_options(

@@ -13,6 +13,7 @@ import typer
 
 from strainkit import __version__
 from strainkit.cli.collect import collect
+from strainkit.cli.compare import compare
 from strainkit.cli.converge import converge
 from strainkit.cli.demo import demo
 from strainkit.cli.derive import derive
@@ -33,7 +34,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     add_completion=False,
 )
-for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, demo):
+for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, compare, demo):
     app.command()(command)
 
 

@@ -58,6 +58,9 @@ def prepare(
     finer: Annotated[
         Path | None, typer.Option(help="With --extend: one or two pairs again at the finer settings of this TOML file.")
     ] = None,
+    adopt: Annotated[
+        Path | None, typer.Option(help="Folder of finished strained calculations of this cell: only what they lack is planned.")
+    ] = None,
     ions: Annotated[Literal["relaxed", "clamped"], typer.Option(help="Are the ions of the jobs relaxed?")] = "relaxed",
     atoms: Annotated[
         Literal["auto", "rigid", "affine"],
@@ -101,6 +104,7 @@ def prepare(
     from strainkit.prepare.runfolder import plan_run, plan_with_files, write_run
     from strainkit.prepare.writers import cell_formats
     from strainkit.present.terminal import plan_text
+    from strainkit.run.plan import job_folder
 
     cell_formats(format or [])
     magnitudes = tuple(m / 100.0 for m in magnitude or ())
@@ -139,13 +143,48 @@ def prepare(
         if ions == "clamped":
             raise UsageError("clamped ions do not move", "--force-constants", "Give the file to strainkit fit afterwards.")
         plan = _predicted(plan, force_constants)
+    found: list[tuple[str, Path]] = []
+    if adopt is not None:
+        plan, found = _adopted(plan, adopt, quiet)
     calculation = chosen_calculation(deck, plan, settings, kspacing, scheduler, symprec)
     if out is None or dry_run:
         plan, _ = plan_with_files(plan, format, calculation, scheduler)
     else:
         plan, what = write_run(plan, out, format, force, calculation, scheduler)
         note(f"{out}: {what}", quiet)
+        for label, path in found:
+            _keep(path, out / job_folder(label))
     deliver(plan.to_dict, lambda: plan_text(plan, out), json)
+
+
+def _adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str, Path]]]:
+    """The plan around finished calculations, and label and file of each."""
+    import numpy as np
+
+    from strainkit.collect.adopt import find_strained
+    from strainkit.design.extend import adopted_jobs
+    from strainkit.errors import InputError
+    from strainkit.prepare.extend import adopt_jobs
+
+    found, refused = find_strained(plan.crystal, folder)
+    for line in refused:
+        note(f"not adopted: {line}", quiet)
+    if not found:
+        raise InputError("no finished calculation of this cell in it", folder, "Their lattice must be strained by under 10 %.")
+    jobs = adopted_jobs(np.array([one.gradient for one in found]), plan.symmetry)
+    longer = adopt_jobs(plan, jobs)
+    used = {job.label for job in longer.jobs}
+    files = [(job.label, one.path) for job, one in zip(jobs, found, strict=True) if job.label in used]
+    note(f"adopted {len(files)} calculations; {len(longer.jobs) - len(files)} jobs are left to compute", quiet)
+    return longer, files
+
+
+def _keep(path: Path, folder: Path) -> None:
+    """Copy a finished output into its job folder; the original stays where it is."""
+    from strainkit.run.files import atomic_write
+
+    if not (folder / path.name).exists():
+        atomic_write(folder / path.name, path.read_bytes())
 
 
 def _moved(run: Path) -> dict[str, FloatArray]:

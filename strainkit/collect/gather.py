@@ -1,33 +1,50 @@
-"""From a run folder's job folders to its stress table."""
+"""From a run folder's job folders to its stress table; what did not change since the last time is not read again."""
 
 from __future__ import annotations
 
-import re
+import multiprocessing
+import os
+import threading
+from collections.abc import Iterator, Mapping, Sequence, Set
+from concurrent.futures import ProcessPoolExecutor
+from concurrent.futures.process import BrokenProcessPool
+from dataclasses import dataclass, replace
 from pathlib import Path
 
-import numpy as np
-
-from strainkit.collect.readers import READERS, Reader, Returned, read_returned, recognise
-from strainkit.collect.table import StressRecord, StressTable
-from strainkit.crystal.crystal import Crystal
+from strainkit.collect.readjob import read_outputs, record_of
+from strainkit.collect.scan import Folder, foreign_folders, plan_fingerprint, scan
+from strainkit.collect.strays import place_strays
+from strainkit.collect.table import TABLE, StressRecord, StressTable, load_table
+from strainkit.collect.trust import judge_set, unjudged
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
-from strainkit.findings import Finding, finding
 from strainkit.run.files import checksum
 from strainkit.run.plan import Plan, job_folder
-from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.rotations import polar
-from strainkit.tensors.sixvectors import stress_to_voigt
-from strainkit.tensors.strain import gradient_between
 
-__all__ = ["collect_run", "remove_rotation"]
+__all__ = ["TABLE_PROGRAM", "collect_run"]
 
-#: largest stretch between planned and returned lattice that rounding in an output can explain
-CELL_TOLERANCE = 1e-4
+#: "program" of a record that was typed into a table
+TABLE_PROGRAM = "table"
+#: folders to read before a second process is worth its start
+_MANY = 400
 
 
-def collect_run(run: Path, plan: Plan) -> StressTable:
-    """Read every job folder of a run; a broken job never stops the others.
+@dataclass(frozen=True)
+class _Task:
+    """A folder to read for a job."""
+
+    job: StrainJob
+    folder: Folder
+    seen: str
+
+
+def collect_run(
+    run: Path, plan: Plan, typed: Mapping[str, StressRecord] | None = None, workers: int | None = None
+) -> StressTable:
+    """Read every job folder of a run; a broken job never stops the others. Nothing is written.
+
+    Folders that are as they were when the run's stress table was written are taken from it. Outputs in folders of another
+    name are matched to the jobs by their cells.
 
     Parameters
     ----------
@@ -35,106 +52,114 @@ def collect_run(run: Path, plan: Plan) -> StressTable:
         Run folder.
     plan : Plan
         Its plan.
+    typed : mapping, optional
+        Label -> record from a table, which counts before what the folders hold.
+    workers : int, optional
+        Processes; when left out, all cores for some hundred folders to read and more, one for less.
     """
-    return StressTable(tuple(_collect_job(run, plan, job) for job in plan.jobs))
-
-
-def _natural(path: Path) -> list[tuple[int, str]]:
-    """Sort key in which run.10 follows run.9."""
-    return [(int(part), "") if part.isdigit() else (-1, part) for part in re.split(r"(\d+)", path.name)]
-
-
-def _outputs(run: Path, plan: Plan, job: StrainJob) -> list[tuple[Path, Reader]]:
-    """Recognised outputs of a job, the preferred kind and the latest continuation first."""
-    folder = run / job_folder(job.label)
-    if not folder.is_dir():
-        return []
-    written = {run / name for name in plan.files}
-    files = [p for p in folder.iterdir() if p.is_file() and not p.is_symlink() and p not in written and p.name[0] != "."]
-    found = [(path, reader) for path in files if (reader := recognise(path)) is not None]
-    found.sort(key=lambda pair: _natural(pair[0]), reverse=True)
-    return sorted(found, key=lambda pair: READERS.index(pair[1]))
-
-
-def _collect_job(run: Path, plan: Plan, job: StrainJob) -> StressRecord:
-    outputs = _outputs(run, plan, job)
-    if not outputs:
-        return StressRecord(job.label, "missing")
-    attempts = []
-    for path, reader in outputs:
-        record = _read_job(run, plan, job, path, reader)
-        if record.status == "done":
-            return record
-        attempts.append(record)
-    return attempts[0]
-
-
-def _read_job(run: Path, plan: Plan, job: StrainJob, path: Path, reader: Reader) -> StressRecord:
-    name = str(path.relative_to(run))
-    try:
-        returned = read_returned(path, reader)
-        digest = checksum(path.read_bytes())
-    except InputError as error:
-        status = "unfinished" if "end-of-job" in error.what else "broken"
-        doubt = finding("unreadable-output", job.label, f"{name}: {error.what}")
-        return StressRecord(job.label, status, program=reader.program, file=name, findings=(doubt,))
-    findings: list[Finding] = [finding(f"job-{status}", job.label, f"{name}: {text}") for status, text in returned.problems]
-    status = returned.problems[0][0] if returned.problems else "done"
-    stress = forces = moved = None
-    planned = plan.crystal.deformed(job.gradient)
-    try:
-        rotation = remove_rotation(planned, returned)
-    except InputError as error:
-        findings.append(finding("cell-mismatch", job.label, f"{name}: {error.what}"))
-        status = "mismatch"
-    else:
-        if returned.stress is not None:
-            stress = stress_to_voigt(rotation.T @ returned.stress @ rotation)
-        forces = None if returned.forces is None else returned.forces @ rotation
-        moved = _displacements(planned, returned)
-    return StressRecord(
-        label=job.label,
-        status=status,
-        stress=stress,
-        energy=returned.energy,
-        max_force=None if returned.forces is None else float(np.linalg.norm(returned.forces, axis=1).max(initial=0.0)),
-        program=returned.program,
-        file=name,
-        file_sha256=digest,
-        findings=tuple(findings),
-        forces=forces,
-        displacements=moved,
+    known = _known(run)
+    folders = {job.label: scan(run, job_folder(job.label), plan.files) for job in plan.jobs}
+    foreign = [scan(run, name) for name in foreign_folders(run, plan)]
+    elsewhere = (
+        checksum("".join(f"{f.name}{f.state}" for f in foreign).encode("utf-8", "surrogatepass"))[:16] if foreign else ""
     )
+    kept: dict[str, StressRecord] = {}
+    tasks: list[_Task] = []
+    for job in plan.jobs:
+        folder = folders[job.label]
+        seen = checksum(f"{plan_fingerprint(plan, job)}{folder.state}".encode())[:32]
+        if (old := _unchanged(run, known.get(job.label), seen, elsewhere, {f.name for f in foreign})) is not None:
+            kept[job.label] = replace(old, seen=_stamp(seen, elsewhere, folder, foreign))
+        else:
+            tasks.append(_Task(job, folder, _stamp(seen, elsewhere, folder, foreign)))
+    for record in _read_all(run, plan, tasks, workers):
+        kept[record.label] = record
+    records = [kept[job.label] for job in plan.jobs]
+    placed = {record.file.rpartition("/")[0] for record in records}
+    records, doubts = place_strays(run, plan, records, folders, [f for f in foreign if f.name not in placed])
+    records = [_with_typed(record, known.get(record.label), (typed or {}).get(record.label)) for record in records]
+    records, found = judge_set(plan, records)
+    return StressTable(tuple(records), (*doubts, *found))
 
 
-def _displacements(planned: Crystal, returned: Returned) -> FloatArray:
-    """Way of each atom (n, 3) from its affinely strained position to where it came back, A, planned frame, mean removed."""
-    shift = returned.positions - planned.positions
-    shift -= np.round(shift)
-    # a whole cell shifted near half a lattice vector wraps differently for different atoms: centre on the first atom
-    shift -= np.round(shift - shift[0])
-    return np.asarray((shift - shift.mean(axis=0)) @ planned.lattice)
+def _known(run: Path) -> dict[str, StressRecord]:
+    """Records of the last collection, as they were before the set was judged; none when its table cannot be used."""
+    if not (run / TABLE).is_file():
+        return {}
+    try:
+        return {record.label: unjudged(record) for record in load_table(run, ions=True).records}
+    except InputError:
+        return {}
 
 
-def remove_rotation(planned: Crystal, returned: Returned) -> FloatArray:
-    """Rotation R (3, 3) by which the output's frame is turned against the planned one: x_returned = R x_planned.
+def _stamp(seen: str, elsewhere: str, folder: Folder, foreign: Sequence[Folder]) -> str:
+    settled = folder.settled and all(other.settled for other in foreign)
+    return f"{seen}.{elsewhere}{'' if settled else '?'}"
 
-    Raises
-    ------
-    InputError
-        When the returned cell is not the planned one apart from a rotation, or holds other atoms.
-    """
-    if len(returned.numbers) != len(planned.numbers):
-        raise InputError(f"{len(returned.numbers)} atoms instead of {len(planned.numbers)}")
-    if sorted(returned.numbers) != sorted(planned.numbers):
-        raise InputError("another composition than planned")
-    if not np.array_equal(returned.numbers, planned.numbers):
-        raise InputError("the atoms are in another order than planned")
-    gradient = gradient_between(planned.lattice, returned.lattice)
-    if np.linalg.det(gradient) <= 0:
-        raise InputError("the returned cell has the other handedness")
-    rotation, stretch = polar(gradient)
-    drift = float(np.abs(stretch - np.eye(3)).max())
-    if drift > CELL_TOLERANCE:
-        raise InputError(f"the returned cell differs from the planned one by a strain of {100 * drift:.3g} %")
-    return rotation
+
+def _unchanged(run: Path, old: StressRecord | None, seen: str, elsewhere: str, foreign: Set[str]) -> StressRecord | None:
+    """The old record if its folder is as it was; files that were too young then are compared by their content."""
+    if old is None or old.program == TABLE_PROGRAM or old.status == "mismatch":
+        return None
+    mine, _, others = old.seen.removesuffix("?").partition(".")
+    place = old.file.rpartition("/")[0]
+    at_home = place in ("", job_folder(old.label)) or (place in foreign and others == elsewhere)
+    if mine != seen or not at_home or (old.forces is None and old.max_force is not None):
+        return None
+    if old.seen.endswith("?"):
+        try:
+            same = bool(old.file_sha256) and checksum((run / old.file).read_bytes()) == old.file_sha256
+        except OSError:
+            return None
+        return old if same else None
+    return old
+
+
+def _with_typed(record: StressRecord, old: StressRecord | None, typed: StressRecord | None) -> StressRecord:
+    """A typed record counts before a folder's; one typed earlier fills the place of a job without output."""
+    if typed is not None:
+        return typed
+    if record.status == "missing" and old is not None and old.program == TABLE_PROGRAM:
+        return old
+    return record
+
+
+def _read_one(run: Path, plan: Plan, task: _Task) -> StressRecord:
+    return replace(record_of(plan, task.job, task.folder, read_outputs(run, task.folder)), seen=task.seen)
+
+
+def _read_all(run: Path, plan: Plan, tasks: Sequence[_Task], workers: int | None) -> Iterator[StressRecord]:
+    count = workers or (os.cpu_count() or 1 if len(tasks) >= _MANY else 1)
+    if count == 1 or len(tasks) < 2:
+        for task in tasks:
+            yield _read_one(run, plan, task)
+        return
+    # a fork is cheap but safe from a single thread only
+    alone = threading.active_count() == 1 and "fork" in multiprocessing.get_all_start_methods()
+    context = multiprocessing.get_context("fork" if alone else "spawn")
+    size = max(1, min(50, len(tasks) // (4 * count)))
+    chunks = [tasks[i : i + size] for i in range(0, len(tasks), size)]
+    done = 0
+    pool = ProcessPoolExecutor(count, mp_context=context, initializer=_begin, initargs=(run, plan))
+    try:
+        for records in pool.map(_read_chunk, chunks):
+            done += len(records)
+            yield from records
+    except BrokenProcessPool:  # a worker died: go on alone
+        for task in tasks[done:]:
+            yield _read_one(run, plan, task)
+    finally:
+        pool.shutdown(cancel_futures=True)
+
+
+_WORK: tuple[Path, Plan] | None = None
+
+
+def _begin(run: Path, plan: Plan) -> None:
+    global _WORK
+    _WORK = (run, plan)
+
+
+def _read_chunk(tasks: Sequence[_Task]) -> list[StressRecord]:
+    assert _WORK is not None
+    return [_read_one(*_WORK, task) for task in tasks]

@@ -11,6 +11,7 @@ from typing import Any
 from strainkit.collect.gather import collect_run
 from strainkit.collect.table import StressRecord, StressTable
 from strainkit.design.cost import job_costs
+from strainkit.findings import Finding
 from strainkit.run.attempts import Attempts, read_attempts
 from strainkit.run.plan import Plan, job_folder
 from strainkit.run.queues import Queued
@@ -30,6 +31,7 @@ STATES: dict[str, tuple[str, bool]] = {
     "broken": ("the output cannot be read or holds impossible numbers", True),
     "unread": ("finished by the program's own marks, but no output here that strainkit reads", False),
     "mismatch": ("the output is of another cell or crystal: not mended by running it again", False),
+    "suspect": ("finished, but a check of the whole set refuses its numbers: see the findings", False),
 }
 
 
@@ -51,6 +53,8 @@ class Progress:
     jobs : tuple of JobState
     asked : bool
         Whether the scheduler was asked, so that a missing job is one that does not wait in the queue.
+    findings : tuple of Finding
+        About the set as a whole.
     core_hours_used, core_hours_left : float or None
         None where no job script kept the time. What is left is estimated from the finished jobs (the reference alone, if
         no other is finished) and the symmetry that each strained cell loses.
@@ -60,11 +64,12 @@ class Progress:
     asked: bool
     core_hours_used: float | None
     core_hours_left: float | None
+    findings: tuple[Finding, ...] = ()
 
     @property
     def table(self) -> StressTable:
         """The stress table as it would be collected now."""
-        return StressTable(tuple(job.record for job in self.jobs))
+        return StressTable(tuple(job.record for job in self.jobs), self.findings)
 
     @property
     def counts(self) -> dict[str, int]:
@@ -105,12 +110,13 @@ def read_progress(run: Path, plan: Plan, queued: Mapping[str, Queued] | None = N
         Job folder -> "queued" or "running", when the scheduler was asked: what is not in it does not run.
     """
     jobs = []
-    for record in collect_run(run, plan).records:
+    table = collect_run(run, plan)
+    for record in table.records:
         attempts = read_attempts(run / job_folder(record.label))
         asked = None if queued is None else queued.get(job_folder(record.label), "")
         jobs.append(JobState(_state(record, attempts, asked), record, attempts))
     used, left = _core_hours(plan, jobs)
-    return Progress(tuple(jobs), queued is not None, used, left)
+    return Progress(tuple(jobs), queued is not None, used, left, table.findings)
 
 
 def _state(record: StressRecord, attempts: Attempts, asked: str | None) -> str:
@@ -143,4 +149,4 @@ def _core_hours(plan: Plan, jobs: list[JobState]) -> tuple[float | None, float |
     if not base:
         return used, None
     hour = sum(jobs[i].attempts.last_core_hours for i in base) / sum(cost[i] for i in base)
-    return used, hour * sum(cost[i] for i, job in enumerate(jobs) if job.state not in ("done", "unread", "mismatch"))
+    return used, hour * sum(cost[i] for i, job in enumerate(jobs) if job.state not in ("done", "unread", "mismatch", "suspect"))

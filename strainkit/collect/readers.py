@@ -26,7 +26,7 @@ from strainkit.collect.programs import (
 )
 from strainkit.collect.programs.through_ase import atoms_from_copy, atoms_from_text
 from strainkit.collect.returned import Geometry, Reader, Returned, Stress
-from strainkit.collect.source import Source, file_head, printable, read_source
+from strainkit.collect.source import Source, file_head, read_source
 from strainkit.errors import InputError
 
 __all__ = ["READERS", "Reader", "Returned", "read_returned", "recognise"]
@@ -132,9 +132,9 @@ def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Ret
         return _assemble(reader, reader.load(source), problems)
     except Exception as error:  # damaged files make the libraries below raise anything
         if problems:
-            raise InputError(problems[0][1], printable(path)) from None
+            raise InputError(problems[0][1], path) from None
         reason = " ".join(str(error).split())[:200] or type(error).__name__
-        raise InputError(f"not readable as {reader.program}: {reason}", printable(path)) from None
+        raise InputError(f"not readable as {reader.program}: {reason}", path) from None
 
 
 def _assemble(reader: Reader, loaded: Any, problems: list[tuple[str, str]]) -> Returned:

@@ -16,7 +16,7 @@ from typing import IO, cast
 
 from strainkit.errors import InputError
 
-__all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "file_head", "printable", "read_source"]
+__all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "file_head", "read_source"]
 
 #: bytes looked at to tell what a file is
 HEAD = 16384
@@ -54,11 +54,6 @@ class Source:
                 raise ValueError(f"a line is longer than {LONGEST_LINE // 1024**2} MiB")
             start = end + 1
         return self.content.decode("utf-8", errors="replace").replace("\r\n", "\n")
-
-
-def printable(path: Path) -> str:
-    """A path on one line, whatever is in its name."""
-    return "".join(letter if letter.isprintable() else "?" for letter in str(path))
 
 
 def _open(path: Path) -> IO[bytes]:
@@ -103,7 +98,7 @@ def read_source(path: Path, within: Path | None = None) -> Source:
     InputError
         When it cannot be read, leads out of the folder or holds more than LARGEST bytes.
     """
-    where = printable(path)
+    where = path
     if within is not None and not path.resolve().is_relative_to(within.resolve()):
         raise InputError("a symbolic link leads out of the run folder", where)
     try:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import csv
 import io
-from dataclasses import dataclass, replace
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -31,6 +32,7 @@ STATUSES = {
     "unconverged": "electronic steps or ions not converged",
     "broken": "the output cannot be read or holds impossible numbers",
     "mismatch": "the output is of another cell or crystal than planned",
+    "suspect": "finished, but a check of the whole set refuses its numbers",
 }
 
 
@@ -49,8 +51,14 @@ class StressRecord:
         Free energy of the run cell, eV.
     max_force : float or None
         eV/A.
-    program, file, file_sha256 : str
+    program, version, file, file_sha256 : str
         Where it came from; the file relative to the run folder.
+    settings : mapping
+        What the output says about how it was computed: cutoff_eV, kpoints, functional, ...
+    rotation : (3, 3) or None
+        R with x_output = R x_given, which was taken out of stress, forces and displacements.
+    seen : str
+        Fingerprint of the job's folder and plan when it was read; "?" at its end: the files were too young to be sure.
     findings : tuple of Finding
     forces : (n, 3) or None
         eV/A, given frame, rotation removed, planned order of atoms. Kept in ions.json, not in the table.
@@ -69,6 +77,10 @@ class StressRecord:
     findings: tuple[Finding, ...] = ()
     forces: FloatArray | None = None
     displacements: FloatArray | None = None
+    version: str = ""
+    settings: Mapping[str, str | float] = field(default_factory=dict)
+    rotation: FloatArray | None = None
+    seen: str = ""
 
     def to_dict(self) -> dict[str, Any]:
         """JSON-ready record."""
@@ -79,17 +91,22 @@ class StressRecord:
             "energy_eV": self.energy,
             "max_force_eV_per_A": self.max_force,
             "program": self.program,
+            "version": self.version,
+            "settings": dict(self.settings),
+            "rotation": None if self.rotation is None else self.rotation.tolist(),
             "file": self.file,
             "file_sha256": self.file_sha256,
+            "seen": self.seen,
             "findings": [f.to_dict() for f in self.findings],
         }
 
 
 @dataclass(frozen=True)
 class StressTable:
-    """All records of a run, in the order of the plan."""
+    """All records of a run, in the order of the plan, and what was found when they were looked at together."""
 
     records: tuple[StressRecord, ...]
+    findings: tuple[Finding, ...] = ()
 
     @property
     def usable(self) -> tuple[StressRecord, ...]:
@@ -103,16 +120,17 @@ class StressTable:
             "records": [record.to_dict() for record in self.records],
             "usable": len(self.usable),
             "expected": len(self.records),
+            "findings": [f.to_dict() for f in self.findings],
         }
 
     def ions_to_dict(self) -> dict[str, Any]:
-        """JSON-ready forces and displacements of the usable jobs, each with the checksum of the file they came from."""
+        """JSON-ready forces and displacements of the jobs, each with the checksum of the file they came from."""
         return {
             "schema": f"{_IONS_KIND}/1",
             "jobs": {
                 r.label: {"file_sha256": r.file_sha256, "forces_eV_per_A": r.forces, "displacements_A": r.displacements}
-                for r in self.usable
-                if r.displacements is not None
+                for r in self.records
+                if r.displacements is not None or r.forces is not None
             },
         }
 
@@ -125,7 +143,8 @@ class StressTable:
             stress = [""] * 6 if r.stress is None else [repr(float(x)) for x in r.stress]
             writer.writerow([r.label, r.status, *stress, "" if r.energy is None else repr(r.energy), r.file])
         atomic_write(run / "stresses.csv", buffer.getvalue())
-        atomic_write(run / IONS, dump_json(self.ions_to_dict()))
+        if any(r.displacements is not None or r.forces is not None for r in self.records):
+            atomic_write(run / IONS, dump_json(self.ions_to_dict()))
         atomic_write(run / TABLE, dump_json(self.to_dict()))
 
 
@@ -142,7 +161,8 @@ def load_table(run: Path, ions: bool = False) -> StressTable:
         raise InputError("no stress table yet", path, f"Make it with: strainkit collect {run}")
     data = load_json(path, _KIND)
     try:
-        table = StressTable(tuple(_record(item) for item in data["records"]))
+        doubts = tuple(Finding(**f) for f in data.get("findings", ()))
+        table = StressTable(tuple(_record(item) for item in data["records"]), doubts)
         return _with_ions(run, table) if ions else table
     except (KeyError, TypeError, ValueError) as error:
         raise InputError(f"damaged ({type(error).__name__}: {error})", path, "Run strainkit collect again.") from None
@@ -154,7 +174,7 @@ def _with_ions(run: Path, table: StressTable) -> StressTable:
     if not path.is_file():
         return table
     jobs = load_json(path, _IONS_KIND)["jobs"]
-    return StressTable(tuple(_with_own_ions(record, jobs.get(record.label)) for record in table.records))
+    return replace(table, records=tuple(_with_own_ions(record, jobs.get(record.label)) for record in table.records))
 
 
 def _with_own_ions(record: StressRecord, item: dict[str, Any] | None) -> StressRecord:
@@ -178,4 +198,8 @@ def _record(item: dict[str, Any]) -> StressRecord:
         file=item["file"],
         file_sha256=item["file_sha256"],
         findings=tuple(Finding(**f) for f in item["findings"]),
+        version=item.get("version", ""),
+        settings=item.get("settings") or {},
+        rotation=None if item.get("rotation") is None else np.array(item["rotation"], dtype=float).reshape(3, 3),
+        seen=item.get("seen", ""),
     )

@@ -19,7 +19,7 @@ from typing import Literal
 
 import numpy as np
 
-from strainkit.design.shapes import SAME_SHAPE, Shape, largest_principal_of
+from strainkit.design.shapes import Shape, largest_principal_of, same_magnitude, same_to_second_order
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray, IntArray
 from strainkit.tensors.invariants import invariant_vectors
@@ -152,6 +152,7 @@ def _place(vectors: FloatArray, rotations: FloatArray) -> tuple[list[Shape], lis
     """The shapes among strains (jobs, 6), Mandel, and where each strain belongs.
 
     That is the index of its shape (-1 at rest), its signed magnitude and the 6x6 rotation that carries the shape onto it.
+    Magnitudes that are the same to second order are given their mean.
     """
     sizes = largest_principal_of(vectors)
     q = rotation6(rotations)
@@ -166,15 +167,29 @@ def _place(vectors: FloatArray, rotations: FloatArray) -> tuple[list[Shape], lis
         for index, image in enumerate(images):
             away = np.abs(image - unit).max(axis=1)
             nearest = int(away.argmin())
-            if away[nearest] < SAME_SHAPE:
+            if away[nearest] < same_to_second_order(size):
                 sign = 1.0 if nearest < len(q) else -1.0
                 placed.append((index, sign * size, q[nearest % len(q)]))
                 break
         else:
-            shapes.append(Shape.of(unit, rotations))
+            shapes.append(Shape.of(unit, rotations, same_to_second_order(size)))
             images.append(np.concatenate([q @ unit, -q @ unit]))
             placed.append((len(shapes) - 1, size, np.eye(6)))
-    return shapes, placed
+    return shapes, _common_magnitudes(placed)
+
+
+def _common_magnitudes(placed: list[tuple[int, float, FloatArray]]) -> list[tuple[int, float, FloatArray]]:
+    groups: dict[int, list[list[float]]] = {}
+    for index, t, _ in placed:
+        known = groups.setdefault(index, [])
+        close = (group for group in known if same_magnitude(group[0], abs(t)))
+        group = next(close, None)
+        if group is None:
+            known.append([abs(t)])
+        else:
+            group.append(abs(t))
+    means = {(index, size): float(np.mean(group)) for index, known in groups.items() for group in known for size in group}
+    return [(index, float(np.copysign(means[index, abs(t)], t)), turn) for index, t, turn in placed]
 
 
 def build_model(

@@ -22,12 +22,29 @@ __all__ = [
     "largest_principal_of",
     "one_of_each",
     "reflection_strains",
+    "same_magnitude",
+    "same_to_second_order",
     "smallest_directions",
     "tidy_strains",
 ]
 
 #: how close two strains must be, relative to their size, to be of one shape
 SAME_SHAPE = 1e-5
+
+
+def same_to_second_order(size: float) -> float:
+    """How close unit strains of this magnitude must be to be opposites or repeats of each other.
+
+    Cells deformed by plus and minus a small-strain matrix e have Lagrangian strains e + e^2/2 and -e + e^2/2, and those
+    made to keep the volume differ by up to twice e^2: pairs to second order, and as good as exact ones, since what sets them
+    apart times the stiffness is in the model.
+    """
+    return max(SAME_SHAPE, 2.5 * size)
+
+
+def same_magnitude(one: float, other: float) -> bool:
+    """Are two magnitudes those of plus and minus the same small-strain matrix?"""
+    return abs(one - other) <= max(1e-9, 1.2 * min(one, other) ** 2)
 
 
 @dataclass(frozen=True)
@@ -56,16 +73,20 @@ class Shape:
     has_image: bool
 
     @classmethod
-    def of(cls, unit: FloatArray, rotations: FloatArray) -> Shape:
-        """Shape of a Mandel vector (6,) in a crystal with the proper Laue rotations (m, 3, 3)."""
+    def of(cls, unit: FloatArray, rotations: FloatArray, opposite_within: float = SAME_SHAPE) -> Shape:
+        """Shape of a Mandel vector (6,) in a crystal with the proper Laue rotations (m, 3, 3).
+
+        A rotation maps it to its negative when it does so to `opposite_within` of its size.
+        """
         turned = rotation6(rotations) @ unit
-        size = SAME_SHAPE * np.linalg.norm(unit)
-        same = np.abs(turned - unit).max(axis=1) < size
-        opposite = np.abs(turned + unit).max(axis=1) < size
+        size = float(np.linalg.norm(unit))
+        same = np.abs(turned - unit).max(axis=1) < SAME_SHAPE * size
+        opposite = np.abs(turned + unit).max(axis=1) < opposite_within * size
         both = same | opposite
         allowed = invariant_vectors(rotations[same])
         residual = np.flatnonzero(same)
-        if not opposite.any():
+        # in a group, those that map to the negative are as many as those that keep
+        if opposite.sum() != same.sum() or (same & opposite).any():
             return cls(unit, allowed, allowed, allowed, residual, False)
         signs = np.where(same, 1.0, -1.0)[both]
         even, odd = invariant_vectors(rotations[both]), invariant_vectors(rotations[both], signs)

@@ -98,7 +98,7 @@ def examine(
     order : "linear" or "cubic"
     """
     second = regression.second
-    energy = check_energies(jobs, energies, plan.crystal.volume, regression, layout)
+    energy = check_energies(jobs, energies, plan.crystal.volume, regression, layout.matrices)
     findings = list(energy.findings)
     sizes = magnitudes_of(jobs)
     other = cubic = None

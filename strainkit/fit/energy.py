@@ -19,11 +19,12 @@ from typing import Any
 import numpy as np
 
 from strainkit.design.jobs import StrainJob
-from strainkit.design.model import LinearModel
+from strainkit.design.shapes import same_to_second_order
 from strainkit.findings import Finding, finding
-from strainkit.fit.regression import Layout, Regression
-from strainkit.tensors.arrays import FloatArray
+from strainkit.fit.regression import Regression
+from strainkit.tensors.arrays import FloatArray, IntArray, known
 from strainkit.tensors.sixvectors import to_mandel
+from strainkit.tensors.strain import green_lagrange
 from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = ["EnergyCheck", "PairCheck", "check_energies"]
@@ -98,7 +99,7 @@ class EnergyCheck:
 
 
 def check_energies(
-    jobs: Sequence[StrainJob], energies: Sequence[float | None], volume: float, regression: Regression, layout: Layout
+    jobs: Sequence[StrainJob], energies: Sequence[float | None], volume: float, regression: Regression, matrices: FloatArray
 ) -> EnergyCheck:
     """Compare energies with stresses.
 
@@ -111,62 +112,67 @@ def check_energies(
     volume : float
         Of the reference cell, A^3.
     regression : Regression
-    layout : Layout
-        Its strains and matrices.
+    matrices : (n, 6, 6)
+        Mandel matrices of the constants, given frame.
     """
     rest = next((e for job, e in zip(jobs, energies, strict=True) if not job.shape), None)
     if rest is None or not regression.determined.all():
         return EnergyCheck((), None, None, None, ())
     model = regression.estimator.model
-    found = _opposites(model, energies)
+    found = _opposites(regression, energies)
     if not found:
         return EnergyCheck((), None, None, None, ())
-    at = [i for i, _, _ in found]
-    up, down = (np.array([pair[side] for pair in found]) for side in (1, 2))
+    at, other = (np.array([pair[side] for pair in found]) for side in (0, 1))
+    up, down = (np.array([pair[side] for pair in found]) for side in (2, 3))
     t = model.signed_magnitudes[at]
-    unit = to_mandel(layout.strains[at]) / t[:, None]
+    unit, apart = _units(green_lagrange(np.array([job.gradient for job in jobs])), at, other, t)
     even, cubic = (_along(regression, columns, at, unit) / t**power for columns, power in ((model.even, 2), (model.cubic, 3)))
     scale = EV_PER_A3_IN_GPA / volume
-    a = (unit[:, :, None] * unit[:, None, :]).reshape(-1, 36) @ layout.matrices.reshape(-1, 36).T
+    a = (unit[:, :, None] * unit[:, None, :]).reshape(-1, 36) @ matrices.reshape(-1, 36).T
     errors = np.full(len(at), np.nan)
     if regression.covariance is not None:
         errors = np.sqrt(np.maximum(((a @ regression.covariance) * a).sum(axis=1), 0.0))
-    slopes = scale * (up - down) / (2 * t) - even * t**2 / 3
-    columns = (
-        t,
-        scale * (up + down - 2 * rest) / t**2 - cubic * t**2 / 2,
-        a @ regression.values,
-        errors,
-        slopes,
-        unit @ regression.reference_stress,
-    )
+    answer = apart @ np.tensordot(regression.values, matrices, axes=1)
+    slopes = scale * (up - down) / (2 * t) - even * t**2 / 3 - t * (answer * unit).sum(axis=1)
+    bends = scale * (up + down - 2 * rest) / t**2 - cubic * t**2 / 2
+    bends -= (answer * apart).sum(axis=1) + 2.0 / t * (apart @ known(regression.reference_stress))
+    columns = (t, bends, a @ regression.values, errors, slopes, unit @ regression.reference_stress)
     pairs = [PairCheck(jobs[i].label, *map(float, row)) for i, *row in zip(at, *columns, strict=True)]
     return _verdict(pairs, _from_slopes(slopes, unit @ model.reference_basis, model.reference_basis))
 
 
-def _opposites(model: LinearModel, energies: Sequence[float | None]) -> list[tuple[int, float, float]]:
-    """Job on the positive side, its energy and that of the opposite strain, for every pair or job with an image, eV."""
-    place = {
-        (int(shape), round(float(t), 9)): i
-        for i, (shape, t) in enumerate(zip(model.shape_of_job, model.signed_magnitudes, strict=True))
-    }
+def _opposites(regression: Regression, energies: Sequence[float | None]) -> list[tuple[int, int, float, float]]:
+    """Job on the positive side, the opposite one (-1 where an image is it), and both energies, eV."""
+    model = regression.estimator.model
     found = []
-    for (shape, t), i in place.items():
+    for i, (t, shape, other) in enumerate(
+        zip(model.signed_magnitudes, model.shape_of_job, regression.estimator.opposite, strict=True)
+    ):
         energy = energies[i]
         if shape < 0 or t <= 0 or energy is None:
             continue
-        other = place.get((shape, -t))
-        opposite = energies[other] if other is not None else energy if model.shapes[shape].has_image else None
+        opposite = energies[other] if other >= 0 else energy if model.shapes[shape].has_image else None
         if opposite is not None:
-            found.append((i, energy, opposite))
+            found.append((i, int(other), energy, opposite))
     return found
 
 
-def _along(regression: Regression, columns: slice, at: Sequence[int], unit: FloatArray) -> FloatArray:
+def _units(strains: FloatArray, at: IntArray, other: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Unit strains u and asymmetries d (pairs, 6), Mandel, of pairs with strains t (d + u) and t (d - u)."""
+    vectors = to_mandel(strains)
+    plus = vectors[at] / t[:, None]
+    minus = np.where(other[:, None] < 0, plus, -vectors[other] / t[:, None])
+    limit = 2.0 * np.array([same_to_second_order(float(size)) for size in t])
+    turned = np.abs(plus - minus).max(axis=1) > limit  # the opposite of an image, in another orientation
+    minus[turned] = plus[turned]
+    return 0.5 * (plus + minus), 0.5 * (plus - minus)
+
+
+def _along(regression: Regression, columns: slice, at: IntArray, unit: FloatArray) -> FloatArray:
     """Stress response (jobs,), GPa, that some columns of the model give along the unit strains (jobs, 6) of these jobs."""
     model = regression.estimator.model
     response = model.spread(model.matrix[:, columns] @ regression.parameters[columns])
-    return np.asarray((response[list(at)] * unit).sum(axis=1))
+    return np.asarray((response[at] * unit).sum(axis=1))
 
 
 def _from_slopes(slopes: FloatArray, directions: FloatArray, basis: FloatArray) -> FloatArray | None:

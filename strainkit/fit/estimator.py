@@ -114,13 +114,18 @@ class Estimator:
         return [of(c) for c in self.model.even_of_shape], [of(c) for c in self.model.cubic_of_shape]
 
     @cached_property
+    def opposite(self) -> IntArray:
+        """(jobs,) the first job of opposite strain, -1 where there is none."""
+        t, shape = self.model.signed_magnitudes, self.model.shape_of_job
+        pairs = (shape[:, None] == shape) & (np.abs(t[:, None] + t) < 1e-6 * np.abs(t)[:, None])
+        return np.where(pairs.any(axis=1), pairs.argmax(axis=1), -1)
+
+    @cached_property
     def alone(self) -> IntArray:
-        """Jobs whose opposite is not there, though no rotation supplies it."""
-        model = self.model
-        t, shape = model.signed_magnitudes, model.shape_of_job
-        opposite = (shape[:, None] == shape) & (np.abs(t[:, None] + t) < 1e-6 * np.abs(t)[:, None])
-        image = np.array([index < 0 or model.shapes[index].has_image for index in shape])
-        return np.flatnonzero(~(opposite.any(axis=1) | image))
+        """Strained jobs whose opposite is not there, though no rotation supplies it."""
+        shapes = self.model.shapes
+        image = np.array([index < 0 or shapes[index].has_image for index in self.model.shape_of_job])
+        return np.flatnonzero((self.opposite < 0) & ~image)
 
     def turned(self, rotation: FloatArray, change: FloatArray | None = None) -> Estimator:
         """The same of the same jobs in other axes (rows of `rotation` (3, 3) in the present frame), and for other constants.
@@ -140,7 +145,7 @@ class Estimator:
             odd = _changed(odd, slice(0, count), change)
         twin = replace(self, model=model, whole=whole, odd=odd)
         # neither axes nor constants matter to these
-        twin.__dict__.update(leverage=self.leverage, term_weights=self.term_weights, alone=self.alone)
+        twin.__dict__.update(leverage=self.leverage, term_weights=self.term_weights, opposite=self.opposite, alone=self.alone)
         return twin
 
 

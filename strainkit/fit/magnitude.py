@@ -14,6 +14,7 @@ import numpy as np
 
 from strainkit.design.jobs import StrainJob
 from strainkit.design.model import build_model
+from strainkit.design.shapes import same_magnitude
 from strainkit.findings import Finding, finding
 from strainkit.fit.nonlinearity import extra_terms_test
 from strainkit.fit.regression import Estimator, Regression, regress
@@ -106,8 +107,14 @@ class Convergence:
 
 
 def magnitudes_of(jobs: Sequence[StrainJob]) -> tuple[float, ...]:
-    """Distinct magnitudes (fractions) of the strained jobs, ascending."""
-    return tuple(sorted({round(abs(job.magnitude), 9) for job in jobs if job.shape}))
+    """Distinct magnitudes (fractions) of the strained jobs, ascending; those that are one to second order as their mean."""
+    groups: list[list[float]] = []
+    for size in sorted(abs(job.magnitude) for job in jobs if job.shape):
+        if groups and same_magnitude(groups[-1][0], size):
+            groups[-1].append(size)
+        else:
+            groups.append([size])
+    return tuple(round(float(np.mean(group)), 9) for group in groups)
 
 
 def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise: float | None = None) -> Convergence:
@@ -147,7 +154,7 @@ def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise:
     level = noise if noise is not None else (zero or common).noise
     each = []
     for size in sizes:
-        found = fit([i for i, job in enumerate(jobs) if not job.shape or abs(abs(job.magnitude) - size) < 1e-9], known=level)
+        found = fit([i for i, job in enumerate(jobs) if not job.shape or same_magnitude(abs(job.magnitude), size)], known=level)
         each.append(found if found.determined.all() else None)
     f, p = (None, None) if zero is None else extra_terms_test(common, zero)
     shift, shift_error = (None, None) if zero is None else _contrast(common, zero, level)
@@ -172,7 +179,7 @@ def _at_largest(
     plan: Plan, jobs: Sequence[StrainJob], zero: Regression | None, size: float, level: float | None
 ) -> tuple[FloatArray, FloatArray | None, FloatArray | None]:
     """Noise errors, and bias with its standard error, of a linear fit at one magnitude alone."""
-    chosen = [i for i, job in enumerate(jobs) if not job.shape or abs(abs(job.magnitude) - size) < 1e-9]
+    chosen = [i for i, job in enumerate(jobs) if not job.shape or same_magnitude(abs(job.magnitude), size)]
     strains = np.array([jobs[i].strain for i in chosen])
     solver = Estimator.of(build_model(strains, plan.symmetry.rotations, plan.basis.matrices))
     noise = np.full(len(plan.basis.names), np.nan)

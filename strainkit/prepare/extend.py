@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from strainkit.design.expect import expect
-from strainkit.design.extend import finer_jobs
+from strainkit.design.extend import finer_jobs, restoring_jobs
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
 from strainkit.prepare.calculation import recorded_calculation
@@ -20,7 +20,7 @@ from strainkit.run.files import atomic_write, checksum
 from strainkit.run.plan import Plan, job_folder
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["at_finer_settings", "extend_plan", "write_extension"]
+__all__ = ["adopt_jobs", "at_finer_settings", "extend_plan", "write_extension"]
 
 
 def extend_plan(plan: Plan, new: Sequence[StrainJob], displacements: Mapping[str, FloatArray] | None = None) -> Plan:
@@ -38,6 +38,22 @@ def extend_plan(plan: Plan, new: Sequence[StrainJob], displacements: Mapping[str
     promise, doubts = expect(longer.strain_set, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
     kept = tuple(f for f in plan.findings if f.code not in ("few-spare-degrees", "target-error"))
     return replace(longer, expectation=promise, findings=(*kept, *doubts))
+
+
+def adopt_jobs(plan: Plan, adopted: Sequence[StrainJob]) -> Plan:
+    """The plan with jobs that are finished already, and of its own strained jobs only those that are needed beside them.
+
+    These are the fewest that determine every constant; none when the adopted ones do. A reference job stays in any case.
+    """
+    reference = [job for job in adopted if not job.shape][:1] or [plan.jobs[0]]
+    others = [job for job in adopted if job.shape]
+    first = max((job.shape for job in others), default=0)
+    own = [replace(job, shape=job.shape + first) for job in plan.strain_set if job.shape]
+    needed = restoring_jobs([*reference, *others], own, plan.symmetry, plan.basis, by_pairs=True)
+    jobs = (*reference, *others, *needed)
+    promise, doubts = expect(jobs, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
+    kept = tuple(f for f in plan.findings if f.code not in ("few-spare-degrees", "target-error"))
+    return replace(plan, jobs=jobs, expectation=promise, findings=(*kept, *doubts))
 
 
 def at_finer_settings(plan: Plan, settings: Settings, displacements: Mapping[str, FloatArray] | None = None) -> Plan:

@@ -35,7 +35,9 @@ def progress_text(progress: Progress, run: Path, plan: Plan, written: Mapping[st
             left = f"about {progress.core_hours_left:.3g}"
         lines += ["", f"  core hours used {progress.core_hours_used:.3g}, left {left}"]
     lines += _next_steps(progress, run, plan, written)
-    return "\n".join([*lines, "", findings_text([f for job in progress.jobs for f in job.record.findings])])
+    return "\n".join(
+        [*lines, "", findings_text([*progress.findings, *(f for job in progress.jobs for f in job.record.findings)])]
+    )
 
 
 def _last(ended: str) -> str:

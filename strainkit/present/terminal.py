@@ -165,8 +165,8 @@ def table_text(table: StressTable, every: bool = False) -> str:
             [r.label, r.status, *(plain(None if r.stress is None else r.stress[i]) for i in range(6))] for r in table.records
         ]
         lines += ["", columns(rows, ["job", "status", *COMPONENTS], left=2), "  Cauchy stress, GPa, positive in tension"]
-    bad = [f for record in table.records for f in record.findings]
-    again = [record.label for record in table.records if record.status != "done"]
+    bad = [*table.findings, *(f for record in table.records for f in record.findings)]
+    again = [record.label for record in table.records if record.status not in ("done", "mismatch", "suspect")]
     if again:
         lines.append(paragraph(f"to run again: {' '.join(again)}", "  "))
     return "\n".join([*lines, "", findings_text(bad)])

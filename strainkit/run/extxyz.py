@@ -6,14 +6,16 @@ A result is `returned.extxyz`: the lattice, one line an atom (forces in eV/A whe
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
+from pathlib import Path
 
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["RETURNED", "extxyz_text"]
+__all__ = ["RETURNED", "extxyz_text", "recorded_engine"]
 
 #: name of the exchange file in a job folder
 RETURNED = "returned.extxyz"
@@ -52,3 +54,14 @@ def extxyz_text(crystal: Crystal, info: Mapping[str, object], forces: FloatArray
     rows = np.hstack(columns)
     lines = [f"{s:2s} " + " ".join(f"{x:.16g}" for x in row) for s, row in zip(crystal.symbols, rows, strict=True)]
     return "\n".join([str(len(rows)), head, *lines]) + "\n"
+
+
+def recorded_engine(path: Path) -> str | None:
+    """What an exchange file says about the engine that made it (its `engine` key); None when it says nothing or is gone."""
+    try:
+        with path.open(encoding="utf-8", errors="replace") as file:
+            head = [next(file, "") for _ in range(2)][1]
+    except OSError:
+        return None
+    found = re.search(r'\bengine="([^"]*)"', head)
+    return found[1] if found else None

@@ -11,7 +11,7 @@ from strainkit.tensors.arrays import BoolArray, FloatArray
 __all__ = ["LeastSquares", "factorise"]
 
 #: singular values of the column-scaled matrix below this count as zero
-_SINGULAR = 1e-7
+_SINGULAR = 1e-4
 #: columns this much shorter than the longest are rounding errors
 _NEGLIGIBLE = 1e-9
 #: a parameter with more than this share in what the rows do not see is not determined

@@ -3,7 +3,8 @@
 Gaussian noise on every Mandel component of the second Piola-Kirchhoff stress, published tensors (see
 tests/data/published_stiffness.json), the fewest jobs at 1 %, at 0.5 and 1 %, and image-using (single-sided) sets. The noise is
 2e-4 of the mean stiffness, which makes errors of about one percent of the constants. Every cell is the share, in percent, of
-20,000 simulated sets whose interval holds the true value; the worst constant is shown.
+20,000 simulated sets whose interval holds the true value; the worst constant is shown. The last column is the mean over
+constants and sets of the sampled variance over the Cramer-Rao bound, whose own sampling error is about 1 % a constant.
 
 Run: python tests/benchmarks/coverage.py [SETS]
 """
@@ -108,15 +109,13 @@ def main() -> None:
         curved = [
             simulate(laue, fewest(group), [0.005, 0.01], "cubic", size, sets, seed) for seed, size in enumerate((0, 1, 2, 3, 5))
         ]
-        bound = max(r[2].max() for r in (one, two, single, *curved) if r is not None)
+        bound = np.mean(np.concatenate([r[2] for r in (one, two, single, *curved) if r is not None]))
         cells = [laue, worst(one[0]), worst(one[1]), worst(two[0]), worst(two[1])]
         cells += [worst(single[0]) if single else "-", worst(np.concatenate([c[0] for c in curved])), f"{bound:.3f}"]
         print("| " + " | ".join(cells) + " |", flush=True)
     group = rotations("m-3")
     loud = simulate("m-3", fewest(group), [0.01], sets=sets, noise=4e-3)
     print(f"errors of a fifth of the constants (m-3, noise 4e-3): constants {worst(loud[0])}, K G E, E(n) {worst(loud[1])}")
-    bent = simulate("m-3m", fewest(rotations("m-3m")), [0.005, 0.01], cubic=5, sets=sets)
-    print(f"linear order in spite of cubic terms of 5 x noise (m-3m): constants {worst(bent[0])}")
 
 
 if __name__ == "__main__":

@@ -81,8 +81,7 @@ def test_forces_and_displacements_come_back_in_the_planned_frame(made):
         (lambda c: c.deformed(np.diag([1.003, 1, 1])), "differs from the planned one by a strain of 0.3 %"),
         (lambda c: Crystal(c.lattice, c.positions[:-1], c.numbers[:-1]), "atoms instead of"),
         (lambda c: Crystal(c.lattice, c.positions, np.where(c.numbers == 8, 16, c.numbers)), "another composition"),
-        (lambda c: Crystal(c.lattice, c.positions, c.numbers[::-1]), "another order"),
-        (lambda c: c.deformed(np.diag([1, 1, -1.0])), "other handedness"),
+        (lambda c: Crystal(c.lattice, c.positions, c.numbers[::-1]), "not on the planned sites in any order"),
     ],
 )
 def test_output_of_another_cell_is_not_used(made, change, message):

@@ -1,0 +1,79 @@
+"""strainkit compare RUN RUN ..."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from strainkit.cli.options import Json, Quiet, Symprec, deliver, note
+
+if TYPE_CHECKING:
+    from strainkit.derive.member import Member
+
+Crystals = Annotated[
+    list[str] | None,
+    typer.Argument(metavar="RUN...", help="Run folders, and files with typed tensors: FILE, or FILE:CELL with its structure."),
+]
+By = Annotated[
+    str,
+    typer.Option(
+        help="Rank by young, shear, bulk, poisson, pugh, anisotropy, young-least, young-most, shear-least, or a constant."
+    ),
+]
+Baseline = Annotated[str | None, typer.Option(help="Hold the others against this one: its name, folder or file.")]
+Csv = Annotated[Path | None, typer.Option(help="Write values and differences to this file.")]
+Html = Annotated[Path | None, typer.Option(help="Write one self-contained page to this file.")]
+
+
+def compare(
+    crystals: Crystals = None,
+    by: By = "young",
+    baseline: Baseline = None,
+    csv: Csv = None,
+    html: Html = None,
+    symprec: Symprec = 1e-3,
+    json: Json = False,
+    quiet: Quiet = False,
+) -> None:
+    """Crystals side by side: what differs beyond the error bars, which ranking is right, what forms from what."""
+    from strainkit.derive.comparison import compare_crystals
+    from strainkit.errors import UsageError
+    from strainkit.present.comparison import comparison_text
+    from strainkit.present.comparison_csv import comparison_csv
+    from strainkit.run.files import atomic_write
+
+    if len(crystals or []) < 2:
+        raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
+    result = compare_crystals([_member(text, symprec) for text in crystals or []], by, baseline)
+    if csv is not None:
+        atomic_write(csv, comparison_csv(result))
+        note(f"wrote {csv}", quiet)
+    if html is not None:
+        from strainkit.present.comparison_page import comparison_page
+
+        atomic_write(html, comparison_page(result))
+        note(f"wrote {html}", quiet)
+    deliver(result.to_dict, lambda: comparison_text(result), json)
+    if any(m.moduli is None for m in result.members):
+        raise typer.Exit(5)
+
+
+def _member(text: str, symprec: float) -> Member:
+    """A run folder, a tensor file, or FILE:CELL."""
+    from strainkit.cli.load import fitted_as_saved
+    from strainkit.collect.table import load_table
+    from strainkit.crystal.read import read_crystal
+    from strainkit.crystal.symmetry import find_symmetry
+    from strainkit.derive.member import member_of_file, member_of_fit
+    from strainkit.tensors.textfile import read_tensor
+
+    path = Path(text)
+    if path.is_file():
+        return member_of_file(read_tensor(path))
+    file, separator, cell = text.rpartition(":")
+    if separator and not path.exists() and Path(file).is_file():
+        crystal = read_crystal(Path(cell))
+        return member_of_file(read_tensor(file), crystal, find_symmetry(crystal, symprec))
+    return member_of_fit(fitted_as_saved(path), load_table(path), path)

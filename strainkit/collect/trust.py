@@ -1,0 +1,163 @@
+"""Checks of a whole set of records against each other. A job that they refuse becomes "suspect": the fit leaves it out."""
+
+from __future__ import annotations
+
+from collections import Counter, defaultdict
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from strainkit.collect.paths import energy_jumps, ions_elsewhere, left_over_forces
+from strainkit.collect.proofs import prove
+from strainkit.collect.table import StressRecord
+from strainkit.design.jobs import StrainJob
+from strainkit.findings import Finding, finding
+from strainkit.run.plan import Plan
+
+__all__ = ["judge_set", "unjudged"]
+
+#: settings that must be the same in every job of a set -> words for them
+SETTINGS = {
+    "program": "program",
+    "functional": "functional",
+    "dispersion": "dispersion correction",
+    "cutoff_eV": "cutoff (eV)",
+    "kpoints": "k-points",
+    "smearing": "smearing",
+    "spin": "spin",
+}
+#: codes that belong to the set, not to a job's own files: found anew each time
+SET_CODES = frozenset(
+    (
+        "mixed-settings",
+        "mixed-versions",
+        "identical-outputs",
+        "stress-sign",
+        "stress-unit",
+        "stress-order",
+        "stress-frame",
+        "energy-jump",
+        "ions-elsewhere",
+        "forces-left",
+        "reference-missing",
+    )
+)
+#: share of the jobs that makes their value the one that the others ought to have
+_MAJORITY = 2 / 3
+
+
+def unjudged(record: StressRecord) -> StressRecord:
+    """A record as it was before its set was judged."""
+    status = "done" if record.status == "suspect" else record.status
+    return replace(record, status=status, findings=tuple(f for f in record.findings if f.code not in SET_CODES))
+
+
+def judge_set(plan: Plan, records: Sequence[StressRecord]) -> tuple[list[StressRecord], list[Finding]]:
+    """Hold the finished records of a run against each other.
+
+    Returns
+    -------
+    records : list of StressRecord
+        In the same order; refused ones are "suspect" and carry the finding.
+    findings : list of Finding
+        About the set as a whole.
+    """
+    judged = list(records)
+    whole: list[Finding] = []
+    checks: tuple[Callable[..., list[tuple[Finding, tuple[str, ...]]]], ...] = (_settings, _identical, prove)
+    for check in checks:
+        for found, refused in check(plan, _finished(plan, judged)):
+            judged, whole = _apply(judged, whole, found, refused)
+    for softly in (energy_jumps, ions_elsewhere, left_over_forces):
+        for found in softly(plan, _finished(plan, judged)):
+            judged, whole = _apply(judged, whole, found, ())
+    whole += _reference(plan, judged)
+    return judged, whole
+
+
+def _finished(plan: Plan, records: Sequence[StressRecord]) -> list[tuple[StrainJob, StressRecord]]:
+    pairs = zip(plan.jobs, records, strict=True)
+    return [(job, record) for job, record in pairs if record.status == "done" and record.stress is not None]
+
+
+def _apply(
+    records: list[StressRecord], whole: list[Finding], found: Finding, refused: tuple[str, ...]
+) -> tuple[list[StressRecord], list[Finding]]:
+    """Mark the refused jobs; a finding about one job goes to its record, any other to the set."""
+    marked = [replace(r, status="suspect") if r.label in refused else r for r in records]
+    at = next((i for i, r in enumerate(marked) if r.label == found.where), None)
+    if at is None:
+        return marked, [*whole, found]
+    marked[at] = replace(marked[at], findings=(*marked[at].findings, found))
+    return marked, whole
+
+
+def _settings(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[tuple[Finding, tuple[str, ...]]]:
+    found = []
+    for finer in (False, True):
+        records = [record for job, record in done if (job.kind == "finer") is finer]
+        for key, word in SETTINGS.items():
+            said = {r.label: r.program if key == "program" else r.settings.get(key) for r in records}
+            found += _mixed("mixed-settings", word, {label: _plain(v) for label, v in said.items() if v not in (None, "")})
+        versions = {r.label: f"{r.program} {r.version}" for r in records if r.version}
+        found += [(f, ()) for f, _ in _mixed("mixed-versions", "version", versions)]
+    # a mesh gives the same number of points in every job of one shape: its strained cells have one symmetry
+    shapes: dict[tuple[int, bool], dict[str, str]] = defaultdict(dict)
+    for job, record in done:
+        if "kpoint_count" in record.settings and job.shape and not job.moved:
+            shapes[job.shape, job.kind == "finer"][record.label] = _plain(record.settings["kpoint_count"])
+    for values in shapes.values():
+        found += _mixed("mixed-settings", "number of k-points", values)
+    return found
+
+
+def _plain(value: object) -> str:
+    return f"{value:.6g}" if isinstance(value, float | int) and not isinstance(value, bool) else str(value)
+
+
+def _mixed(code: str, word: str, values: dict[str, str]) -> list[tuple[Finding, tuple[str, ...]]]:
+    """Jobs whose value is not that of most; without a clear majority one finding about them all."""
+    counts = Counter(values.values()).most_common()
+    if len(counts) < 2:
+        return []
+    usual, number = counts[0]
+    if number >= _MAJORITY * len(values):
+        odd = [label for label, value in values.items() if value != usual]
+        return [
+            (finding(code, label, f"{word} {values[label]}, but {usual} in {number} of {len(values)} jobs"), (label,))
+            for label in odd
+        ]
+    text = "; ".join(f"{value} in {_some([k for k, v in values.items() if v == value])}" for value, _ in counts[:4])
+    return [(finding(code, "strain set", f"{word}: {text}"), ())]
+
+
+def _some(labels: Sequence[str]) -> str:
+    return ", ".join(labels[:3]) + (f" and {len(labels) - 3} more" if len(labels) > 3 else "")
+
+
+def _identical(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[tuple[Finding, tuple[str, ...]]]:
+    """Different jobs cannot give the same numbers to the last digit."""
+    groups: dict[tuple[object, ...], list[str]] = defaultdict(list)
+    for _, record in done:
+        if record.file_sha256 and record.file.startswith("jobs/"):
+            groups["file", record.file_sha256].append(record.label)
+        if record.stress is not None and np.abs(record.stress).max() > 1e-3:
+            groups["stress", record.energy, *record.stress.tolist()].append(record.label)
+    found = []
+    seen: set[tuple[str, ...]] = set()
+    for key, labels in groups.items():
+        if len(labels) > 1 and tuple(labels) not in seen:
+            seen.add(tuple(labels))
+            what = "the same file, byte for byte" if key[0] == "file" else "the same stress to the last digit"
+            where = " and ".join(labels[:3])
+            found.append((finding("identical-outputs", where, f"{what}: one of them is a copy"), tuple(labels)))
+    return found
+
+
+def _reference(plan: Plan, records: Sequence[StressRecord]) -> list[Finding]:
+    missing = [r for job, r in zip(plan.jobs, records, strict=True) if job.kind == "reference" and r.status != "done"]
+    if not missing or not any(r.status == "done" for r in records):
+        return []
+    text = "no usable reference job: its stress and energy are what the others are compared with"
+    return [finding("reference-missing", missing[0].label, text)]
