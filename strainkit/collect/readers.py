@@ -6,7 +6,6 @@ is an InputError with a reason, never a traceback.
 
 from __future__ import annotations
 
-import re
 from pathlib import Path
 from typing import Any
 
@@ -79,14 +78,7 @@ def _refuse_pickle(source: Source) -> Any:
 
 #: in the order in which they are tried, and preferred when a folder holds several kinds
 READERS: tuple[Reader, ...] = (
-    Reader(
-        "extended XYZ",
-        _extxyz,
-        last_frame,
-        **_ASE,
-        bad_marks=((re.compile(r"\bconverged=F\b"), "unconverged", "the ions were not relaxed to the tolerance"),),
-        checked="run",
-    ),
+    Reader("extended XYZ", _extxyz, last_frame, **_ASE, doubts=through_ase.doubts, checked="run"),
     Reader("VASP vasprun.xml", **_columns(vasprun), checked="real"),
     Reader("VASP OUTCAR", **_columns(outcar), checked="real"),
     Reader("Quantum ESPRESSO", **_columns(espresso), checked="run"),
@@ -95,7 +87,7 @@ READERS: tuple[Reader, ...] = (
     Reader("FHI-aims", **_columns(aims), checked="real"),
     Reader("CASTEP", **_columns(castep), checked="real"),
     Reader("SIESTA", **_columns(siesta)),
-    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_ASE),
+    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_MUTE),
     Reader("GPAW gpw", lambda head: head[:12].lower() == b"- of ulmgpaw", atoms_from_copy("gpw"), **_MUTE, checked="run"),
     Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_MUTE, checked="run"),
     Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_MUTE, checked="run"),

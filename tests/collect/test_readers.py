@@ -115,6 +115,17 @@ def test_unusable_extended_xyz(tmp_path, text, status):
     assert read(path).problems[0][0] == status
 
 
+def test_the_last_configuration_of_an_extended_xyz_counts(tmp_path):
+    frame = '1\nLattice="2 0 0 0 2 0 0 0 2" stress="{0} 0 0 0 0 0 0 0 0" converged={1} pbc="T T T"\nSi 0 0 0\n'
+    path = tmp_path / "out.extxyz"
+    path.write_text(frame.format(1, "F") + frame.format(2, "T"))
+    returned = read(path)
+    assert not returned.problems
+    assert returned.stress[0, 0] == pytest.approx(2 * EV_PER_A3_IN_GPA)
+    path.write_text(frame.format(1, "T") + frame.format(2, "F"))
+    assert [status for status, _ in read(path).problems] == ["unconverged"]
+
+
 @pytest.mark.parametrize(
     "text",
     [

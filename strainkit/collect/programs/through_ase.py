@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from strainkit.collect.returned import Geometry, Stress
+from strainkit.collect.returned import Geometry, Problems, Stress
 from strainkit.collect.source import Source
 from strainkit.collect.text import symmetric
 from strainkit.tensors.arrays import FloatArray
@@ -26,7 +26,7 @@ from strainkit.units import EV_PER_A3_IN_GPA
 if TYPE_CHECKING:
     from ase import Atoms
 
-__all__ = ["atoms_from_copy", "atoms_from_text", "energy", "forces", "geometry", "last_frame", "read_text", "stress"]
+__all__ = ["atoms_from_copy", "atoms_from_text", "doubts", "energy", "forces", "geometry", "last_frame", "read_text", "stress"]
 
 
 #: shape of an array in ASE's JSON and in the headers of its trajectories
@@ -136,6 +136,13 @@ def _full(stress: FloatArray) -> FloatArray:
         return np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]])
     full = stress.reshape(3, 3)
     return symmetric(full, 1e-4 * float(np.abs(full).max()) + 1e-6) if np.isfinite(full).all() else full
+
+
+def doubts(atoms: Atoms) -> Problems:
+    """The word converged=F of an extended XYZ file."""
+    if bool(atoms.info.get("converged", True)):
+        return ()
+    return (("unconverged", "the ions were not relaxed to the tolerance"),)
 
 
 def energy(atoms: Atoms) -> float | None:
