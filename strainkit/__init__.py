@@ -5,7 +5,9 @@ The whole job from a notebook::
     crystal = strainkit.read_crystal("cell.cif")
     plan, _ = strainkit.write_run(strainkit.plan_run(crystal, [0.01]), Path("run"))
     strainkit.evaluate_run(Path("run"), plan, strainkit.Engine("gfn1-xtb"))
-    fit = strainkit.fit_run(plan, strainkit.collect_run(Path("run"), plan))
+    table = strainkit.collect_run(Path("run"), plan)
+    fit = strainkit.fit_run(plan, table)
+    report = strainkit.report_run(plan, table, fit)  # shows itself in a notebook; report.figures, report.tables, report.save
     fit.stiffness, strainkit.averages(fit.effective), strainkit.derive_properties(fit, planes=[(0, 0, 1)])
     strainkit.comparison_page(strainkit.compare_crystals([fit, other_fit])).tables["moduli"]
 """

@@ -69,6 +69,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "stress-unit": ("error", "the data prove that a stress is in another unit"),
     "stress-order": ("error", "the data prove that the components of a stress are in another order"),
     "stress-frame": ("error", "the data prove that a stress is in other axes than its cell"),
+    "set-inconsistent": ("warning", "the stresses of a set do not follow one stiffness, and no known change mends them"),
     "energy-jump": ("warning", "the energy of a job is not the one that the stresses lead to"),
     "ions-elsewhere": ("warning", "the ions of a job left the line of its shape"),
     "forces-left": ("warning", "forces left on the ions can put the stress off"),
@@ -106,7 +107,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
     # the comparison
     "temperatures-differ": ("warning", "values of different temperatures, or static and measured ones, are compared"),
-    "ions-differ": ("warning", "constants of clamped ions are compared with those of relaxed ones"),
+    "clamped-compared": ("warning", "constants of clamped ions, without the answer of the ions, are compared"),
     "methods-differ": ("info", "runs of different programs or settings are compared"),
     "rough-errors": ("info", "errors above a fifth of the value: tests and probabilities are rough"),
     "no-test": ("info", "a tensor without errors takes no part in tests and probabilities"),

@@ -60,18 +60,20 @@ def collect_one(again: bool, run: Path) -> Summary:
     """Stress table of a run; kept when nothing in its job folders has changed since."""
     from strainkit.collect.gather import collect_run
     from strainkit.collect.table import TABLE
+    from strainkit.run.files import in_a_hurry
     from strainkit.run.plan import load_plan
     from strainkit.run.state import collected_before, mark_collected, output_signature
 
     signature = output_signature(run)
-    before = None if again or not (run / TABLE).is_file() else collected_before(run, signature)
+    before = None if again else collected_before(run, signature, run / TABLE)
     if before is not None:
         return before | {"kept": True}
     table = collect_run(run, load_plan(run))
-    table.save(run)
+    with in_a_hurry():
+        table.save(run)
     counts = Counter(record.status for record in table.records)
     summary = {"statuses": dict(counts), "usable": len(table.usable), "expected": len(table.records)}
-    mark_collected(run, signature, summary)
+    mark_collected(run, signature, run / TABLE, summary)
     return summary | {"kept": False}
 
 
@@ -80,7 +82,7 @@ def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
     """Stiffness of a run; kept when table, plan and options are those it was made from."""
     from strainkit import __version__
     from strainkit.fit.result import FITTED
-    from strainkit.run.files import atomic_write, checksum, dump_json, load_json
+    from strainkit.run.files import atomic_write, checksum, dump_json, in_a_hurry, load_json
     from strainkit.run.plan import load_plan
     from strainkit.run.state import INPUTS
 
@@ -95,7 +97,8 @@ def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
             return _fitted(data) | {"kept": True}
     result = _fit(load_plan(run), run, options)
     data = result.to_dict(options.frame) | {INPUTS: digest}
-    atomic_write(path, dump_json(data))
+    with in_a_hurry():  # half a file would not be JSON, and is made again
+        atomic_write(path, dump_json(data))
     return _fitted(data) | {"kept": False}
 
 

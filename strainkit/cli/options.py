@@ -67,12 +67,15 @@ def progress(title: str, quiet: bool) -> Iterator[Callable[[int, int, str], None
         yield lambda finished, total, label: None
         return
     from rich.console import Console
+    from rich.markup import escape
     from rich.progress import Progress
+
+    from strainkit.present.text import printable
 
     with Progress(console=Console(stderr=True), transient=True) as bar:
         task = bar.add_task(title, total=None)
 
         def update(finished: int, total: int, label: str) -> None:
-            bar.update(task, completed=finished, total=total, description=f"{title} {label}")
+            bar.update(task, completed=finished, total=total, description=escape(printable(f"{title} {label}")))
 
         yield update

@@ -38,11 +38,14 @@ def report(
     from strainkit.cli.load import fitted
     from strainkit.collect.table import load_table
     from strainkit.crystal.lattice import parse_indices
-    from strainkit.errors import NoTensorError
+    from strainkit.errors import NoTensorError, UsageError
     from strainkit.present.report import REPORT, refuse_foreign, report_run, write_figures
     from strainkit.present.reported import report_text
+    from strainkit.run.campaign import is_campaign
     from strainkit.run.plan import load_plan
 
+    if is_campaign(run):
+        raise UsageError("a report is about one crystal, this is a campaign", run, "Name one of its run folders.")
     planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
     directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
     path = out or run / REPORT

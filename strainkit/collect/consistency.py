@@ -90,6 +90,22 @@ class Group:
             np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical_change(second, self.rest)
         )
 
+    def without_one(self) -> tuple[int, float]:
+        """The job whose stress, left free, takes away most of the misfit, and the misfit that is left then."""
+        second = np.einsum("jab,jb->ja", self.to_second, self.cauchy)
+        parts = [s @ p for s, p in zip(second, self.model.projections, strict=True)]
+        rows = np.concatenate(parts)
+        left = rows - self.basis @ (self.basis.T @ rows)
+        outside = (second**2).sum(axis=1) - np.array([part @ part for part in parts])
+        gains = np.zeros(len(second))
+        for job, part in enumerate(parts):
+            mine = self.model.job_of_row == job
+            own = np.eye(len(part)) - self.basis[mine] @ self.basis[mine].T
+            gains[job] = left[mine] @ np.linalg.pinv(own, rcond=1e-6) @ left[mine] + outside[job]
+        worst = int(gains.argmax())
+        rest = max(float(left @ left + outside.sum() - gains[worst]), 0.0)
+        return worst, float(np.sqrt(rest) / typical_change(second, self.rest))
+
     @cached_property
     def directions(self) -> FloatArray:
         """Strains (jobs, 6), Mandel, of length one; zero at rest."""

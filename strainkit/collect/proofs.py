@@ -28,6 +28,8 @@ __all__ = ["prove"]
 
 #: jobs beyond which nothing is proved
 TOO_MANY = 600
+#: misfit a job, in parts of the typical change of stress, that is too large to say nothing
+INCONSISTENT = 0.1
 #: decades by which a factor may miss a known one, and by which single comparisons may miss the usual one
 NEAR, SCATTER = 0.06, 0.15
 
@@ -43,7 +45,8 @@ def prove(plan: Plan, done: Sequence[tuple[StrainJob, StressRecord]]) -> list[Re
     start = unchanged(group)
     lattices = np.array([plan.crystal.lattice @ job.gradient.T for job in group.jobs])
     best, rivals = _by_their_energies(plan, group, *explain(group, start, mends(group.records, lattices)))
-    return _report(group, start, best, rivals) + _common_factor(plan, group, best.cauchy)
+    found = _report(group, start, best, rivals) or _unexplained(group, start)
+    return found + _common_factor(plan, group, best.cauchy)
 
 
 def _report(group: Group, start: Attempt, best: Attempt, rivals: list[Attempt]) -> list[Refused]:
@@ -68,6 +71,20 @@ def _report(group: Group, start: Attempt, best: Attempt, rivals: list[Attempt]) 
         where = "strain set" if place is None else labels[place]
         found.append((finding(mend.code, where, text + _remedy(group, place, mend)), tuple(dict.fromkeys(refused))))
     return found
+
+
+def _unexplained(group: Group, start: Attempt) -> list[Refused]:
+    """A misfit that none of the known changes takes away: large noise, or a fault of another kind."""
+    size = len(group.jobs) ** 0.5
+    if start.misfit < INCONSISTENT * size:
+        return []
+    worst, left = group.without_one()
+    text = f"the stresses miss one stiffness by {100 * start.misfit / size:.2g} % of their typical change a job"
+    label = group.jobs[worst].label
+    if left < 0.5 * start.misfit:
+        text += f", without {label} by {100 * left / size:.2g} %: look into that one"
+        return [(finding("set-inconsistent", label, text), ())]
+    return [(finding("set-inconsistent", "strain set", text + ": large noise, or more than one fault"), ())]
 
 
 def _words(group: Group, step: tuple[int | None, Mend]) -> str:

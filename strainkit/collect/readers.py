@@ -6,7 +6,6 @@ is an InputError with a reason, never a traceback.
 
 from __future__ import annotations
 
-import re
 from pathlib import Path
 from typing import Any
 
@@ -18,6 +17,7 @@ from strainkit.collect.programs import (
     castep,
     cp2k,
     espresso,
+    gpaw_new,
     gpaw_text,
     outcar,
     siesta,
@@ -67,7 +67,9 @@ def _json(head: bytes) -> bool:
 
 
 def _pickle(head: bytes) -> bool:
-    return (head[:1] == b"\x80" and head[1:2] in b"\2\3\4\5" and len(head) > 2) or head.startswith(b"PickleTrajectory")
+    """Protocols 2 to 5, whose first operation is never a zero byte as in a record of Fortran, or ASE's old trajectories."""
+    modern = len(head) > 2 and head[0] == 0x80 and 2 <= head[1] <= 5 and head[2] != 0
+    return modern or head.startswith(b"PickleTrajectory")
 
 
 def _refuse_pickle(source: Source) -> Any:
@@ -76,14 +78,7 @@ def _refuse_pickle(source: Source) -> Any:
 
 #: in the order in which they are tried, and preferred when a folder holds several kinds
 READERS: tuple[Reader, ...] = (
-    Reader(
-        "extended XYZ",
-        _extxyz,
-        last_frame,
-        **_ASE,
-        bad_marks=((re.compile(r"\bconverged=F\b"), "unconverged", "the ions were not relaxed to the tolerance"),),
-        checked="run",
-    ),
+    Reader("extended XYZ", _extxyz, last_frame, **_ASE, doubts=through_ase.doubts, checked="run"),
     Reader("VASP vasprun.xml", **_columns(vasprun), checked="real"),
     Reader("VASP OUTCAR", **_columns(outcar), checked="real"),
     Reader("Quantum ESPRESSO", **_columns(espresso), checked="run"),
@@ -92,11 +87,12 @@ READERS: tuple[Reader, ...] = (
     Reader("FHI-aims", **_columns(aims), checked="real"),
     Reader("CASTEP", **_columns(castep), checked="real"),
     Reader("SIESTA", **_columns(siesta)),
-    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_ASE),
-    Reader("GPAW gpw", _starts(b"- of UlmGPAW"), atoms_from_copy("gpw"), **_MUTE, checked="run"),
+    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_MUTE),
+    Reader("GPAW gpw", lambda head: head[:12].lower() == b"- of ulmgpaw", atoms_from_copy("gpw"), **_MUTE, checked="run"),
     Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_MUTE, checked="run"),
     Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_MUTE, checked="run"),
     Reader("ASE JSON", _json, atoms_from_text("json"), **_MUTE, checked="run"),
+    Reader("GPAW text, new", **_columns(gpaw_new), tells_relaxed=False, checked="run"),
     Reader("GPAW text", **_columns(gpaw_text), tells_relaxed=False, checked="run"),
     Reader("pickle", _pickle, _refuse_pickle, **_ASE),
 )

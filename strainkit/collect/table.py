@@ -5,7 +5,7 @@ from __future__ import annotations
 import csv
 import io
 import json
-from collections.abc import Collection, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -113,11 +113,6 @@ class StressTable:
     def usable(self) -> tuple[StressRecord, ...]:
         """Records that the fit may use."""
         return tuple(record for record in self.records if record.status == "done")
-
-    def doubts(self, labels: Collection[str]) -> tuple[Finding, ...]:
-        """Warnings and errors about the set and about the named jobs."""
-        own = (f for record in self.records if record.label in labels for f in record.findings)
-        return tuple(f for f in (*self.findings, *own) if f.severity != "info")
 
     def to_dict(self) -> dict[str, Any]:
         """JSON-ready table."""

@@ -37,6 +37,7 @@ SET_CODES = frozenset(
         "stress-unit",
         "stress-order",
         "stress-frame",
+        "set-inconsistent",
         "energy-jump",
         "ions-elsewhere",
         "forces-left",

@@ -11,7 +11,7 @@ from strainkit.crystal.symmetry import Symmetry
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["FRAMES", "Frame", "chosen_frame", "conventional_axes", "crystal_frame", "physical_axes"]
+__all__ = ["FRAMES", "Frame", "chosen_frame", "conventional_axes", "crystal_frame", "physical_axes", "standard_axes"]
 
 #: names that `--frame` takes
 FRAMES = ("given", "ieee", "crystal")
@@ -129,6 +129,11 @@ def chosen_frame(choice: str, symmetry: Symmetry | None) -> Frame:
     return Frame("custom", u @ vt, "axes typed by the user, rows of the rotation from the given frame")
 
 
+def standard_axes(symmetry: Symmetry) -> FloatArray:
+    """Rows (3, 3): IEEE axes of spglib's standard cell, in the given frame, whatever cell was given."""
+    return _ieee(symmetry.system, symmetry.standard_lattice)[0]
+
+
 def physical_axes(crystal: Crystal, symmetry: Symmetry) -> FloatArray:
     """Rows (3, 3) of axes that are fixed to the atoms: the same however the cell was turned, chosen or repeated.
 
@@ -136,7 +141,7 @@ def physical_axes(crystal: Crystal, symmetry: Symmetry) -> FloatArray:
     6/m and m-3), several such axes are equivalent for the lattice but not for the atoms: the ones are taken along which a
     fixed polynomial of the directions between neighbouring atoms is largest.
     """
-    axes = _ieee(symmetry.system, symmetry.standard_lattice)[0]
+    axes = standard_axes(symmetry)
     choices = _lattice_rotations(symmetry.system)
     if len(choices) <= len(symmetry.rotations):
         return axes

@@ -49,23 +49,24 @@ def _untested(members: Sequence[Member]) -> list[Finding]:
 
 def _clamped(members: Sequence[Member]) -> list[Finding]:
     held = [m.label for m in members if m.clamped]
-    if not held or len(held) == len(members):
+    if not held:
         return []
-    text = "these ions are clamped, those of the others relax: constants of molecular crystals then differ manifold"
-    return [finding("ions-differ", ", ".join(held), text)]
+    others = "" if len(held) == len(members) else ", those of the others relax"
+    text = f"clamped ions without their answer to strain{others}: molecular crystals are manifold too stiff so"
+    return [finding("clamped-compared", ", ".join(held), text)]
 
 
 def _methods(members: Sequence[Member]) -> list[Finding]:
-    """Runs computed otherwise than the first one."""
-    computed = [m for m in members if m.method is not None]
-    found = []
-    for m in computed[1:]:
-        assert m.method is not None
-        assert computed[0].method is not None
-        if unlike := computed[0].method.differences(m.method):
-            text = f"computed otherwise than {computed[0].label}: {'; '.join(unlike)}"
-            found.append(finding("methods-differ", m.label, text))
-    return found
+    """Runs computed otherwise than the first one, those of one difference together."""
+    known = [(m.label, m.method) for m in members if m.method is not None]
+    unlike: dict[str, list[str]] = {}
+    for label, method in known[1:]:
+        if words := known[0][1].differences(method):
+            unlike.setdefault("; ".join(words), []).append(label)
+    return [
+        finding("methods-differ", ", ".join(labels), f"computed otherwise than {known[0][0]}: {text}")
+        for text, labels in unlike.items()
+    ]
 
 
 def _rough(members: Sequence[Member], columns: Sequence[Column]) -> list[Finding]:

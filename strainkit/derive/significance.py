@@ -4,7 +4,8 @@ Errors of two fits rest on few and different degrees of freedom. The difference 
 the difference of the estimates plus s1 T1 - s2 T2 with independent Student T1, T2 (Behrens and Fisher; R. A. Fisher, Ann.
 Eugen. 6, 391, 1935). The test from it keeps its level; Welch's approximate degrees of freedom do not where it matters here:
 with 3 and 11 of them and ten times the variance on the side of the 3, false alarms at a level of 0.0017 were four times as
-frequent as they should be (a million simulated pairs).
+frequent as they should be (a million simulated pairs). The price: with few degrees of freedom the test is cautious
+(tests/benchmarks/false_alarms.py).
 """
 
 from __future__ import annotations

@@ -13,7 +13,7 @@ the space that the job's own residual symmetry allows; the others are exact zero
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Literal
 
@@ -48,7 +48,7 @@ class LinearModel:
     job_of_row : (rows,)
         Index of the job that each row belongs to.
     projections : tuple of (6, d)
-        Columns that turn a job's Mandel stress into its rows, one a job.
+        Columns that turn a job's Mandel stress into its rows, one a job, in the axes that the model was built in.
     weights : (jobs,)
         Weight of each job's rows: inverse variance in units of the common one.
     reference, constants, even, cubic : slice
@@ -65,6 +65,8 @@ class LinearModel:
         t of each job.
     even_of_shape, cubic_of_shape : tuple of slice
         Columns of each shape's even and cubic terms, in units of the response at the largest magnitude.
+    turn : (6, 6) or None
+        From the axes that the model was built in to those it is seen in, for Mandel vectors; None when they are the same.
     """
 
     matrix: FloatArray
@@ -82,11 +84,32 @@ class LinearModel:
     signed_magnitudes: FloatArray
     even_of_shape: tuple[slice, ...]
     cubic_of_shape: tuple[slice, ...]
+    turn: FloatArray | None = None
+
+    @cached_property
+    def projector(self) -> FloatArray:
+        """(rows, 6 jobs): all projections side by side, with the roots of the weights."""
+        out = np.zeros((len(self.matrix), 6 * len(self.projections)))
+        first = 0
+        for job, (projection, weight) in enumerate(zip(self.projections, self.weights, strict=True)):
+            last = first + projection.shape[1]
+            out[first:last, 6 * job : 6 * job + 6] = weight**0.5 * projection.T
+            first = last
+        return out
 
     def rows(self, stresses: FloatArray) -> FloatArray:
         """Data (rows, ...) of Mandel second Piola-Kirchhoff stresses (jobs, 6, ...)."""
-        parts = [w**0.5 * (p.T @ s) for p, s, w in zip(self.projections, stresses, self.weights, strict=True)]
-        return np.concatenate(parts) if parts else np.zeros(0)
+        if self.turn is not None:
+            stresses = np.einsum("ij,ni...->nj...", self.turn, stresses) if stresses.ndim > 2 else stresses @ self.turn
+        return np.asarray(self.projector @ stresses.reshape(-1, *stresses.shape[2:]))
+
+    def spread(self, values: FloatArray) -> FloatArray:
+        """Mandel stresses (jobs, 6, ...) whose data are these rows (rows, ...), without what no row sees."""
+        flat = (self.projector.T @ values).reshape(len(self.projections), 6, *values.shape[1:])
+        flat = flat / self.weights.reshape(-1, *[1] * values.ndim)
+        if self.turn is None:
+            return flat
+        return np.einsum("ij,nj...->ni...", self.turn, flat) if flat.ndim > 2 else flat @ self.turn.T
 
     @property
     def odd_degrees_of_freedom(self) -> int:
@@ -101,6 +124,28 @@ class LinearModel:
     def odd_part(self, values: FloatArray) -> FloatArray:
         """What is left of rows (rows, ...) after every even response is projected out."""
         return values - self.even_basis @ (self.even_basis.T @ values)
+
+    def turned(self, rotation: FloatArray) -> LinearModel:
+        """The same jobs of the same crystal seen in other axes, the rows of `rotation` (3, 3): the design matrix stays."""
+        q = rotation6(rotation)
+        twin = replace(
+            self,
+            reference_basis=q @ self.reference_basis,
+            shapes=tuple(shape.turned(q) for shape in self.shapes),
+            turn=q if self.turn is None else q @ self.turn,
+        )
+        # what axes do not change is worked out once
+        twin.__dict__.update(odd_matrix=self.odd_matrix, projector=self.projector)
+        return twin
+
+    def with_constants(self, change: FloatArray) -> LinearModel:
+        """The same model for other constants: present ones = change (n, n) @ new ones."""
+        matrix, odd = self.matrix.copy(), self.odd_matrix.copy()
+        matrix[:, self.constants] = matrix[:, self.constants] @ change
+        odd[:, : len(change)] = odd[:, : len(change)] @ change
+        twin = replace(self, matrix=matrix)
+        twin.__dict__.update(odd_matrix=odd, projector=self.projector)
+        return twin
 
 
 def _place(vectors: FloatArray, rotations: FloatArray) -> tuple[list[Shape], list[tuple[int, float, FloatArray]]]:

@@ -92,6 +92,13 @@ class Shape:
         even, odd = invariant_vectors(rotations[both]), invariant_vectors(rotations[both], signs)
         return cls(unit, allowed, even, odd, residual, True)
 
+    def turned(self, q: FloatArray) -> Shape:
+        """The same shape in other axes, for the 6x6 Mandel matrix q of their rotation."""
+        unit, allowed = q @ self.unit, q @ self.allowed
+        even = allowed if self.even is self.allowed else q @ self.even
+        odd = allowed if self.odd is self.allowed else q @ self.odd
+        return Shape(unit, allowed, even, odd, self.residual, self.has_image)
+
     @property
     def jobs(self) -> int:
         """Strained jobs that a central difference needs: one where a rotation supplies the opposite side, else two."""

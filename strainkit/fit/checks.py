@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from statistics import median
 from typing import Any
 
 import numpy as np
@@ -15,10 +16,10 @@ from strainkit.fit.energy import EnergyCheck, check_energies
 from strainkit.fit.magnitude import LEVEL, magnitudes_of
 from strainkit.fit.nonlinearity import Response, Verdict, extra_terms_test, responses
 from strainkit.fit.outliers import MATTERS, find_outliers
-from strainkit.fit.regression import Regression, regress, second_stresses
+from strainkit.fit.regression import Layout, Regression, solve
 from strainkit.fit.residual import Treatment, treatments
 from strainkit.run.plan import Plan
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, known
 from strainkit.tensors.sixvectors import from_mandel, stress_to_voigt
 
 __all__ = ["Checks", "examine"]
@@ -77,6 +78,7 @@ def examine(
     stresses: FloatArray,
     energies: Sequence[float | None],
     regression: Regression,
+    layout: Layout,
     order: Order,
 ) -> Checks:
     """Put a fit to its questions.
@@ -91,32 +93,37 @@ def examine(
     energies : sequence of float or None
         Their free energies, eV.
     regression : Regression
+    layout : Layout
+        What it depends on besides the stresses.
     order : "linear" or "cubic"
     """
-    gradients = np.array([job.gradient for job in jobs])
-    rotations, matrices = plan.symmetry.rotations, plan.basis.matrices
-    second = second_stresses(gradients, stresses)
-    energy = check_energies(jobs, energies, plan.crystal.volume, regression, matrices)
+    second = regression.second
+    energy = check_energies(jobs, energies, plan.crystal.volume, regression, layout.matrices)
     findings = list(energy.findings)
     sizes = magnitudes_of(jobs)
     other = cubic = None
     if len(sizes) > 1:
-        other = regress(gradients, stresses, rotations, matrices, "cubic" if order == "linear" else "linear")
+        other = solve(layout.estimator("cubic" if order == "linear" else "linear"), second)
         cubic = other if order == "linear" else regression
         cubic = cubic if cubic.determined.all() else None
-    findings += find_outliers(cubic or regression, jobs, second)
+    signal = _typical(second - known(regression.reference_stress))
+    findings += find_outliers(cubic or regression, jobs, second, signal)
     bent = [*responses(regression, jobs, "even"), *(responses(cubic, jobs, "cubic") if cubic else [])]
-    signal = float(np.median(np.linalg.norm(second - np.nan_to_num(regression.reference_stress), axis=1)))
     findings += _even_findings(bent, MATTERS * signal)
     p, verdict = None, "cannot be told from one magnitude"
     if len(sizes) > 1:
-        quintic = regress(gradients, stresses, rotations, matrices, "quintic") if len(sizes) > 2 and cubic else None
+        quintic = solve(layout.estimator("quintic"), second) if len(sizes) > 2 and cubic else None
         linear = regression if order == "linear" else other
         p, verdict, doubts = _curvature(plan, second, linear, cubic, quintic, order, bent)
         findings += doubts
-    readings, doubts = _readings(plan, gradients, stresses, regression, order, energy)
+    readings, doubts = _readings(jobs, stresses, regression, layout, energy)
     findings += doubts
     return Checks(energy, verdict, tuple(bent), other, p, tuple(readings), tuple(findings))  # type: ignore[arg-type]
+
+
+def _typical(stresses: FloatArray) -> float:
+    """Median length of stresses (jobs, 6)."""
+    return float(median(np.linalg.norm(stresses, axis=1).tolist()))
 
 
 def _even_findings(found: Sequence[Response], least: float) -> list[Finding]:
@@ -143,7 +150,7 @@ def _curvature(
     if linear is None or cubic is None:
         text = "cubic terms leave constants undetermined"
         return None, "curved beyond what this set can correct", [finding("curved", "strain set", text)]
-    _, p = extra_terms_test(linear, cubic, second)
+    _, p = extra_terms_test(linear, cubic)
     if p is None or p >= LEVEL:
         return p, "linear within noise", []
     shift = np.abs(linear.values - cubic.values)
@@ -152,7 +159,7 @@ def _curvature(
     worst = int(part.argmax())
     beyond = part[worst] > TOO_CURVED
     if quintic is not None and quintic.determined.all():
-        _, p_more = extra_terms_test(cubic, quintic, second)
+        _, p_more = extra_terms_test(cubic, quintic)
         more = np.abs(quintic.values - cubic.values) > 0.3 * shift.max()
         beyond = beyond or bool(p_more is not None and p_more < LEVEL and more.any())
     shapes = ", ".join(f"{r.shape} ({r.component})" for r in found if r.kind == "cubic" and r.p_value < LISTED)
@@ -169,11 +176,10 @@ def _curvature(
 
 
 def _readings(
-    plan: Plan,
-    gradients: FloatArray,
+    jobs: Sequence[StrainJob],
     stresses: FloatArray,
     regression: Regression,
-    order: Order,
+    layout: Layout,
     energy: EnergyCheck,
 ) -> tuple[list[Treatment], list[Finding]]:
     """C, B and C without an offset, when they differ by more than the error bars, and what the energies say about it."""
@@ -181,7 +187,7 @@ def _readings(
     if np.isnan(stress).any() or not regression.determined.all() or regression.covariance is None:
         return [], []
     offset = stress_to_voigt(from_mandel(stress))
-    found = treatments(regression, gradients, stresses, offset, plan.symmetry.rotations, plan.basis.matrices, order)
+    found = treatments(regression, np.array([job.gradient for job in jobs]), stresses, offset, layout.matrices)
     spread = max(float(np.abs(a.voigt - b.voigt).max()) for a in found for b in found)
     bar = 2.0 * float(np.sqrt(np.diag(regression.covariance).max()))
     smallest = float(np.diag(found[0].voigt).min())

@@ -22,8 +22,9 @@ from strainkit.design.jobs import StrainJob
 from strainkit.design.shapes import same_to_second_order
 from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, IntArray, known
 from strainkit.tensors.sixvectors import to_mandel
+from strainkit.tensors.strain import green_lagrange
 from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = ["EnergyCheck", "PairCheck", "check_energies"]
@@ -118,83 +119,79 @@ def check_energies(
     if rest is None or not regression.determined.all():
         return EnergyCheck((), None, None, None, ())
     model = regression.estimator.model
+    found = _opposites(regression, energies)
+    if not found:
+        return EnergyCheck((), None, None, None, ())
+    at, other = (np.array([pair[side] for pair in found]) for side in (0, 1))
+    up, down = (np.array([pair[side] for pair in found]) for side in (2, 3))
+    t = model.signed_magnitudes[at]
+    unit, apart = _units(green_lagrange(np.array([job.gradient for job in jobs])), at, other, t)
+    even, cubic = (_along(regression, columns, at, unit) / t**power for columns, power in ((model.even, 2), (model.cubic, 3)))
     scale = EV_PER_A3_IN_GPA / volume
-    known = {i: e for i, e in enumerate(energies) if e is not None}
-    stiffness = np.tensordot(regression.values, matrices, axes=1)
-    pairs: list[PairCheck] = []
-    slopes: list[float] = []
-    directions: list[FloatArray] = []
-    for i, energy in known.items():
-        t, index = float(model.signed_magnitudes[i]), int(model.shape_of_job[i])
-        if index < 0 or t <= 0:
-            continue
-        shape = model.shapes[index]
-        same = np.flatnonzero((model.shape_of_job == index) & (np.abs(model.signed_magnitudes + t) < 1e-6 * t))
-        opposite = known.get(int(same[0])) if len(same) else energy if shape.has_image else None
-        if opposite is None:
-            continue
-        even, cubic = _responses(regression, i, t)
-        unit, apart = _unit(jobs[i], jobs[int(same[0])] if len(same) else None, t)
-        a = np.einsum("aij,i,j->a", matrices, unit, unit)
-        error = np.nan if regression.covariance is None else float(np.sqrt(max(a @ regression.covariance @ a, 0.0)))
-        slope = scale * (energy - opposite) / (2 * t) - float(unit @ even) * t**2 / 3 - t * float(unit @ stiffness @ apart)
-        bend = scale * (energy + opposite - 2 * rest) / t**2 - float(unit @ cubic) * t**2 / 2
-        bend -= float(apart @ stiffness @ apart + 2.0 / t * np.nan_to_num(regression.reference_stress) @ apart)
-        pairs.append(
-            PairCheck(
-                label=jobs[i].label,
-                magnitude=t,
-                curvature_energy=bend,
-                curvature_stress=float(unit @ stiffness @ unit),
-                curvature_error=error,
-                slope_energy=slope,
-                slope_stress=float(unit @ regression.reference_stress),
-            )
-        )
-        slopes.append(slope)
-        directions.append(unit @ model.reference_basis)
-    return _verdict(pairs, _from_slopes(slopes, directions, model.reference_basis))
+    a = (unit[:, :, None] * unit[:, None, :]).reshape(-1, 36) @ matrices.reshape(-1, 36).T
+    errors = np.full(len(at), np.nan)
+    if regression.covariance is not None:
+        errors = np.sqrt(np.maximum(((a @ regression.covariance) * a).sum(axis=1), 0.0))
+    answer = apart @ np.tensordot(regression.values, matrices, axes=1)
+    slopes = scale * (up - down) / (2 * t) - even * t**2 / 3 - t * (answer * unit).sum(axis=1)
+    bends = scale * (up + down - 2 * rest) / t**2 - cubic * t**2 / 2
+    bends -= (answer * apart).sum(axis=1) + 2.0 / t * (apart @ known(regression.reference_stress))
+    columns = (t, bends, a @ regression.values, errors, slopes, unit @ regression.reference_stress)
+    pairs = [PairCheck(jobs[i].label, *map(float, row)) for i, *row in zip(at, *columns, strict=True)]
+    return _verdict(pairs, _from_slopes(slopes, unit @ model.reference_basis, model.reference_basis))
 
 
-def _unit(job: StrainJob, other: StrainJob | None, t: float) -> tuple[FloatArray, FloatArray]:
-    """Unit strain u and asymmetry d (6,), Mandel, of a pair with strains t (d + u) and t (d - u)."""
-    plus = to_mandel(job.strain) / t
-    minus = plus if other is None else -to_mandel(other.strain) / t
-    if np.abs(plus - minus).max() > 2.0 * same_to_second_order(t):  # the opposite of an image, in another orientation
-        minus = plus
+def _opposites(regression: Regression, energies: Sequence[float | None]) -> list[tuple[int, int, float, float]]:
+    """Job on the positive side, the opposite one (-1 where an image is it), and both energies, eV."""
+    model = regression.estimator.model
+    found = []
+    for i, (t, shape, other) in enumerate(
+        zip(model.signed_magnitudes, model.shape_of_job, regression.estimator.opposite, strict=True)
+    ):
+        energy = energies[i]
+        if shape < 0 or t <= 0 or energy is None:
+            continue
+        opposite = energies[other] if other >= 0 else energy if model.shapes[shape].has_image else None
+        if opposite is not None:
+            found.append((i, int(other), energy, opposite))
+    return found
+
+
+def _units(strains: FloatArray, at: IntArray, other: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Unit strains u and asymmetries d (pairs, 6), Mandel, of pairs with strains t (d + u) and t (d - u)."""
+    vectors = to_mandel(strains)
+    plus = vectors[at] / t[:, None]
+    minus = np.where(other[:, None] < 0, plus, -vectors[other] / t[:, None])
+    limit = 2.0 * np.array([same_to_second_order(float(size)) for size in t])
+    turned = np.abs(plus - minus).max(axis=1) > limit  # the opposite of an image, in another orientation
+    minus[turned] = plus[turned]
     return 0.5 * (plus + minus), 0.5 * (plus - minus)
 
 
-def _responses(regression: Regression, job: int, t: float) -> tuple[FloatArray, FloatArray]:
-    """Even and cubic stress responses q and c (6,), Mandel, GPa, of a job's shape, in the job's own orientation."""
+def _along(regression: Regression, columns: slice, at: IntArray, unit: FloatArray) -> FloatArray:
+    """Stress response (jobs,), GPa, that some columns of the model give along the unit strains (jobs, 6) of these jobs."""
     model = regression.estimator.model
-    rows = model.job_of_row == job
-    weight = model.weights[job] ** 0.5
-    found = []
-    for columns, power in ((model.even, 2), (model.cubic, 3)):
-        part = model.projections[job] @ (model.matrix[rows, columns] @ regression.parameters[columns])
-        found.append(part / weight / t**power)
-    return found[0], found[1]
+    response = model.spread(model.matrix[:, columns] @ regression.parameters[columns])
+    return np.asarray((response[at] * unit).sum(axis=1))
 
 
-def _from_slopes(slopes: list[float], directions: list[FloatArray], basis: FloatArray) -> FloatArray | None:
-    if not slopes:
-        return None
-    values, _, rank, _ = np.linalg.lstsq(np.array(directions), np.array(slopes), rcond=1e-6)
+def _from_slopes(slopes: FloatArray, directions: FloatArray, basis: FloatArray) -> FloatArray | None:
+    values, _, rank, _ = np.linalg.lstsq(directions, slopes, rcond=1e-6)
     return None if rank < basis.shape[1] else basis @ values
 
 
-def _verdict(pairs: list[PairCheck], energy_stress: FloatArray | None) -> EnergyCheck:
-    if not pairs:
-        return EnergyCheck((), None, None, None, ())
+def _or_zero(value: float) -> float:
+    return 0.0 if np.isnan(value) else value
 
+
+def _verdict(pairs: list[PairCheck], energy_stress: FloatArray | None) -> EnergyCheck:
     def off(p: PairCheck) -> float:
         return abs(p.curvature_energy - p.curvature_stress)
 
     def slope_off(p: PairCheck) -> float:
         return abs(p.slope_energy - p.slope_stress)
 
-    bent = [p for p in pairs if off(p) > max(PART * abs(p.curvature_stress), SIGMAS * np.nan_to_num(p.curvature_error), LEAST)]
+    bent = [p for p in pairs if off(p) > max(PART * abs(p.curvature_stress), SIGMAS * _or_zero(p.curvature_error), LEAST)]
     # a slope is wrong by so much as makes a difference of PART at one percent strain
     tilted = [p for p in pairs if slope_off(p) > max(PART * 0.01 * abs(p.curvature_stress), 0.02)]
     findings = []

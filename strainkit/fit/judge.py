@@ -11,6 +11,7 @@ from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
 from strainkit.run.plan import Plan
+from strainkit.tensors.arrays import known
 from strainkit.tensors.prestress import stress_strain_coefficients
 from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt
 
@@ -46,15 +47,7 @@ def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list
 
 def _lone_partners(regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
     """Jobs whose opposite is not there, so that the even response swallows them."""
-    model = regression.estimator.model
-    t, shape = model.signed_magnitudes, model.shape_of_job
-    alone = []
-    for index, job in enumerate(jobs):
-        if shape[index] < 0 or model.shapes[shape[index]].has_image:
-            continue
-        same = shape == shape[index]
-        if not (same & (np.abs(t + t[index]) < 1e-6 * abs(t[index]))).any():
-            alone.append(job.label)
+    alone = [jobs[index].label for index in regression.estimator.alone]
     if not alone:
         return []
     return [finding("lone-partner", ", ".join(alone), "the job of opposite strain is not there, so this one adds little")]
@@ -64,7 +57,7 @@ def _mechanical(plan: Plan, regression: Regression) -> list[Finding]:
     """Stability and residual stress."""
     findings = []
     stiffness = plan.basis.stiffness(regression.values)
-    stress = from_mandel(np.nan_to_num(regression.reference_stress))
+    stress = from_mandel(known(regression.reference_stress))
     b = stress_strain_coefficients(stiffness, stress)
     smallest = float(np.linalg.eigvalsh(0.5 * (b + b.T))[0])
     if smallest <= 0:

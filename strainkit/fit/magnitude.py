@@ -17,7 +17,7 @@ from strainkit.design.model import build_model
 from strainkit.design.shapes import same_magnitude
 from strainkit.findings import Finding, finding
 from strainkit.fit.nonlinearity import extra_terms_test
-from strainkit.fit.regression import Estimator, Regression, regress, second_stresses
+from strainkit.fit.regression import Estimator, Regression, regress
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
 
@@ -136,7 +136,15 @@ def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise:
 
     def fit(keep: Sequence[int], order: str = "linear", known: float | None = noise) -> Regression:
         chosen = list(keep)
-        return regress(gradients[chosen], stresses[chosen], rotations, matrices, order, known)  # type: ignore[arg-type]
+        return regress(
+            gradients[chosen],
+            stresses[chosen],
+            rotations,
+            matrices,
+            order,  # type: ignore[arg-type]
+            known,
+            axes=plan.standard_axes,
+        )
 
     everything = range(len(jobs))
     common = fit(everything)
@@ -148,7 +156,7 @@ def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise:
     for size in sizes:
         found = fit([i for i, job in enumerate(jobs) if not job.shape or same_magnitude(abs(job.magnitude), size)], known=level)
         each.append(found if found.determined.all() else None)
-    f, p = (None, None) if zero is None else extra_terms_test(common, zero, second_stresses(gradients, stresses))
+    f, p = (None, None) if zero is None else extra_terms_test(common, zero)
     shift, shift_error = (None, None) if zero is None else _contrast(common, zero, level)
     noise_error, bias, bias_error = _at_largest(plan, jobs, zero, sizes[-1], level)
     partial = Convergence(
@@ -180,8 +188,8 @@ def _at_largest(
     if zero is None or not solver.determined.all():
         return noise, None, None
     model = zero.estimator.model
-    responses = [model.projections[i] @ model.matrix[model.job_of_row == i, model.cubic] for i in chosen]
-    effect = solver.estimate(solver.model.rows(np.array(responses)))[solver.model.constants]
+    responses = model.spread(model.matrix[:, model.cubic])[chosen]
+    effect = solver.estimate(solver.model.rows(responses))[solver.model.constants]
     spread = zero.estimator.whole.inverse[model.cubic, model.cubic]
     variance = np.clip(np.einsum("ia,ab,ib->i", effect, spread, effect), 0.0, None)
     return noise, effect @ zero.parameters[model.cubic], None if level is None else level * np.sqrt(variance)

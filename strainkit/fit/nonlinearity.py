@@ -68,24 +68,25 @@ def responses(regression: Regression, jobs: Sequence[StrainJob], kind: Literal["
         Its jobs.
     kind : "even" or "cubic"
     """
-    from scipy.stats import chi2
-    from scipy.stats import f as f_distribution
+    from scipy.special import chdtrc, fdtrc
 
-    model, whole, noise = regression.estimator.model, regression.estimator.whole, regression.noise
+    model, noise = regression.estimator.model, regression.noise
+    weights = regression.estimator.term_weights[0 if kind == "even" else 1]
     if not noise:
         return []
     found = []
     for index, shape in enumerate(model.shapes):
         columns = model.even_of_shape[index] if kind == "even" else model.cubic_of_shape[index]
         basis = shape.even if kind == "even" else shape.odd
-        if not basis.shape[1] or not whole.determined[columns].all():
+        weight = weights[index]
+        if weight is None:
             continue
         terms = regression.parameters[columns]
-        statistic = float(terms @ np.linalg.solve(noise**2 * whole.inverse[columns, columns], terms))
+        statistic = float(terms @ weight @ terms) / noise**2
         if regression.degrees_of_freedom is None:
-            p = float(chi2.sf(statistic, len(terms)))
+            p = float(chdtrc(len(terms), statistic))
         else:
-            p = float(f_distribution.sf(statistic / len(terms), len(terms), regression.degrees_of_freedom))
+            p = float(fdtrc(len(terms), regression.degrees_of_freedom, statistic / len(terms)))
         stress = stress_to_voigt(from_mandel(basis @ terms))
         label = next(job.label for i, job in enumerate(jobs) if model.shape_of_job[i] == index)
         found.append(Response(label.split("-")[0], kind, stress, COMPONENTS[int(np.abs(stress).argmax())], p))
@@ -104,27 +105,24 @@ def _holm(found: list[Response]) -> list[Response]:
     return corrected
 
 
-def extra_terms_test(smaller: Regression, larger: Regression, second: FloatArray) -> tuple[float | None, float | None]:
+def extra_terms_test(smaller: Regression, larger: Regression) -> tuple[float | None, float | None]:
     """F-test, on the odd part of the data, that the extra odd terms of a larger model are nothing.
 
     Parameters
     ----------
     smaller, larger : Regression
         Fits of the same jobs.
-    second : (jobs, 6)
-        Second Piola-Kirchhoff stresses, Mandel, GPa.
 
     Returns
     -------
     F and its p-value; None where the test cannot be made.
     """
-    from scipy.stats import f as f_distribution
+    from scipy.special import fdtrc
 
     freedom = larger.estimator.odd_freedom
     extra = smaller.estimator.odd_freedom - freedom
     if extra < 1 or freedom < 1:
         return None, None
-    without, _ = smaller.estimator.squares(smaller.estimator.model.rows(second))
-    with_more, _ = larger.estimator.squares(larger.estimator.model.rows(second))
-    value = float((without - with_more) / extra) / max(float(with_more) / freedom, 1e-300)
-    return value, float(f_distribution.sf(value, extra, freedom))
+    without, with_more = smaller.odd_squares, larger.odd_squares
+    value = (without - with_more) / extra / max(with_more / freedom, 1e-300)
+    return value, float(fdtrc(extra, freedom, value))

@@ -35,29 +35,24 @@ def outlier_tests(regression: Regression, rows: FloatArray) -> tuple[FloatArray,
     sizes : (jobs,)
         How far a job's stress (norm, GPa) is from what the others predict, as far as they predict it.
     """
-    from scipy.stats import f as f_distribution
+    from scipy.special import fdtrc
 
-    model, whole = regression.estimator.model, regression.estimator.whole
-    left = np.eye(len(rows)) - model.matrix @ whole.solver
+    left, tests = regression.estimator.leverage
     residual = left @ rows
-    squares, freedom = float(residual @ residual), len(rows) - whole.rank
-    p_values, sizes = np.full((2, len(model.projections)), np.nan)
-    for job in range(len(p_values)):
-        mine = model.job_of_row == job
-        values, vectors = np.linalg.eigh(left[np.ix_(mine, mine)])
-        keep = values > 1e-8
-        rank = int(keep.sum())
-        if not rank or freedom - rank < 1:
+    squares, freedom = float(residual @ residual), len(rows) - regression.estimator.whole.rank
+    p_values, sizes = np.full((2, len(tests)), np.nan)
+    for job, test in enumerate(tests):
+        if test is None:
             continue
-        along = vectors[:, keep].T @ residual[mine]
-        part = float((along**2 / values[keep]).sum())
+        along = test.combinations @ residual[test.rows]
+        part = float((along**2 / test.shares).sum())
         rest = max(squares - part, 1e-300)
-        p_values[job] = f_distribution.sf((part / rank) / (rest / (freedom - rank)), rank, freedom - rank)
-        sizes[job] = float(np.linalg.norm(along / values[keep]))
+        p_values[job] = fdtrc(test.rank, freedom - test.rank, (part / test.rank) / (rest / (freedom - test.rank)))
+        sizes[job] = float(np.linalg.norm(along / test.shares))
     return p_values, sizes
 
 
-def find_outliers(regression: Regression, jobs: Sequence[StrainJob], second: FloatArray) -> list[Finding]:
+def find_outliers(regression: Regression, jobs: Sequence[StrainJob], second: FloatArray, signal: float) -> list[Finding]:
     """Proposals: jobs that stand out at a family-wise level of one percent, and by an amount that matters.
 
     Parameters
@@ -67,12 +62,13 @@ def find_outliers(regression: Regression, jobs: Sequence[StrainJob], second: Flo
         Its jobs.
     second : (jobs, 6)
         Their second Piola-Kirchhoff stresses, Mandel, GPa.
+    signal : float
+        Typical length of such a stress, GPa.
     """
     p, sizes = outlier_tests(regression, regression.estimator.model.rows(second))
     tested = int(np.isfinite(p).sum())
     if not tested:
         return []
-    signal = float(np.median(np.linalg.norm(second - np.nan_to_num(regression.reference_stress), axis=1)))
     worst = float(np.nanmin(p))
     # the two jobs of a pair at one magnitude cannot be told apart by the odd part
     found = [i for i, value in enumerate(p) if value <= worst * (1 + 1e-6) + 1e-300]

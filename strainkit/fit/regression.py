@@ -12,76 +12,18 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from strainkit.design.model import LinearModel, Order, build_model
+from strainkit.design.model import Order, build_model
+from strainkit.fit.estimator import Estimator, Layout
 from strainkit.tensors.arrays import BoolArray, FloatArray
-from strainkit.tensors.leastsquares import LeastSquares, factorise
 from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
 from strainkit.tensors.strain import green_lagrange, pk2_from_cauchy
 
-__all__ = ["Estimator", "Regression", "regress", "second_stresses"]
+__all__ = ["Estimator", "Layout", "Regression", "regress", "second_stresses", "solve"]
 
 
 def second_stresses(gradients: FloatArray, stresses: FloatArray) -> FloatArray:
     """Second Piola-Kirchhoff stresses (jobs, 6), Mandel, of Cauchy stresses (jobs, 6), Voigt, GPa, under F (jobs, 3, 3)."""
     return to_mandel(pk2_from_cauchy(stress_from_voigt(stresses), gradients))
-
-
-@dataclass(frozen=True)
-class Estimator:
-    """A factorised linear model: everything about a fit that does not depend on the stresses.
-
-    Attributes
-    ----------
-    model : LinearModel
-    whole, odd : LeastSquares
-        Of all rows, and of the rows with every even response projected out.
-    odd_freedom, even_freedom : int
-        Spare degrees of freedom of the odd part, and of the rest.
-    """
-
-    model: LinearModel
-    whole: LeastSquares
-    odd: LeastSquares
-    odd_freedom: int
-    even_freedom: int
-
-    @classmethod
-    def of(cls, model: LinearModel) -> Estimator:
-        """Factorise a model."""
-        whole, odd = factorise(model.matrix), factorise(model.odd_matrix)
-        rows = len(model.matrix)
-        odd_freedom = rows - model.even_basis.shape[1] - odd.rank
-        return cls(model, whole, odd, odd_freedom, rows - whole.rank - odd_freedom)
-
-    @property
-    def determined(self) -> BoolArray:
-        """Which constants (n,) the jobs determine."""
-        return self.whole.determined[self.model.constants]
-
-    @property
-    def unit_covariance(self) -> FloatArray:
-        """Covariance (n, n) of the constants for unit noise; NaN where undetermined."""
-        return self.whole.inverse[self.model.constants, self.model.constants]
-
-    def estimate(self, rows: FloatArray) -> FloatArray:
-        """All parameters (parameters, ...) from data rows (rows, ...)."""
-        return self.whole.solver @ rows
-
-    def squares(self, rows: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Sums of squared residuals (...,) of data rows (rows, ...): odd part, and the rest."""
-        odd = self.model.odd_part(rows)
-        odd_left = ((odd - self.model.odd_matrix @ (self.odd.solver @ odd)) ** 2).sum(axis=0)
-        all_left = ((rows - self.model.matrix @ (self.whole.solver @ rows)) ** 2).sum(axis=0)
-        return odd_left, np.maximum(all_left - odd_left, 0.0)
-
-    def noise_variance(self, rows: FloatArray) -> tuple[FloatArray | None, int | None]:
-        """Variance (...,) of one Mandel component and its degrees of freedom; None without spare degrees of freedom."""
-        odd, rest = self.squares(rows)
-        if self.odd_freedom > 0:
-            return odd / self.odd_freedom, self.odd_freedom
-        if self.even_freedom > 0:
-            return (odd + rest) / self.even_freedom, self.even_freedom
-        return None, None
 
 
 @dataclass(frozen=True)
@@ -108,6 +50,10 @@ class Regression:
         Root mean square of the components that symmetry forbids or ties, GPa; zero for programs that symmetrise.
     residuals : (jobs, 6)
         Data less model, Mandel, GPa, in the allowed space of each job.
+    odd_squares : float
+        Sum of squared residuals of the odd part, GPa^2.
+    second : (jobs, 6)
+        The data: second Piola-Kirchhoff stresses, Mandel, GPa, given frame.
     estimator : Estimator
     """
 
@@ -120,6 +66,8 @@ class Regression:
     even_noise: float | None
     forbidden_noise: float | None
     residuals: FloatArray
+    odd_squares: float
+    second: FloatArray
     estimator: Estimator
 
     @property
@@ -136,6 +84,7 @@ def regress(
     order: Order = "linear",
     noise: float | None = None,
     weights: FloatArray | None = None,
+    axes: FloatArray | None = None,
 ) -> Regression:
     """Fit the constants.
 
@@ -154,21 +103,30 @@ def regress(
         Known standard deviation of one Mandel component, GPa; estimated from the residuals when left out.
     weights : (jobs,), optional
         Inverse variances in units of the common one.
+    axes : (3, 3), optional
+        Rows: the crystal's standard axes in the given frame. Crystals that have the same strains in them share one
+        factorisation, which is kept; the numbers are those of a factorisation of their own.
     """
-    estimator = Estimator.of(build_model(green_lagrange(gradients), rotations, matrices, order, weights))
-    return _solve(estimator, second_stresses(gradients, stresses), noise)
+    layout = Layout(green_lagrange(gradients), rotations, matrices, axes)
+    second = second_stresses(gradients, stresses)
+    if weights is None:
+        return solve(layout.estimator(order), second, noise)
+    return solve(Estimator.of(build_model(layout.strains, rotations, matrices, order, weights)), second, noise)
 
 
-def _solve(estimator: Estimator, second: FloatArray, noise: float | None) -> Regression:
+def solve(estimator: Estimator, second: FloatArray, noise: float | None = None) -> Regression:
+    """The fit of second Piola-Kirchhoff stresses (jobs, 6), Mandel, GPa, given frame; `noise` as for `regress`."""
     model = estimator.model
     rows = model.rows(second)
     parameters = estimator.estimate(rows)
+    odd, rest = estimator.squares(rows)
     dof: int | None = None
     if noise is None:
-        variance, dof = estimator.noise_variance(rows)
+        variance, dof = estimator.variance(odd, rest)
         noise = None if variance is None else float(variance**0.5)
-    rest = float(estimator.squares(rows)[1])
     at_rest = estimator.whole.determined[model.reference].all()
+    hidden = second.size - len(rows)
+    forbidden = float(((second - model.spread(rows)) ** 2).sum())
     return Regression(
         values=np.where(estimator.determined, parameters[model.constants], np.nan),
         covariance=None if noise is None else noise**2 * estimator.unit_covariance,
@@ -176,24 +134,11 @@ def _solve(estimator: Estimator, second: FloatArray, noise: float | None) -> Reg
         reference_stress=model.reference_basis @ parameters[model.reference] if at_rest else np.full(6, np.nan),
         noise=noise,
         degrees_of_freedom=dof,
-        even_noise=(rest / estimator.even_freedom) ** 0.5 if estimator.even_freedom > 0 else None,
-        forbidden_noise=_forbidden(model, second),
-        residuals=_by_job(model, rows - model.matrix @ parameters),
+        even_noise=(float(rest) / estimator.even_freedom) ** 0.5 if estimator.even_freedom > 0 else None,
+        # root mean square of what lies outside the allowed space of each job
+        forbidden_noise=(forbidden / hidden) ** 0.5 if hidden else None,
+        residuals=model.spread(rows - model.matrix @ parameters),
+        odd_squares=float(odd),
+        second=second,
         estimator=estimator,
     )
-
-
-def _forbidden(model: LinearModel, second: FloatArray) -> float | None:
-    """Root mean square of what lies outside the allowed space of each job."""
-    squares, count = 0.0, 0
-    for projection, stress in zip(model.projections, second, strict=True):
-        squares += float(((stress - projection @ (projection.T @ stress)) ** 2).sum())
-        count += 6 - projection.shape[1]
-    return (squares / count) ** 0.5 if count else None
-
-
-def _by_job(model: LinearModel, residual: FloatArray) -> FloatArray:
-    out = np.zeros((len(model.projections), 6))
-    for job, projection in enumerate(model.projections):
-        out[job] = projection @ residual[model.job_of_row == job] / model.weights[job] ** 0.5
-    return out

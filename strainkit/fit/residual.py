@@ -11,9 +11,8 @@ from typing import Any, Literal
 
 import numpy as np
 
-from strainkit.design.model import Order
-from strainkit.fit.regression import Regression, regress
-from strainkit.tensors.arrays import FloatArray
+from strainkit.fit.regression import Regression, second_stresses
+from strainkit.tensors.arrays import FloatArray, known
 from strainkit.tensors.prestress import stress_strain_coefficients
 from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt
 
@@ -48,13 +47,7 @@ def remove_offset(stresses: FloatArray, gradients: FloatArray, offset: FloatArra
 
 
 def treatments(
-    regression: Regression,
-    gradients: FloatArray,
-    stresses: FloatArray,
-    offset: FloatArray,
-    rotations: FloatArray,
-    matrices: FloatArray,
-    order: Order,
+    regression: Regression, gradients: FloatArray, stresses: FloatArray, offset: FloatArray, matrices: FloatArray
 ) -> list[Treatment]:
     """All readings side by side.
 
@@ -66,14 +59,16 @@ def treatments(
         As for `regress`.
     offset : (6,)
         Offset of the reference, Voigt, GPa.
-    rotations, matrices, order
-        As for `regress`.
+    matrices : (n, 6, 6)
+        Mandel matrices of the constants, given frame.
     """
     plain = np.tensordot(regression.values, matrices, axes=1)
-    t = from_mandel(np.nan_to_num(regression.reference_stress))
-    cleared = regress(gradients, remove_offset(stresses, gradients, offset), rotations, matrices, order)
+    t = from_mandel(known(regression.reference_stress))
+    model = regression.estimator.model
+    removed = second_stresses(gradients, remove_offset(stresses, gradients, offset))
+    cleared = regression.estimator.estimate(model.rows(removed))[model.constants]
     return [
         Treatment("C as fitted", stiffness_to_voigt(plain)),
         Treatment("B, stress real", stiffness_to_voigt(stress_strain_coefficients(plain, t))),
-        Treatment("C, stress an offset", stiffness_to_voigt(np.tensordot(cleared.values, matrices, axes=1))),
+        Treatment("C, stress an offset", stiffness_to_voigt(np.tensordot(cleared, matrices, axes=1))),
     ]

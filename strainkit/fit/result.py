@@ -18,15 +18,16 @@ from strainkit.fit.checks import Checks, examine
 from strainkit.fit.finer import FinerChange, finer_change
 from strainkit.fit.ions import RelaxedIons, relax_ions
 from strainkit.fit.judge import judge
-from strainkit.fit.regression import Regression, regress
+from strainkit.fit.regression import Layout, Regression, second_stresses, solve
 from strainkit.fit.residual import ReferenceStress, remove_offset
 from strainkit.run.files import atomic_write, dump_json
 from strainkit.run.plan import Plan
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, known
 from strainkit.tensors.prestress import stress_strain_coefficients
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt, stress_to_voigt
 from strainkit.tensors.stiffness import Stiffness
+from strainkit.tensors.strain import green_lagrange
 
 __all__ = ["FITTED", "Fit", "fit_run", "usable_jobs"]
 
@@ -107,19 +108,19 @@ class Fit:
         Equal to `answer` for a crystal without residual stress; the errors are those of that.
         """
         plain = self.answer
-        stress = np.nan_to_num(self.reference_stress)
+        stress = known(self.reference_stress)
         b = stress_strain_coefficients(plain.mandel, stress)
         return Stiffness(0.5 * (b + b.T), plain.covariance, plain.degrees_of_freedom)
 
     def intervals(self) -> FloatArray:
         """95 % intervals of the constants (n, 2), GPa; NaN without an error estimate."""
-        from scipy.stats import norm, t
+        from scipy.special import ndtri, stdtrit
 
         r = self.regression
         if r.covariance is None:
             return np.full((len(r.values), 2), np.nan)
         dof = r.degrees_of_freedom
-        reach = float(norm.ppf(0.975) if dof is None else t.ppf(0.975, dof)) * np.sqrt(np.diag(r.covariance))
+        reach = float(ndtri(0.975) if dof is None else stdtrit(dof, 0.975)) * np.sqrt(np.diag(r.covariance))
         return np.column_stack([r.values - reach, r.values + reach])
 
     def to_dict(self, frame: str = "ieee") -> dict[str, Any]:
@@ -166,12 +167,12 @@ class Fit:
         r, basis = self.regression, self.plan.basis
         turned = rotate_matrix(frame.rotation, basis.matrices)
         unknown = (np.abs(turned[~r.determined]) > 1e-7).any(axis=0)
-        mandel = np.tensordot(np.nan_to_num(r.values), turned, axes=1)
+        mandel = np.tensordot(known(r.values), turned, axes=1)
         variance = np.full((6, 6), np.nan)
         if r.covariance is not None:
             flat = turned.reshape(len(turned), 36)
-            variance = np.einsum("ap,ab,bp->p", flat, np.nan_to_num(r.covariance), flat).reshape(6, 6)
-        stress = frame.rotation @ np.nan_to_num(self.reference_stress) @ frame.rotation.T
+            variance = np.einsum("ap,ab,bp->p", flat, known(r.covariance), flat).reshape(6, 6)
+        stress = frame.rotation @ known(self.reference_stress) @ frame.rotation.T
         b = stress_strain_coefficients(mandel, stress)
         error = np.sqrt(np.clip(variance, 0.0, None))
         hidden = np.where(unknown, np.nan, 1.0)
@@ -235,11 +236,12 @@ def fit_run(
     doubts: list[Finding] = []
     if reading == "offset":
         stresses, doubts = _without_offset(jobs, gradients, stresses)
-    regression = regress(gradients, stresses, plan.symmetry.rotations, plan.basis.matrices, order, noise)
+    layout = Layout(green_lagrange(gradients), plan.symmetry.rotations, plan.basis.matrices, plan.standard_axes)
+    regression = solve(layout.estimator(order), second_stresses(gradients, stresses), noise)
     if not regression.determined.any():
         raise NoTensorError("the usable jobs determine no constant", plan.crystal.name, "See: strainkit progress RUN")
     energies = {record.label: record.energy for record in table.records}
-    checks = examine(plan, jobs, stresses, [energies[job.label] for job in jobs], regression, order)
+    checks = examine(plan, jobs, stresses, [energies[job.label] for job in jobs], regression, layout, order)
     finer = finer_change(plan, table, regression)
     changes = [] if finer is None else finer.findings(plan.basis.names, regression.values)
     used = tuple(job.label for job in jobs)
@@ -254,8 +256,14 @@ def fit_run(
         checks=checks,
         finer=finer,
         relaxed=relaxed,
-        findings=(*table.doubts(used), *doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
+        findings=(*_carried(table, used), *doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
     )
+
+
+def _carried(table: StressTable, used: tuple[str, ...]) -> list[Finding]:
+    """What collect doubted about the set and the jobs that are used."""
+    own = [f for record in table.records if record.label in used for f in record.findings]
+    return [f for f in (*table.findings, *own) if f.severity != "info"]
 
 
 def _without_offset(jobs: list[StrainJob], gradients: FloatArray, stresses: FloatArray) -> tuple[FloatArray, list[Finding]]:

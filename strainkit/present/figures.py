@@ -128,28 +128,40 @@ class Drawing:
         view = re.search(r'viewBox="([\d. ]+)"', body)
         assert view is not None
         body = body[body.index(">", body.index("<svg")) + 1 :]
-        body = re.sub(r' d="[^"]*"', _rounded, body)
+        body = re.sub(r' d="([^"]*)"', lambda found: f' d="{_short_path(found[1])}"', body)
+        body = re.sub(r' [xy]="[^"]*"|translate\([^)]*\)', lambda found: _rounded(found[0], 2), body)
+        body = re.sub(r'<g id="[^"]*"', "<g", body).replace("xlink:href", "href")
         # several figures share one page: their ids must differ
         body = re.sub(r'( id="|href="#|url\(#)', rf"\g<1>{prefix}-", body)
         body = re.sub(r"\n\s*", "\n", body).strip()
         if page:
             for colour, name in _PROPERTIES.items():
-                body = body.replace(colour, f"var({name}, {colour})")
+                body = body.replace(colour, f"var({name})")
         width, height = view[1].split()[2:]
         size = "" if page else f' width="{width}pt" height="{height}pt"'
-        name_spaces = 'xmlns="http://www.w3.org/2000/svg" xmlns:xlink="http://www.w3.org/1999/xlink"'
         words = (
             f'<title id="{prefix}-title">{escape(self.title)}</title><desc id="{prefix}-desc">{escape(self.description)}</desc>'
         )
         labels = f'aria-labelledby="{prefix}-title" aria-describedby="{prefix}-desc"'
         by = "" if page else f' data-generator="strainkit {__version__}"'
-        return f'<svg {name_spaces} viewBox="{view[1]}"{size}{by} {attributes} {labels}>{words}{body}'
+        return f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="{view[1]}"{size}{by} {attributes} {labels}>{words}{body}'
 
 
-def _rounded(path: re.Match[str]) -> str:
-    """A path with its coordinates to a tenth of a point."""
-    short = re.sub(r"-?\d+\.\d+", lambda found: f"{float(found[0]):.1f}".removesuffix(".0"), path[0])
-    return " " + " ".join(short.split())
+def _short_path(path: str) -> str:
+    """A path with its coordinates to a tenth of a point, and without the commands that need not be repeated."""
+    kept, last = [], ""
+    for token in _rounded(path, 1).split():
+        if token.isalpha():
+            if token == "L" and last in ("L", "M"):
+                continue
+            last = token
+        kept.append(token)
+    return " ".join(kept)
+
+
+def _rounded(text: str, digits: int) -> str:
+    """The text with its decimal numbers cut to some digits."""
+    return re.sub(r"-?\d+\.\d+", lambda found: f"{float(found[0]):.{digits}f}".rstrip("0").rstrip("."), text)
 
 
 def drawing(name: str, title: str, description: Sequence[str], caption: str, figure: Any) -> Drawing:

@@ -126,7 +126,7 @@ def stress_strain(fit: Fit, frame: str = "ieee") -> list[Drawing]:
 
 def _one_shape(shape: ShapeData, noise: float | None, frame: str) -> Drawing:
     with style():
-        figure = new_figure(4.3, 3.9, top=0.32)
+        figure = new_figure(4.3, 3.9, left=0.74, top=0.32)
         above, below = figure.subplots(2, 1, sharex=True, height_ratios=[2.6, 1])
         percent = 100 * shape.strain
         if noise is not None:
@@ -144,7 +144,7 @@ def _one_shape(shape: ShapeData, noise: float | None, frame: str) -> Drawing:
         above.margins(x=0.02)
         figure.legend(loc="upper center", ncols=6, frameon=False, handletextpad=0.1, columnspacing=1.2)
         for axes in (above, below):
-            axes.yaxis.set_label_coords(-0.13, 0.5)
+            axes.yaxis.set_label_coords(-0.17, 0.5)
     strains = ", ".join(f"{c} {plain(x, 2)}" for c, x in zip(COMPONENTS, shape.unit, strict=True) if abs(x) > 5e-3)
     largest = 1e3 * float(np.abs(shape.residual).max())
     words = [

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import re
 from collections import Counter
 from collections.abc import Mapping
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
@@ -47,11 +49,10 @@ def provenance_section(plan: Plan, table: StressTable, run: Path | None) -> Sect
         ("Space group", f"{symmetry.space_group} (No. {symmetry.number})", group),
     ]
     if plan.molecules is not None:
-        facts.append(("Molecules", molecules_text(plan.molecules), ""))
+        facts.append(("Molecules", molecules_text(plan.molecules).removeprefix("molecules "), ""))
     jobs = f"{len(plan.strain_set) - 1} strained jobs and the reference, ions {plan.ions}"
     facts.append(("Strain set", f"aim {plan.aim}", jobs))
-    programs = Counter(record.program for record in table.records if record.program)
-    facts.append(("Outputs read as", ", ".join(f"{name} ({count})" for name, count in programs.items()) or "none", ""))
+    facts += _outputs(plan, table, run)
     facts += _calculation(plan.calculation)
     if run is not None:
         facts += _files(run)
@@ -60,10 +61,44 @@ def provenance_section(plan: Plan, table: StressTable, run: Path | None) -> Sect
     return Section("provenance", "Provenance", tuple(blocks))
 
 
+def _outputs(plan: Plan, table: StressTable, run: Path | None) -> list[tuple[str, str, str]]:
+    """Programs and versions that wrote the outputs of the strain set, and what these say of their settings."""
+    members = {job.label for job in plan.strain_set}
+    records = [r for r in table.records if r.label in members and r.program]
+    programs = Counter(f"{r.program} {r.version}".strip() for r in records)
+    facts = [
+        (
+            "Program",
+            ", ".join(f"{name} ({count} of {len(members)} jobs)" for name, count in programs.items()) or "no output yet",
+            "",
+        )
+    ]
+    said: dict[str, dict[str, None]] = {}
+    for record in records:
+        for key, value in record.settings.items():
+            said.setdefault(key, {})[f"{value:g}" if isinstance(value, float) else str(value)] = None
+    engines = {} if run is None else {name: None for r in records if (name := _engine(run / r.file))}
+    if engines:
+        said["engine"] = engines
+    if said:
+        words = "; ".join(f"{key} {' or '.join(values)}" for key, values in said.items())
+        facts.append(("Settings by the outputs", words, "in the program's own words"))
+    return facts
+
+
+def _engine(path: Path) -> str:
+    """Local engine and its settings, from the second line of an extended XYZ file of strainkit's."""
+    if path.suffix != ".extxyz" or not path.is_file():
+        return ""
+    with path.open(encoding="utf-8", errors="replace") as file:
+        found = re.search(r' engine="([^"]*)"', "".join(islice(file, 2)))
+    return found[1] if found else ""
+
+
 def _calculation(calculation: Mapping[str, Any]) -> list[tuple[str, str, str]]:
     """Deck, mesh, grid and settings."""
     if not calculation:
-        return [("Settings", "not known to strainkit", "the jobs were computed without one of its decks")]
+        return [("Deck", "none of strainkit's", "")]
     mesh = "x".join(map(str, calculation["kmesh"]))
     grids = ", ".join("x".join(map(str, points)) for points in calculation["grids"])
     facts = [("Deck", str(calculation["program"]), f"k-mesh {mesh}, Gamma-centred" + (f"; grid {grids}" if grids else ""))]

@@ -91,8 +91,9 @@ def _precise(fit: Fit, known: tuple[float, str] | None) -> tuple[str, ...]:
         head = "The precision of the fit is unknown, for want of spare degrees of freedom"
         return (f"{head}; it cannot see {_BLIND} anyway, and {_finer(fit)}.",)
     percent, name = known
+    subject = "What is determined" if fit.undetermined else "The fit"
     return (
-        f"The fit is precise to {_percent(percent)} %; it cannot see {_BLIND}, and {_finer(fit)}.",
+        f"{subject} is precise to {_percent(percent)} %; it cannot see {_BLIND}, and {_finer(fit)}.",
         f"{_percent(percent)} % is one standard error of the worst constant, {name}, relative to it or, where that is more, "
         "to a tenth of the largest constant.",
     )

@@ -19,7 +19,7 @@ def report_text(report: Report, path: Path) -> str:
             paragraph(first, "  "),
             *(paragraph(sentence, "  ") for sentence in others),
             "",
-            f"  {len(report.figures)} figures and {len(report.tables)} tables in {path}",
+            f"  figures: {len(report.figures)}, tables: {len(report.tables)}, in {path}",
             "",
             findings_text(report.page.findings),
         ]

@@ -25,16 +25,18 @@ def frames_of(run: Path) -> Iterator[str]:
 
     Lattices are the planned ones; positions those that came back, up to a common shift; `energy` is the free energy of the
     cell in eV, `stress` nine numbers in eV/A^3, positive in tension, `forces` eV/A where the program printed them. Jobs whose
-    table keeps no positions (an imported table) are left out.
+    ions were relaxed but whose output kept neither forces nor moved positions (an imported table) are left out.
     """
     plan = load_plan(run)
     jobs = {job.label: job for job in plan.jobs}
     for record in load_table(run, ions=True).usable:
         job = jobs.get(record.label)
-        if job is None or record.displacements is None or record.stress is None:
+        if job is None or record.stress is None or (record.displacements is None and plan.ions != "clamped"):
             continue
         planned = plan.crystal.deformed(job.gradient)
-        positions = planned.positions + np.linalg.solve(planned.lattice.T, record.displacements.T).T
+        positions = planned.positions
+        if record.displacements is not None:
+            positions = positions + np.linalg.solve(planned.lattice.T, record.displacements.T).T
         info: dict[str, object] = {"name": plan.crystal.name, "job": job.label, "kind": job.kind, "program": record.program}
         if record.energy is not None:
             info["energy"] = record.energy

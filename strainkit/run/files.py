@@ -8,12 +8,33 @@ import math
 import os
 import re
 import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
 from strainkit.errors import DiskError, InputError
 
-__all__ = ["atomic_write", "checksum", "dump_json", "load_json"]
+__all__ = ["atomic_write", "checksum", "dump_json", "in_a_hurry", "load_json"]
+
+#: types of numbers that one call of json writes
+_PLAIN = frozenset((float, int, bool, type(None)))
+#: whether a file is on the disk itself before its write ends, so that it outlives a power cut
+_durable = True
+
+
+@contextmanager
+def in_a_hurry() -> Iterator[None]:
+    """Leave it to the system when files reach the disk, where whoever reads them later notices what a power cut took.
+
+    They are still renamed into place whole, so that a killed process loses nothing.
+    """
+    global _durable
+    before, _durable = _durable, False
+    try:
+        yield
+    finally:
+        _durable = before
 
 
 def atomic_write(path: Path, content: str | bytes) -> None:
@@ -31,8 +52,9 @@ def atomic_write(path: Path, content: str | bytes) -> None:
         handle, temporary = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
         with os.fdopen(handle, "wb") as file:
             file.write(data)
-            file.flush()
-            os.fsync(file.fileno())
+            if _durable:
+                file.flush()
+                os.fsync(file.fileno())
         os.chmod(temporary, 0o644)
         os.replace(temporary, path)
     except OSError as error:
@@ -46,24 +68,34 @@ def checksum(content: bytes) -> str:
     return hashlib.sha256(content).hexdigest()
 
 
-def _finite(value: Any) -> Any:
-    """The same JSON value with numbers that are not finite turned into null."""
-    if isinstance(value, float):
-        return value if math.isfinite(value) else None
-    if isinstance(value, dict):
-        return {str(key): _finite(item) for key, item in value.items()}
-    if isinstance(value, list | tuple):
-        return [_finite(item) for item in value]
-    if hasattr(value, "tolist"):
-        return _finite(value.tolist())
-    return value
-
-
 def dump_json(value: Any) -> str:
     """JSON text, each list of plain numbers on one line; unknown numbers are null, never NaN."""
-    text = json.dumps(_finite(value), indent=1, ensure_ascii=False, allow_nan=False)
-    # a raw line break never stands inside a JSON string, so only lists match
-    return re.sub(r"\[\n[^\[\]{}\"]*\]", lambda found: re.sub(r"\n\s*", "", found[0]).replace(",", ", "), text) + "\n"
+    return _text(value, "\n") + "\n"
+
+
+def _text(value: Any, line: str) -> str:
+    """A value as text; `line` is a line break with the indentation of the value."""
+    if isinstance(value, str):
+        return json.dumps(value, ensure_ascii=False)
+    if isinstance(value, float):
+        return float.__repr__(value) if math.isfinite(value) else "null"
+    if hasattr(value, "tolist"):
+        return _text(value.tolist(), line)
+    inside = line + " "
+    if isinstance(value, dict):
+        items = (f"{json.dumps(str(key), ensure_ascii=False)}: {_text(item, inside)}" for key, item in value.items())
+        return f"{{{inside}{f',{inside}'.join(items)}{line}}}" if value else "{}"
+    if isinstance(value, list | tuple):
+        if not value:
+            return "[]"
+        if _PLAIN.issuperset(map(type, value)):
+            text = json.dumps(value)  # one call for all numbers
+            return re.sub("-?Infinity|NaN", "null", text) if "N" in text or "I" in text else text
+        value = [item.tolist() if hasattr(item, "tolist") else item for item in value]
+        if not any(isinstance(item, str | dict | list | tuple) for item in value):
+            return f"[{', '.join(_text(item, inside) for item in value)}]"
+        return f"[{inside}{f',{inside}'.join(_text(item, inside) for item in value)}{line}]"
+    return json.dumps(value)
 
 
 def load_json(path: Path, kind: str) -> dict[str, Any]:

@@ -12,7 +12,7 @@ import numpy as np
 
 from strainkit import __version__
 from strainkit.crystal.crystal import Crystal
-from strainkit.crystal.frames import FRAMES, Frame
+from strainkit.crystal.frames import FRAMES, Frame, standard_axes
 from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.expect import Expectation
@@ -21,7 +21,7 @@ from strainkit.errors import InputError
 from strainkit.findings import Finding
 from strainkit.run.files import atomic_write, dump_json, load_json
 from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.constants import ConstantBasis, constant_basis
+from strainkit.tensors.constants import ConstantBasis, basis_of_group
 from strainkit.tensors.sixvectors import strain_to_voigt
 
 __all__ = ["MANIFEST", "AtomMoves", "Ions", "Plan", "job_folder", "load_plan"]
@@ -107,7 +107,12 @@ class Plan:
     @cached_property
     def basis(self) -> ConstantBasis:
         """Independent constants, named in IEEE axes, with their matrices in the given frame."""
-        return constant_basis(self.symmetry.invariants, self.frames["ieee"].rotation)
+        return basis_of_group(self.symmetry.rotations, self.frames["ieee"].rotation)
+
+    @cached_property
+    def standard_axes(self) -> FloatArray:
+        """Rows (3, 3): axes in the given frame in which crystals of one Laue class have the same strains."""
+        return standard_axes(self.symmetry)
 
     def to_dict(self) -> dict[str, Any]:
         """The manifest, and what `prepare --json` prints."""

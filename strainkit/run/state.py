@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from strainkit import __version__
-from strainkit.run.files import atomic_write, checksum, dump_json
+from strainkit.run.files import atomic_write, checksum, dump_json, in_a_hurry
 from strainkit.run.plan import MANIFEST
 
 __all__ = ["COLLECTED", "INPUTS", "collected_before", "mark_collected", "output_signature"]
@@ -47,16 +47,22 @@ def _seen(name: str, entry: os.DirEntry[str]) -> tuple[str, int, int]:
     return name, status.st_size, status.st_mtime_ns
 
 
-def collected_before(run: Path, signature: str) -> dict[str, Any] | None:
-    """What `mark_collected` kept, when the job folders are as they were then; None otherwise."""
+def collected_before(run: Path, signature: str, table: Path) -> dict[str, Any] | None:
+    """What `mark_collected` kept, when job folders and table are as they were then; None otherwise."""
     try:
         data = json.loads((run / COLLECTED).read_text(encoding="utf-8"))
-        same = data["schema"] == f"{_KIND}/1" and data[INPUTS] == signature
+        same = (
+            data["schema"] == f"{_KIND}/1"
+            and data[INPUTS] == signature
+            and data["table_sha256"] == checksum(table.read_bytes())
+        )
         return dict(data["summary"]) if same else None
     except (OSError, ValueError, KeyError, TypeError):
         return None
 
 
-def mark_collected(run: Path, signature: str, summary: Mapping[str, Any]) -> None:
-    """Keep the signature that was taken before the outputs were read, and a summary of the table that came of them."""
-    atomic_write(run / COLLECTED, dump_json({"schema": f"{_KIND}/1", INPUTS: signature, "summary": dict(summary)}))
+def mark_collected(run: Path, signature: str, table: Path, summary: Mapping[str, Any]) -> None:
+    """Keep the signature that was taken before the outputs were read, and checksum and summary of the table made of them."""
+    data = {"schema": f"{_KIND}/1", INPUTS: signature, "table_sha256": checksum(table.read_bytes()), "summary": dict(summary)}
+    with in_a_hurry():
+        atomic_write(run / COLLECTED, dump_json(data))

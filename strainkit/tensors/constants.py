@@ -7,10 +7,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.invariants import invariant_matrices
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import stiffness_to_voigt
 
-__all__ = ["ALL_NAMES", "ConstantBasis", "constant_basis"]
+__all__ = ["ALL_NAMES", "ConstantBasis", "basis_of_group", "constant_basis"]
 
 #: the 21 names of the upper triangle, row by row
 ALL_NAMES = tuple(f"C{i + 1}{j + 1}" for i in range(6) for j in range(i, 6))
@@ -62,3 +63,20 @@ def constant_basis(invariants: FloatArray, naming_rotation: FloatArray) -> Const
             span = np.vstack([span, rest / np.linalg.norm(rest)])
     matrices = np.tensordot(np.linalg.inv(entries[chosen]).T, invariants, axes=1)
     return ConstantBasis(tuple(ALL_NAMES[row] for row in chosen), matrices)
+
+
+def basis_of_group(rotations: FloatArray, naming_rotation: FloatArray) -> ConstantBasis:
+    """`constant_basis` for a Laue group (m, 3, 3), given frame, kept for the groups that look alike in the naming axes."""
+    group = naming_rotation @ rotations @ naming_rotation.T
+    key = (np.round(group, 12) + 0.0).tobytes()
+    if key not in _KEPT:
+        if len(_KEPT) >= _MOST_KEPT:
+            _KEPT.clear()
+        _KEPT[key] = constant_basis(invariant_matrices(group), np.eye(3))
+    named = _KEPT[key]
+    return ConstantBasis(named.names, rotate_matrix(naming_rotation.T, named.matrices))
+
+
+#: group in naming axes -> basis in them
+_KEPT: dict[bytes, ConstantBasis] = {}
+_MOST_KEPT = 256

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from functools import cache
+
 import numpy as np
 
 from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.sixvectors import matrix_from_full
+from strainkit.tensors.sixvectors import from_mandel, matrix_from_full, to_mandel
 
 __all__ = ["stress_strain_coefficients"]
 
@@ -23,7 +25,18 @@ def stress_strain_coefficients(mandel: FloatArray, stress: FloatArray) -> FloatA
     stress : (3, 3)
         Initial Cauchy stress t, GPa, positive in tension.
     """
-    d, t = np.eye(3), np.asarray(stress, dtype=float)
+    part = np.tensordot(to_mandel(stress), _parts(), axes=1)
+    return np.asarray(np.asarray(mandel, dtype=float) + part)
+
+
+@cache
+def _parts() -> FloatArray:
+    """What each Mandel component of t adds, (6, 6, 6)."""
+    return np.array([_part(t) for t in from_mandel(np.eye(6))])
+
+
+def _part(t: FloatArray) -> FloatArray:
+    d = np.eye(3)
     terms = (
         np.einsum("ik,jl->ijkl", d, t)
         + np.einsum("jk,il->ijkl", d, t)
@@ -31,4 +44,4 @@ def stress_strain_coefficients(mandel: FloatArray, stress: FloatArray) -> FloatA
         + np.einsum("jl,ik->ijkl", d, t)
         - 2.0 * np.einsum("kl,ij->ijkl", d, t)
     )
-    return np.asarray(mandel, dtype=float) + matrix_from_full(0.5 * terms)
+    return matrix_from_full(0.5 * terms)

@@ -152,7 +152,7 @@ def test_alloy_formed_from_its_metals(cli, tmp_path):
     expected = 4 * energies["AuCu3"] - 3 * energies["Cu"] - energies["Au"]
     assert formed["energy_eV"] == pytest.approx(expected, rel=0, abs=1e-6)
     assert [c["method"]["engine"] for c in data["crystals"]] == ["emt"] * 3
-    assert "settings-unverified" not in {f["code"] for f in data["findings"]}
+    assert {f["code"] for f in data["findings"]} == {"clamped-compared"}
 
 
 def test_many_crystals_with_long_names_keep_to_the_page(cli, tmp_path):

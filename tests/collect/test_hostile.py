@@ -7,6 +7,8 @@ import gzip
 import lzma
 import os
 import pickle
+import time
+from contextlib import suppress
 from pathlib import Path
 
 import numpy as np
@@ -115,7 +117,7 @@ BOMB = '<!DOCTYPE x [<!ENTITY a "aaaaaaaaaa"><!ENTITY b "&a;&a;&a;&a;&a;&a;&a;&a
         (BOMB, "<i>&c;</i>", "entities"),
         ('<!DOCTYPE x [<!ENTITY e SYSTEM "file:///etc/passwd">]>\n', "<i>&e;</i>", "entities"),
         ("", "<i>&e;</i>", "not readable"),
-        ("", "<a>" * 100_000, "end-of-job|not readable"),
+        ("", "<a>" * 20_000, "end-of-job|not readable"),
         ("", "<calculation></calculation>", "not readable"),
     ],
 )
@@ -245,3 +247,21 @@ def test_what_is_no_number_is_no_stress(name, word, tmp_path):
         assert read_returned(path, recognise(path)).problems[0][0] == "broken"
     except InputError as error:
         assert "cannot be read" in str(error) or "no " in str(error)  # noqa: PT017
+
+
+@pytest.mark.parametrize(
+    "filling", [" ", "1", "1.", " = ", "| ", "\n", " 1 2 3", "CELL_PARAMETERS ", "Exchange-correlation= ", "%%%% "]
+)
+@pytest.mark.parametrize(
+    "name", ["qe/relaxed.out", "abinit/relaxed.abo", "cp2k/single.out", "gpaw/single.txt", "gpaw26/single.txt"]
+)
+def test_no_pattern_takes_long(name, filling, tmp_path):
+    """A megabyte of what patterns could stumble over, in lines just short enough: seconds would mean a quadratic pattern."""
+    line = (filling * source.LONGEST_LINE)[: source.LONGEST_LINE - 10]
+    path = tmp_path / "long"
+    path.write_bytes(content(name)[:20_000] + ("\n" + "\n".join([line] * 20) + "\n").encode() + content(name)[20_000:])
+    start = time.process_time()
+    reader = recognise(path)
+    with suppress(InputError):
+        read_returned(path, reader)
+    assert time.process_time() - start < 2.0

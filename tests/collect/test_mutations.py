@@ -9,11 +9,15 @@ from __future__ import annotations
 
 import random
 from collections import Counter
+from contextlib import suppress
 from pathlib import Path
 
 import ase.test
 import numpy as np
 import pytest
+from ase.build import bulk
+from ase.calculators.singlepoint import SinglePointCalculator
+from ase.io import write as ase_write
 from support.outputs import content
 
 from strainkit.collect.readers import read_returned, recognise
@@ -27,6 +31,7 @@ BLOCKS = {
     "abinit/single.abo": ("stress tensor (GPa)", "tolvrs"),
     "cp2k/single.out": ("STRESS| Analytical", "DBCSR STATISTICS"),
     "gpaw/single.txt": ("Stress tensor:\n", "Writing to"),
+    "gpaw26/single.txt": ("Stress tensor  #", "Stress computation"),
     "vasp/OUTCAR_example_1": ("FORCE on cell", "VOLUME and BASIS"),
     "vasp/vasprun_pstress.xml": ('<varray name="stress"', "<time"),
     "aims/relax.out": ("Analytical stress tensor - Symm", "Energy and forces in"),
@@ -150,6 +155,7 @@ def test_every_cut_through_the_stress_is_seen(name, tmp_path):
 #: numbers that a program prints once can be replaced by others of the same form: GPAW's diagonal stresses and its forces, every
 #: number of vasprun.xml, the energy of the others; all other silent damage would be new
 PRINTED_ONCE = {
+    "gpaw26/single.txt": {"stress", "forces", "energy", "lattice", "positions"},
     "gpaw/single.txt": {"stress", "forces", "energy", "lattice", "positions"},
     "vasp/vasprun_pstress.xml": {"stress", "forces", "energy", "lattice", "positions"},
 }
@@ -173,3 +179,28 @@ def test_damaged_copies(name, tmp_path):
 @pytest.mark.parametrize("name", BLOCKS)
 def test_ten_thousand_damaged_copies(name, tmp_path):
     check(name, 1250, tmp_path / "damaged")
+
+
+@pytest.mark.parametrize("format", ["traj", "db", "json", "extxyz", "gpw", "castep", "geom"])
+def test_damaged_structure_files_never_end_in_a_traceback(format, tmp_path):
+    """Formats read through ASE; no number in them is printed twice, so that only the refusals are tested."""
+    whole = tmp_path / f"whole.{format}"
+    if format == "gpw":
+        whole.write_bytes(content("gpaw/single.gpw"))
+    elif format == "castep":
+        whole.write_bytes((SHIPPED / "castep" / "md.castep").read_bytes())
+    else:
+        atoms = bulk("Si")
+        stress = np.array([0.01, 0.02, 0.03, 0.004, 0.005, 0.006])
+        atoms.calc = SinglePointCalculator(atoms, energy=-10.0, stress=stress, forces=np.zeros((2, 3)))
+        ase_write(whole, atoms, format={"geom": "castep-geom"}.get(format, format))
+    data = whole.read_bytes()
+    rng = random.Random(format)
+    path = tmp_path / "damaged"
+    for number in range(60):
+        place = rng.randrange(min(len(data), 3000) if number % 2 else len(data))
+        path.write_bytes(KINDS[number % len(KINDS)](data, min(place, len(data) - 2), rng))
+        reader = recognise(path)
+        if reader is not None:
+            with suppress(InputError):
+                read_returned(path, reader)

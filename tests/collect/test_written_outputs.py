@@ -196,6 +196,36 @@ def test_vasprun_with_an_external_pressure_gives_the_energy(tmp_path):
     assert read_returned(path, recognise(path)).energy == pytest.approx(-20.24695937, abs=2e-8)
 
 
+def test_vasprun_relaxed_by_its_energy(tmp_path):
+    """EDIFFG 1 meV: a second or third ionic step of nearly the energy of one of the two before it ends a relaxation."""
+    text = (SHIPPED / "vasp" / "vasprun_pstress.xml").read_text()
+    text = text.replace('name="NSW">     0', 'name="NSW">    50').replace('name="IBRION">    -1', 'name="IBRION">     2')
+    start, end = text.index(" <calculation>"), text.index("</calculation>") + len("</calculation>\n")
+    step, path = text[start:end], tmp_path / "file"
+
+    def steps(*energies: str) -> str:
+        return text[:start] + "".join(step.replace("-20.23985977", energy) for energy in energies) + text[end:]
+
+    for energies, relaxed in (
+        (("-20.2398", "-20.2399"), True),
+        (("-20.2398", "-20.2500"), False),
+        (("-20.2398", "-20.2300", "-20.2399"), True),
+        (("-20.2398", "-20.2300", "-20.2200"), False),
+    ):
+        path.write_text(steps(*energies))
+        assert bool(read_returned(path, recognise(path)).problems) != relaxed, energies
+
+
+def test_castep_energy_with_dispersion(tmp_path):
+    """The corrected free energy is printed below the plain one (words from memory)."""
+    text = (SHIPPED / "castep" / "md.castep").read_text()
+    old = "Final free energy (E-TS)    =  -1351.294716003     eV\n"
+    assert old in text
+    path = tmp_path / "file"
+    path.write_text(text.replace(old, old + " Dispersion corrected final free energy* (Ecor-TS) =  -1352.500000000     eV\n"))
+    assert read_returned(path, recognise(path)).energy == -1352.5
+
+
 def test_vasprun_takes_the_last_complete_ionic_step(tmp_path):
     """A second step with other numbers; then the same, cut in its middle."""
     text = (SHIPPED / "vasp" / "vasprun_pstress.xml").read_text()

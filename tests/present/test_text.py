@@ -94,3 +94,18 @@ def test_pages_are_narrow_plain_and_end_with_findings(cli, triclinic, command):
     place = max((i for i, line in enumerate(lines) if line in ("Findings", "No findings.")), default=None)
     assert place is not None
     assert all(re.match(r"  (error|warning|info) [a-z-]+: |      ", line) for line in lines[place + 1 :])
+
+
+def test_labels_of_the_progress_bar_are_plain(monkeypatch, capsys):
+    """rich would take [bold] for a style, and a terminal a control sequence for an order."""
+    from strainkit.cli.options import progress
+
+    monkeypatch.setattr(sys.stderr, "isatty", lambda: True)
+    monkeypatch.setenv("FORCE_COLOR", "1")
+    monkeypatch.setenv("TERM", "xterm")
+    with progress("work", quiet=False) as report:
+        report(1, 2, f"[bold]{STEERING}")
+    seen = capsys.readouterr().err
+    assert "[bold]" in seen
+    assert "\x1b]0;" not in seen
+    assert r"\x1b]0;owned" in seen

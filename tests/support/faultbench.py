@@ -437,6 +437,9 @@ def _no_reference(case: Faulty, rng: np.random.Generator) -> Fault:
     return Fault("reference missing", (case.plan.jobs[0].label,), ("reference-missing",))
 
 
+#: codes that say no more than that a job, or the set, does not fit
+OUTLIERS = ("outlier", "energy-mismatch", "set-inconsistent")
+
 FAULTS: dict[str, Callable[[Faulty, np.random.Generator], Fault]] = {
     "output truncated": _problem("unfinished", "output truncated"),
     "electronic steps not converged": _problem("unconverged", "electronic steps not converged"),
@@ -485,7 +488,7 @@ def inject(clean: CleanSet, names: list[str], rng: np.random.Generator) -> Fault
 
 
 def verdict(clean: CleanSet, case: Faulty) -> list[str]:
-    """For each fault: named, outlier (the fit says that the job does not fit), mislabelled, missed or harmless.
+    """For each fault: named, outlier (the job or the set is said not to fit), mislabelled, missed or harmless.
 
     Harmless: not seen, and no constant moved by its error bar.
     """
@@ -499,7 +502,7 @@ def verdict(clean: CleanSet, case: Faulty) -> list[str]:
         whole = len(fault.jobs) > 2
         if any(_places(f.where, f.message, fault.jobs, whole) for f in fitting):
             words.append("named")
-        elif any(f.code in ("outlier", "energy-mismatch") and _near(f.where, fault.jobs) for f in late):
+        elif any(f.code in OUTLIERS and _near(f.where, fault.jobs) for f in [*found, *late]):
             words.append("outlier")
         elif any(f.severity != "info" for f in [*found, *late]) or fit is None:
             words.append("mislabelled")
@@ -514,7 +517,7 @@ def _places(where: str, message: str, jobs: tuple[str, ...], whole: bool) -> boo
 
 def _near(where: str, jobs: tuple[str, ...]) -> bool:
     """Is a job of the same shape named? The two sides of a pair cannot be told apart by the odd part."""
-    return any(label.split("-")[0] + "-" in where for label in jobs)
+    return where == "strain set" or any(label.split("-")[0] + "-" in where for label in jobs)
 
 
 def moved(clean: CleanSet, fit: Fit) -> bool:

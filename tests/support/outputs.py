@@ -73,11 +73,15 @@ def slow_cp2k(name: str) -> dict[str, np.ndarray | float]:
 
 
 def slow_gpaw(name: str) -> dict[str, np.ndarray | float]:
-    """1 eV/A^3 = 160.2176634 GPa (exact since 2019)."""
+    """Both kinds of text; 1 eV/A^3 = 160.2176634 GPa (exact since 2019)."""
     text = content(name).decode()
+    new = "gpaw26" in name
+    stress, forces, skip = ("Stress tensor  # eV/Ang^3", "Forces  # eV/Ang", 2) if new else ("STRESS", "Forces in eV/Ang:", 0)
+    text = text.replace("Stress tensor:\n", "STRESS\n")
+    pulls = _after(text, forces + "\n", skip - 1, 2) if new else _after(text, forces, 0, 2)
     return {
-        "stress": _floats(_after(text.replace("Stress tensor:\n", "STRESS\n"), "STRESS", 0, 3), 0) * 160.2176634,
+        "stress": _floats(_after(text, stress, skip, 3), 0) * 160.2176634,
         "energy": float(re.findall(r"Free energy: +(\S+)", text)[-1]),
-        "forces": _floats(_after(text, "Forces in eV/Ang:", 0, 2), 2),
+        "forces": _floats([row[:3] for row in pulls] if new else [row[2:] for row in pulls], 0),
         "lattice": np.array([[0, 2.7512, 2.7512], [2.7375, 0.0137, 2.7375], [2.7375, 2.7375, 0.0137]]),
     }

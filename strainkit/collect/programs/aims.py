@@ -35,7 +35,7 @@ _SITE = re.compile(rf"\s*\| *\d+: Species (\S+) +({NUMBER}) +({NUMBER}) +({NUMBE
 
 
 def recognises(head: bytes) -> bool:
-    return b"FHI-aims" in head or (b"| Number of atoms " in head and b"| Number of spin channels " in head)
+    return b"Invoking FHI-aims" in head or (b"| Number of atoms " in head and b"| Number of spin channels " in head)
 
 
 def load(source: Source) -> str:

@@ -27,11 +27,7 @@ __all__ = [
 
 END_MARK = re.compile(r"Total time +=")
 BAD_MARKS = (
-    (
-        re.compile(r"SCF cycles performed but system has not reached|electronic minimi[sz]ation.* has not converged"),
-        "unconverged",
-        "electronic steps did not converge",
-    ),
+    (re.compile(r"SCF cycles performed but system has not reached"), "unconverged", "electronic steps did not converge"),
     (re.compile(r"Geometry optimi[sz]ation failed to converge"), "unconverged", "ions not relaxed"),
     (re.compile(r"Starting MD iteration"), "unconverged", "ions moved by dynamics"),
 )
@@ -41,8 +37,8 @@ _SITES = re.compile(r" Fractional coordinates of atoms +x *\n")
 _SITE = re.compile(rf"\s*x +([A-Z][a-z]?)\S* +\d+ +({NUMBER}) +({NUMBER}) +({NUMBER}) +x\s*\Z")
 _STRESS = re.compile(r" Stress Tensor \*+ *\n")
 _FORCES = re.compile(r" Forces \*+ *\n")
-_FREE = re.compile(rf"^ *(?:Dispersion corrected final|Final) free energy \(E-TS\) *= +({NUMBER}) +eV\s*$", re.M)
-_FINAL = re.compile(rf"^ *(?:Dispersion corrected final energy\*?|Final energy(?:, E)?) *= +({NUMBER}) +eV\s*$", re.M)
+_FREE = re.compile(rf"^ *(?:Dispersion corrected final|Final) free energy[^=\n]*= +({NUMBER}) +eV *$", re.M)
+_FINAL = re.compile(rf"^ *(?:Dispersion corrected final|Final) energy[^=\n]*= +({NUMBER}) +eV *$", re.M)
 _PRESSURE = re.compile(rf"\* +Pressure: +({NUMBER}) +\*\s*$", re.M)
 
 

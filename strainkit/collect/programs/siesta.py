@@ -45,7 +45,7 @@ _PRESSURE = re.compile(rf"^siesta: +({NUMBER}) +{NUMBER} +eV/Ang\*\*3\s*$", re.M
 
 
 def recognises(head: bytes) -> bool:
-    return b"Siesta Version" in head or (b"SIESTA" in head and b"redata:" in head)
+    return b"Siesta Version" in head or (b"Executable" in head and b": siesta" in head)
 
 
 def load(source: Source) -> str:

@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from strainkit.collect.returned import Geometry, Stress
+from strainkit.collect.returned import Geometry, Problems, Stress
 from strainkit.collect.source import Source
 from strainkit.collect.text import symmetric
 from strainkit.tensors.arrays import FloatArray
@@ -26,7 +26,7 @@ from strainkit.units import EV_PER_A3_IN_GPA
 if TYPE_CHECKING:
     from ase import Atoms
 
-__all__ = ["atoms_from_copy", "atoms_from_text", "energy", "forces", "geometry", "last_frame", "read_text", "stress"]
+__all__ = ["atoms_from_copy", "atoms_from_text", "doubts", "energy", "forces", "geometry", "last_frame", "read_text", "stress"]
 
 
 #: shape of an array in ASE's JSON and in the headers of its trajectories
@@ -89,12 +89,16 @@ def atoms_from_copy(format: str) -> Callable[[Source], Atoms]:
     def load(source: Source) -> Atoms:
         from ase import Atoms
         from ase.io import read
+        from ase.io.gpw import read_gpw
 
         _check_shapes(source.content)
         with tempfile.TemporaryDirectory(prefix="strainkit-") as folder, warnings.catch_warnings():
             warnings.simplefilter("ignore")
             copy = Path(folder) / f"returned.{format}"
             copy.write_bytes(source.content)
+            if format == "gpw":  # ASE leaves the file open when it cannot be read
+                with copy.open("rb") as file:
+                    return read_gpw(file)
             atoms = read(copy, format=format, index=-1)
         if not isinstance(atoms, Atoms):
             raise ValueError("no structure in it")
@@ -131,7 +135,14 @@ def _full(stress: FloatArray) -> FloatArray:
         xx, yy, zz, yz, xz, xy = stress.ravel()
         return np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]])
     full = stress.reshape(3, 3)
-    return symmetric(full, 1e-5 * float(np.abs(full).max()) + 1e-9) if np.isfinite(full).all() else full
+    return symmetric(full, 1e-4 * float(np.abs(full).max()) + 1e-6) if np.isfinite(full).all() else full
+
+
+def doubts(atoms: Atoms) -> Problems:
+    """The word converged=F of an extended XYZ file."""
+    if bool(atoms.info.get("converged", True)):
+        return ()
+    return (("unconverged", "the ions were not relaxed to the tolerance"),)
 
 
 def energy(atoms: Atoms) -> float | None:
