@@ -72,7 +72,8 @@ def explain(group: Group, start: Attempt, choices: list[Mend]) -> tuple[Attempt,
             best = good[0]
             rivals = [t for t in good[1:] if t.misfit < 3 * best.misfit + 0.01 and _differs(t, best)]
             return best, rivals[:3]
-        frontier = _distinct(tried, WIDTH)
+        # a change of all stresses may help only together with another one
+        frontier = _distinct(tried, WIDTH) + [t for t in tried if depth == 1 and not t.singles]
     return start, []
 
 
