@@ -130,7 +130,7 @@ def _label_contours(axes: Any, lines: Any, room: Room) -> None:
         text = f"{level:.{decimals}f}"
         size = (0.0155 * len(text) + 0.012, 0.037)
         labelled = 0
-        for segment in sorted(path.to_polygons(closed_only=False), key=len, reverse=True):
+        for segment in sorted(_pieces(path), key=len, reverse=True):
             inside = segment[np.hypot(*segment.T) < 0.95]
             if labelled == _LABELS or len(inside) < 6:
                 continue
@@ -140,6 +140,11 @@ def _label_contours(axes: Any, lines: Any, room: Room) -> None:
                 _chip(axes, place, text)
                 room.take(place, size)
                 labelled += 1
+
+
+def _pieces(path: Any) -> list[FloatArray]:
+    """Vertices (k, 2) of each piece of a contour line; matplotlib's own splitting would leave most of them out."""
+    return np.split(path.vertices, np.flatnonzero(path.codes == path.MOVETO)[1:]) if len(path.vertices) else []
 
 
 def level_decimals(levels: FloatArray) -> int:
