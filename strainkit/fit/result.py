@@ -208,6 +208,7 @@ def fit_run(
     drop: tuple[str, ...] = (),
     reading: ReferenceStress = "real",
     constants: FloatArray | None = None,
+    constants_file: str = "",
 ) -> Fit:
     """Fit the stiffness of a run from its stress table.
 
@@ -225,6 +226,8 @@ def fit_run(
         Whether a stress on the reference is real, or an offset of the basis set to be removed.
     constants : (3 n, 3 n), optional
         Force constants at q = 0, eV/A^2, given frame, for the answer of clamped ions, in place of displaced cells.
+    constants_file : str
+        Where those came from, for the record.
 
     Raises
     ------
@@ -245,7 +248,7 @@ def fit_run(
     finer = finer_change(plan, table, regression)
     changes = [] if finer is None else finer.findings(plan.basis.names, regression.values)
     used = tuple(job.label for job in jobs)
-    relaxed, remarks = relax_ions(plan, table, regression, used, constants)
+    relaxed, remarks = relax_ions(plan, table, regression, used, constants, constants_file)
     return Fit(
         plan=plan,
         regression=regression,

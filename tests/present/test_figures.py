@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import re
 import xml.etree.ElementTree as ET
 
 import numpy as np
@@ -116,6 +117,20 @@ def test_marked_poles_are_those_of_planes_and_directions(albite):
     found = {pole.label: pole.place for pole in poles(albite.elastic, Room())}
     for label, vector in expected.items():
         assert unprojected(found[label][None])[0] @ frame @ vector == pytest.approx(np.linalg.norm(vector), rel=1e-9)
+
+
+@pytest.mark.parametrize("name", QUANTITIES)
+def test_every_contour_value_is_written(albite, name):
+    """Of each line that runs through the disc, beside it; at most two values may lack room for it."""
+    axes = projection(albite, name).figure.axes[0]
+    lines = next(c for c in axes.collections if getattr(c, "levels", None) is not None and not c.filled)
+    drawn = {level for level, path in zip(lines.levels, lines.get_paths(), strict=True) if len(path.vertices)}
+    written = {float(t.get_text()): t.get_position() for t in axes.texts if re.fullmatch(r"[\d.]+", t.get_text())}
+    assert set(written) <= drawn
+    assert len(drawn) - len(written) <= 2
+    for level, place in written.items():
+        path = lines.get_paths()[list(lines.levels).index(level)]
+        assert np.hypot(*(path.vertices - place).T).min() == pytest.approx(0, rel=0, abs=1e-9)
 
 
 def test_labels_do_not_overlap(albite):
