@@ -4,6 +4,9 @@ Clean sets of every Laue class with the fewest jobs at 1 %, at 0.5 and 1 %, with
 stress, without and with a reference stress; one and two faults at a time in random places and sizes
 (tests/support/faultbench.py).
 
+"As outlier": the job, its pair or the set is said not to fit, without a reason. "No effect": not seen, and no constant
+moved by its error bar.
+
 Run: python tests/benchmarks/fault_bench.py [SETS PER FAULT AND CLASS] [SEED]
 """
 
@@ -56,13 +59,14 @@ def main() -> None:
                     case = inject(clean, [name, other], rng)
                 for kind, result in zip((name, other), verdict(clean, case), strict=True):
                     double[kind][result] += 1
-    print(
-        "| fault | alone: caught | mislabelled | missed | no effect | with another: caught | mislabelled | missed | no effect |"
-    )
+    heads = ["named", "as outlier", "mislabelled", "missed", "no effect"]
+    print(f"| fault | alone: {' | '.join(heads)} | with another: {' | '.join(heads)} |")
     print("|---|" + "---|" * 10)
     for name in names:
         cells = [str(counts[name][word]) for counts in (single, double) for word in WORDS]
         print(f"| {name} | {' | '.join(cells)} |")
+    totals = [str(sum(counts[name][word] for name in names)) for counts in (single, double) for word in WORDS]
+    print(f"| all | {' | '.join(totals)} |")
     print(f"\nclean sets {clean_count}: {dict(clean_alarms)}")
     for name, counts in missed.items():
         print(f"  {name}: {dict(counts)}")

@@ -212,7 +212,8 @@ def _setting(key: str, *values: object) -> Callable[[Faulty, np.random.Generator
         output = case.outputs[label]
         assert output is not None
         assert output.stress is not None
-        value = values[rng.integers(len(values))]
+        other = [value for value in values if value != output.settings.get(key)]
+        value = other[rng.integers(len(other))]
         if key == "program":
             _change(case, label, program=value)
         elif key == "version":
