@@ -21,7 +21,7 @@ import numpy as np
 sys.path.insert(0, str(Path(__file__).parent.parent))
 
 from support.crystals import conventional
-from support.faultbench import FAULTS, alarms, clean_set, inject, verdict
+from support.faultbench import FAULTS, alarms, clean_set, inject, shift, verdict
 from support.groups import LAUE_CLASSES
 
 from strainkit.prepare.runfolder import plan_run
@@ -49,10 +49,12 @@ def main() -> None:
                 found = alarms(clean)
                 clean_count += 1
                 clean_alarms[" ".join(sorted(set(found))) or "none"] += 1
-                word = verdict(clean, inject(clean, [name], rng))[0]
+                alone = inject(clean, [name], rng)
+                assert alone is not None
+                word = verdict(clean, alone)[0]
                 single[name][word] += 1
                 if word in ("missed", "mislabelled"):
-                    missed[name][f"{laue} {word}"] += 1
+                    missed[name][f"{laue} {word}, constants moved by {100 * shift(clean, alone):.2g} %"] += 1
                 case, other = None, name
                 while case is None:
                     other = str(rng.choice([n for n in names if n != name]))

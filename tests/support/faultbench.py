@@ -513,7 +513,8 @@ def verdict(clean: CleanSet, case: Faulty) -> list[str]:
 
 
 def _places(where: str, message: str, jobs: tuple[str, ...], whole: bool) -> bool:
-    return whole or any(label in where or f"{label}:" in message for label in jobs)
+    named = f"{where} {message}" if where == "strain set" else where
+    return whole or any(label in named or f"{label}:" in message for label in jobs)
 
 
 def _near(where: str, jobs: tuple[str, ...]) -> bool:
@@ -529,6 +530,15 @@ def moved(clean: CleanSet, fit: Fit) -> bool:
         return False
     bars = np.sqrt(np.diag(truth.regression.covariance))
     return bool((np.abs(fit.regression.values - truth.regression.values) > bars).any())
+
+
+def shift(clean: CleanSet, case: Faulty) -> float:
+    """Largest change of a constant, as a part of the largest constant."""
+    fit = fitted(case.plan, collected(case))
+    truth = fitted(clean.plan, collected(Faulty(clean.plan, dict(clean.outputs), clean.clamped)))
+    if fit is None or truth is None:
+        return float("nan")
+    return float(np.nanmax(np.abs(fit.regression.values - truth.regression.values)) / np.abs(truth.regression.values).max())
 
 
 def alarms(clean: CleanSet) -> list[str]:
