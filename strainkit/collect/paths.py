@@ -158,6 +158,8 @@ def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
     rest = next((_second(j, r) for j, r in pairs if not j.shape), None)
     changes = [float(np.linalg.norm(_second(j, r) - (0.0 if rest is None else rest))) for j, r in pairs if j.shape]
     signal = float(np.median(changes)) if changes else 0.0
+    if signal == 0.0:
+        return []
     findings = []
     for job, record in pairs:
         force = float(np.linalg.norm(record.forces))  # type: ignore[arg-type]
