@@ -169,7 +169,7 @@ def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
         if doubt > FORCES_MATTER * signal:
             text = (
                 f"largest force {record.max_force:.2g} eV/A: can put its stress off by {doubt:.2g} GPa "
-                f"(a strain changes it by {signal:.2g}); relax the ions harder"
+                f"(a strain changes it by {signal:.2g}), up to {100 * doubt / signal:.2g} % of the constants; relax it harder"
             )
             findings.append(finding("forces-left", job.label, text))
     return findings
