@@ -5,8 +5,11 @@ The whole job from a notebook::
     crystal = strainkit.read_crystal("cell.cif")
     plan, _ = strainkit.write_run(strainkit.plan_run(crystal, [0.01]), Path("run"))
     strainkit.evaluate_run(Path("run"), plan, strainkit.Engine("gfn1-xtb"))
-    fit = strainkit.fit_run(plan, strainkit.collect_run(Path("run"), plan))
+    table = strainkit.collect_run(Path("run"), plan)
+    fit = strainkit.fit_run(plan, table)
+    report = strainkit.report_run(plan, table, fit)  # shows itself in a notebook; report.figures, report.tables, report.save
     fit.stiffness, strainkit.averages(fit.effective), strainkit.derive_properties(fit, planes=[(0, 0, 1)])
+    strainkit.comparison_page(strainkit.compare_crystals([fit, other_fit])).tables["moduli"]
 """
 
 from __future__ import annotations
@@ -20,6 +23,7 @@ if TYPE_CHECKING:
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import find_symmetry
     from strainkit.derive.averages import averages
+    from strainkit.derive.comparison import compare_crystals
     from strainkit.derive.derived import derive_properties
     from strainkit.errors import StrainkitError
     from strainkit.evaluate.engines import Engine
@@ -28,6 +32,8 @@ if TYPE_CHECKING:
     from strainkit.findings import Finding
     from strainkit.fit.result import fit_run
     from strainkit.prepare.runfolder import plan_run, write_run
+    from strainkit.present.comparison_page import comparison_page
+    from strainkit.present.report import report_run
     from strainkit.run.plan import load_plan
     from strainkit.tensors.stiffness import Stiffness
 
@@ -41,6 +47,8 @@ __all__ = [
     "StrainkitError",
     "averages",
     "collect_run",
+    "compare_crystals",
+    "comparison_page",
     "derive_properties",
     "evaluate_run",
     "find_symmetry",
@@ -49,6 +57,7 @@ __all__ = [
     "plan_run",
     "read_crystal",
     "relax_reference",
+    "report_run",
     "write_run",
 ]
 
@@ -60,6 +69,8 @@ _HOME = {
     "StrainkitError": "errors",
     "averages": "derive.averages",
     "collect_run": "collect.gather",
+    "compare_crystals": "derive.comparison",
+    "comparison_page": "present.comparison_page",
     "derive_properties": "derive.derived",
     "evaluate_run": "evaluate.runset",
     "find_symmetry": "crystal.symmetry",
@@ -68,6 +79,7 @@ _HOME = {
     "plan_run": "prepare.runfolder",
     "read_crystal": "crystal.read",
     "relax_reference": "evaluate.reference",
+    "report_run": "present.report",
     "write_run": "prepare.runfolder",
 }
 

@@ -106,6 +106,9 @@ CODES: dict[str, tuple[Severity, str]] = {
     "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
     # the comparison
     "temperatures-differ": ("warning", "values of different temperatures, or static and measured ones, are compared"),
+    "clamped-compared": ("warning", "constants of clamped ions, without the answer of the ions, are compared"),
+    "methods-differ": ("info", "runs of different programs or settings are compared"),
+    "rough-errors": ("info", "errors above a fifth of the value: tests and probabilities are rough"),
     "no-test": ("info", "a tensor without errors takes no part in tests and probabilities"),
     "settings-unverified": ("warning", "energies are subtracted whose settings are not recorded, or may differ in sampling"),
 }

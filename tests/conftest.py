@@ -70,6 +70,6 @@ def pytest_collection_modifyitems(config, items):
     if config.option.markexpr:
         return
     for item in items:
-        for name in ("slow", "engine"):
+        for name in ("slow", "engine", "browser"):
             if item.get_closest_marker(name):
                 item.add_marker(pytest.mark.skip(reason=f"run by .ci/run, or with: pytest -m {name}"))

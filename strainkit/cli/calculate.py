@@ -37,6 +37,6 @@ def check_calculation(deck: str | None, settings: list[Path] | None, kspacing: f
     if scheduler is not None:
         check_scheduler(scheduler)
     if deck is None:
-        for option, given in (("--scheduler", scheduler), ("--settings", settings), ("--kspacing", kspacing)):
+        for option, given in (("--scheduler", scheduler), ("--settings", settings)):
             if given is not None:
                 raise UsageError("needs an input deck", option, "Name one with --deck.")

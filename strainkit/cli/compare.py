@@ -7,14 +7,14 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from strainkit.cli.options import Json, Quiet, Symprec, deliver, note
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, deliver, note
 
 if TYPE_CHECKING:
     from strainkit.derive.member import Member
 
 Crystals = Annotated[
     list[str] | None,
-    typer.Argument(metavar="RUN...", help="Run folders, and files with typed tensors: FILE, or FILE:CELL with its structure."),
+    typer.Argument(metavar="RUN...", help="Run or campaign folders, and typed tensors: FILE, or FILE:CELL with its structure."),
 ]
 By = Annotated[
     str,
@@ -33,34 +33,49 @@ def compare(
     baseline: Baseline = None,
     csv: Csv = None,
     html: Html = None,
+    read_as: ReadAs = None,
     symprec: Symprec = 1e-3,
+    force: Annotated[bool, typer.Option("--force", help="Replace files that strainkit did not write.")] = False,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
     """Crystals side by side: what differs beyond the error bars, which ranking is right, what forms from what."""
-    from strainkit.derive.comparison import compare_crystals
+    from strainkit.derive.comparison import MOST, compare_crystals
     from strainkit.errors import UsageError
     from strainkit.present.comparison import comparison_text
-    from strainkit.present.comparison_csv import comparison_csv
-    from strainkit.run.files import atomic_write
+    from strainkit.present.comparison_csv import save_csv
 
-    if len(crystals or []) < 2:
+    places = [place for text in crystals or [] for place in _places(text)]
+    if len(places) < 2:
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
-    result = compare_crystals([_member(text, symprec) for text in crystals or []], by, baseline)
+    if len(places) > MOST:
+        raise UsageError(f"{len(places)} crystals are too many to set side by side", "compare", f"Choose at most {MOST}.")
+    result = compare_crystals([_member(place, read_as, symprec) for place in places], by, baseline)
     if csv is not None:
-        atomic_write(csv, comparison_csv(result))
+        save_csv(result, csv, force)
         note(f"wrote {csv}", quiet)
     if html is not None:
         from strainkit.present.comparison_page import comparison_page
+        from strainkit.present.report import save_own
+        from strainkit.present.report_page import render
 
-        atomic_write(html, comparison_page(result))
+        save_own(html, render(comparison_page(result)).encode(), force)
         note(f"wrote {html}", quiet)
     deliver(result.to_dict, lambda: comparison_text(result), json)
     if any(m.moduli is None for m in result.members):
         raise typer.Exit(5)
 
 
-def _member(text: str, symprec: float) -> Member:
+def _places(text: str) -> list[str]:
+    """The run folders of a campaign, or the one place."""
+    from strainkit.run.campaign import is_campaign, load_campaign
+
+    if not is_campaign(Path(text)):
+        return [text]
+    return [str(Path(text) / member.run) for member in load_campaign(Path(text)).members]
+
+
+def _member(text: str, read_as: str | None, symprec: float) -> Member:
     """A run folder, a tensor file, or FILE:CELL."""
     from strainkit.cli.load import fitted_as_saved
     from strainkit.collect.table import load_table
@@ -74,6 +89,6 @@ def _member(text: str, symprec: float) -> Member:
         return member_of_file(read_tensor(path))
     file, separator, cell = text.rpartition(":")
     if separator and not path.exists() and Path(file).is_file():
-        crystal = read_crystal(Path(cell))
+        crystal = read_crystal(Path(cell), read_as)
         return member_of_file(read_tensor(file), crystal, find_symmetry(crystal, symprec))
     return member_of_fit(fitted_as_saved(path), load_table(path), path)

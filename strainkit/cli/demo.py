@@ -77,7 +77,7 @@ def demo(
         else:
             lines += ["", paragraph("Install strainkit[xtb] to see two molecular crystals on a tight-binding engine.")]
         doubts = [f for fit in fits.values() for f in fit.findings if f.severity != "info"]
-        lines += ["", paragraph(BLIND_SPOT), "", findings_text(doubts), f"Everything is in {out}/ to look at."]
+        lines += ["", paragraph(BLIND_SPOT), "", f"Everything is in {out}/ to look at.", "", findings_text(doubts)]
         return "\n".join(lines)
 
     deliver(lambda: {"schema": "strainkit/demo/1", "fits": results, "published_GPa": PUBLISHED}, text, json)

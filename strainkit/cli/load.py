@@ -36,17 +36,17 @@ def fitted(
     _check(noise, frame)
     plan = load_plan(run)
     _check_labels(plan, drop)
-    matrix = None
+    matrix, file = None, ""
     if constants is not None and plan.ions == "clamped":
         from strainkit.dynamics.phonons import gamma_constants, load_phonopy
 
-        matrix = gamma_constants(load_phonopy(constants), plan.crystal)
+        matrix, file = gamma_constants(load_phonopy(constants), plan.crystal), str(constants.resolve())
     table = load_table(run, ions=plan.ions == "clamped")
-    return fit_run(plan, table, order, noise, tuple(drop or ()), reading, matrix)
+    return fit_run(plan, table, order, noise, tuple(drop or ()), reading, matrix, file)
 
 
 def fitted_as_saved(run: Path) -> Fit:
-    """Fit a run as `strainkit fit` last did: its order, dropped jobs, known noise and reading of the reference stress."""
+    """Fit a run as `strainkit fit` last did: order, dropped jobs, noise, reading of the reference stress, force constants."""
     from strainkit.fit.result import FITTED
     from strainkit.run.files import load_json
 
@@ -55,7 +55,9 @@ def fitted_as_saved(run: Path) -> Fit:
     saved = load_json(run / FITTED, "strainkit/stiffness")
     known = saved.get("noise_GPa") if saved.get("degrees_of_freedom") is None else None
     reading = saved.get("reference_stress_reading", "real")
-    return fitted(run, saved.get("order", "linear"), known, list(saved.get("jobs_dropped") or []), "ieee", reading)
+    file = (saved.get("relaxed_ion") or {}).get("force_constants_file")
+    constants = None if file is None else Path(file)
+    return fitted(run, saved.get("order", "linear"), known, list(saved.get("jobs_dropped") or []), "ieee", reading, constants)
 
 
 def fit_options(

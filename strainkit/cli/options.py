@@ -41,10 +41,11 @@ Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress b
 
 def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json: bool) -> None:
     """Print a result to standard output, as JSON or as text; a reader that closes the pipe early is no error."""
+    from strainkit.present.text import printable
     from strainkit.run.files import dump_json
 
     try:
-        sys.stdout.write(dump_json(data()) if as_json else text() + "\n")
+        sys.stdout.write(printable(dump_json(data()) if as_json else text() + "\n", as_json))
         sys.stdout.flush()
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
@@ -53,8 +54,10 @@ def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json
 
 def note(text: str, quiet: bool) -> None:
     """A remark on standard error."""
+    from strainkit.present.text import printable
+
     if not quiet:
-        typer.echo(text, err=True)
+        typer.echo(printable(text), err=True)
 
 
 @contextmanager
@@ -64,12 +67,15 @@ def progress(title: str, quiet: bool) -> Iterator[Callable[[int, int, str], None
         yield lambda finished, total, label: None
         return
     from rich.console import Console
+    from rich.markup import escape
     from rich.progress import Progress
+
+    from strainkit.present.text import printable
 
     with Progress(console=Console(stderr=True), transient=True) as bar:
         task = bar.add_task(title, total=None)
 
         def update(finished: int, total: int, label: str) -> None:
-            bar.update(task, completed=finished, total=total, description=f"{title} {label}")
+            bar.update(task, completed=finished, total=total, description=escape(printable(f"{title} {label}")))
 
         yield update

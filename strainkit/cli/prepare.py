@@ -3,15 +3,11 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Literal
+from typing import Annotated, Literal
 
 import typer
 
 from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver, note
-
-if TYPE_CHECKING:
-    from strainkit.run.plan import Plan
-    from strainkit.tensors.arrays import FloatArray
 
 Aim = Annotated[
     Literal["fewest", "symmetric", "sharpest"],
@@ -51,6 +47,9 @@ def prepare(
     ] = None,
     ceiling: Annotated[float, typer.Option(help="Largest strain that --target-error may choose, percent.")] = 2.0,
     noise: Noise = 0.01,
+    guess: Annotated[
+        Path | None, typer.Option(help="Tensor file as for derive --tensor: expected errors of K and G are Hill's at it.")
+    ] = None,
     extend: Annotated[
         Path | None, typer.Option(help="Add jobs to this run folder: with --magnitude, or with --more N.")
     ] = None,
@@ -97,7 +96,10 @@ def prepare(
 ) -> None:
     """Strained cells for relaxed crystals: the fewest jobs that fix every constant."""
     from strainkit.cli.calculate import check_calculation, chosen_calculation
+    from strainkit.cli.known import adopted, guessed, keep, predicted
+    from strainkit.crystal.kpoints import kpoint_mesh
     from strainkit.crystal.read import read_crystal
+    from strainkit.design.cost import job_costs, with_costs
     from strainkit.design.strainset import Wish
     from strainkit.errors import UsageError
     from strainkit.prepare.cells import is_one_cell
@@ -124,10 +126,11 @@ def prepare(
     if out is None and not dry_run:
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
-    moved = displaced and ions == "clamped"
+    with_displaced = displaced and ions == "clamped"
     if campaign or not is_one_cell(cell):
-        if force_constants is not None:
-            raise UsageError("force constants belong to one crystal", "--force-constants", "Prepare that crystal alone.")
+        for option, given in (("--force-constants", force_constants), ("--adopt", adopt), ("--guess", guess)):
+            if given is not None:
+                raise UsageError("this belongs to one crystal", option, "Prepare that crystal alone.")
         from strainkit.cli.prepare_campaign import prepare_campaign
         from strainkit.prepare.campaign import Recipe
         from strainkit.prepare.settings import read_settings
@@ -135,17 +138,21 @@ def prepare(
         check_calculation(deck, settings, kspacing, scheduler)
         chosen = read_settings(settings or [])
         formats = None if format is None else tuple(format)
-        recipe = Recipe(wish, ions, symprec, atoms, symmetrize, moved, formats, deck, chosen, kspacing, scheduler, read_as)
+        recipe = Recipe(
+            wish, ions, symprec, atoms, symmetrize, with_displaced, formats, deck, chosen, kspacing, scheduler, read_as
+        )
         prepare_campaign(cell, out, recipe, workers, dry_run, force, yes, json, quiet)
         return
-    plan = plan_run(read_crystal(cell[0], read_as), wish, ions, symprec, atoms, symmetrize, displaced=moved)
+    crystal = read_crystal(cell[0], read_as)
+    known = None if guess is None else guessed(guess, crystal, symprec)
+    plan = plan_run(crystal, wish, ions, symprec, atoms, symmetrize, displaced=with_displaced, guess=known)
     if force_constants is not None:
         if ions == "clamped":
             raise UsageError("clamped ions do not move", "--force-constants", "Give the file to strainkit fit afterwards.")
-        plan = _predicted(plan, force_constants)
+        plan = predicted(plan, force_constants)
     found: list[tuple[str, Path]] = []
     if adopt is not None:
-        plan, found = _adopted(plan, adopt, quiet)
+        plan, found = adopted(plan, adopt, quiet)
     calculation = chosen_calculation(deck, plan, settings, kspacing, scheduler, symprec)
     if out is None or dry_run:
         plan, _ = plan_with_files(plan, format, calculation, scheduler)
@@ -153,60 +160,12 @@ def prepare(
         plan, what = write_run(plan, out, format, force, calculation, scheduler)
         note(f"{out}: {what}", quiet)
         for label, path in found:
-            _keep(path, out / job_folder(label))
-    deliver(plan.to_dict, lambda: plan_text(plan, out), json)
-
-
-def _adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str, Path]]]:
-    """The plan around finished calculations, and label and file of each."""
-    import numpy as np
-
-    from strainkit.collect.adopt import find_strained
-    from strainkit.design.extend import adopted_jobs
-    from strainkit.errors import InputError
-    from strainkit.prepare.extend import adopt_jobs
-
-    found, refused = find_strained(plan.crystal, folder)
-    for line in refused:
-        note(f"not adopted: {line}", quiet)
-    if not found:
-        raise InputError("no finished calculation of this cell in it", folder, "Their lattice must be strained by under 10 %.")
-    jobs = adopted_jobs(np.array([one.gradient for one in found]), plan.symmetry)
-    longer = adopt_jobs(plan, jobs)
-    used = {job.label for job in longer.jobs}
-    files = [(job.label, one.path) for job, one in zip(jobs, found, strict=True) if job.label in used]
-    note(f"adopted {len(files)} calculations; {len(longer.jobs) - len(files)} jobs are left to compute", quiet)
-    return longer, files
-
-
-def _keep(path: Path, folder: Path) -> None:
-    """Copy a finished output into its job folder; the original stays where it is."""
-    from strainkit.run.files import atomic_write
-
-    if not (folder / path.name).exists():
-        atomic_write(folder / path.name, path.read_bytes())
-
-
-def _moved(run: Path) -> dict[str, FloatArray]:
-    """Displacements of the ions in the jobs that have been collected, by label."""
-    from strainkit.collect.table import TABLE, load_table
-
-    if not (run / TABLE).is_file():
-        return {}
-    return {r.label: r.displacements for r in load_table(run, ions=True).usable if r.displacements is not None}
-
-
-def _predicted(plan: Plan, path: Path) -> Plan:
-    """The plan with starting positions from force constants."""
-    from dataclasses import replace
-
-    from strainkit.dynamics.internal import internal_strain
-    from strainkit.dynamics.phonons import gamma_constants, load_phonopy, strain_response
-    from strainkit.prepare.starts import predicted_starts
-
-    study = load_phonopy(path)
-    answer = internal_strain(plan.crystal, gamma_constants(study, plan.crystal), strain_response(study, plan.crystal))
-    return replace(plan, starts=predicted_starts(plan, plan.strain_set, answer.displacements))
+            keep(path, out / job_folder(label))
+    mesh = (
+        tuple(plan.calculation["kmesh"]) if plan.calculation else None if kspacing is None else kpoint_mesh(crystal, kspacing)
+    )
+    costs = job_costs(plan.jobs, plan.crystal, plan.symmetry, mesh)
+    deliver(lambda: with_costs(plan.to_dict(), costs), lambda: plan_text(plan, out, costs), json)
 
 
 def _extend(
@@ -219,6 +178,7 @@ def _extend(
     json: bool,
     quiet: bool,
 ) -> None:
+    from strainkit.cli.known import moved
     from strainkit.design.extend import at_magnitudes, more_jobs
     from strainkit.prepare.extend import at_finer_settings, extend_plan, write_extension
     from strainkit.prepare.settings import read_settings
@@ -226,18 +186,18 @@ def _extend(
     from strainkit.run.plan import load_plan
 
     old = load_plan(run)
-    moved = _moved(run)
+    taught = moved(run)
     if finer is not None:
-        plan = at_finer_settings(old, read_settings([finer]), moved)
+        plan = at_finer_settings(old, read_settings([finer]), taught)
     elif more is None:
-        plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry), moved)
+        plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry), taught)
     else:
-        plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry), moved)
+        plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry), taught)
     if not dry_run:
         plan = write_extension(run, old, plan, formats)
         note(f"{run}: {len(plan.jobs) - len(old.jobs)} more job folders", quiet)
         if learned := len(plan.starts) - len(old.starts):
-            note(f"{learned} of them start from what the ions did in the {len(moved)} jobs collected", quiet)
+            note(f"{learned} of them start from what the ions did in the {len(taught)} jobs collected", quiet)
         if "scheduler" in plan.calculation:
             note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
     deliver(plan.to_dict, lambda: plan_text(plan), json)

@@ -26,7 +26,10 @@ LARGEST_DRIFT = 0.15
 #: atoms closer to their planned sites than this (A) are where they belong without looking further
 CLOSE = 0.25
 #: in another basis or order, atoms farther than this (A) from their planned sites are not the planned crystal
-FAR = 1.0
+FAR = 0.5
+
+
+_ONE, _SAME = np.eye(3), np.eye(3, dtype=np.int64)
 
 
 class MismatchError(InputError):
@@ -76,36 +79,33 @@ def strain_tolerance(lattice: FloatArray, precision: float) -> float:
     return max(LEAST_TOLERANCE, 3.0 * precision / float(heights.min()))
 
 
-def match(planned: Crystal, returned: Returned) -> Match:
+def match(crystal: Crystal, returned: Returned, gradient: FloatArray | None = None) -> Match:
     """Place a returned structure in the planned one.
 
     Parameters
     ----------
-    planned : Crystal
-        The strained cell, its atoms moved affinely.
+    crystal : Crystal
+        The planned cell or, with a gradient, the reference cell.
     returned : Returned
+    gradient : (3, 3), optional
+        Deformation gradient that makes the planned cell of the reference cell, its atoms moved affinely.
 
     Raises
     ------
     MismatchError
         Another composition, cell or arrangement of atoms; the message says which, and by how much the cell drifted.
     """
-    if len(returned.numbers) != len(planned.numbers):
-        raise MismatchError(f"{len(returned.numbers)} atoms instead of {len(planned.numbers)}")
-    same_order = np.array_equal(returned.numbers, planned.numbers)
-    if not same_order and sorted(returned.numbers) != sorted(planned.numbers):
-        raise MismatchError(f"another composition than planned: {_formula(returned.numbers)} instead of {planned.formula}")
+    if len(returned.numbers) != len(crystal.numbers):
+        raise MismatchError(f"{len(returned.numbers)} atoms instead of {len(crystal.numbers)}")
+    same_order = np.array_equal(returned.numbers, crystal.numbers)
+    if not same_order and sorted(returned.numbers) != sorted(crystal.numbers):
+        raise MismatchError(f"another composition than planned: {_formula(returned.numbers)} instead of {crystal.formula}")
+    lattice = crystal.lattice if gradient is None else crystal.lattice @ gradient.T
+    plain = _plain(lattice, crystal.positions, returned) if same_order else None
+    if plain is not None and plain.farthest <= CLOSE:
+        return plain
+    planned = crystal if gradient is None else crystal.deformed(gradient)
     tolerance = strain_tolerance(planned.lattice, returned.lattice_precision)
-    gradient = gradient_between(planned.lattice, returned.lattice)
-    plain = None
-    if np.linalg.det(gradient) > 0:
-        rotation, stretch = polar(gradient)
-        drift = float(np.abs(stretch - np.eye(3)).max())
-        if drift <= tolerance and same_order:
-            moved = _moves(planned, returned.positions)
-            plain = Match(rotation, np.arange(len(moved)), np.eye(3, dtype=np.int64), moved, drift)
-            if plain.farthest <= CLOSE:
-                return plain
     best = _search(planned, returned, tolerance)
     if best is not None and (plain is None or best.farthest < 0.5 * plain.farthest):
         return best
@@ -114,19 +114,32 @@ def match(planned: Crystal, returned: Returned) -> Match:
     raise _reason(planned, returned, tolerance)
 
 
+def _plain(lattice: FloatArray, positions: FloatArray, returned: Returned) -> Match | None:
+    """The match in the planned basis and order; None when the cell is not the planned one in this basis."""
+    turned = gradient_between(lattice, returned.lattice)
+    drift = 0.5 * float(np.abs(turned.T @ turned - _ONE).max())
+    if drift > LEAST_TOLERANCE and drift > strain_tolerance(lattice, returned.lattice_precision):
+        return None
+    rotation = polar(turned)[0] if drift > 1e-9 else turned
+    if np.linalg.det(rotation) < 0:
+        return None
+    moved = _moves(lattice, positions, returned.positions)
+    return Match(rotation, np.arange(len(moved)), _SAME, moved, drift)
+
+
 def _formula(numbers: IntArray) -> str:
     from ase.data import chemical_symbols
 
     return formula_of([chemical_symbols[n] for n in numbers])
 
 
-def _moves(planned: Crystal, fractions: FloatArray) -> FloatArray:
+def _moves(lattice: FloatArray, positions: FloatArray, fractions: FloatArray) -> FloatArray:
     """Way of each atom (n, 3), A, mean removed, from fractional coordinates (n, 3) in the planned basis and order."""
-    shift = fractions - planned.positions
+    shift = fractions - positions
     shift -= np.round(shift)
     # a whole cell shifted near half a lattice vector wraps differently for different atoms: centre on the first atom
     shift -= np.round(shift - shift[0])
-    return np.asarray((shift - shift.mean(axis=0)) @ planned.lattice)
+    return np.asarray((shift - shift.mean(axis=0)) @ lattice)
 
 
 def _search(planned: Crystal, returned: Returned, tolerance: float) -> Match | None:
@@ -135,7 +148,7 @@ def _search(planned: Crystal, returned: Returned, tolerance: float) -> Match | N
     for basis, rotation, drift in _bases(planned.lattice, returned.lattice, tolerance):
         fractions = returned.positions @ basis
         for order in _orders(planned, fractions, returned.numbers):
-            moved = _moves(planned, fractions[order])
+            moved = _moves(planned.lattice, planned.positions, fractions[order])
             found = Match(rotation, order, basis, moved, drift)
             if found.farthest <= FAR and (best is None or found.farthest < best.farthest - 1e-3):
                 best = found

@@ -24,7 +24,7 @@ JUMP, JUMP_SPREAD, JUMP_EV = 0.5, 6.0, 1e-4
 #: ions are elsewhere when they move this far (A), and so many times farther per strain than in the other jobs
 ELSEWHERE_A, ELSEWHERE = 0.15, 4.0
 #: left-over forces matter when they can put the stress off by this part of its change under strain
-FORCES_MATTER = 0.1
+FORCES_MATTER = 0.05
 #: force constant (eV/A^2) of an ion that has not moved at all: common practice, no source
 _SPRING = 10.0
 
@@ -83,6 +83,9 @@ def energy_jumps(plan: Plan, done: Done) -> list[Finding]:
         return []
     off = np.array([sum(found[x][0] - found[x][1] for x in labels) for labels in groups])
     size = np.array([sum(abs(found[x][1]) for x in labels) for labels in groups])
+    # a small work may be the noise of its stress: weigh by what is usual at that strain
+    strain = np.array([len(labels) * found[labels[0]][2].magnitude ** 2 for labels in groups])
+    size = np.maximum(size, strain * np.median(size / strain))
     part = off / np.maximum(size, 1e-12)
     middle = float(np.median(part))
     spread = float(np.median(np.abs(part - middle)))

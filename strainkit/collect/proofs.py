@@ -9,7 +9,8 @@ A factor common to all stresses leaves no misfit; energies of the same jobs show
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -21,7 +22,9 @@ from strainkit.design.model import LinearModel, build_model
 from strainkit.findings import Finding, finding
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
+from strainkit.tensors.leastsquares import factorise
+from strainkit.tensors.sixvectors import from_mandel, stress_from_voigt, stress_to_voigt, to_mandel
+from strainkit.tensors.strain import pk2_from_cauchy
 
 __all__ = ["prove"]
 
@@ -30,9 +33,13 @@ WEIGHT = 0.01
 #: even response at the largest strain: this part of the typical stress, or this many times the strain
 EVEN, EVEN_PER_STRAIN = 0.2, 20.0
 #: a change must take the misfit (root of the sum of squares) down to this part of it, and to this part of the typical stress
-PART, CLEAN = 0.2, 0.15
-#: misfit below this part of the typical stress is not looked into
-NOTABLE = 0.03
+PART, CLEAN = 0.35, 0.15
+#: a single stress that is changed must be so many times larger than what is left per job
+LOUD = 5.0
+#: how often a set of mere noise may be explained by chance
+CHANCE = 0.02
+#: misfit below this part of the typical stress is not looked into; below the second not for two faults at a time
+NOTABLE, NOTABLE_TWICE = 0.003, 0.03
 #: jobs beyond which single jobs are not tried, and beyond which nothing is
 MANY, TOO_MANY = 150, 600
 #: faults at one time, and partial explanations that are followed
@@ -53,6 +60,7 @@ class _Set:
     basis: FloatArray
     signal: float
     rest: int | None
+    spare: int
 
     @classmethod
     def of(cls, plan: Plan, pairs: list[tuple[StrainJob, StressRecord]]) -> _Set:
@@ -62,7 +70,7 @@ class _Set:
         to_second = _to_second(gradients)
         model = build_model(np.array([job.strain for job in jobs]), plan.symmetry.rotations, plan.basis.matrices)
         second = np.einsum("jab,jb->ja", to_second, cauchy)
-        signal = _typical(second)
+        signal = float(_typical(second))
         largest = float(np.abs(model.signed_magnitudes).max())
         width = model.matrix.shape[1]
         even = np.arange(width)[model.even]
@@ -72,41 +80,42 @@ class _Set:
         u, s, _ = np.linalg.svd(stacked / np.maximum(np.linalg.norm(stacked, axis=0), 1e-300), full_matrices=False)
         basis = u[: len(model.matrix), s > 1e-9 * s[0]]
         rest = next((i for i, job in enumerate(jobs) if not job.shape), None)
-        return cls(records, jobs, cauchy, to_second, model, basis, signal, rest)
+        spare = 6 * len(jobs) - factorise(model.matrix).rank
+        return cls(records, jobs, cauchy, to_second, model, basis, signal, rest, spare)
 
-    def misfit(self, cauchy: FloatArray) -> float:
-        """Root of the sum of squares of all that does not fit, in units of the typical stress."""
-        second = np.einsum("jab,jb->ja", self.to_second, cauchy)
-        rows = self.model.rows(second)
-        left = float(rows @ rows) - float(((rows @ self.basis) ** 2).sum())
-        outside = float((second**2).sum() - rows @ rows)  # components that symmetry forbids
-        at_rest = second[self.rest] if self.rest is not None else second.mean(axis=0)
-        strains = self.strains
-        sizes = np.linalg.norm(strains, axis=1)
-        work = np.einsum("ja,ja->j", strains, second - at_rest) / np.where(sizes > 0, sizes, 1.0)
-        negative = float((np.minimum(work, 0.0) ** 2).sum())
+    def misfits(self, cauchy: FloatArray) -> FloatArray:
+        """Roots (k,) of the sums of squares of all that does not fit in sets (k, jobs, 6), in units of the typical stress."""
+        second = np.einsum("jab,kjb->kja", self.to_second, cauchy)
+        rows = np.concatenate([second[:, j] @ p for j, p in enumerate(self.model.projections)], axis=1)
+        allowed = (rows**2).sum(axis=1)
+        left = allowed - ((rows @ self.basis) ** 2).sum(axis=1)
+        outside = (second**2).sum(axis=(1, 2)) - allowed  # components that symmetry forbids
+        at_rest = second[:, self.rest] if self.rest is not None else second.mean(axis=1)
+        work = np.einsum("ja,kja->kj", self.directions, second - at_rest[:, None])
+        negative = (np.minimum(work, 0.0) ** 2).sum(axis=1)
         # stresses made small do not fit better, and large ones do not make the others small
-        typical = min(self.signal, _typical(second))
-        return float(np.sqrt(max(left, 0.0) + max(outside, 0.0) + negative)) / typical
+        typical = np.minimum(self.signal, _typical(second))
+        return np.asarray(np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical)
 
-    @property
-    def strains(self) -> FloatArray:
-        return to_mandel(np.array([job.strain for job in self.jobs]))
+    @cached_property
+    def directions(self) -> FloatArray:
+        """Strains (jobs, 6), Mandel, of length one; zero at rest."""
+        strains = to_mandel(np.array([job.strain for job in self.jobs]))
+        sizes = np.linalg.norm(strains, axis=1, keepdims=True)
+        return np.asarray(strains / np.where(sizes > 0, sizes, 1.0))
 
 
 def _to_second(gradients: FloatArray) -> FloatArray:
     """Matrices (jobs, 6, 6) from Cauchy to second Piola-Kirchhoff stress, both Mandel."""
-    from strainkit.tensors.sixvectors import from_mandel
-    from strainkit.tensors.strain import pk2_from_cauchy
-
     units = from_mandel(np.eye(6))
     return np.array([to_mandel(pk2_from_cauchy(units, np.broadcast_to(f, (6, 3, 3)))).T for f in gradients])
 
 
-def _typical(second: FloatArray) -> float:
-    """Typical change of stress (norm, GPa) of a set, whatever single jobs do."""
-    apart = np.linalg.norm(second - np.median(second, axis=0), axis=1)
-    return max(float(np.median(apart[apart > 0])) if (apart > 0).any() else 0.0, 1e-9)
+def _typical(second: FloatArray) -> FloatArray:
+    """Typical change of stress (norm, GPa) of sets (..., jobs, 6), whatever single jobs do; the unstrained job counts not."""
+    apart = np.linalg.norm(second - np.median(second, axis=-2, keepdims=True), axis=-1)
+    middle = np.nanmedian(np.where(apart > 0, apart, np.nan), axis=-1)
+    return np.asarray(np.maximum(np.nan_to_num(middle), 1e-9))
 
 
 @dataclass(frozen=True)
@@ -125,7 +134,7 @@ def prove(plan: Plan, done: Sequence[tuple[StrainJob, StressRecord]]) -> list[Re
     if strained < 2 or len(pairs) > TOO_MANY:
         return []
     group = _Set.of(plan, pairs)
-    start = _Try((), group.cauchy, group.misfit(group.cauchy))
+    start = _Try((), group.cauchy, float(group.misfits(group.cauchy[None])[0]))
     best = start
     found: list[Refused] = []
     if start.misfit > NOTABLE * len(pairs) ** 0.5:
@@ -133,22 +142,21 @@ def prove(plan: Plan, done: Sequence[tuple[StrainJob, StressRecord]]) -> list[Re
             group, start, mends(group.records, np.array([plan.crystal.lattice @ j.gradient.T for j in group.jobs]))
         )
         found = _report(group, start, best, rivals)
-    return found or _by_energy(plan, group)
+    return found + _by_energy(plan, group, best.cauchy)
 
 
 def _search(group: _Set, start: _Try, choices: list[Mend]) -> tuple[_Try, list[_Try]]:
     """The fewest changes that take the misfit away, and others that do it as well; the start when none does."""
     places: list[int | None] = [None, *(range(len(group.jobs)) if len(group.jobs) <= MANY else ())]
     frontier = [start]
-    for _ in range(DEEPEST):
-        tried: list[_Try] = []
-        for base in frontier:
-            for mend in choices:
-                # a factor common to all stresses leaves the misfit as it is
-                fitting = places[1:] if mend.code == "stress-unit" else places
-                tried += [_apply(group, base, place, mend) for place in fitting]
+    deepest = DEEPEST if start.misfit > NOTABLE_TWICE * len(group.jobs) ** 0.5 else 1
+    for depth in range(1, deepest + 1):
+        tried = [new for base in frontier for new in _changed(group, base, places, choices)]
         tried.sort(key=lambda t: (t.misfit, t.steps[-1][0] is not None))
-        good = [t for t in tried if _explains(start, t, len(group.jobs))]
+        # in so many tries, a vector of so many random components becomes so short by chance
+        lucky = (CHANCE / len(places) / len(choices)) ** (depth / max(group.spare, 1))
+        need = min(PART, lucky) * start.misfit
+        good = [t for t in tried if t.misfit < need and t.misfit < CLEAN * len(group.jobs) ** 0.5 and _tells(group, t)]
         if good:
             best = good[0]
             rivals = [t for t in good[1:] if t.misfit < 3 * best.misfit + 0.01 and _differs(t, best)]
@@ -157,8 +165,10 @@ def _search(group: _Set, start: _Try, choices: list[Mend]) -> tuple[_Try, list[_
     return start, []
 
 
-def _explains(start: _Try, found: _Try, jobs: int) -> bool:
-    return found.misfit < PART * start.misfit and found.misfit < CLEAN * jobs**0.5
+def _tells(group: _Set, found: _Try) -> bool:
+    """Are the changed stresses more than noise? Making a stress of noise smaller always helps."""
+    noise = found.misfit * group.signal / len(group.jobs) ** 0.5
+    return all(np.linalg.norm(found.cauchy[place]) > LOUD * noise for place, _ in found.steps if place is not None)
 
 
 def _differs(one: _Try, other: _Try) -> bool:
@@ -175,13 +185,23 @@ def _distinct(tried: list[_Try], most: int) -> list[_Try]:
     return kept
 
 
-def _apply(group: _Set, base: _Try, place: int | None, mend: Mend) -> _Try:
-    if place is None:
-        cauchy = np.einsum("jab,jb->ja", mend.matrices, base.cauchy)
-    else:
-        cauchy = base.cauchy.copy()
-        cauchy[place] = mend.matrices[place] @ cauchy[place]
-    return _Try((*base.steps, (place, mend)), cauchy, group.misfit(cauchy))
+def _changed(group: _Set, base: _Try, places: list[int | None], choices: list[Mend]) -> list[_Try]:
+    """One more change to a set, each in each place."""
+    steps, sets = [], []
+    for mend in choices:
+        # a factor common to all stresses leaves the misfit as it is
+        for place in places[1:] if mend.code == "stress-unit" else places:
+            if place is None:
+                cauchy = np.einsum("jab,jb->ja", mend.matrices, base.cauchy)
+            else:
+                cauchy = base.cauchy.copy()
+                cauchy[place] = mend.matrices[place] @ cauchy[place]
+            steps.append((place, mend))
+            sets.append(cauchy)
+    if not sets:
+        return []
+    misfits = group.misfits(np.array(sets))
+    return [_Try((*base.steps, step), cauchy, float(m)) for step, cauchy, m in zip(steps, sets, misfits, strict=True)]
 
 
 def _report(group: _Set, start: _Try, best: _Try, rivals: list[_Try]) -> list[Refused]:
@@ -228,9 +248,11 @@ def _remedy(group: _Set, place: int | None, mend: Mend) -> str:
     return "; the stress must be in the axes of the cell beside it, in a table in those of the reference cell"
 
 
-def _by_energy(plan: Plan, group: _Set) -> list[Refused]:
-    """A factor common to all stresses, from the energies of the same jobs."""
-    ratios = energy_ratios(plan, list(zip(group.jobs, group.records, strict=True)))
+def _by_energy(plan: Plan, group: _Set, cauchy: FloatArray) -> list[Refused]:
+    """A factor common to all stresses (jobs, 6), Mandel, from the energies of the same jobs."""
+    voigt = stress_to_voigt(from_mandel(cauchy))
+    records = [replace(record, stress=stress) for record, stress in zip(group.records, voigt, strict=True)]
+    ratios = energy_ratios(plan, list(zip(group.jobs, records, strict=True)))
     values = np.array([ratio for ratio in ratios.values() if ratio > 0])
     if len(values) < 0.75 * len(ratios) or not len(values):
         return []

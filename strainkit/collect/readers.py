@@ -6,7 +6,6 @@ is an InputError with a reason, never a traceback.
 
 from __future__ import annotations
 
-import re
 from pathlib import Path
 from typing import Any
 
@@ -18,13 +17,14 @@ from strainkit.collect.programs import (
     castep,
     cp2k,
     espresso,
+    gpaw_new,
     gpaw_text,
     outcar,
     siesta,
     through_ase,
     vasprun,
 )
-from strainkit.collect.programs.through_ase import atoms_from_copy, atoms_from_text
+from strainkit.collect.programs.through_ase import atoms_from_copy, atoms_from_text, last_frame
 from strainkit.collect.returned import Geometry, Reader, Returned, Stress
 from strainkit.collect.source import Source, file_head, read_source
 from strainkit.errors import InputError
@@ -49,6 +49,8 @@ _ASE: dict[str, Any] = {
     "energy": through_ase.energy,
     "forces": through_ase.forces,
 }
+#: of formats that hold whatever the script that wrote them had at that moment
+_MUTE = _ASE | {"tells_relaxed": False}
 
 
 def _extxyz(head: bytes) -> bool:
@@ -65,7 +67,9 @@ def _json(head: bytes) -> bool:
 
 
 def _pickle(head: bytes) -> bool:
-    return (head[:1] == b"\x80" and head[1:2] in b"\2\3\4\5" and len(head) > 2) or head.startswith(b"PickleTrajectory")
+    """Protocols 2 to 5, whose first operation is never a zero byte as in a record of Fortran, or ASE's old trajectories."""
+    modern = len(head) > 2 and head[0] == 0x80 and 2 <= head[1] <= 5 and head[2] != 0
+    return modern or head.startswith(b"PickleTrajectory")
 
 
 def _refuse_pickle(source: Source) -> Any:
@@ -74,14 +78,7 @@ def _refuse_pickle(source: Source) -> Any:
 
 #: in the order in which they are tried, and preferred when a folder holds several kinds
 READERS: tuple[Reader, ...] = (
-    Reader(
-        "extended XYZ",
-        _extxyz,
-        atoms_from_text("extxyz"),
-        **_ASE,
-        bad_marks=((re.compile(r"\bconverged=F\b"), "unconverged", "the ions were not relaxed to the tolerance"),),
-        checked="run",
-    ),
+    Reader("extended XYZ", _extxyz, last_frame, **_ASE, doubts=through_ase.doubts, checked="run"),
     Reader("VASP vasprun.xml", **_columns(vasprun), checked="real"),
     Reader("VASP OUTCAR", **_columns(outcar), checked="real"),
     Reader("Quantum ESPRESSO", **_columns(espresso), checked="run"),
@@ -90,12 +87,13 @@ READERS: tuple[Reader, ...] = (
     Reader("FHI-aims", **_columns(aims), checked="real"),
     Reader("CASTEP", **_columns(castep), checked="real"),
     Reader("SIESTA", **_columns(siesta)),
-    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_ASE),
-    Reader("GPAW gpw", _starts(b"- of UlmGPAW"), atoms_from_copy("gpw"), **_ASE, checked="run"),
-    Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_ASE, checked="run"),
-    Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_ASE, checked="run"),
-    Reader("ASE JSON", _json, atoms_from_text("json"), **_ASE, checked="run"),
-    Reader("GPAW text", **_columns(gpaw_text), checked="run"),
+    Reader("CASTEP geom", _has(b"BEGIN header", b"END header"), atoms_from_text("castep-geom"), **_MUTE),
+    Reader("GPAW gpw", lambda head: head[:12].lower() == b"- of ulmgpaw", atoms_from_copy("gpw"), **_MUTE, checked="run"),
+    Reader("ASE trajectory", _starts(b"- of UlmASE-Trajectory"), atoms_from_copy("traj"), **_MUTE, checked="run"),
+    Reader("ASE database", _starts(b"SQLite format 3\0"), atoms_from_copy("db"), **_MUTE, checked="run"),
+    Reader("ASE JSON", _json, atoms_from_text("json"), **_MUTE, checked="run"),
+    Reader("GPAW text, new", **_columns(gpaw_new), tells_relaxed=False, checked="run"),
+    Reader("GPAW text", **_columns(gpaw_text), tells_relaxed=False, checked="run"),
     Reader("pickle", _pickle, _refuse_pickle, **_ASE),
 )
 
@@ -126,10 +124,13 @@ def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Ret
     source = read_source(path, within)
     problems: list[tuple[str, str]] = []
     try:
-        if reader.end_mark is not None and not reader.end_mark.search(source.text):
-            problems.append(("unfinished", f"the {reader.program} output has no end-of-job mark"))
-        problems += [(status, message) for mark, status, message in reader.bad_marks if mark.search(source.text)]
-        return _assemble(reader, reader.load(source), problems)
+        try:
+            loaded = reader.load(source)
+        finally:
+            problems += _marks(reader, source.free_text if reader.end_mark or reader.bad_marks else "")
+        if isinstance(run := getattr(loaded, "text", loaded), str):
+            problems = _marks(reader, run)  # of the last run in the file
+        return _assemble(reader, loaded, problems)
     except Exception as error:  # damaged files make the libraries below raise anything
         if problems:
             raise InputError(problems[0][1], path) from None
@@ -137,15 +138,27 @@ def read_returned(path: Path, reader: Reader, within: Path | None = None) -> Ret
         raise InputError(f"not readable as {reader.program}: {reason}", path) from None
 
 
+def _marks(reader: Reader, text: str) -> list[tuple[str, str]]:
+    """The end-of-job mark that is missing and the bad marks that are there."""
+    problems = [(status, message) for mark, status, message in reader.bad_marks if mark.search(text)]
+    if reader.end_mark is not None and not reader.end_mark.search(text):
+        problems.insert(0, ("unfinished", f"the {reader.program} output has no end-of-job mark"))
+    return problems
+
+
 def _assemble(reader: Reader, loaded: Any, problems: list[tuple[str, str]]) -> Returned:
     geometry = reader.geometry(loaded)
     _check(geometry)
     stress, energy, forces = reader.stress(loaded), reader.energy(loaded), reader.forces(loaded)
-    problems += [doubt for doubt in reader.doubts(loaded) if doubt not in problems]
+    for doubt in reader.doubts(loaded):
+        if not any(message.startswith(doubt[1]) for _, message in problems):  # "ions not relaxed: too few steps" says more
+            problems.append(doubt)
     if stress is None:
         problems.append(("unfinished", "no stress in the output"))
     else:
         problems += _disagreement(stress)
+    if energy is None and reader.end_mark is not None and not problems:
+        problems.append(("broken", "no energy in the output"))
     if energy is not None and not np.isfinite(energy):
         problems.append(("broken", "the energy is not a finite number"))
     if forces is not None and (forces.shape != geometry.positions.shape or not np.isfinite(forces).all()):

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from hashlib import file_digest
 from pathlib import Path
 
 import numpy as np
@@ -15,13 +14,12 @@ from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError, printable
 from strainkit.findings import Finding, finding
+from strainkit.run.files import checksum
 from strainkit.run.plan import Plan
 from strainkit.tensors.sixvectors import stress_to_voigt
 
 __all__ = ["Output", "read_outputs", "record_of"]
 
-#: displacements below this (A) are rounding, and not worth keeping without forces
-_AT_REST = 1e-3
 #: ions that had to stay moved farther than this (A)
 _MOVED = 5e-3
 #: two finished outputs of one job differ when their stresses do by more than this part of the larger, and this many GPa
@@ -54,6 +52,8 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
     found.sort(key=lambda pair: READERS.index(pair[1]))
     outputs: list[Output] = []
     for name, reader in found:
+        if not reader.tells_relaxed and any(output.returned is not None and output.returned.problems for output in outputs):
+            continue  # a trajectory beside a job that says it is not relaxed
         outputs.append(_read(run, f"{folder.name}/{name}", reader))
         if sum(output.finished for output in outputs) == 2:
             break
@@ -63,9 +63,8 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
 def _read(run: Path, name: str, reader: Reader) -> Output:
     path = run / name
     try:
-        returned = read_returned(path, reader, run)
-        with path.open("rb") as file:
-            return Output(name, reader.program, file_digest(file, "sha256").hexdigest(), returned)
+        returned = read_returned(path, reader)  # refuses what is too large to be held
+        return Output(name, reader.program, checksum(path.read_bytes()), returned)
     except InputError as error:
         return Output(name, reader.program, "", None, error.what)
     except OSError as error:
@@ -104,7 +103,7 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
         findings=tuple(finding(f"job-{status}", job.label, f"{name}: {text}") for status, text in returned.problems),
     )
     try:
-        found = match(plan.crystal.deformed(job.gradient), returned)
+        found = match(plan.crystal, returned, job.gradient)
     except MismatchError as error:
         doubt = finding(error.code, job.label, f"{name}: {error.what}")
         return replace(blank, status="mismatch", findings=(*blank.findings, doubt))
@@ -117,7 +116,7 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
 def _placed(plan: Plan, job: StrainJob, blank: StressRecord, returned: Returned, found: Match) -> StressRecord:
     """The record with everything in the planned frame and order."""
     turn = found.rotation
-    keep = returned.positions_known and (returned.forces is not None or found.farthest > _AT_REST)
+    keep = returned.positions_known
     record = replace(
         blank,
         stress=None if returned.stress is None else stress_to_voigt(turn.T @ returned.stress @ turn),

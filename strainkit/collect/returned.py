@@ -114,7 +114,9 @@ class Reader:
     end_mark : pattern or None
         Found in every output of a job that ended by itself; None for formats that are complete or unreadable.
     bad_marks : tuple of (pattern, status, message)
-        Words that say the numbers are not converged.
+        Words that say the numbers are not converged; patterns whose time grows with the text alone, however long its lines.
+    tells_relaxed : bool
+        Whether the file would say that its ions are not relaxed. One that does not never counts beside one that has problems.
     checked : str
         How the reader was checked: run, real or manual.
     """
@@ -131,4 +133,5 @@ class Reader:
     doubts: Callable[[Any], Problems] = lambda _: ()
     end_mark: re.Pattern[str] | None = None
     bad_marks: tuple[tuple[re.Pattern[str], str, str], ...] = ()
+    tells_relaxed: bool = True
     checked: str = "manual"

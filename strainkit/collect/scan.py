@@ -56,7 +56,7 @@ def natural(name: str) -> list[tuple[int, str]]:
 def scan(run: Path, name: str, written: Iterable[str] = ()) -> Folder:
     """Look into one folder of a run; one that is missing, a link or unreadable is empty."""
     path = run / name
-    if path.is_symlink():
+    if path.is_symlink() or path.parent.is_symlink():
         return Folder(name, (), (name,), "link", True)
     found: list[tuple[str, int, int]] = []
     links = []
@@ -89,6 +89,8 @@ def foreign_folders(run: Path, plan: Plan) -> list[str]:
     """Folders beside the planned ones, relative to the run folder: renamed, or not ours."""
     planned = {job.label for job in plan.jobs}
     top = Path(job_folder("x")).parent
+    if (run / top).is_symlink():
+        return []
     try:
         with os.scandir(run / top) as entries:
             names = [

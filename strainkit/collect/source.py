@@ -22,8 +22,8 @@ __all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "file_head", "read_sourc
 HEAD = 16384
 #: bytes of the largest output that is read, after unpacking
 LARGEST = 512 * 1024**2
-#: bytes of the longest line in a text output
-LONGEST_LINE = 1024**2
+#: bytes of the longest line in a program's output; bounds the time that a pattern can take
+LONGEST_LINE = 20_000
 
 _PACKED = ((b"\x1f\x8b", gzip.open), (b"\xfd7zXZ\0", lzma.open), (b"BZh", bz2.open))
 _UNPACKING_ERRORS = (OSError, EOFError, lzma.LZMAError, zlib.error, ValueError)
@@ -51,8 +51,13 @@ class Source:
         while len(self.content) - start > LONGEST_LINE:
             end = self.content.rfind(b"\n", start, start + LONGEST_LINE)
             if end < 0:
-                raise ValueError(f"a line is longer than {LONGEST_LINE // 1024**2} MiB")
+                raise ValueError(f"a line is longer than {LONGEST_LINE} bytes")
             start = end + 1
+        return self.free_text
+
+    @cached_property
+    def free_text(self) -> str:
+        """Decoded, with plain line ends and lines of any length."""
         return self.content.decode("utf-8", errors="replace").replace("\r\n", "\n")
 
 

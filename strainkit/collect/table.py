@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
+import json
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -123,16 +124,16 @@ class StressTable:
             "findings": [f.to_dict() for f in self.findings],
         }
 
-    def ions_to_dict(self) -> dict[str, Any]:
-        """JSON-ready forces and displacements of the jobs, each with the checksum of the file they came from."""
-        return {
-            "schema": f"{_IONS_KIND}/1",
-            "jobs": {
-                r.label: {"file_sha256": r.file_sha256, "forces_eV_per_A": r.forces, "displacements_A": r.displacements}
-                for r in self.records
-                if r.displacements is not None or r.forces is not None
-            },
-        }
+    def ions_text(self) -> str:
+        """JSON of forces and displacements of the jobs, each with the checksum of the file they came from, a job a line."""
+        lines = []
+        for r in self.records:
+            if r.displacements is None and r.forces is None:
+                continue
+            arrays = (("forces_eV_per_A", r.forces), ("displacements_A", r.displacements))
+            item = {"file_sha256": r.file_sha256} | {key: None if x is None else x.tolist() for key, x in arrays}
+            lines.append(f"{json.dumps(r.label)}: {json.dumps(item, allow_nan=False)}")
+        return f'{{"schema": "{_IONS_KIND}/1", "jobs": {{\n' + ",\n".join(lines) + "\n}}\n"
 
     def save(self, run: Path) -> None:
         """Write stresses.json, stresses.csv and ions.json into the run folder."""
@@ -144,7 +145,7 @@ class StressTable:
             writer.writerow([r.label, r.status, *stress, "" if r.energy is None else repr(r.energy), r.file])
         atomic_write(run / "stresses.csv", buffer.getvalue())
         if any(r.displacements is not None or r.forces is not None for r in self.records):
-            atomic_write(run / IONS, dump_json(self.ions_to_dict()))
+            atomic_write(run / IONS, self.ions_text())
         atomic_write(run / TABLE, dump_json(self.to_dict()))
 
 

@@ -4,21 +4,37 @@ from __future__ import annotations
 
 import re
 from functools import lru_cache
+from math import isfinite
 
 import numpy as np
 from ase.data import atomic_numbers
 
 from strainkit.tensors.arrays import FloatArray, IntArray
 
-__all__ = ["NUMBER", "elements", "found", "fractional", "last", "last_number", "lines_after", "number", "rows", "symmetric"]
+__all__ = [
+    "NUMBER",
+    "elements",
+    "found",
+    "fractional",
+    "last",
+    "last_number",
+    "lines_after",
+    "needed",
+    "number",
+    "rows",
+    "symmetric",
+]
 
 #: one printed number
-NUMBER = r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eEdD][-+]?\d+)?"
+NUMBER = r"[-+]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eEdD][-+]?\d+)?"
 
 
 def number(word: str) -> float:
-    """A printed number, with Fortran's D exponents."""
-    return float(word.replace("D", "E").replace("d", "e"))
+    """A printed number, with Fortran's D exponents; ValueError when it is beyond any floating-point number."""
+    value = float(word.replace("D", "E").replace("d", "e"))
+    if not isfinite(value):
+        raise ValueError(f"{word[:20]} cannot be read as a finite number")
+    return value
 
 
 def last(pattern: re.Pattern[str], text: str, start: int = 0) -> re.Match[str] | None:
@@ -35,6 +51,13 @@ def found(pattern: re.Pattern[str], text: str, what: str) -> re.Match[str]:
     if match is None:
         raise ValueError(f"no {what}")
     return match
+
+
+def needed(value: float | None, what: str) -> float:
+    """The value; ValueError names what is missing."""
+    if value is None:
+        raise ValueError(f"no {what}")
+    return value
 
 
 def last_number(pattern: re.Pattern[str], text: str, start: int = 0) -> float | None:
@@ -56,12 +79,12 @@ def lines_after(text: str, start: int, count: int, skip: int = 0) -> list[str]:
     return lines[skip + 1 :]
 
 
-@lru_cache(maxsize=64)
+@lru_cache(maxsize=4096)
 def _row(form: str) -> re.Pattern[str]:
     return re.compile(r"\s*" + form.replace("#", f"({NUMBER})").replace("...", r"\s+") + r"\s*\Z")
 
 
-def rows(text: str, start: int, count: int, form: str, what: str, skip: int = 0) -> FloatArray:
+def rows(text: str, start: int, count: int, form: str, what: str, skip: int = 0, labels: str = "") -> FloatArray:
     """Numbers (count, m) from as many lines after position `start`.
 
     Parameters
@@ -71,14 +94,15 @@ def rows(text: str, start: int, count: int, form: str, what: str, skip: int = 0)
     count, skip : int
         Lines of the block, and lines between it and its heading.
     form : str
-        Pattern of one line: # is a number that is kept, ... is white space.
+        Pattern of one line: # is a number that is kept, ... is white space, @ the label or number of the row.
     what : str
         Name of the block in the message when a line has another form.
+    labels : str
+        One letter for each row; rows are numbered from 1 when there are none.
     """
-    pattern = _row(form)
     values = []
-    for line in lines_after(text, start, count, skip):
-        match = pattern.match(line)
+    for row, line in enumerate(lines_after(text, start, count, skip)):
+        match = _row(form.replace("@", labels[row] if labels else str(row + 1)) if "@" in form else form).match(line)
         if match is None:
             raise ValueError(f"the {what} cannot be read: {line.strip()[:60]!r}")
         values.append([number(word) for word in match.groups()])

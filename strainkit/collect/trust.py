@@ -142,8 +142,9 @@ def _identical(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[t
     for _, record in done:
         if record.file_sha256 and record.file.startswith("jobs/"):
             groups["file", record.file_sha256].append(record.label)
-        if record.stress is not None and np.abs(record.stress).max() > 1e-3:
-            groups["stress", record.energy, *record.stress.tolist()].append(record.label)
+        if record.stress is not None and np.abs(record.stress).max() > 1e-6:
+            energy = None if record.energy is None else round(record.energy, 7)
+            groups["stress", energy, *np.round(record.stress, 7).tolist()].append(record.label)
     found = []
     seen: set[tuple[str, ...]] = set()
     for key, labels in groups.items():
@@ -156,8 +157,9 @@ def _identical(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[t
 
 
 def _reference(plan: Plan, records: Sequence[StressRecord]) -> list[Finding]:
-    missing = [r for job, r in zip(plan.jobs, records, strict=True) if job.kind == "reference" and r.status != "done"]
-    if not missing or not any(r.status == "done" for r in records):
+    came = ("done", "suspect")
+    missing = [r for job, r in zip(plan.jobs, records, strict=True) if job.kind == "reference" and r.status not in came]
+    if not missing or not any(r.status in came for r in records):
         return []
     text = "no usable reference job: its stress and energy are what the others are compared with"
     return [finding("reference-missing", missing[0].label, text)]

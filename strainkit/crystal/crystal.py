@@ -92,6 +92,8 @@ class Crystal:
         object.__setattr__(self, "lattice", lattice)
         object.__setattr__(self, "positions", positions)
         object.__setattr__(self, "numbers", numbers)
+        for field in ("name", "source"):  # names of files may hold bytes that are no text
+            object.__setattr__(self, field, getattr(self, field).encode("utf-8", "backslashreplace").decode())
         if not self.labels:
             object.__setattr__(self, "labels", tuple(self.symbols))
 

@@ -7,16 +7,21 @@ from dataclasses import dataclass
 from typing import Any
 
 from strainkit.derive.differences import Column, Difference, Ranking, column_of, lettered, ranked, tested
+from strainkit.derive.doubts import doubts_about
 from strainkit.derive.formation import Composition, Reaction, energies_of
-from strainkit.derive.member import Member, named_apart
+from strainkit.derive.member import Member, member_of_fit, named_apart
 from strainkit.derive.quantities import QUANTITIES, Quantity
 from strainkit.derive.sameaxes import common_names, obstacle
 from strainkit.derive.significance import LEVEL
 from strainkit.derive.spread import WithError
 from strainkit.errors import UsageError
-from strainkit.findings import Finding, finding
+from strainkit.findings import Finding
+from strainkit.fit.result import Fit
 
-__all__ = ["Comparison", "compare_crystals"]
+__all__ = ["MOST", "Comparison", "compare_crystals"]
+
+#: most crystals in one comparison
+MOST = 50
 
 
 @dataclass(frozen=True)
@@ -98,13 +103,14 @@ def _softest(member: Member) -> dict[str, Any] | None:
     return member.moduli.ends["shear_GPa"][0].to_dict(member.elastic.frame.rotation)
 
 
-def compare_crystals(members: Sequence[Member], by: str = "young", baseline: str | None = None) -> Comparison:
+def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseline: str | None = None) -> Comparison:
     """Compare crystals.
 
     Parameters
     ----------
-    members : sequence of Member
-        From `member_of_fit` and `member_of_file`; labels are made different.
+    crystals : sequence of Member or Fit
+        Members come from `member_of_fit` and `member_of_file`, and know energies and settings; a fit alone has none. Labels
+        are made different.
     by : str
         What to rank by: a key of `QUANTITIES`, or a constant such as "C11" that all members share.
     baseline : str, optional
@@ -115,9 +121,9 @@ def compare_crystals(members: Sequence[Member], by: str = "young", baseline: str
     UsageError
         Fewer than two members, one of them twice, an unknown quantity or baseline.
     """
-    if len(members) < 2:
+    if len(crystals) < 2:
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
-    members = named_apart(members)
+    members = named_apart([member_of_fit(c) if isinstance(c, Fit) else c for c in crystals])
     base = None if baseline is None else _found(members, baseline)
     moduli = _moduli_columns(members)
     groups, apart = _groups(members)
@@ -139,7 +145,7 @@ def compare_crystals(members: Sequence[Member], by: str = "young", baseline: str
         ranking=ranked(_wanted(every, by)),
         compositions=tuple(compositions),
         reactions=tuple(reactions),
-        findings=(*_temperatures(members), *_untested(members), *doubts),
+        findings=(*doubts_about(members, moduli), *doubts),
     )
 
 
@@ -194,25 +200,3 @@ def _constant_columns(members: Sequence[Member], group: tuple[int, ...]) -> list
             values[i] = WithError(float(voigt[at]), None if errors is None else float(errors[at]))
         columns.append(column_of(members, Quantity(f"{name}_GPa", name, "GPa", name), values))
     return columns
-
-
-def _temperatures(members: Sequence[Member]) -> list[Finding]:
-    at = {m.label: m.temperature for m in members if m.temperature is not None}
-    computed = [m.label for m in members if m.computed]
-    if at and computed:
-        given = ", ".join(f"{label} at {kelvin:g} K" for label, kelvin in at.items())
-        text = (
-            f"{given}; computed values are static, 0 K without zero-point motion. Warm crystals are softer, molecular ones by "
-            "roughly 10 to 40 % at room temperature (from memory of the literature): such a difference is no error of a method"
-        )
-        return [finding("temperatures-differ", "comparison", text)]
-    if at and max(at.values()) - min(at.values()) > 1.0:
-        given = ", ".join(f"{label} at {kelvin:g} K" for label, kelvin in at.items())
-        return [finding("temperatures-differ", "comparison", given)]
-    return []
-
-
-def _untested(members: Sequence[Member]) -> list[Finding]:
-    bare = [m.label for m in members if m.elastic.moduli.covariance is None]
-    text = "no errors: no test, no probability"
-    return [finding("no-test", ", ".join(bare), text)] if bare else []

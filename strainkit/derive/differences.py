@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from itertools import combinations, pairwise
@@ -31,6 +32,8 @@ class Column:
         One a member; None where it has no meaning.
     freedom : tuple of int or None
         Degrees of freedom behind each error; None for known errors.
+    pushed : tuple of float
+        How much too large (negative: too small) noise may have made each value; see `strainkit.derive.quantities`.
     letters : dict
         Member -> letters: two share one exactly when their values cannot be told apart at the 95 % level. Empty where only
         changes against a baseline were tested.
@@ -39,6 +42,7 @@ class Column:
     quantity: Quantity
     values: tuple[WithError | None, ...]
     freedom: tuple[int | None, ...]
+    pushed: tuple[float, ...]
     letters: dict[int, str] = field(default_factory=dict)
 
     def value(self, i: int) -> float:
@@ -50,6 +54,13 @@ class Column:
         """Standard error of one member's value, None when unknown."""
         found = self.values[i]
         return None if found is None else found.error
+
+    def gap(self, i: int, j: int) -> float:
+        """First less second value, less what noise may have pushed these apart: what tests and probabilities use."""
+        plain = self.value(i) - self.value(j)
+        high, low = (i, j) if plain > 0 else (j, i)
+        left = abs(plain) - max(self.pushed[high], 0.0) - max(-self.pushed[low], 0.0)
+        return math.copysign(left, plain) if left > 1e-9 * max(abs(self.value(i)), abs(self.value(j))) else 0.0
 
     def pair(self, i: int, j: int) -> tuple[tuple[float, float], tuple[int | None, int | None]] | None:
         """Errors and degrees of freedom of two members; None where one has no error."""
@@ -142,7 +153,8 @@ class Ranking:
 
 def column_of(members: Sequence[Member], quantity: Quantity, values: Sequence[WithError | None]) -> Column:
     """A quantity of all members, without letters yet."""
-    return Column(quantity, tuple(values), tuple(m.freedom for m in members))
+    pushed = [0.0 if m.moduli is None else m.moduli.pushed.get(quantity.name, 0.0) for m in members]
+    return Column(quantity, tuple(values), tuple(m.freedom for m in members), tuple(pushed))
 
 
 def tested(columns: Sequence[Column], count: int, base: int | None) -> list[Difference]:
@@ -162,7 +174,6 @@ def _difference(column: Column, i: int, j: int) -> Difference:
         percent = None if ratio is None else WithError(100.0 * (ratio - 1.0))
         return Difference(column.quantity, i, j, WithError(gap), percent)
     (one, other), freedom = pair
-    rounded = 0.0 if abs(gap) < 1e-9 * max(abs(first), abs(second)) else gap
     return Difference(
         quantity=column.quantity,
         first=i,
@@ -171,7 +182,7 @@ def _difference(column: Column, i: int, j: int) -> Difference:
         percent=None
         if ratio is None
         else WithError(100.0 * (ratio - 1.0), 100.0 * float(np.hypot(other, ratio * one)) / first),
-        p_value=float(two_sided(rounded, (one, other), freedom)),
+        p_value=float(two_sided(column.gap(i, j), (one, other), freedom)),
     )
 
 
@@ -189,9 +200,11 @@ def ranked(column: Column) -> Ranking:
     above: list[float | None] = []
     for i, j in pairwise(order):
         pair = column.pair(i, j)
-        above.append(None if pair is None else float(probability_larger(column.value(i) - column.value(j), *pair)))
+        above.append(None if pair is None else float(probability_larger(column.gap(i, j), *pair)))
     errors = [e for i in order if (e := column.error(i)) is not None]
     whole = None
     if len(errors) == len(order):
-        whole = probability_of_order([column.value(i) for i in order], errors, [column.freedom[i] for i in order])
+        gaps = [column.gap(i, j) for i, j in pairwise(order)]
+        places = [-sum(gaps[:k]) for k in range(len(order))]
+        whole = probability_of_order(places, errors, [column.freedom[i] for i in order])
     return Ranking(column.quantity, tuple(order), tuple(above), whole)

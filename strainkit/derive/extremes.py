@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -71,30 +71,39 @@ class Extreme:
         return out if self.side is None else {**out, "side": self.side.to_dict(rotation)}
 
 
-def extremes(elastic: ElasticCrystal) -> dict[str, tuple[Extreme, Extreme]]:
+#: names of the quantities, in the order of a page
+_ALL = ("young_GPa", "linear_compressibility_per_TPa", "shear_GPa", "poisson", "sound_m_per_s")
+
+
+def extremes(elastic: ElasticCrystal, wanted: Collection[str] = _ALL) -> dict[str, tuple[Extreme, Extreme]]:
     """Smallest and largest of each directional quantity.
 
-    Returns
-    -------
-    dict
-        "young_GPa", "linear_compressibility_per_TPa", "shear_GPa", "poisson", and with a density "sound_m_per_s".
+    Parameters
+    ----------
+    elastic : ElasticCrystal
+    wanted : names, optional
+        Some of "young_GPa", "linear_compressibility_per_TPa", "shear_GPa", "poisson" and, given a density, "sound_m_per_s".
     """
     s, draws = elastic.compliance, elastic.compliance_draws[:_DRAWS]
-    found = {
-        "young_GPa": _ends(elastic, s, draws, lambda m, n, _: young(m, n)),
-        "linear_compressibility_per_TPa": _compressibilities(elastic),
-    }
-    for name, function, of_pair in (("shear_GPa", shear_range, shear), ("poisson", poisson_range, poisson)):
-        found[name] = _ends(
-            elastic,
-            s,
-            draws,
-            lambda m, n, most, f=function: f(m, n)[most],  # type: ignore[misc]
-            lambda m, n, most, f=function: f(m, n)[2 + most],  # type: ignore[misc]
-            of_pair,
-        )
-    if elastic.density is not None:
-        found["sound_m_per_s"] = _speeds(elastic, elastic.density)
+    found = {}
+    for name in (n for n in _ALL if n in wanted):
+        if name == "young_GPa":
+            found[name] = _ends(elastic, s, draws, lambda m, n, _: young(m, n))
+        elif name == "linear_compressibility_per_TPa":
+            found[name] = _compressibilities(elastic)
+        elif name == "sound_m_per_s":
+            if elastic.density is not None:
+                found[name] = _speeds(elastic, elastic.density)
+        else:
+            function, of_pair = (shear_range, shear) if name == "shear_GPa" else (poisson_range, poisson)
+            found[name] = _ends(
+                elastic,
+                s,
+                draws,
+                lambda m, n, most, f=function: f(m, n)[most],  # type: ignore[misc]
+                lambda m, n, most, f=function: f(m, n)[2 + most],  # type: ignore[misc]
+                of_pair,
+            )
     return found
 
 

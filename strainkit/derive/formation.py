@@ -132,8 +132,8 @@ def solve_exactly(target: Counts, parents: Sequence[Counts]) -> list[Fraction] |
 
 
 def energies_of(members: Sequence[Member]) -> tuple[list[Composition | None], list[Reaction], list[Finding]]:
-    """Compositions (None for typed tensors), every reaction among the runs, and doubts about their energies."""
-    made = [composition_of(m.crystal) if m.computed and m.crystal is not None else None for m in members]
+    """Compositions (None for typed tensors and bare fits), every reaction among the runs, and doubts about their energies."""
+    made = [composition_of(m.crystal) if m.method is not None and m.crystal is not None else None for m in members]
     classes: dict[_Key, list[int]] = {}
     for i, composition in enumerate(made):
         if composition is not None:

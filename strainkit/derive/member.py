@@ -45,6 +45,8 @@ class Member:
         A run, not a typed tensor.
     method, energy : Method or None, float or None
         Of a run: how it was computed, and the free energy of its reference cell, eV.
+    clamped : bool
+        A run whose ions did not move, and whose answer to strain is not known.
     """
 
     label: str
@@ -57,6 +59,7 @@ class Member:
     computed: bool = False
     method: Method | None = None
     energy: float | None = None
+    clamped: bool = False
 
     @property
     def crystal(self) -> Crystal | None:
@@ -89,32 +92,34 @@ class Member:
             "degrees_of_freedom": self.freedom,
             "stable": self.moduli is not None,
             "reference_energy_eV": self.energy,
+            "clamped_ions": self.clamped,
             "method": None if self.method is None else self.method.to_dict(),
             "findings": [f.to_dict() for f in self.elastic.findings],
         }
 
 
-def member_of_fit(fit: Fit, table: StressTable, run: Path) -> Member:
+def member_of_fit(fit: Fit, table: StressTable | None = None, run: Path | None = None) -> Member:
     """A fitted run.
 
     Parameters
     ----------
     fit : Fit
-    table : StressTable
+    table : StressTable, optional
         Its stress table, for the energy of the reference.
-    run : path
-        Its folder.
+    run : path, optional
+        Its folder; for how it was computed.
     """
-    record = next((r for r in table.usable if r.label == fit.plan.jobs[0].label), None)
+    record = None if table is None else next((r for r in table.usable if r.label == fit.plan.jobs[0].label), None)
     return Member(
         label=fit.plan.crystal.name,
-        place=str(run),
+        place="" if run is None else str(run),
         elastic=from_fit(fit),
         symmetry=fit.plan.symmetry,
         axes="ieee",
         computed=True,
-        method=method_of(fit.plan, record, run),
+        method=None if run is None else method_of(fit.plan, record, run),
         energy=None if record is None else record.energy,
+        clamped=fit.plan.ions == "clamped" and fit.relaxed is None,
     )
 
 
@@ -132,19 +137,23 @@ def member_of_file(file: TensorFile, crystal: Crystal | None = None, symmetry: S
 
 
 def named_apart(members: Sequence[Member]) -> list[Member]:
-    """The same with different labels: crystal names, and folder or file names where these are the same.
+    """The same with different labels: crystal names, and folder or file names, or numbers, where these are the same.
 
     Raises
     ------
     UsageError
         One folder or file given twice.
     """
-    places = [str(Path(m.place).resolve()) for m in members]
+    places = [str(Path(m.place).resolve()) if m.place else f"number {i + 1}" for i, m in enumerate(members)]
     twice = [m.place for m, count in zip(members, map(Counter(places).get, places), strict=True) if count and count > 1]
     if twice:
         raise UsageError("given twice", twice[-1], "Give each run folder or file once.")
     labels = [m.elastic.name for m in members]
-    for closer in ([Path(place).name for place in places], [m.place for m in members], places):
+    for closer in (
+        [Path(place).name for place in places],
+        [m.place or at for m, at in zip(members, places, strict=True)],
+        places,
+    ):
         same = Counter(labels)
         labels = [label if same[label] == 1 else nearer for label, nearer in zip(labels, closer, strict=True)]
     plain = ["".join(c if c.isprintable() else "?" for c in label) for label in labels]  # names come from files

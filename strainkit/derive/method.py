@@ -1,8 +1,9 @@
-"""How a run was computed, as far as its folder says: may its energies be subtracted from those of another run?"""
+"""How a run was computed, as far as its folder and outputs say: may its energies be subtracted from those of another run?"""
 
 from __future__ import annotations
 
 import re
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -22,6 +23,8 @@ _PROGRAMS: dict[str, str | None] = {
     "VASP vasprun.xml": "VASP",
     "VASP OUTCAR": "VASP",
     "CASTEP geom": "CASTEP",
+    "GPAW gpw": "GPAW",
+    "GPAW text": "GPAW",
 }
 #: settings that say when and how an iteration ends, not what it converges to
 _STEERING = {
@@ -29,6 +32,10 @@ _STEERING = {
     *("nstep", "ntime", "nsw", "nelm", "steps", "maxiter", "max_iter", "max_scf", "max_scf_cycles", "geom_max_iter"),
     *("sc_iter_limit", "max_relaxation_steps", "electron_maxstep", "mixing_beta", "fmax", "pressure", "dilatmx"),
 }
+
+
+#: what an output says and another crystal's must say too; meshes and spin belong to the crystal
+_PRINTED = ("cutoff_eV", "functional", "dispersion", "smearing")
 
 
 @dataclass(frozen=True)
@@ -43,6 +50,8 @@ class Method:
         A local engine with its settings.
     settings, pseudopotentials : dict
         Of the deck; empty without one.
+    printed : mapping
+        What the output of the reference says of its settings; see `strainkit.collect.table.StressRecord`.
     kspacing : float or None
         1/A, 2 pi included.
     kmesh : tuple of int
@@ -55,11 +64,30 @@ class Method:
     pseudopotentials: dict[str, str] = field(default_factory=dict)
     kspacing: float | None = None
     kmesh: tuple[int, ...] = ()
+    printed: Mapping[str, Any] = field(default_factory=dict)
 
     @property
     def recorded(self) -> bool:
-        """Does the folder say with which settings it was computed?"""
-        return self.engine is not None or bool(self.settings)
+        """Do folder or output say with which settings it was computed?"""
+        return self.engine is not None or bool(self.settings) or {"cutoff_eV", "functional"} <= set(self.printed)
+
+    @property
+    def words(self) -> str:
+        """Engine or program with what it says of its settings; empty when nothing is known."""
+        if self.engine is not None:
+            return self.engine
+        said = [str(self.printed[key]) for key in ("functional", "dispersion") if self.printed.get(key, "none") != "none"]
+        if "cutoff_eV" in self.printed:
+            said.append(f"{self.printed['cutoff_eV']:.0f} eV")
+        said += [mesh] if (mesh := self._mesh) else []
+        return " ".join([self.program or "", *said]).strip()
+
+    @property
+    def _mesh(self) -> str:
+        if self.kmesh:
+            return "x".join(map(str, self.kmesh))
+        count = self.printed.get("kpoint_count")
+        return str(self.printed.get("kpoints") or (f"{count} k-points" if count else ""))
 
     @property
     def gamma_only(self) -> bool:
@@ -80,6 +108,8 @@ class Method:
             words.append(f"engine {self.engine or other.engine} and an unknown one")
         if self.settings and other.settings:
             words += _unlike(self.settings, other.settings)
+        one, another = ({key: m.printed[key] for key in _PRINTED if key in m.printed} for m in (self, other))
+        words += _unlike(one, another, shared=True)
         words += _unlike(self.pseudopotentials, other.pseudopotentials, "pseudopotential of ", shared=True)
         return words
 
@@ -89,9 +119,9 @@ class Method:
             return ["the settings are not recorded: they must be the same"]
         if self.gamma_only:
             return ["the engine samples one k-point whatever the cell: cells of different size are sampled differently"]
-        if (self.kspacing is None or other.kspacing is None) and (self.kmesh or other.kmesh):
-            meshes = " and ".join("x".join(map(str, m.kmesh)) for m in (self, other))
-            return [f"k-meshes {meshes} were given by hand: their density must be the same"]
+        meshes = [m._mesh or "unknown" for m in (self, other)]
+        if (self.kspacing is None or other.kspacing is None) and meshes != ["unknown"] * 2:
+            return [f"k-meshes {' and '.join(meshes)} were chosen by hand: they must be alike in density"]
         return []
 
     def to_dict(self) -> dict[str, Any]:
@@ -103,6 +133,7 @@ class Method:
             "pseudopotentials": self.pseudopotentials,
             "kspacing_per_A": self.kspacing,
             "kmesh": list(self.kmesh),
+            "printed": dict(self.printed),
         }
 
 
@@ -129,6 +160,7 @@ def method_of(plan: Plan, record: StressRecord | None, run: Path) -> Method:
         pseudopotentials={} if engine is not None else dict(deck.get("pseudopotentials", {})),
         kspacing=None if engine is not None else deck.get("kspacing_per_A"),
         kmesh=() if engine is not None else tuple(deck.get("kmesh", ())),
+        printed={} if engine is not None or record is None else record.settings,
     )
 
 
@@ -138,11 +170,17 @@ def _unlike(mine: dict[str, Any], theirs: dict[str, Any], what: str = "", shared
         if key in mine and key in theirs:
             if isinstance(mine[key], dict) and isinstance(theirs[key], dict):
                 words += _unlike(mine[key], theirs[key], f"{what}{key} of ", shared=True)
-            elif mine[key] != theirs[key]:
+            elif _differ(mine[key], theirs[key]):
                 words.append(f"{what}{key} {_text(mine[key])} and {_text(theirs[key])}")
         elif not shared:
             words.append(f"{what}{key} in one of them only")
     return words
+
+
+def _differ(one: object, other: object) -> bool:
+    if isinstance(one, int | float) and isinstance(other, int | float):
+        return abs(one - other) > 1e-6 * max(abs(one), abs(other))
+    return one != other
 
 
 def _text(value: object) -> str:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -14,7 +15,7 @@ from strainkit.design.jobs import StrainJob
 from strainkit.tensors.invariants import stabiliser
 from strainkit.tensors.sixvectors import to_mandel
 
-__all__ = ["JobCost", "job_costs"]
+__all__ = ["JobCost", "job_costs", "with_costs"]
 
 
 @dataclass(frozen=True)
@@ -55,3 +56,9 @@ def job_costs(
             points = irreducible_kpoints(crystal.deformed(job.gradient), mesh, tolerance)
         costs.append(JobCost(job.label, laue_class_of(kept), len(symmetry.rotations) / len(kept), points))
     return costs
+
+
+def with_costs(plan: dict[str, Any], costs: Sequence[JobCost]) -> dict[str, Any]:
+    """A manifest's dictionary with the Laue class and the irreducible k-points of every job's cell."""
+    known = {cost.label: {"laue_class": cost.laue_class, "irreducible_kpoints": cost.kpoints} for cost in costs}
+    return plan | {"jobs": [job | known.get(job["label"], {}) for job in plan["jobs"]]}

@@ -49,7 +49,9 @@ class RelaxedIons:
     force_noise : float or None
         Standard deviation of one force component, eV/A.
     origin : str
-        Where the force constants come from.
+        Where the force constants come from, in words.
+    file : str
+        Their file; empty where they come from displaced cells.
     """
 
     plan: Plan
@@ -60,6 +62,7 @@ class RelaxedIons:
     frequencies: FloatArray
     force_noise: float | None
     origin: str
+    file: str = ""
 
     @cached_property
     def values(self) -> FloatArray:
@@ -88,6 +91,7 @@ class RelaxedIons:
             ],
             "degrees_of_freedom": self.degrees_of_freedom,
             "force_constants": self.origin,
+            "force_constants_file": self.file or None,
             "force_noise_eV_per_A": self.force_noise,
             "frequencies_THz": self.frequencies,
             "displacements_A_per_strain": {c: per_voigt[:, :, i] for i, c in enumerate(COMPONENTS)},
@@ -100,6 +104,7 @@ def relax_ions(
     clamped: Regression,
     jobs_used: tuple[str, ...],
     constants: FloatArray | None = None,
+    file: str = "",
 ) -> tuple[RelaxedIons | None, list[Finding]]:
     """The answer of the ions to strain, where the run holds what is needed to know it.
 
@@ -114,6 +119,8 @@ def relax_ions(
         Labels that the stiffness was fitted to.
     constants : (3 n, 3 n), optional
         Force constants at q = 0, eV/A^2, given frame, in place of displaced cells.
+    file : str
+        Where those came from.
 
     Returns
     -------
@@ -154,7 +161,7 @@ def relax_ions(
         return None, [finding("ions-unanswered", where, f"no relaxed-ion stiffness: {error.what}")]
     draws = _draw(plan, jobs_used, response, answer, moved)
     covariance, freedom = _covariance(plan, clamped, response, draws)
-    found = RelaxedIons(plan, clamped, answer, covariance, freedom, modes, response.noise, origin)
+    found = RelaxedIons(plan, clamped, answer, covariance, freedom, modes, response.noise, origin, file)
     return found, _doubts(plan, constants, draws)
 
 

@@ -209,6 +209,7 @@ def fit_run(
     drop: tuple[str, ...] = (),
     reading: ReferenceStress = "real",
     constants: FloatArray | None = None,
+    constants_file: str = "",
 ) -> Fit:
     """Fit the stiffness of a run from its stress table.
 
@@ -226,6 +227,8 @@ def fit_run(
         Whether a stress on the reference is real, or an offset of the basis set to be removed.
     constants : (3 n, 3 n), optional
         Force constants at q = 0, eV/A^2, given frame, for the answer of clamped ions, in place of displaced cells.
+    constants_file : str
+        Where those came from, for the record.
 
     Raises
     ------
@@ -246,7 +249,7 @@ def fit_run(
     finer = finer_change(plan, table, regression)
     changes = [] if finer is None else finer.findings(plan.basis.names, regression.values)
     used = tuple(job.label for job in jobs)
-    relaxed, remarks = relax_ions(plan, table, regression, used, constants)
+    relaxed, remarks = relax_ions(plan, table, regression, used, constants, constants_file)
     return Fit(
         plan=plan,
         regression=regression,
@@ -257,8 +260,14 @@ def fit_run(
         checks=checks,
         finer=finer,
         relaxed=relaxed,
-        findings=(*doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
+        findings=(*_carried(table, used), *doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
     )
+
+
+def _carried(table: StressTable, used: tuple[str, ...]) -> list[Finding]:
+    """What collect doubted about the set and the jobs that are used."""
+    own = [f for record in table.records if record.label in used for f in record.findings]
+    return [f for f in (*table.findings, *own) if f.severity != "info"]
 
 
 def _without_offset(jobs: list[StrainJob], gradients: FloatArray, stresses: FloatArray) -> tuple[FloatArray, list[Finding]]:

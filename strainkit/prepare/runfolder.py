@@ -26,6 +26,7 @@ from strainkit.prepare.writers import FORMATS, cell_formats, default_formats, fo
 from strainkit.run.files import checksum, dump_json
 from strainkit.run.plan import MANIFEST, AtomMoves, Ions, Plan, job_folder, load_plan
 from strainkit.tensors.constants import basis_of_group
+from strainkit.tensors.stiffness import Stiffness
 
 __all__ = ["files_of", "plan_run", "plan_with_files", "write_run"]
 
@@ -39,6 +40,7 @@ def plan_run(
     symmetrize: bool = False,
     judged: tuple[Molecules, list[Finding]] | None = None,
     displaced: bool = False,
+    guess: Stiffness | None = None,
 ) -> Plan:
     """Choose the strained jobs of a crystal; nothing is written.
 
@@ -60,6 +62,8 @@ def plan_run(
         What `judge_cell` says of this crystal, when it is known already.
     displaced : bool
         With clamped ions: add the displaced cells from which the relaxed-ion stiffness follows.
+    guess : Stiffness, optional
+        In the given frame; expected errors of K and G are those of the Hill averages at it.
 
     Raises
     ------
@@ -79,7 +83,7 @@ def plan_run(
         wish = Wish(magnitudes=tuple(wish))
     basis = basis_of_group(symmetry.rotations, frames["ieee"].rotation)
     jobs, remarks = choose_strains(crystal, symmetry, basis, wish)
-    expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise, naming=frames["ieee"].rotation)
+    expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise, guess, naming=frames["ieee"].rotation)
     _, changes = tolerance_ladder(crystal, symprec, symmetry)
     if displaced:
         if ions != "clamped":

@@ -9,7 +9,7 @@ from typing import Any
 
 from strainkit.present.text import heading, paragraph
 
-__all__ = ["calculation_lines"]
+__all__ = ["calculation_lines", "settings_text"]
 
 _TASKS = {
     "cell": "cell and ions relaxed",
@@ -33,12 +33,16 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
     pseudopotentials = ", ".join(f"{symbol} = {name}" for symbol, name in calculation["pseudopotentials"].items())
     if pseudopotentials:
         lines.append(paragraph(f"pseudo    {pseudopotentials}", "  "))
-    values = ", ".join(f"{key} {_value(value)}" for key, value in calculation["settings"].items() if value not in ({}, 0.0))
-    lines.append(paragraph(f"settings  {values}", "  "))
+    lines.append(paragraph(f"settings  {settings_text(calculation['settings'])}", "  "))
     if "submit" in calculation:
         place = f"cd {shlex.quote(str(out))} && " if out is not None else ""
         lines += ["  submit it yourself:", f"    {place}{calculation['submit']}"]
     return lines
+
+
+def settings_text(settings: Mapping[str, Any]) -> str:
+    """Names and values of the settings that are not empty."""
+    return ", ".join(f"{key} {_value(value)}" for key, value in settings.items() if value not in ({}, 0.0))
 
 
 def _value(value: object) -> str:

@@ -2,17 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
-from dataclasses import replace
+from collections.abc import Callable, Sequence
 
 from strainkit.derive.comparison import Comparison
 from strainkit.derive.differences import Column, Difference
-from strainkit.findings import Finding
 from strainkit.present.comparison_words import (
     MEANING,
     all_findings,
     change_cell,
     clean,
+    cleaned,
     kind_text,
     order_text,
     probability_text,
@@ -20,7 +19,7 @@ from strainkit.present.comparison_words import (
     softest_text,
     value_cell,
 )
-from strainkit.present.text import columns, findings_text, heading, paragraph
+from strainkit.present.text import WIDTH, columns, findings_text, heading, paragraph
 
 __all__ = ["comparison_text"]
 
@@ -47,15 +46,11 @@ def comparison_text(comparison: Comparison) -> str:
     if c.reactions:
         lines += ["", heading("Static energies of the reference cells, per formula unit of the first")]
         lines += [paragraph(clean(reaction_text(c, reaction)), "  ") for reaction in c.reactions]
-    return "\n".join([*lines, "", findings_text([_cleaned(f) for f in all_findings(c)])])
+    return "\n".join([*lines, "", findings_text([cleaned(f) for f in all_findings(c)])])
 
 
 def _meaning(c: Comparison) -> str:
     return MEANING.format(tests=c.tests)
-
-
-def _cleaned(found: Finding) -> Finding:
-    return replace(found, where=clean(found.where), message=clean(found.message))
 
 
 def _crystals(c: Comparison) -> list[str]:
@@ -69,26 +64,30 @@ def _short(c: Comparison, i: int, room: int) -> str:
     return number + (label if len(number + label) <= room else label[: room - len(number) - 1] + "~")
 
 
-def _blocks(members: Sequence[int]) -> Iterable[Sequence[int]]:
-    """As many members side by side as the page is wide, spread evenly."""
-    most = max(_ROOM)
-    count = -(-len(members) // most)
-    size = -(-len(members) // count)
-    for start in range(0, len(members), size):
-        yield members[start : start + size]
+def _in_blocks(members: Sequence[int], table: Callable[[Sequence[int]], str]) -> list[str]:
+    """Tables of as many members side by side as the page is wide, spread evenly."""
+    tables: list[str] = []
+    for most in (3, 2, 1):
+        count = -(-len(members) // most)
+        size = -(-len(members) // count)
+        tables = [table(members[start : start + size]) for start in range(0, len(members), size)]
+        if max(len(line) for text in tables for line in text.splitlines()) <= WIDTH:
+            break
+    return tables
 
 
 def _table(c: Comparison, rows: Sequence[Column], group: Sequence[int] | None = None) -> list[str]:
     """Values with letters, members side by side."""
-    lines = []
-    for block in _blocks(range(len(c.members)) if group is None else group):
-        cells = []
-        most = max((len(letter) for column in rows for letter in column.letters.values()), default=0)
-        for column in rows:
-            values = [value_cell(column, i) + " " + column.letters.get(i, "").ljust(most) for i in block]
-            cells.append([column.quantity.title, *values])
-        lines.append(columns(cells, ["", *(_short(c, i, _ROOM[len(block)]) + " " * (most + 1) for i in block)]))
-    return lines
+    most = max((len(letter) for column in rows for letter in column.letters.values()), default=0)
+
+    def table(block: Sequence[int]) -> str:
+        cells = [
+            [column.quantity.title, *(f"{value_cell(column, i)} {column.letters.get(i, '').ljust(most)}" for i in block)]
+            for column in rows
+        ]
+        return columns(cells, ["", *(_short(c, i, _ROOM[len(block)]) + " " * (most + 1) for i in block)])
+
+    return _in_blocks(range(len(c.members)) if group is None else group, table)
 
 
 def _planes(c: Comparison) -> list[str]:
@@ -105,14 +104,17 @@ def _changes(c: Comparison, base: int) -> list[str]:
     others = [i for i in range(len(c.members)) if i != base]
     names = list(dict.fromkeys(d.quantity.name for d in c.differences))
     found = {(d.quantity.name, d.second): d for d in c.differences}
-    for block in _blocks(others):
+
+    def table(block: Sequence[int]) -> str:
         rows = []
         for name in names:
             changes = [found.get((name, i)) for i in block]
             title = next((d.quantity.words for d in changes if d is not None), None)
             if title is not None:
                 rows.append([title, *(_starred(d) for d in changes)])
-        lines.append(columns(rows, ["", *(_short(c, i, _ROOM[len(block)]) + "  " for i in block)]))
+        return columns(rows, ["", *(_short(c, i, _ROOM[len(block)]) + "  " for i in block)])
+
+    lines += _in_blocks(others, table)
     return [*lines, paragraph("A star marks what can be told apart. " + _meaning(c), "  ")]
 
 
@@ -128,9 +130,9 @@ def _ranked(c: Comparison) -> list[str]:
     rows = []
     for place, i in enumerate(r.order):
         above = f"above the next: {probability_text(r.above_next[place])}" if place < len(r.above_next) else ""
-        rows.append([f"{place + 1}. {_short(c, i, 34)}", value_cell(column, i), above])
+        rows.append([f"{place + 1}. {_short(c, i, 24)}", value_cell(column, i), above])
     width = max(len(row[2]) for row in rows)
     lines = [heading(f"Ranked by {r.quantity.title}"), columns([[a, b, note.ljust(width)] for a, b, note in rows])]
-    if len(r.order) > 2:
+    if len(r.order) > 2 and r.probability is not None:
         lines.append(f"  {order_text(r)}")
     return lines

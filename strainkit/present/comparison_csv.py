@@ -4,17 +4,36 @@ from __future__ import annotations
 
 import csv
 import io
+from pathlib import Path
 
 from strainkit.derive.comparison import Comparison
 from strainkit.derive.spread import WithError
+from strainkit.errors import InputError
 from strainkit.present.comparison_words import clean, share_text
+from strainkit.run.files import atomic_write
 
-__all__ = ["comparison_csv"]
+__all__ = ["comparison_csv", "save_csv"]
 
 _CSV = (
     *("kind", "quantity", "unit", "crystal", "against", "value", "standard_error"),
     *("percent", "p_value", "p_adjusted", "told_apart"),
 )
+
+
+def save_csv(comparison: Comparison, path: Path, force: bool = False) -> None:
+    """Write the table, but never over a file that is not such a table.
+
+    Raises
+    ------
+    InputError
+        Such a file is there, and `force` is not given.
+    """
+    head = ",".join(_CSV)
+    if path.is_dir():
+        raise InputError("is a folder", path, "Name a file.")
+    if not force and path.exists() and not path.read_bytes().startswith(head.encode()):
+        raise InputError("exists and was not written by strainkit; left as it is", path, "Choose another place, or --force.")
+    atomic_write(path, comparison_csv(comparison))
 
 
 def comparison_csv(comparison: Comparison) -> str:

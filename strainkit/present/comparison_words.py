@@ -19,6 +19,7 @@ __all__ = [
     "all_findings",
     "change_cell",
     "clean",
+    "cleaned",
     "kind_text",
     "order_text",
     "probability_text",
@@ -42,6 +43,11 @@ def clean(text: str) -> str:
     return "".join(c if c.isprintable() else "?" for c in text)
 
 
+def cleaned(found: Finding) -> Finding:
+    """The same finding with nothing in it that could steer a terminal."""
+    return replace(found, where=clean(found.where), message=clean(found.message))
+
+
 def all_findings(comparison: Comparison) -> list[Finding]:
     """Findings of the comparison, and those of its members that are more than information."""
     own = [
@@ -57,12 +63,14 @@ def kind_text(member: Member) -> str:
     """What a member is, on one line."""
     e = member.elastic
     words = [member.crystal.formula] if member.crystal is not None else []
-    words.append(f"Laue class {e.laue_class}" if member.symmetry is None else member.symmetry.space_group)
+    words.append(f"Laue class {e.laue_class or 'not named'}" if member.symmetry is None else member.symmetry.space_group)
     words.append(e.origin)
     if member.temperature is not None:
         words.append(f"at {member.temperature:g} K")
     elif member.computed:
         words.append("static")
+    if member.method is not None and member.method.words:
+        words.append(f"by {member.method.words}")
     if member.source:
         words.append(member.source)
     if member.place.rstrip("/") != member.label and member.computed:
@@ -101,7 +109,8 @@ def probability_text(probability: float | None) -> str:
 
 def order_text(ranking: Ranking) -> str:
     """Is the whole ranking right?"""
-    return f"the whole order is right: {probability_text(ranking.probability)}"
+    chance = probability_text(ranking.probability)
+    return f"the whole order is right with a probability {chance if chance.startswith('above') else f'of {chance}'}"
 
 
 def reaction_text(c: Comparison, reaction: Reaction) -> str:

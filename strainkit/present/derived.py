@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections import Counter
+
 import numpy as np
 
 from strainkit.derive.acoustic import AcousticCheck
@@ -18,9 +20,9 @@ from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.tensors.averages import AVERAGES, SCHEMES
 from strainkit.tensors.sixvectors import COMPONENTS, stiffness_to_voigt, to_mandel
 
-__all__ = ["derived_text"]
+__all__ = ["AVERAGED", "derived_text", "places"]
 
-_AVERAGED = {
+AVERAGED = {
     "bulk_GPa": "bulk modulus",
     "shear_GPa": "shear modulus",
     "young_GPa": "Young's modulus",
@@ -41,7 +43,7 @@ def derived_text(derived: Derived, blind_spot: str = "") -> str:
         lines += _sound(derived)
     else:
         lines += ["Nothing else is derived: moduli of an unstable crystal have no meaning.", ""]
-    return "\n".join([*lines, *_axes(e)])
+    return "\n".join([*lines, *_axes(e), "", findings_text(derived.findings)])
 
 
 def _believed(derived: Derived, blind_spot: str) -> list[str]:
@@ -61,7 +63,9 @@ def _believed(derived: Derived, blind_spot: str) -> list[str]:
         lines.append(row("reference stress, GPa", f"{push:.2g}", f"moduli use B, up to {change:.2g} off C"))
     if blind_spot and e.moduli.covariance is not None:
         lines.append(paragraph(blind_spot, "  "))
-    return [*lines, findings_text(derived.findings), ""]
+    counts = Counter(f.severity for f in derived.findings)
+    doubts = ", ".join(f"{counts[s]} {s}{'s' * (counts[s] > 1)}" for s in ("error", "warning") if counts[s])
+    return [*lines, row("doubts", doubts or "none", "at the end of this page" if doubts else ""), ""]
 
 
 def _softest(derived: Derived) -> str:
@@ -82,7 +86,7 @@ def _squeezed(derived: Derived, means: Averages) -> list[str]:
         row("bulk modulus, GPa", value_text(bulk), "of the crystal itself: Reuss"),
         "  linear compressibility, 1/TPa",
     ]
-    lines += [row(f"  along {n}", value_text(a.compressibility), note) for n, note, a in _places(derived)]
+    lines += [row(f"  along {n}", value_text(a.compressibility), note) for n, note, a in places(derived)]
     least, most = derived.extremes["linear_compressibility_per_TPa"]
     lines += _ends(derived, least, most)
     if least.value.value < 0:
@@ -90,7 +94,7 @@ def _squeezed(derived: Derived, means: Averages) -> list[str]:
     return [*lines, ""]
 
 
-def _places(derived: Derived) -> list[tuple[str, str, Along]]:
+def places(derived: Derived) -> list[tuple[str, str, Along]]:
     """Cell axes, then the directions and plane normals that were asked for."""
     rows = [(indices_text(axis.indices, False), letters, axis.along) for letters, axis in _alike_axes(derived)]
     rows += [(indices_text(d.indices, False), f"asked for; {d.length:.3f} A long", d.along) for d in derived.directions]
@@ -128,7 +132,7 @@ def _ends(derived: Derived, least: Extreme, most: Extreme, digits: int = 2) -> l
 
 def _stretched(derived: Derived) -> list[str]:
     lines = [heading("Stretched or bent"), "  Young's modulus, GPa (a needle bends with that of its own axis)"]
-    lines += [row(f"  along {n}", value_text(a.young), note) for n, note, a in _places(derived)]
+    lines += [row(f"  along {n}", value_text(a.young), note) for n, note, a in places(derived)]
     return [*lines, *_ends(derived, *derived.extremes["young_GPa"]), ""]
 
 
@@ -148,7 +152,7 @@ def _uneven(derived: Derived, means: Averages) -> list[str]:
     for i, name in enumerate(AVERAGES):
         errors = [None] * 3 if means.errors is None else means.errors[i]
         cells = [uncertain(v, s, 3 if name == "poisson" else 2) for v, s in zip(means.values[i], errors, strict=True)]
-        table.append([_AVERAGED[name] + ("" if name == "poisson" else ", GPa"), *cells])
+        table.append([AVERAGED[name] + ("" if name == "poisson" else ", GPa"), *cells])
     lines.append(columns(table, ["", *(scheme.capitalize() for scheme in SCHEMES)]))
     lines.append(row("K/G (Hill)", uncertain(means.pugh, means.pugh_error)))
     return [*lines, ""]
@@ -160,7 +164,7 @@ def _sound(derived: Derived) -> list[str]:
     if heat is None or e.density is None:
         return [*lines, "  no density, no speeds: give --density or --cell", ""]
     table = []
-    for name, _, a in _places(derived):
+    for name, _, a in places(derived):
         tilt = np.degrees(np.arccos(min(1.0, abs(float(a.polarisations[2] @ a.direction)))))
         table.append([name, *(value_text(v, 0) for v in a.speeds), f"{tilt:.0f}"])
     if table:

@@ -82,17 +82,24 @@ def _promise(plan: Plan) -> str:
     return paragraph(f"expected standard errors at a stress noise of {expected.noise:g} GPa, in GPa: {', '.join(words)}", "  ")
 
 
-def plan_text(plan: Plan, out: Path | None = None) -> str:
+def plan_text(plan: Plan, out: Path | None = None, costs: Sequence[JobCost] = ()) -> str:
     """The plan of a run: constants, jobs, expected errors, and how its jobs are computed and submitted."""
+    known = {cost.label: cost for cost in costs}
     rows = [
-        [job.label, f"{100 * abs(job.magnitude):g}", *(plain(100 * x) for x in strain_to_voigt(job.strain))]
+        [
+            job.label,
+            f"{100 * abs(job.magnitude):.4g}",
+            *(plain(100 * x) for x in strain_to_voigt(job.strain)),
+            *([known[job.label].laue_class, str(known[job.label].kpoints or "")] if known else []),
+        ]
         for job in plan.strain_set
     ]
     lines = [
         *_head(plan),
         "",
         heading(f"{len(plan.strain_set) - 1} strained jobs and the reference, aim {plan.aim}, ions {plan.ions}"),
-        columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS)]),
+        columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS), *(["class", "k"] if known else [])]),
+        *_kpoints(plan, costs),
         *_beyond(plan),
         f"  starting cells: {_MOVES[plan.atoms]}",
         "  Green-Lagrange strain, engineering shear, in the frame of the input cell",
@@ -104,6 +111,16 @@ def plan_text(plan: Plan, out: Path | None = None) -> str:
         findings_text(plan.findings),
     ]
     return "\n".join(lines)
+
+
+def _kpoints(plan: Plan, costs: Sequence[JobCost]) -> list[str]:
+    """Irreducible points of all strained jobs against the reference."""
+    points = {cost.label: cost.kpoints for cost in costs if cost.kpoints}
+    rest = points.get(plan.jobs[0].label)
+    if not rest:
+        return []
+    total = sum(points.get(job.label) or 0 for job in plan.strain_set if job.shape)
+    return [paragraph(f"k: irreducible k-points; {total} in the strained jobs, {total / rest:.3g} times the reference's", "  ")]
 
 
 def _beyond(plan: Plan) -> list[str]:
@@ -194,7 +211,7 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         columns([[f"  {c}", *(plain(x, 2) for x in row)] for c, row in zip(COMPONENTS, data["stiffness_GPa"], strict=True)]),
         "",
         f"  stress noise      {'unknown' if noise is None else f'{noise:.3g} GPa, {source}'}",
-        f"  reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)",
+        paragraph(f"reference stress  {' '.join(plain(x) for x in stress)} GPa (xx yy zz yz xz xy)", "  "),
         f"  energies          {_energy_words(fit)}",
         f"  curvature         {fit.checks.verdict}",
         f"  finer settings    {_finer_words(fit)}",

@@ -7,8 +7,9 @@
     laue m-3m
     axes ieee
     unit GPa
-    density 2329
-    temperature 298
+    density 2329 kg/m^3
+    temperature 298 K
+    source where the numbers are from
     C11 165.78
     C12 = 63.94(2)
     C44 79.62 +- 0.05
@@ -209,13 +210,23 @@ def _scale(words: dict[str, str], where: str) -> float:
     return STRESS_UNITS_IN_GPA[unit]
 
 
+#: units that may follow a number, the first one when none does -> factor to it
+_UNITS = {
+    "density": {"kg/m^3": 1.0, "kg/m3": 1.0, "g/cm^3": 1e3, "g/cm3": 1e3},
+    "temperature": {"K": 1.0},
+}
+
+
 def _positive(words: dict[str, str], key: str, where: str) -> float | None:
     if key not in words:
         return None
-    found = _NUMBER.match(words[key])
-    if not found or not float(found[0]) > 0:
+    found = re.fullmatch(rf"({_NUMBER.pattern})\s*(\S*)", words[key])
+    if not found or not float(found[1]) > 0:
         raise InputError(f"{key} {words[key]!r} is not a positive number", where)
-    return float(found[0])
+    units = _UNITS[key]
+    if found[2] and found[2] not in units:
+        raise InputError(f"unknown unit {found[2]!r} of the {key}", where, f"Give it in {next(iter(units))}.")
+    return float(found[1]) * units.get(found[2], 1.0)
 
 
 def _from_matrix(rows: list[list[str]], errors: list[list[str]], where: str) -> dict[str, Entry]:

@@ -4,7 +4,7 @@ Gaussian noise on every Mandel component of the second Piola-Kirchhoff stress, p
 tests/data/published_stiffness.json), the fewest jobs at 1 %, at 0.5 and 1 %, and image-using (single-sided) sets. The noise is
 2e-4 of the mean stiffness, which makes errors of about one percent of the constants. Every cell is the share, in percent, of
 20,000 simulated sets whose interval holds the true value; the worst constant is shown. The last column is the mean over
-constants and sets of the sampled variance over the Cramer-Rao bound, whose own sampling error is about 1 % a constant.
+constants and sets of the sampled variance over the Cramer-Rao bound; its own sampling error is below 1 %.
 
 Run: python tests/benchmarks/coverage.py [SETS]
 """

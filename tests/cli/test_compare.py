@@ -8,12 +8,17 @@ from html.parser import HTMLParser
 
 import numpy as np
 import pytest
+from ase.build import bulk
+from ase.calculators.emt import EMT
+from ase.spacegroup import crystal
 from support.files import SILICON, write
 from support.published import mandel
-from support.returned import linear_law, write_return, write_returns
+from support.returned import write_return
 
 from strainkit.run.plan import job_folder, load_plan
-from strainkit.tensors.sixvectors import from_mandel
+from strainkit.tensors.sixvectors import from_mandel, to_mandel
+from strainkit.tensors.strain import cauchy_from_pk2
+from strainkit.units import EV_PER_A3_IN_GPA
 
 MEASURED = """name measured
 laue m-3m
@@ -27,15 +32,16 @@ C44 79.6(2)
 
 
 def silicon_run(cli, folder, name, noise, seed, energy=-1.0):
-    """A run whose stresses follow the published tensor of silicon (CRC) with Gaussian noise, GPa."""
-    run = folder / name
+    """A run whose energies (eV) and stresses follow the published tensor of silicon (CRC); Gaussian noise in GPa."""
+    run, stiffness, rng = folder / name, mandel("Si_CRC"), np.random.default_rng(seed)
     assert cli("prepare", write(folder, "POSCAR", SILICON), "--out", run).code == 0
-    rng, exact = np.random.default_rng(seed), linear_law(mandel("Si_CRC"))
     plan = load_plan(run)
-    write_returns(run, plan, lambda strain: exact(strain) + noise * from_mandel(rng.standard_normal(6)))
-    write_return(
-        run / job_folder("reference"), plan.crystal, np.zeros((3, 3)), energy=energy, engine="lj epsilon=1.0 fmax=0.0002"
-    )
+    for job in plan.jobs:
+        strain = to_mandel(job.strain)
+        sigma = cauchy_from_pk2(from_mandel(stiffness @ strain + noise * rng.standard_normal(6)), job.gradient)
+        stored = 0.5 * strain @ stiffness @ strain * plan.crystal.volume / EV_PER_A3_IN_GPA
+        cell = plan.crystal.deformed(job.gradient)
+        write_return(run / job_folder(job.label), cell, sigma, energy=energy + stored, engine="lj fmax=0.0002")
     assert cli("collect", run).code == 0
     return run
 
@@ -77,8 +83,25 @@ def test_page_and_files(cli, runs, tmp_path):
     assert len([r for r in rows if r["kind"] == "difference"]) == len(data["differences"]) == data["tests"]
 
 
-def test_baseline_and_other_ranking(cli, runs):
-    page = cli("compare", *runs, "--baseline", "fine", "--by", "C44")
+def test_files_of_others_are_left_alone(cli, tmp_path):
+    pair = [write(tmp_path, f"{name}.txt", MEASURED.replace("measured", name)) for name in ("a", "b")]
+    for option in ("--csv", "--html"):
+        mine = write(tmp_path, "mine", "dear diary")
+        refused = cli("compare", *pair, option, mine)
+        assert refused.code == 3
+        assert "not written by strainkit" in refused.err
+        assert mine.read_text() == "dear diary"
+        assert cli("compare", *pair, option, mine, "--force").code == 0
+        assert cli("compare", *pair, option, mine).code == 0  # its own file it may replace
+        assert "dear diary" not in mine.read_text()
+
+
+def test_baseline_and_other_ranking(cli, runs, tmp_path):
+    page = cli("compare", *runs, "--baseline", "fine", "--by", "C44", "--html", tmp_path / "c.html")
+    html = (tmp_path / "c.html").read_text()
+    assert "Change against fine" in html
+    assert "<svg" in html
+    assert len(html) < 200_000
     assert page.code == 0
     assert narrow(page.out)
     assert "Change against 2 fine" in page.out
@@ -103,6 +126,49 @@ def test_a_tensor_with_its_cell(cli, runs, tmp_path):
     assert data["crystals"][1]["formula"] == "Si2"
     assert data["crystals"][1]["softest_shear"]["along"]["nearest_plane"] is not None
     assert len(data["constants"][0]["constants"]) == 3
+
+
+def test_alloy_formed_from_its_metals(cli, tmp_path):
+    """Copper, gold and AuCu3 of the effective-medium potential; the energies again straight from ASE."""
+    cubes = {"Cu": [("Cu", (0, 0, 0))], "Au": [("Au", (0, 0, 0))], "AuCu3": [("Au", (0, 0, 0)), ("Cu", (0, 0.5, 0.5))]}
+    lengths = {"Cu": 3.59, "Au": 4.06, "AuCu3": 3.73}
+    groups = {"Cu": 225, "Au": 225, "AuCu3": 221}
+    energies, runs = {}, []
+    for name, sites in cubes.items():
+        symbols, basis = zip(*sites, strict=True)
+        atoms = crystal(symbols, basis, spacegroup=groups[name], cellpar=[lengths[name]] * 3 + [90] * 3)
+        atoms.calc = EMT()
+        energies[name] = atoms.get_potential_energy() / 4  # four atoms in every one of these cubes
+        atoms.write(tmp_path / f"{name}.vasp", direct=True)
+        run = tmp_path / name
+        assert cli("prepare", tmp_path / f"{name}.vasp", "--out", run, "--ions", "clamped", "--no-displaced").code == 0
+        assert cli("evaluate", run, "--engine", "emt", "--workers", 1).code == 0
+        assert cli("collect", run).code == 0
+        runs.append(run)
+    data = cli("compare", *runs, "--json").json
+    (formed,) = data["energies"]
+    assert formed["product"] == "AuCu3"
+    assert formed["parents"] == [{"crystal": "Cu", "formula_units": "3"}, {"crystal": "Au", "formula_units": "1"}]
+    expected = 4 * energies["AuCu3"] - 3 * energies["Cu"] - energies["Au"]
+    assert formed["energy_eV"] == pytest.approx(expected, rel=0, abs=1e-6)
+    assert [c["method"]["engine"] for c in data["crystals"]] == ["emt"] * 3
+    assert {f["code"] for f in data["findings"]} == {"clamped-compared"}
+
+
+def test_many_crystals_with_long_names_keep_to_the_page(cli, tmp_path):
+    """Values that overlap like tiles get several letters each."""
+    files = []
+    for k in range(8):
+        text = MEASURED.replace("measured", f"a crystal with a rather long name, the one with number {k}")
+        text = text.replace("165.8(3)", f"{160 + 2 * k}.0(9)").replace("79.6(2)", f"{70 + k}.0(3)")
+        files.append(write(tmp_path, f"{k}.txt", text))
+    for more in ([], ["--baseline", files[3]], ["--by", "C11"]):
+        page = cli("compare", *files, *more)
+        assert page.code == 0
+        assert narrow(page.out)
+    letters = [v["letters"] for v in cli("compare", *files, "--json").json["constants"][0]["constants"][0]["values"]]
+    assert max(map(len, letters)) > 1
+    assert not set(letters[0]) & set(letters[-1])
 
 
 class _Page(HTMLParser):
@@ -131,8 +197,11 @@ def test_names_cannot_inject_anything(cli, tmp_path):
     assert "\u202e" not in page.out
     html = (tmp_path / "c.html").read_text()
     parsed = _Page(html)
-    assert not {"img", "script", "a", "link", "iframe"} & {tag for tag, _ in parsed.tags}
-    assert not [attrs for _, attrs in parsed.tags if {"src", "href", "onerror"} & set(attrs)]
+    assert not {"img", "iframe", "object"} & {tag for tag, _ in parsed.tags}
+    assert [tag for tag, _ in parsed.tags].count("script") == 1  # the page's own, which sorts tables
+    links = [value for _, attrs in parsed.tags for key, value in attrs.items() if key in ("src", "href", "xlink:href")]
+    assert all(value.startswith(("#", "data:,")) for value in links)
+    assert not [attrs for _, attrs in parsed.tags if any(key.startswith("on") for key in attrs)]
     assert "<img src=x onerror=alert(1)>" in parsed.words
     assert "\x1b" not in html
     cells = {row["crystal"] for row in csv.DictReader(io.StringIO((tmp_path / "c.csv").read_text()))}
@@ -175,3 +244,18 @@ def test_an_unstable_crystal(cli, tmp_path):
     assert page.code == 5
     assert "C11, GPa" in page.out
     assert cli("compare", soft, tmp_path / "measured.txt").code == 2  # no modulus to rank by
+
+
+def test_a_campaign_is_its_crystals(cli, tmp_path):
+    copper = bulk("Cu", "fcc", a=3.59)
+    copper.write(tmp_path / "one.vasp", direct=True)
+    copper.set_cell(1.001 * copper.cell, scale_atoms=True)
+    copper.write(tmp_path / "two.vasp", direct=True)
+    cells, campaign = [tmp_path / f"{name}.vasp" for name in ("one", "two")], tmp_path / "campaign"
+    assert cli("prepare", *cells, "--out", campaign, "--ions", "clamped", "--no-displaced").code == 0
+    for run in (campaign / "runs" / "001").iterdir():
+        assert cli("evaluate", run, "--engine", "emt", "--workers", 1).code == 0
+        assert cli("collect", run).code == 0
+    data = cli("compare", campaign, "--json").json
+    assert [c["label"] for c in data["crystals"]] == ["one", "two"]
+    assert len(data["energies"]) == 1  # the same metal twice: one form against the lower one

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import warnings
 from pathlib import Path
 
 import ase.test
@@ -10,7 +11,9 @@ import numpy as np
 import pytest
 from ase.build import bulk
 from ase.calculators.singlepoint import SinglePointCalculator
+from ase.io import read as ase_read
 from ase.io import write as ase_write
+from support.outputs import unpack
 
 from strainkit.collect.readers import read_returned, recognise
 from strainkit.errors import InputError
@@ -112,8 +115,60 @@ def test_unusable_extended_xyz(tmp_path, text, status):
     assert read(path).problems[0][0] == status
 
 
-@pytest.mark.parametrize("text", ["", "hello\n", "\0\1\2", '{"a": 1}', "5\nno lattice here\n"])
+def test_the_last_configuration_of_an_extended_xyz_counts(tmp_path):
+    frame = '1\nLattice="2 0 0 0 2 0 0 0 2" stress="{0} 0 0 0 0 0 0 0 0" converged={1} pbc="T T T"\nSi 0 0 0\n'
+    path = tmp_path / "out.extxyz"
+    path.write_text(frame.format(1, "F") + frame.format(2, "T"))
+    returned = read(path)
+    assert not returned.problems
+    assert returned.stress[0, 0] == pytest.approx(2 * EV_PER_A3_IN_GPA)
+    path.write_text(frame.format(1, "T") + frame.format(2, "F"))
+    assert [status for status, _ in read(path).problems] == ["unconverged"]
+
+
+@pytest.mark.parametrize(
+    "text",
+    [
+        "",
+        "hello\n",
+        "#  FHI-aims code project\n#  VB, Fritz-Haber Institut, 2009\n",
+        "\0\1\2",
+        '{"a": 1}',
+        "5\nno lattice here\n",
+    ],
+)
 def test_other_files_are_not_outputs(tmp_path, text):
     path = tmp_path / "file"
     path.write_text(text)
     assert recognise(path) is None
+
+
+@pytest.mark.parametrize(
+    ("name", "format"),
+    [
+        ("vasp/OUTCAR_example_1", "vasp-out"),
+        ("vasp/vasprun_dfpt.xml", "vasp-xml"),
+        ("vasp/vasprun_pstress.xml", "vasp-xml"),
+        ("castep/md.castep", "castep-castep"),
+        ("aims/relax.out", "aims-output"),
+        ("qe/relaxed.out", "espresso-out"),
+        ("qe/two-species.out", "espresso-out"),
+        ("qe/metal.out", "espresso-out"),
+    ],
+)
+def test_against_another_implementation(name, format, tmp_path):
+    """ASE's readers, which are right on undamaged outputs of these programs (they were compared with the programs' numbers)."""
+    path = SHIPPED / name if (SHIPPED / name).is_file() else unpack(name, tmp_path)
+    returned = read(path)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        atoms = ase_read(path, format=format, index=-1)
+    np.testing.assert_allclose(returned.lattice, atoms.cell.array, atol=1e-6)
+    np.testing.assert_allclose(returned.positions, atoms.get_scaled_positions(wrap=False), atol=1e-6)
+    assert list(returned.numbers) == list(atoms.numbers)
+    results = atoms.calc.results
+    xx, yy, zz, yz, xz, xy = results["stress"] * EV_PER_A3_IN_GPA
+    np.testing.assert_allclose(returned.stress, [[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]], rtol=1e-5, atol=1e-5)
+    free = results.get("free_energy", results["energy"])
+    assert returned.energy == pytest.approx(free, rel=2e-7)
+    np.testing.assert_allclose(returned.forces, atoms.get_forces(apply_constraint=False), rtol=1e-5, atol=1e-6)

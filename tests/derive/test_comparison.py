@@ -10,7 +10,7 @@ from scipy.stats import norm
 from support.crystals import conventional, random_rotation, rewritten
 from support.published import BY_LAUE_CLASS, entries, mandel
 
-from strainkit.crystal.frames import crystal_frame
+from strainkit.crystal.frames import chosen_frame, crystal_frame
 from strainkit.crystal.symmetry import find_symmetry
 from strainkit.derive.comparison import compare_crystals
 from strainkit.derive.elastic import ElasticCrystal
@@ -158,6 +158,12 @@ def _without_axes(entry_id: str) -> Member:
     return replace(published(entry_id), axes=None)
 
 
+def test_large_errors_are_said_to_be_too_large_for_tests():
+    vague = member_of_file(parse_tensor("name vague\nlaue m-3m\nC11 10(2)\nC12 5(2)\nC44 3(1)\n", "vague.txt"))
+    c = compare_crystals([vague, published("aragonite_Liu2005")])
+    assert [(f.code, f.where) for f in c.findings] == [("rough-errors", "vague")]
+
+
 def test_labels():
     a, b = published("Kr_10K"), published("Kr_116K")
     same = [replace(m, elastic=replace(m.elastic, name="krypton\x1b[31m")) for m in (a, b)]
@@ -173,3 +179,56 @@ def test_labels():
         compare_crystals([a, b], baseline="x")
     with pytest.raises(UsageError, match="ranked by 'hardness'"):
         compare_crystals([a, b], by="hardness")
+
+
+def test_a_notebook_compares_fits():
+    """Fits without folders: numbered where their names are the same."""
+    from strainkit.collect.table import StressRecord, StressTable
+    from strainkit.fit.result import fit_run
+    from strainkit.prepare.runfolder import plan_run
+    from strainkit.tensors.sixvectors import from_mandel, stress_to_voigt, to_mandel
+    from strainkit.tensors.strain import cauchy_from_pk2
+
+    fits = []
+    for seed in (1, 2):
+        plan, rng = plan_run(conventional("m-3m"), [0.01]), np.random.default_rng(seed)
+        records = []
+        for job in plan.jobs:
+            stress = from_mandel(mandel("Si_CRC") @ to_mandel(job.strain) + 0.01 * rng.standard_normal(6))
+            records.append(StressRecord(job.label, "done", stress_to_voigt(cauchy_from_pk2(stress, job.gradient))))
+        fits.append(fit_run(plan, StressTable(tuple(records))))
+    c = compare_crystals(fits)
+    assert c.labels == ["number 1", "number 2"]
+    assert c.tests == 12
+    assert not any(d.distinguishable for d in c.differences)  # the seeds are fixed; false alarms have a test of their own
+    assert not c.reactions
+
+
+def test_a_round_crystal_does_not_seem_less_round_for_more_noise():
+    """An isotropic solid known to 1 % and to 0.1 %: noise makes its extremes differ, the allowance for that undoes it."""
+    rng, pairs = np.random.default_rng(8), 10
+    truth = 160.0 * np.eye(6)
+    truth[:3, :3] += 100.0
+    step = 0.5**0.5 * np.ones((6, 6)) + (1.0 - 0.5**0.5) * np.eye(6)  # every element of the full tensor equally uncertain
+    names = ("young_least_GPa", "young_most_GPa", "shear_least_GPa", "anisotropy_index")
+    frame = chosen_frame("given", None)
+    alarms, blind = dict.fromkeys(names, 0), dict.fromkeys(names, 0)
+    for _ in range(pairs):
+        both = []
+        for noise in (2.0, 0.2):
+            half = np.triu(rng.standard_normal((6, 6)), 1)
+            drawn = truth + noise * step * (half + half.T + np.diag(rng.standard_normal(6)))
+            flat = np.array([[i, j] for i in range(6) for j in range(6)])
+            covariance = np.zeros((36, 36))
+            for row, (i, j) in enumerate(flat):
+                for column, (k, m) in enumerate(flat):
+                    covariance[row, column] = (noise * step[i, j]) ** 2 if {i, j} == {k, m} else 0.0
+            stiffness = Stiffness(drawn, covariance)
+            both.append(Member("x", f"{noise}", ElasticCrystal("x", "", stiffness, stiffness, np.zeros((3, 3)), frame)))
+        c = compare_crystals(both)
+        for d in c.differences:
+            if d.quantity.name in names:
+                alarms[d.quantity.name] += d.p_value < 0.05
+                blind[d.quantity.name] += abs(d.value.value) > 1.96 * d.value.error
+    assert max(alarms.values()) <= 3  # of ten, at 0.05 each
+    assert max(blind.values()) >= 5  # what a plain test would have said

@@ -111,6 +111,17 @@ def test_several_ways_are_refused():
     assert "several combinations" in reaction.reason
 
 
+def test_what_outputs_say_counts_where_no_deck_is_recorded():
+    said = {"functional": "PBE", "cutoff_eV": 600.0, "kpoints": "4x4x4", "spin": "none", "dispersion": "none"}
+    one = Method("VASP", printed=said)
+    assert one.recorded
+    assert one.words == "VASP PBE 600 eV 4x4x4"
+    assert one.differences(Method("VASP", printed={**said, "kpoints": "2x2x8", "spin": "polarised"})) == []
+    assert one.differences(Method("VASP", printed={**said, "cutoff_eV": 520.0})) == ["cutoff_eV 600 and 520"]
+    assert one.differences(Method("VASP", printed={**said, "dispersion": "IVDW 12"})) == ["dispersion none and IVDW 12"]
+    assert "4x4x4 and 2x2x8" in one.doubts(Method("VASP", printed={**said, "kpoints": "2x2x8"}))[0]
+
+
 def test_what_the_folders_do_not_say_is_a_finding():
     ice, dry, both = (("ice", WATER, -20.4), ("dry", dry_ice(), -39.0), ("both", CARBONIC, -30.0))
     for method, word in (

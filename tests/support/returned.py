@@ -28,15 +28,22 @@ def write_returns(
     law: Callable[[np.ndarray], np.ndarray],
     rng: np.random.Generator | None = None,
     only: set[str] | None = None,
+    energy: float = -1.0,
 ) -> None:
-    """Write returned.extxyz for every job; with a generator, each output in its own randomly turned frame."""
+    """Write returned.extxyz for every job; with a generator, each output in its own randomly turned frame.
+
+    Energies, eV, are those of the law: `energy` at rest and V0 eta:(S0 + S)/2 more under strain, exact for linear laws.
+    """
+    start = law(np.zeros((3, 3)))
     for job in plan.jobs:
         if only is not None and job.label not in only:
             continue
-        sigma = cauchy_from_pk2(law(job.strain), job.gradient)
+        second = law(job.strain)
+        sigma = cauchy_from_pk2(second, job.gradient)
+        work = plan.crystal.volume * float((job.strain * (start + second)).sum()) / 2 / EV_PER_A3_IN_GPA
         turn = np.eye(3) if rng is None else random_rotation(rng)
         cell = plan.crystal.deformed(turn @ job.gradient)
-        write_return(run / job_folder(job.label), cell, turn @ sigma @ turn.T)
+        write_return(run / job_folder(job.label), cell, turn @ sigma @ turn.T, energy=energy + work)
 
 
 def write_return(folder: Path, cell: Crystal, sigma_gpa: np.ndarray, **info: object) -> None:

@@ -62,6 +62,9 @@ def test_matrix_with_errors_and_words():
     file = parse_tensor(text + "\n".join(rows) + "\nstandard errors:\n" + "\n".join(["1 1 1 1 1 1"] * 6))
     assert (file.name, file.density, file.temperature, file.axes) == ("x y", 2329.0, 298.0, "crystal")
     assert file.source == "somebody 1990"
+    assert parse_tensor(text.replace("2329 kg/m3", "2.329 g/cm^3") + "\n".join(rows)).density == pytest.approx(
+        2329.0, rel=1e-12
+    )
     stiffness, _ = file.stiffness()
     assert stiffness.voigt[0, 1] == pytest.approx(5.0, rel=1e-12)
     np.testing.assert_allclose(stiffness.standard_errors, 0.1, rtol=1e-9, atol=0)
@@ -130,6 +133,8 @@ def test_a_full_matrix_is_never_changed():
         ("axes lab\n" + SILICON, "unknown axes 'lab'"),
         ("unit psi\n" + SILICON, "unknown unit 'psi'"),
         ("density -5\n" + SILICON, "density '-5' is not a positive number"),
+        ("density 2.33 kg/l\n" + SILICON, "unknown unit 'kg/l' of the density"),
+        ("temperature 25 C\n" + SILICON, "unknown unit 'C' of the temperature"),
         ("1 2 3\n4 5 6", "rows of 3, 3 numbers"),
         ("1 2 3 4 5 6\n" * 6, "not symmetric: row 1 column 3 is 3, row 3 column 1 is 1"),
         ("1 2 3 4 5 6\n" * 6 + SILICON, "both a matrix and named constants"),

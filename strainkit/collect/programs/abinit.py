@@ -9,7 +9,7 @@ from ase.units import Bohr, Hartree
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, last, number, rows
+from strainkit.collect.text import NUMBER, found, last, number, rows
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import STRESS_UNITS_IN_GPA
 
@@ -27,7 +27,7 @@ __all__ = [
     "version",
 ]
 
-END_MARK = re.compile(r"^ *Calculation completed\.", re.M)
+END_MARK = re.compile(r"Calculation completed\.")
 BAD_MARKS = ((re.compile(r"was not enough Broyd/MD steps to converge"), "unconverged", "ions not relaxed: too few steps"),)
 _AFTER = "-outvars: echo values of variables after computation"
 _BLOCK = r"-? *sigma\({0} {0}\)= *#...sigma\({1}\)= *#"
@@ -37,7 +37,8 @@ _NO_FUNCTIONAL = re.compile(r"- ixc\s*=\s*(-?\d+)")
 
 
 def recognises(head: bytes) -> bool:
-    return b"ABINIT" in head and b".Version" in head
+    """The main output; the log, which holds much of it too, begins otherwise."""
+    return head.lstrip().startswith(b".Version") and b"ABINIT" in head
 
 
 def load(source: Source) -> str:
@@ -58,9 +59,9 @@ def _after(text: str) -> str:
 
 def _variable(text: str, name: str, count: int) -> FloatArray | None:
     """A variable of the final list, exactly `count` numbers; None when it is not in the list."""
-    match = re.search(rf"^\s+{name}((?:\s+{NUMBER}){{{count}}})\s+(?![-+]?\.?\d)", text, re.M)
+    match = re.search(rf" {name}((?:\s+{NUMBER}){{{count}}})\s+(?![-+]?\.?\d)", text)
     if match is None:
-        if re.search(rf"^\s+{name}\s", text, re.M):
+        if re.search(rf" {name}\s", text):
             raise ValueError(f"{name} cannot be read")
         return None
     return np.array([number(word) for word in match[1].split()])
@@ -73,21 +74,31 @@ def _needed(text: str, name: str, count: int) -> FloatArray:
     return value
 
 
-def _atom_count(after: str) -> int:
-    value = _variable(after, "natom", 1)
-    return 1 if value is None else int(value[0])
+def _atom_count(text: str) -> int:
+    """From the head of the output; the final list has it too, but for a single atom."""
+    count = int(found(re.compile(r" natom = +(\d+) "), text, "number of atoms")[1])
+    value = _variable(_after(text), "natom", 1)
+    if int(value[0] if value is not None else 1) != count:
+        raise ValueError("natom is printed twice and differs")
+    return count
+
+
+def _same(one: FloatArray | None, other: FloatArray | None) -> bool:
+    return one is other if one is None or other is None else np.array_equal(one, other)
 
 
 def geometry(text: str) -> Geometry:
     """From the variables after the computation: acell, rprim and xred, ten digits."""
     after = _after(text)
-    count = _atom_count(after)
+    count = _atom_count(text)
     scale = _variable(after, "acell", 3)
     axes = _variable(after, "rprim", 9)
     lattice = (np.eye(3) if axes is None else axes.reshape(3, 3)) * (np.ones(3) if scale is None else scale)[:, None]
     kinds = _variable(after, "ntypat", 1)
     charges = _needed(after, "znucl", 1 if kinds is None else int(kinds[0]))
     typat = _variable(after, "typat", count)
+    if typat is None and len(charges) > 1:
+        raise ValueError("no typat")
     types = np.ones(count, dtype=int) if typat is None else typat.astype(int)
     if types.min() < 1 or types.max() > len(charges):
         raise ValueError("typat cannot be read")
@@ -95,7 +106,18 @@ def geometry(text: str) -> Geometry:
     positions = (
         np.zeros((count, 3)) if fractions is None and count == 1 else _needed(after, "xred", 3 * count).reshape(count, 3)
     )
-    precision = 0.5e-10 * float(np.abs(lattice).max()) * Bohr
+    # the value of one bohr differs in the ninth digit between ABINIT and ASE
+    cartesian = _needed(after, "xcart", 3 * count).reshape(count, 3)
+    if np.abs(positions @ lattice - cartesian).max() > 2e-9 * max(
+        1.0, float(np.abs(lattice).max()), float(np.abs(cartesian).max())
+    ):
+        raise ValueError("acell, rprim and xred do not give xcart")
+    before = text[: text.rfind(_AFTER)]
+    if not np.array_equal(_needed(before, "znucl", len(charges)), charges) or not _same(
+        _variable(before, "typat", count), typat
+    ):
+        raise ValueError("znucl or typat are not those of the input")
+    precision = 5e-9 * float(np.abs(lattice).max()) * Bohr
     return Geometry(lattice * Bohr, positions, np.rint(charges[types - 1]).astype(np.int64), precision)
 
 
@@ -119,22 +141,26 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """etotal, the free energy where there is smearing."""
-    value = _variable(_after(text), "etotal", 1)
-    return None if value is None else float(value[0]) * Hartree
+    return float(_needed(_after(text), "etotal", 1)[0] * Hartree)
 
 
 def forces(text: str) -> FloatArray | None:
     after = _after(text)
-    count = _atom_count(after)
-    values = _variable(after, "fcart", 3 * count)
-    return None if values is None else values.reshape(count, 3) * Hartree / Bohr
+    count = _atom_count(text)
+    values, start = _variable(after, "fcart", 3 * count), text.rfind(" cartesian forces (hartree/bohr) at end:")
+    if values is None and start < 0:
+        return None
+    block = rows(text, start, count, "@...#...#...#", "forces") if start >= 0 else np.zeros((0, 3))
+    if values is None or np.shape(block) != (count, 3) or np.abs(block - values.reshape(count, 3)).max() > 1e-9:
+        raise ValueError("the forces are printed twice and differ")
+    return np.asarray(block * Hartree / Bohr)
 
 
 def doubts(text: str) -> Problems:
     """The words about the last electronic cycle, and the words of a finished relaxation."""
     problems = []
     cycle = text[max(text.rfind("SELF-CONSISTENT-FIELD CONVERGENCE"), 0) :]
-    if "not enough SCF cycles to converge" in cycle or not re.search(r"^ At SCF step +\d+.*converged", cycle, re.M):
+    if "not enough SCF cycles to converge" in cycle or not re.search(r" At SCF step +\d+.*converged", cycle):
         problems.append(("unconverged", "electronic steps did not converge"))
     if "=== [ionmov=" in text and "gradients are converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))

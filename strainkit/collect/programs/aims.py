@@ -8,22 +8,34 @@ import numpy as np
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, lines_after, number, rows, symmetric
+from strainkit.collect.text import (
+    NUMBER,
+    elements,
+    found,
+    fractional,
+    last,
+    last_number,
+    lines_after,
+    needed,
+    number,
+    rows,
+    symmetric,
+)
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import EV_PER_A3_IN_GPA
 
 END_MARK = re.compile(r"Have a nice day\.")
 BAD_MARKS = ((re.compile(r"Self-consistency cycle not converged"), "unconverged", "electronic steps did not converge"),)
-_STRESS = re.compile(r"^ *\| +(?:(?:Analytical|Numerical) stress tensor - Symmetrized|Numerical stress tensor) +\|\s*$", re.M)
+_STRESS = re.compile(r" stress tensor(?: - Symmetrized)? +\| *\n")
 _PRESSURE = re.compile(rf"^ *\| +Pressure: +({NUMBER}) +\[eV/A\*\*3\] +\|\s*$", re.M)
-_MOVED = re.compile(r"^ *(?:Updated|Final) atomic structure:\s*$", re.M)
+_MOVED = re.compile(r" (?:Updated|Final) atomic structure: *\n")
 _AXIS = re.compile(rf"^ *lattice_vector +({NUMBER}) +({NUMBER}) +({NUMBER})\s*$", re.M)
 _ATOM = re.compile(rf"^ *atom +({NUMBER}) +({NUMBER}) +({NUMBER}) +(\S+)\s*$", re.M)
 _SITE = re.compile(rf"\s*\| *\d+: Species (\S+) +({NUMBER}) +({NUMBER}) +({NUMBER})\s*\Z")
 
 
 def recognises(head: bytes) -> bool:
-    return b"FHI-aims" in head or (b"| Number of atoms " in head and b"| Number of spin channels " in head)
+    return b"Invoking FHI-aims" in head or (b"| Number of atoms " in head and b"| Number of spin channels " in head)
 
 
 def load(source: Source) -> str:
@@ -61,7 +73,7 @@ def stress(text: str) -> Stress | None:
     heading = last(_STRESS, text)
     if heading is None:
         return None
-    matrix = rows(text, heading.start(), 3, r"\|...[xyz]...#...#...#...\|", "stress", skip=4)
+    matrix = rows(text, heading.start(), 3, r"\|...@...#...#...#...\|", "stress", 4, "xyz")
     pressure = _PRESSURE.search(text, heading.start())
     if pressure is None or abs(np.trace(matrix) / 3 + number(pressure[1])) > 1.1e-8:
         raise ValueError("the stress does not agree with the pressure printed below it")
@@ -70,12 +82,14 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Electronic free energy, with the dispersion correction where there is one."""
-    return last_number(re.compile(rf"^ *\| Electronic free energy +: +(?:{NUMBER} Ha +)?({NUMBER}) eV\s*$", re.M), text)
+    cycle = max(text.rfind("Begin self-consistency loop"), 0)
+    value = last_number(re.compile(rf"\| Electronic free energy +: +(?:{NUMBER} Ha +)?({NUMBER}) eV\s*$", re.M), text, cycle)
+    return needed(value, "electronic free energy")
 
 
 def forces(text: str) -> FloatArray | None:
     start = text.rfind("Total atomic forces (unitary forces")
-    return None if start < 0 else rows(text, start, _atom_count(text), r"\|...\d+...#...#...#", "forces")
+    return None if start < 0 else rows(text, start, _atom_count(text), r"\|...@...#...#...#", "forces")
 
 
 def doubts(text: str) -> Problems:
@@ -86,16 +100,16 @@ def doubts(text: str) -> Problems:
     if "Geometry optimization: Attempting to predict" in text and "Present geometry is converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))
     printed = last(_STRESS, text)
-    if printed and "Numerical" not in printed[0] and printed.start() < cycle:
+    if printed and "Numerical" not in text[printed.start() - 10 : printed.start()] and printed.start() < cycle:
         problems.append(("unfinished", "the stress is of an earlier ionic step than the last one begun"))
     return tuple(problems)
 
 
 _SETTINGS = {
-    "functional": re.compile(r"^ *XC: +(?:Using )?(.*?)\.? *$", re.M),
-    "kpoints": re.compile(r"^ *Found k-point grid: +(\d+ +\d+ +\d+)", re.M),
+    "functional": re.compile(r" XC: +(?:Using )?(.*?)\.? *$", re.M),
+    "kpoints": re.compile(r" Found k-point grid: +(\d+ +\d+ +\d+)", re.M),
     "kpoint_count": re.compile(r"\| Number of k-points +: +(\d+)"),
-    "smearing": re.compile(r"^ *Occupation type: +(.*?)\.? *$", re.M),
+    "smearing": re.compile(r" Occupation type: +(.*?)\.? *$", re.M),
     "dispersion": re.compile(r"(Tkatchenko-Scheffler|many-body dispersion|MBD)"),
 }
 

@@ -25,24 +25,20 @@ __all__ = [
     "version",
 ]
 
-END_MARK = re.compile(r"^Total time +=", re.M)
+END_MARK = re.compile(r"Total time +=")
 BAD_MARKS = (
-    (
-        re.compile(r"SCF cycles performed but system has not reached|electronic minimi[sz]ation.* has not converged"),
-        "unconverged",
-        "electronic steps did not converge",
-    ),
+    (re.compile(r"SCF cycles performed but system has not reached"), "unconverged", "electronic steps did not converge"),
     (re.compile(r"Geometry optimi[sz]ation failed to converge"), "unconverged", "ions not relaxed"),
     (re.compile(r"Starting MD iteration"), "unconverged", "ions moved by dynamics"),
 )
 _BANNER = b"CCC   AA    SSS  TTTTT  EEEEE  PPPP"
-_AXES = re.compile(r"^ +Real Lattice\(A\) +Reciprocal Lattice\(1/A\)\s*$", re.M)
-_SITES = re.compile(r"x +Element +Atom +Fractional coordinates of atoms +x\s*$", re.M)
+_AXES = re.compile(r" Real Lattice\(A\) +Reciprocal Lattice\(1/A\) *\n")
+_SITES = re.compile(r" Fractional coordinates of atoms +x *\n")
 _SITE = re.compile(rf"\s*x +([A-Z][a-z]?)\S* +\d+ +({NUMBER}) +({NUMBER}) +({NUMBER}) +x\s*\Z")
-_STRESS = re.compile(r"^ \*+ (?:Symmetrised )?Stress Tensor \*+\s*$", re.M)
-_FORCES = re.compile(r"^ \*+ (?:Symmetrised |Constrained )*Forces \*+\s*$", re.M)
-_FREE = re.compile(rf"^ *(?:Dispersion corrected final|Final) free energy \(E-TS\) *= +({NUMBER}) +eV\s*$", re.M)
-_FINAL = re.compile(rf"^ *(?:Dispersion corrected final energy\*?|Final energy(?:, E)?) *= +({NUMBER}) +eV\s*$", re.M)
+_STRESS = re.compile(r" Stress Tensor \*+ *\n")
+_FORCES = re.compile(r" Forces \*+ *\n")
+_FREE = re.compile(rf"^ *(?:Dispersion corrected final|Final) free energy[^=\n]*= +({NUMBER}) +eV *$", re.M)
+_FINAL = re.compile(rf"^ *(?:Dispersion corrected final|Final) energy[^=\n]*= +({NUMBER}) +eV *$", re.M)
 _PRESSURE = re.compile(rf"\* +Pressure: +({NUMBER}) +\*\s*$", re.M)
 
 
@@ -80,7 +76,7 @@ def stress(text: str) -> Stress | None:
     if unit is None or unit[1] != "GPa":
         raise ValueError("the unit of the stress is not GPa")
     body = text.find(" x             y             z", heading.start())
-    matrix = rows(text, body, 3, r"\*...[xyz]...#...#...#...\*", "stress", skip=1) if body > 0 else np.zeros((0, 3))
+    matrix = rows(text, body, 3, r"\*...@...#...#...#...\*", "stress", 1, "xyz") if body > 0 else np.zeros((0, 3))
     pressure = _PRESSURE.search(text, heading.start())
     if not len(matrix) or pressure is None or abs(np.trace(matrix) / 3 + number(pressure[1])) > 1.1e-4:
         raise ValueError("the stress does not agree with the pressure printed below it")
@@ -89,8 +85,9 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Free energy, with the dispersion correction where there is one."""
-    value = last_number(_FREE, text)
-    return last_number(_FINAL, text) if value is None else value
+    cycle = max(text.rfind("<-- SCF"), 0)
+    value = last_number(_FREE, text, cycle)
+    return last_number(_FINAL, text, cycle) if value is None else value
 
 
 def forces(text: str) -> FloatArray | None:
@@ -113,7 +110,7 @@ def doubts(text: str) -> Problems:
 
 
 _SETTINGS = {
-    "functional": re.compile(r"^ using functional +: (.*?) *$", re.M),
+    "functional": re.compile(r" using functional +: (.*?) *$", re.M),
     "dispersion": re.compile(r"dispersion correction +: (\S.*?) *$", re.M),
     "smearing": re.compile(r"smearing scheme +: (\S.*?) *$", re.M),
     "kpoints": re.compile(r"MP grid size for SCF calculation is +(\d+ +\d+ +\d+)"),

@@ -1,4 +1,4 @@
-"""CP2K: stress in GPa, positive in compression; cell vectors to three decimals only, so the files beside the output are asked.
+"""CP2K: stress positive in compression; cell vectors to three decimals only, so the files beside the output are asked.
 
 The output holds the lengths and angles of the cell to six decimals but its orientation to three, and only the positions
 from which a relaxation began. The restart file of the same run holds both to sixteen digits, the input file the cell.
@@ -15,9 +15,22 @@ from ase.units import Bohr, Hartree
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source, read_source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, lines_after, number, rows, symmetric
+from strainkit.collect.text import (
+    NUMBER,
+    elements,
+    found,
+    fractional,
+    last,
+    last_number,
+    lines_after,
+    needed,
+    number,
+    rows,
+    symmetric,
+)
 from strainkit.errors import InputError
 from strainkit.tensors.arrays import FloatArray
+from strainkit.units import STRESS_UNITS_IN_GPA
 
 __all__ = [
     "BAD_MARKS",
@@ -36,15 +49,17 @@ __all__ = [
 END_MARK = re.compile(r"PROGRAM ENDED AT")
 BAD_MARKS = ((re.compile(r"MAXIMUM NUMBER OF OPTIMIZATION STEPS REACHED"), "unconverged", "ions not relaxed: too few steps"),)
 _VECTOR = re.compile(
-    rf"^ CELL\| Vector ([abc]) \[angstrom\]: *({NUMBER}) +({NUMBER}) +({NUMBER}) +\|\1\| += *({NUMBER})\s*$", re.M
+    rf" CELL\| Vector ([abc]) \[angstrom\]: *({NUMBER}) +({NUMBER}) +({NUMBER}) +\|\1\| += *({NUMBER})\s*$", re.M
 )
-_ANGLE = re.compile(rf"^ CELL\| Angle .*\[degree\]: *({NUMBER})\s*$", re.M)
-_SITES = re.compile(r"^ MODULE QUICKSTEP:\s+ATOMIC COORDINATES IN ANGSTROM\s*$", re.M | re.I)
-_SITE = re.compile(rf"\s+\d+\s+\d+\s+([A-Z][a-z]?)\s+\d+\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s*\Z")
-_ENERGY = re.compile(rf"^ ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[\S+?\]:? +({NUMBER})\s*$", re.M)
-_STRESS = re.compile(r"^ STRESS\| Analytical stress tensor \[GPa\]\s*$|^ STRESS TENSOR \[GPa\]\s*$", re.M)
-_FORCES = re.compile(r"^ ATOMIC FORCES in \[a\.u\.\]\s*$|^ FORCES\| Atomic forces \[hartree/bohr\]\s*$", re.M)
-_SCF = re.compile(r"SCF run (NOT )?converged")
+_ANGLE = re.compile(rf" CELL\| Angle .*\[degree\]: *({NUMBER})\s*$", re.M)
+_SITES = re.compile(r" MODULE QUICKSTEP: +ATOMIC COORDINATES IN (?:ANGSTROM|angstrom) *\n")
+_SITE = re.compile(
+    rf"\s+(\d+)\s+\d+\s+([A-Z][a-z]?)\s+\d+\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})\s*\Z"
+)
+_ENERGY = re.compile(rf" ENERGY\| Total FORCE_EVAL \( \w+ \) energy \[(?:a\.u\.|hartree)\]:? +({NUMBER})\s*$", re.M)
+_STRESS = re.compile(r" STRESS(?:\| Analytical stress tensor| TENSOR) \[(\S+?)\] *\n")
+_FORCES = re.compile(r" (?:ATOMIC FORCES in \[a\.u\.\]|FORCES\| Atomic forces \[hartree/bohr\]) *\n")
+_SCF = re.compile(r"SCF (?:run|loop) (NOT |FAILED to )?converge")
 _CYCLE = re.compile(r"SCF WAVEFUNCTION OPTIMIZATION")
 _STEP = re.compile(r"OPTIMIZATION STEP:\s+(\d+)\s*$", re.M)
 _TIME = r"(\d{4}-\d\d-\d\d \d\d:\d\d:\d\d)"
@@ -81,7 +96,7 @@ def _beside(output: Output, name: str) -> str:
 
 def _restart(output: Output) -> str:
     """The restart file, if it was written by this run at its last step."""
-    project = re.search(r"^ GLOBAL\| Project name +(\S+)$", output.text, re.M)
+    project = re.search(r" GLOBAL\| Project name +(\S+)$", output.text, re.M)
     text = _beside(output, f"{project[1]}-1.restart") if project else ""
     written = re.search(rf"# current date {_TIME}", text)
     start, end = re.search(rf"PROGRAM STARTED AT +{_TIME}", output.text), re.search(rf"PROGRAM ENDED AT +{_TIME}", output.text)
@@ -123,7 +138,7 @@ def geometry(output: Output) -> Geometry:
     text = output.text
     printed = _printed_cell(text)
     restart = _restart(output)
-    named = re.search(r"^ CP2K\| Input file name +(\S+)$", text, re.M)
+    named = re.search(r" CP2K\| Input file name +(\S+)$", text, re.M)
     lattice, precision = printed, _ROUNDING
     for other in (restart, _beside(output, named[1]) if named else ""):
         cell = _cell_of(other)
@@ -135,11 +150,11 @@ def geometry(output: Output) -> Geometry:
     if heading is None:
         raise ValueError("no atomic coordinates")
     lines = [line for line in lines_after(text, heading.start(), count + 3) if line.strip() and "Element" not in line][:count]
-    sites = [match for line in lines if (match := _SITE.match(line))]
+    sites = [match for row, line in enumerate(lines) if (match := _SITE.match(line)) and match[1] == str(row + 1)]
     if len(sites) != count:
         raise ValueError("the atomic coordinates cannot be read")
-    numbers = elements([site[1] for site in sites])
-    positions = fractional(np.array([[number(site[i]) for i in (2, 3, 4)] for site in sites]), lattice)
+    numbers = elements([site[2] for site in sites])
+    positions = fractional(np.array([[number(site[i]) for i in (3, 4, 5)] for site in sites]), lattice)
     moved = _STEP.search(text) is not None
     final = _restart_positions(restart, count, lattice) if moved else None
     return Geometry(lattice, positions if final is None else final, numbers, precision, not moved or final is not None)
@@ -161,21 +176,23 @@ def stress(output: Output) -> Stress | None:
     heading = last(_STRESS, output.text)
     if heading is None:
         return None
-    start = heading.start() + 1
-    older = "STRESS|" not in heading[0]
+    start = heading.start()
+    older, unit = "STRESS|" not in heading[0], STRESS_UNITS_IN_GPA.get(heading[1])
+    if unit is None:
+        raise ValueError(f"stress in {heading[1][:20]}")
     mark = "" if older else r"STRESS\| +"
-    matrix = rows(output.text, start, 3, mark + r"[xyzXYZ]...#...#...#", "stress", skip=2 if older else 1)
+    matrix = rows(output.text, start, 3, mark + "@...#...#...#", "stress", 2 if older else 1, "XYZ" if older else "xyz")
     if not older:
-        trace = last_number(re.compile(rf"^ STRESS\| 1/3 Trace +({NUMBER})\s*$", re.M), output.text, start)
+        trace = last_number(re.compile(rf" STRESS\| 1/3 Trace +({NUMBER})\s*$", re.M), output.text, start)
         if trace is None or abs(np.trace(matrix) / 3 - trace) > 1e-6 * np.abs(matrix).max() + 1e-9:
             raise ValueError("the stress does not agree with the trace printed below it")
-    return Stress(symmetric(-matrix, 1e-5 * float(np.abs(matrix).max()) + 1e-7))
+    return Stress(unit * symmetric(-matrix, 1e-5 * float(np.abs(matrix).max()) + 1e-7))
 
 
 def energy(output: Output) -> float | None:
     """The energy that the forces belong to: the free energy where there is smearing."""
-    value = last_number(_ENERGY, output.text)
-    return None if value is None else value * Hartree
+    cycle = last(_CYCLE, output.text)
+    return float(needed(last_number(_ENERGY, output.text, cycle.start() if cycle else 0), "total energy") * Hartree)
 
 
 def forces(output: Output) -> FloatArray | None:
@@ -184,7 +201,7 @@ def forces(output: Output) -> FloatArray | None:
         return None
     count = int(found(re.compile(r"- Atoms: +(\d+)\s*$", re.M), output.text, "number of atoms")[1])
     newer = "FORCES|" in heading[0]
-    form = rf"FORCES\| +\d+...#...#...#...{NUMBER}" if newer else r"\d+...\d+...[A-Z][a-z]?...#...#...#"
+    form = rf"FORCES\| +@...#...#...#...{NUMBER}" if newer else r"@...\d+...[A-Z][a-z]?...#...#...#"
     values = rows(output.text, heading.start(), count, form, "forces", skip=1 if newer else 2)
     return np.asarray(values * Hartree / Bohr)
 
@@ -197,14 +214,16 @@ def doubts(output: Output) -> Problems:
         problems.append(("unconverged", "electronic steps did not converge"))
     if re.search(r"STARTING (GEOMETRY|CELL) OPTIMIZATION", text) and "GEOMETRY OPTIMIZATION COMPLETED" not in text:
         problems.append(("unconverged", "ions not relaxed"))
-    printed, again = last(_STRESS, text), last(_CYCLE, text)
-    if printed and again and again.start() > printed.start() and "Reevaluating energy at the minimum" not in text:
+    # once the ions are relaxed, CP2K computes the energy again, but neither forces nor stress
+    moving = text[: text.find("Reevaluating energy at the minimum")] if "Reevaluating energy" in text else text
+    printed, again = last(_STRESS, text), last(_CYCLE, moving)
+    if printed and again and again.start() > printed.start():
         problems.append(("unfinished", "the stress is of an earlier ionic step than the last geometry"))
     return tuple(problems)
 
 
 _SETTINGS = {
-    "functional": re.compile(r"^ FUNCTIONAL\| (\S+?):", re.M),
+    "functional": re.compile(r" FUNCTIONAL\| (\S+?):"),
     "smearing": re.compile(r"Smear method: +(\S+)"),
     "dispersion": re.compile(r"vdW POTENTIAL\| +(DFT-D\S+)"),
     "kpoints": re.compile(r"BRILLOUIN\| K-Point grid +(\d+ +\d+ +\d+)"),

@@ -9,7 +9,19 @@ from ase.units import Bohr, Rydberg
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, lines_after, number, rows, symmetric
+from strainkit.collect.text import (
+    NUMBER,
+    elements,
+    found,
+    fractional,
+    last,
+    last_number,
+    lines_after,
+    needed,
+    number,
+    rows,
+    symmetric,
+)
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import STRESS_UNITS_IN_GPA
 
@@ -39,12 +51,12 @@ BAD_MARKS = (
 _COUNT = re.compile(r"number of atoms/cell\s+=\s+(\d+)\s*$", re.M)
 _ALAT = re.compile(rf"celldm\(1\)=\s*({NUMBER})\s+celldm")
 _AXES = "crystal axes: (cart. coord. in units of alat)"
-_CELL = re.compile(rf"^CELL_PARAMETERS\s+[({{]?\s*(?:alat\s*=\s*({NUMBER})|(angstrom)|(bohr))\s*[)}}]?\s*$", re.M)
-_SITES = re.compile(r"^ +site n\. +atom +positions \((alat) units\)", re.M)
-_MOVED = re.compile(r"^ATOMIC_POSITIONS\s+[({]?\s*(alat|bohr|angstrom|crystal)\s*[)}]?\s*$", re.M)
-_SITE = re.compile(rf"\s+\d+\s+(\S+)\s+tau\(\s*\d+\s*\)\s+=\s+\(\s*({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+\)\s*\Z")
+_CELL = re.compile(rf"CELL_PARAMETERS +[({{]?(?:alat *= *({NUMBER})|(angstrom)|(bohr))[)}}]? *$", re.M)
+_SITES = re.compile(r" site n\. +atom +positions \((alat) units\)", re.M)
+_MOVED = re.compile(r"ATOMIC_POSITIONS +[({]?(alat|bohr|angstrom|crystal)[)}]? *$", re.M)
+_SITE = re.compile(rf"\s+(\d+)\s+(\S+)\s+tau\(\s*\d+\s*\)\s+=\s+\(\s*({NUMBER})\s+({NUMBER})\s+({NUMBER})\s+\)\s*\Z")
 _ATOM = re.compile(rf"\s*(\S+)\s+({NUMBER})\s+({NUMBER})\s+({NUMBER})(?:\s+[01]\s+[01]\s+[01])?\s*\Z")
-_ENERGY = re.compile(rf"^!!?\s+total energy\s+=\s+({NUMBER}) Ry\s*$", re.M)
+_ENERGY = re.compile(rf"\n!!? +total energy +=\s+({NUMBER}) Ry *\n")
 _STRESS = re.compile(rf"total\s+stress\s+\(Ry/bohr\*\*3\)\s+\(kbar\)\s+P=\s*({NUMBER})\s*$", re.M)
 _ACCURACY = re.compile(rf"estimated scf accuracy\s+<\s+({NUMBER}) Ry\s*$", re.M)
 _THRESHOLD = re.compile(rf"scf convergence threshold\s+=\s+({NUMBER})\s*$", re.M)
@@ -72,7 +84,7 @@ def _lattice(text: str) -> tuple[FloatArray, float, float]:
     if moved is None or moved.start() < start:
         if start < 0:
             raise ValueError("no crystal axes")
-        axes = rows(text, start, 3, r"a\([123]\) = \( *#...#...# *\)", "crystal axes")
+        axes = rows(text, start, 3, r"a\(@\) = \( *#...#...# *\)", "crystal axes")
         return axes * alat * Bohr, 0.5e-6 * alat * Bohr, alat * Bohr
     scale = number(moved[1]) * Bohr if moved[1] else 1.0 if moved[2] else Bohr
     return rows(text, moved.start(), 3, "#...#...#", "cell parameters") * scale, 0.5e-9 * scale, alat * Bohr
@@ -87,6 +99,8 @@ def geometry(text: str) -> Geometry:
     pattern = _SITE if printed is start else _ATOM
     matches = [pattern.match(line) for line in lines_after(text, printed.start(), _atom_count(text))]
     atoms = [match.groups() for match in matches if match is not None]
+    if printed is start:
+        atoms = [atom[1:] for row, atom in enumerate(atoms) if atom[0] == str(row + 1)]
     if len(atoms) != len(matches):
         raise ValueError("the atomic positions cannot be read")
     positions = np.array([[number(word) for word in atom[1:4]] for atom in atoms])
@@ -98,9 +112,12 @@ def geometry(text: str) -> Geometry:
 
 def stress(text: str) -> Stress | None:
     """Both blocks; eight decimals of Ry/bohr^3 (1.5e-4 GPa) are finer than two of kbar (1e-3 GPa)."""
-    head = last(_STRESS, text)
-    if head is None:
+    start = text.rfind("total   stress")
+    if start < 0:
         return None
+    head = _STRESS.match(text, start)
+    if head is None:
+        raise ValueError("the heading of the stress cannot be read")
     block = rows(text, head.start(), 3, "...".join("#" * 6), "stress")
     unit = STRESS_UNITS_IN_GPA["Ry/bohr^3"]
     value = symmetric(-unit * block[:, :3], 2.5e-8 * unit)
@@ -112,15 +129,15 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """The total energy, which is the free energy F = E - TS where there is smearing."""
-    value = last_number(_ENERGY, text)
-    return None if value is None else value * Rydberg
+    start = text.rfind("\n!")
+    return None if start < 0 else float(needed(last_number(_ENERGY, text, start), "total energy") * Rydberg)
 
 
 def forces(text: str) -> FloatArray | None:
     start = text.rfind("Forces acting on atoms (cartesian axes, Ry/au):")
     if start < 0:
         return None
-    values = rows(text, start, _atom_count(text), r"atom +\d+ +type +\d+ +force = +#...#...#", "forces", skip=1)
+    values = rows(text, start, _atom_count(text), r"atom +@ +type +\d+ +force = +#...#...#", "forces", skip=1)
     return np.asarray(values * Rydberg / Bohr)
 
 
@@ -130,19 +147,23 @@ def doubts(text: str) -> Problems:
     threshold, reached = found(_THRESHOLD, text, "scf threshold"), last_number(_ACCURACY, text)
     if reached is None or reached > 1.01 * number(threshold[1]):
         problems.append(("unconverged", _SCF))
-    if "BFGS Geometry Optimization" in text and "bfgs converged" not in text:
+    relaxing = "force convergence thresh." in text or "BFGS Geometry Optimization" in text
+    if relaxing and "bfgs converged" not in text:
         problems.append(("unconverged", "ions not relaxed"))
     ends = text.find("Begin final coordinates")
     stepped = last(_MOVED, text[:ends] if ends > 0 else text)
-    printed = min(text.rfind("total   stress  (Ry/bohr**3)"), text.rfind("\n!"))
-    if stepped is not None and 0 <= printed < stepped.start():
+    # energy, forces and stress follow each other in every step
+    solved, pulled = text.rfind("\n!"), text.rfind("Forces acting on atoms (cartesian axes, Ry/au):")
+    pressed = text.rfind("total   stress")
+    stale = stepped is not None and solved < stepped.start()
+    if pressed >= 0 and (stale or pressed < solved or 0 <= pulled < solved):
         problems.append(("unfinished", "the stress is of an earlier ionic step than the last geometry"))
     return tuple(problems)
 
 
 _SETTINGS = {
     "cutoff_Ry": re.compile(rf"kinetic-energy cutoff\s+=\s+({NUMBER})\s+Ry"),
-    "functional": re.compile(r"Exchange-correlation\s*=\s*(.+?)\s*$", re.M),
+    "functional": re.compile(r"Exchange-correlation *= *(\S.*?) *$", re.M),
     "kpoint_count": re.compile(r"number of k points=\s+(\d+)"),
     "smearing": re.compile(r"number of k points= +\d+ +(\S.*?) *$", re.M),
     "dispersion": re.compile(r"(DFT-D3|DFT-D|MBD|XDM|Tkatchenko-Scheffler) (?:Dispersion|dispersion|energy|correction)"),

@@ -12,7 +12,18 @@ import numpy as np
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, lines_after, number, rows, symmetric
+from strainkit.collect.text import (
+    NUMBER,
+    elements,
+    found,
+    fractional,
+    last,
+    last_number,
+    lines_after,
+    number,
+    rows,
+    symmetric,
+)
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import EV_PER_A3_IN_GPA
 
@@ -30,11 +41,11 @@ __all__ = [
     "version",
 ]
 
-END_MARK = re.compile(r"^Total: +[\d.]+ +100\.0%\s*\n(?:.*\n){0,4}Date: ", re.M)
+END_MARK = re.compile(r"\nTotal: +[\d.]+ +100\.0% *\n(?:.*\n){0,4}Date: ")
 BAD_MARKS: tuple[tuple[re.Pattern[str], str, str], ...] = ()
-_BANNER = re.compile(r"^ \|__ \|  _\|___\|_____\| +(\S+) *$", re.M)
-_SITE = re.compile(rf"\s*\d+ +([A-Z][a-z]?) +({NUMBER}) +({NUMBER}) +({NUMBER})(?: +\(.*\))?\s*\Z")
-_CYCLE = re.compile(r"^iter: +1 ", re.M)
+_BANNER = re.compile(r" \|__ \|  _\|___\|_____\| +(\S+) *\n")
+_SITE = re.compile(rf"\s*(\d+) +([A-Z][a-z]?) +({NUMBER}) +({NUMBER}) +({NUMBER})(?: +\(.*\))?\s*\Z")
+_CYCLE = re.compile(r"\niter: +1 ")
 
 
 def recognises(head: bytes) -> bool:
@@ -49,7 +60,7 @@ def load(source: Source) -> str:
 
 
 def _atom_count(text: str) -> int:
-    return int(found(re.compile(r"^Number of atoms: (\d+)\s*$", re.M), text, "number of atoms")[1])
+    return int(found(re.compile(r"\nNumber of atoms: (\d+) *\n"), text, "number of atoms")[1])
 
 
 def geometry(text: str) -> Geometry:
@@ -57,9 +68,9 @@ def geometry(text: str) -> Geometry:
     sites_at, cell_at = text.rfind("\nPositions:"), text.rfind("\nUnit cell:")
     if sites_at < 0 or cell_at < sites_at:
         raise ValueError("no positions and unit cell")
-    lattice = rows(text, cell_at + 1, 3, rf"[123]\. axis:...(?:yes|no)...#...#...#...\d+...{NUMBER}", "unit cell", skip=1)
+    lattice = rows(text, cell_at + 1, 3, rf"@\. axis:...(?:yes|no)...#...#...#...\d+...{NUMBER}", "unit cell", skip=1)
     sites = [_SITE.match(line) for line in lines_after(text, sites_at + 1, count)]
-    atoms = [site.groups() for site in sites if site]
+    atoms = [site.groups()[1:] for row, site in enumerate(sites) if site and site[1] == str(row)]
     if len(atoms) != count:
         raise ValueError("the positions cannot be read")
     positions = np.array([[number(word) for word in atom[1:]] for atom in atoms])
@@ -76,20 +87,24 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Free energy, relative to the reference atoms as GPAW gives it everywhere."""
-    return last_number(re.compile(rf"^Free energy: +({NUMBER})\s*$", re.M), text)
+    cycle = last(_CYCLE, text)
+    return last_number(re.compile(rf"\nFree energy: +({NUMBER}) *\n"), text, cycle.start() if cycle else 0)
 
 
 def forces(text: str) -> FloatArray | None:
     start = text.rfind("\nForces in eV/Ang:")
     if start < 0:
         return None
-    return rows(text, start + 1, _atom_count(text), r"\d+...[A-Z][a-z]?...#...#...#", "forces")
+    values = rows(text, start + 1, _atom_count(text), "#...[A-Z][a-z]?...#...#...#", "forces")
+    if not np.array_equal(values[:, 0], np.arange(len(values))):
+        raise ValueError("the forces are not in the order of the atoms")
+    return values[:, 1:]
 
 
 def doubts(text: str) -> Problems:
     problems = []
     cycle = last(_CYCLE, text)
-    if cycle is None or not re.compile(r"^Converged after \d+ iterations", re.M).search(text, cycle.start()):
+    if cycle is None or not re.compile(r"\nConverged after \d+ iterations").search(text, cycle.start()):
         problems.append(("unconverged", "electronic steps did not converge"))
     moved = text.rfind("\nPositions:")
     if 0 <= text.rfind("\nStress tensor:") < moved:
@@ -100,10 +115,10 @@ def doubts(text: str) -> Problems:
 
 
 _SETTINGS = {
-    "kpoint_count": re.compile(r"^(\d+) k-points? in the [Ii]rreducible", re.M),
-    "kpoints": re.compile(r"^\d+ k-points?: (\d+ x \d+ x \d+)", re.M),
+    "kpoint_count": re.compile(r"\n(\d+) k-points? in the [Ii]rreducible"),
+    "kpoints": re.compile(r"\n\d+ k-points?: (\d+ x \d+ x \d+)"),
     "functional": re.compile(r"Using the (\S+) Exchange-Correlation functional"),
-    "dispersion": re.compile(r"^(vdW\S+|DFT-?D\S+)", re.M),
+    "dispersion": re.compile(r"\n(vdW\S+|DFT-?D\S+)"),
 }
 
 

@@ -34,7 +34,7 @@ _TOTAL = re.compile(r"^ +Total +" + r" *".join([_FIXED] * 6) + r"\s*$", re.M)
 _KBAR = re.compile(r"^ +in kB +" + r" *".join([_FIXED] * 6) + r"\s*$", re.M)
 _VOLUME = re.compile(rf"volume of cell : +({NUMBER})\s*$", re.M)
 _AXES = "direct lattice vectors                 reciprocal lattice vectors"
-_FORCES = re.compile(r"^ POSITION +TOTAL-FORCE \(eV/Angst\)\s*$", re.M)
+_FORCES = re.compile(r" POSITION +TOTAL-FORCE \(eV/Angst\) *\n")
 _ENERGY = re.compile(rf"free +energy +TOTEN += +({NUMBER}) eV\s*$", re.M)
 _ABORT = re.compile(r"aborting loop (because EDIFF is reached|EDIFF was not reached)")
 _RELAXED = "reached required accuracy - stopping structural energy minimisation"
@@ -51,7 +51,7 @@ def load(source: Source) -> str:
 def _species(text: str) -> list[str]:
     """Symbols of the atoms: one VRHFIN or one POTCAR title for each species, times ions per type."""
     counts = [int(word) for word in found(re.compile(r"ions per type = +([\d ]+?) *$", re.M), text, "ions per type")[1].split()]
-    names = re.findall(r"VRHFIN =\s*([A-Z][a-z]?)", text) or re.findall(r"^ POTCAR: +\S+ ([A-Z][a-z]?)(?=[\W_\d])", text, re.M)
+    names = re.findall(r"VRHFIN =\s*([A-Z][a-z]?)", text) or re.findall(r" POTCAR: +\S+ ([A-Z][a-z]?)(?=[\W_\d])", text)
     # the titles are printed twice
     names = names[: len(counts)]
     if len(names) != len(counts) or sum(counts) > 100_000:
@@ -91,7 +91,7 @@ def stress(text: str) -> Stress | None:
 
 def energy(text: str) -> float | None:
     """Free energy TOTEN of the last ionic step."""
-    heading = text.rfind("FREE ENERGIE OF THE ION-ELECTRON SYSTEM")
+    heading = text.find("FREE ENERGIE OF THE ION-ELECTRON SYSTEM", max(text.rfind(" Iteration "), 0))
     return None if heading < 0 else last_number(_ENERGY, text, heading)
 
 
@@ -103,7 +103,7 @@ def forces(text: str) -> FloatArray | None:
 
 
 def _parameter(text: str, name: str, default: float) -> float:
-    match = re.search(rf"^ +{name} += +({NUMBER})", text, re.M)
+    match = re.search(rf" {name} += +({NUMBER})", text)
     return number(match[1]) if match else default
 
 
@@ -124,18 +124,19 @@ def doubts(text: str) -> Problems:
 
 
 def settings(text: str) -> Settings:
+    method, width = int(_parameter(text, "ISMEAR", 1)), _parameter(text, r"ISMEAR = +-?\d+; +SIGMA", 0.2)
     result: dict[str, str | float | tuple[float, ...]] = {
-        "smearing": f"ISMEAR {int(_parameter(text, 'ISMEAR', 1))}, {_parameter(text, '.*SIGMA', 0.2):.4g} eV",
+        "smearing": f"ISMEAR {method}, {width:.4g} eV",
         "spin": "polarised" if _parameter(text, "ISPIN", 1) == 2 else "none",
     }
     if cutoff := _parameter(text, "ENCUT", 0.0):
         result["cutoff_eV"] = cutoff
     if count := re.search(r"NKPTS = +(\d+)", text):
         result["kpoint_count"] = count[1]
-    if functional := re.search(r"^ +GGA +=\s+(\S+)", text, re.M):
+    if functional := re.search(r" GGA += +(\S+)", text):
         result["functional"] = functional[1]
-    correction = re.search(r"^ +IVDW += +(\d+)|\bIVDW += +(\d+)", text, re.M)
-    result["dispersion"] = next((f"IVDW {word}" for word in correction.groups() if word), "none") if correction else "none"
+    correction = re.search(r" IVDW += +(\d+)", text)
+    result["dispersion"] = f"IVDW {correction[1]}" if correction and correction[1] != "0" else "none"
     return result
 
 

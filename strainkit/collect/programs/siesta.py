@@ -45,7 +45,7 @@ _PRESSURE = re.compile(rf"^siesta: +({NUMBER}) +{NUMBER} +eV/Ang\*\*3\s*$", re.M
 
 
 def recognises(head: bytes) -> bool:
-    return b"Siesta Version" in head or (b"SIESTA" in head and b"redata:" in head)
+    return b"Siesta Version" in head or (b"Executable" in head and b": siesta" in head)
 
 
 def load(source: Source) -> str:
@@ -101,7 +101,7 @@ def energy(text: str) -> float | None:
 
 def forces(text: str) -> FloatArray | None:
     start = text.rfind("\nsiesta: Atomic forces (eV/Ang):")
-    return None if start < 0 else rows(text, start + 1, _atom_count(text), r"siesta:...\d+...#...#...#", "forces")
+    return None if start < 0 else rows(text, start + 1, _atom_count(text), r"siesta:...@...#...#...#", "forces")
 
 
 def doubts(text: str) -> Problems:

@@ -13,6 +13,7 @@ from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
 from strainkit.collect.text import elements, number, symmetric
 from strainkit.tensors.arrays import FloatArray
+from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = [
     "BAD_MARKS",
@@ -55,7 +56,7 @@ def recognises(head: bytes) -> bool:
 
 def load(source: Source) -> Document:
     """Read the document up to where it ends or is cut."""
-    text = source.text  # checks the length of lines
+    text = source.free_text  # magnetic moments stand on one line
     if "<!DOCTYPE" in text or "<!ENTITY" in text:
         raise ValueError("it declares XML entities, which no vasprun.xml does")
     document = Document()
@@ -132,8 +133,11 @@ def stress(document: Document) -> Stress | None:
 
 
 def energy(document: Document) -> float | None:
-    """The free energy of the last ionic step."""
-    return document.energies[-1] if document.energies and np.isfinite(document.energies[-1]) else None
+    """The free energy of the last ionic step; with PSTRESS (kbar), VASP writes the enthalpy, so that p V is taken off."""
+    if not document.energies or not np.isfinite(document.energies[-1]):
+        raise ValueError("no free energy in the last ionic step")
+    volume = abs(float(np.linalg.det(geometry(document).lattice)))
+    return document.energies[-1] - 0.1 * _parameter(document, "PSTRESS", 0.0) * volume / EV_PER_A3_IN_GPA
 
 
 def forces(document: Document) -> FloatArray | None:
@@ -163,8 +167,9 @@ def doubts(document: Document) -> Problems:
 
 
 def _relaxed(document: Document, criterion: float) -> bool:
+    """EDIFFG: of the energy when positive (conjugate gradients compare every second step), of the forces when negative."""
     if criterion > 0:
-        return len(document.energies) > 1 and abs(document.energies[-1] - document.energies[-2]) <= criterion
+        return any(abs(document.energies[-1] - earlier) <= criterion for earlier in document.energies[-3:-1])
     pulls = forces(document)
     return pulls is None or float(np.linalg.norm(pulls, axis=1).max(initial=0.0)) <= -1.001 * criterion
 

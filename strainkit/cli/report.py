@@ -1,0 +1,73 @@
+"""strainkit report RUN."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated, Literal
+
+import typer
+
+from strainkit.cli.derive import Directions, ForceConstants, Indices, Planes
+from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
+from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
+
+Out = Annotated[Path | None, typer.Option(help="File to write. [default: RUN/report.html]")]
+FiguresFolder = Annotated[Path | None, typer.Option("--figures", help="Write every figure into this folder too.")]
+FigureFormat = Annotated[Literal["png", "svg", "pdf"], typer.Option(help="Format of the files in --figures.")]
+
+
+def report(
+    run: Run,
+    out: Out = None,
+    figures: FiguresFolder = None,
+    figure_format: FigureFormat = "svg",
+    plane: Planes = None,
+    direction: Directions = None,
+    indices: Indices = "conventional",
+    order: Order = "linear",
+    noise: KnownNoise = None,
+    drop: Drop = None,
+    reference_stress: Reading = "real",
+    force_constants: ForceConstants = None,
+    frame: Frame = "ieee",
+    force: Annotated[bool, typer.Option("--force", help="Replace files that strainkit did not write.")] = False,
+    json: Json = False,
+    quiet: Quiet = False,
+) -> None:
+    """One self-contained HTML file: verdict, tensor, figures, moduli, provenance (report.html)."""
+    from strainkit.cli.load import fitted
+    from strainkit.collect.table import load_table
+    from strainkit.crystal.lattice import parse_indices
+    from strainkit.errors import NoTensorError, UsageError
+    from strainkit.present.report import REPORT, refuse_foreign, report_run, write_figures
+    from strainkit.present.reported import report_text
+    from strainkit.run.campaign import is_campaign
+    from strainkit.run.plan import load_plan
+
+    if is_campaign(run):
+        raise UsageError("a report is about one crystal, this is a campaign", run, "Name one of its run folders.")
+    planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
+    directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
+    path = out or run / REPORT
+    refuse_foreign(path, force)
+    fit, why = None, ""
+    try:
+        fit = fitted(run, order, noise, drop, frame, reference_stress, force_constants)
+    except NoTensorError as error:
+        why = error.what
+    plan = load_plan(run) if fit is None else fit.plan
+    study = None
+    if force_constants is not None:
+        from strainkit.dynamics.phonons import load_phonopy
+
+        study = load_phonopy(force_constants)
+    made = report_run(plan, load_table(run), fit, frame, planes, directions, indices == "given", study, run, why)
+    made.save(path, force)
+    note(f"wrote {path}", quiet)
+    files = [] if figures is None else write_figures(made.figures.values(), figures, figure_format, force)
+    if files:
+        note(f"wrote {len(files)} figures into {figures}", quiet)
+    written = {"report": str(path), "bytes": len(made.html.encode()), "figure_files": [str(file) for file in files]}
+    deliver(lambda: made.to_dict() | written, lambda: report_text(made, path), json)
+    if made.exit_code:
+        raise typer.Exit(made.exit_code)
