@@ -1,4 +1,4 @@
-"""A campaign of two thousand tasks through a real Slurm: arrays within its limit, and one task a crystal that fails at first."""
+"""A campaign of two thousand tasks through a real Slurm: arrays within its limit, one task a crystal that fails at first."""
 
 from __future__ import annotations
 
