@@ -5,6 +5,7 @@ from __future__ import annotations
 import importlib.util
 import json
 import os
+import signal
 import sys
 from dataclasses import dataclass
 
@@ -13,6 +14,9 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
 import pytest
+
+# a shell that starts pytest in the background makes all its children deaf to this signal; some tests send it
+signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 @dataclass

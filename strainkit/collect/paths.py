@@ -158,6 +158,8 @@ def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
     rest = next((_second(j, r) for j, r in pairs if not j.shape), None)
     changes = [float(np.linalg.norm(_second(j, r) - (0.0 if rest is None else rest))) for j, r in pairs if j.shape]
     signal = float(np.median(changes)) if changes else 0.0
+    if signal == 0.0:
+        return []
     findings = []
     for job, record in pairs:
         force = float(np.linalg.norm(record.forces))  # type: ignore[arg-type]
@@ -167,7 +169,7 @@ def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
         if doubt > FORCES_MATTER * signal:
             text = (
                 f"largest force {record.max_force:.2g} eV/A: can put its stress off by {doubt:.2g} GPa "
-                f"(a strain changes it by {signal:.2g}); relax the ions harder"
+                f"(a strain changes it by {signal:.2g}), up to {100 * doubt / signal:.2g} % of the constants; relax it harder"
             )
             findings.append(finding("forces-left", job.label, text))
     return findings

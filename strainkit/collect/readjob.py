@@ -10,6 +10,7 @@ import numpy as np
 from strainkit.collect.match import Match, MismatchError, match
 from strainkit.collect.readers import READERS, Reader, Returned, read_returned, recognise
 from strainkit.collect.scan import Folder, natural
+from strainkit.collect.source import LARGEST
 from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError, printable
@@ -63,8 +64,9 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
 def _read(run: Path, name: str, reader: Reader) -> Output:
     path = run / name
     try:
-        returned = read_returned(path, reader)  # refuses what is too large to be held
-        return Output(name, reader.program, checksum(path.read_bytes()), returned)
+        # before it is parsed: a file that changes meanwhile is then known to have changed
+        digest = checksum(path.read_bytes()) if path.stat().st_size <= LARGEST else ""
+        return Output(name, reader.program, digest, read_returned(path, reader))
     except InputError as error:
         return Output(name, reader.program, "", None, error.what)
     except OSError as error:

@@ -19,7 +19,6 @@ __all__ = ["judge_set", "unjudged"]
 
 #: settings that must be the same in every job of a set -> words for them
 SETTINGS = {
-    "program": "program",
     "functional": "functional",
     "dispersion": "dispersion correction",
     "cutoff_eV": "cutoff (eV)",
@@ -27,6 +26,8 @@ SETTINGS = {
     "smearing": "smearing",
     "spin": "spin",
 }
+#: of these, the ones that all files of a program print alike
+NUMBERS = ("cutoff_eV", "kpoints")
 #: codes that belong to the set, not to a job's own files: found anew each time
 SET_CODES = frozenset(
     (
@@ -37,6 +38,7 @@ SET_CODES = frozenset(
         "stress-unit",
         "stress-order",
         "stress-frame",
+        "set-inconsistent",
         "energy-jump",
         "ions-elsewhere",
         "forces-left",
@@ -97,11 +99,18 @@ def _settings(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[tu
     found = []
     for finer in (False, True):
         records = [record for job, record in done if (job.kind == "finer") is finer]
+        programs = {r.label: _program(r) for r in records}
+        found += _mixed("mixed-settings", "program", {label: name for label, name in programs.items() if name})
+        # words differ between the files of one program, numbers do not
+        kinds = sorted({r.program for r in records})
         for key, word in SETTINGS.items():
-            said = {r.label: r.program if key == "program" else r.settings.get(key) for r in records}
-            found += _mixed("mixed-settings", word, {label: _plain(v) for label, v in said.items() if v not in (None, "")})
-        versions = {r.label: f"{r.program} {r.version}" for r in records if r.version}
-        found += [(f, ()) for f, _ in _mixed("mixed-versions", "version", versions)]
+            groups = [records] if key in NUMBERS else [[r for r in records if r.program == kind] for kind in kinds]
+            for group in groups:
+                said = {r.label: r.settings.get(key) for r in group}
+                found += _mixed("mixed-settings", word, {label: _plain(v) for label, v in said.items() if v not in (None, "")})
+        for kind in kinds:
+            versions = {r.label: f"{r.program} {r.version}" for r in records if r.version and r.program == kind}
+            found += [(f, ()) for f, _ in _mixed("mixed-versions", "version", versions)]
     # a mesh gives the same number of points in every job of one shape: its strained cells have one symmetry
     shapes: dict[tuple[int, bool], dict[str, str]] = defaultdict(dict)
     for job, record in done:
@@ -110,6 +119,12 @@ def _settings(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[tu
     for values in shapes.values():
         found += _mixed("mixed-settings", "number of k-points", values)
     return found
+
+
+def _program(record: StressRecord) -> str:
+    """The program behind a file; empty for formats that any program's results can be in."""
+    first = record.program.split(" ")[0]
+    return "" if first in ("extended", "ASE", "table") else record.program if first == "Quantum" else first
 
 
 def _plain(value: object) -> str:

@@ -195,9 +195,8 @@ def usable_jobs(plan: Plan, table: StressTable, drop: tuple[str, ...] = ()) -> t
     records = {r.label: r.stress for r in table.usable if r.label not in drop and r.stress is not None}
     jobs = [job for job in plan.strain_set if job.label in records]
     if not any(job.shape for job in jobs):
-        raise NoTensorError(
-            f"none of the {len(plan.strain_set) - 1} strained jobs is usable", plan.crystal.name, "See: strainkit progress RUN"
-        )
+        why = next((f"{f.code}: {f.message}" for f in table.findings if f.severity == "error"), "See: strainkit progress RUN")
+        raise NoTensorError(f"none of the {len(plan.strain_set) - 1} strained jobs is usable", plan.crystal.name, why)
     return jobs, np.array([records[job.label] for job in jobs])
 
 

@@ -10,19 +10,24 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from pathlib import Path
 
 import numpy as np
 
-from strainkit.collect.readjob import Output, record_of
+from strainkit.collect.readjob import Output, read_outputs, record_of
 from strainkit.collect.returned import Returned
-from strainkit.collect.scan import Folder
+from strainkit.collect.scan import Folder, scan
 from strainkit.collect.table import StressTable
 from strainkit.collect.trust import judge_set
+from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import crystal_frame
 from strainkit.errors import StrainkitError
+from strainkit.evaluate.engines import Engine
+from strainkit.evaluate.reference import relax_reference
+from strainkit.evaluate.runset import evaluate_run
 from strainkit.fit.result import Fit, fit_run
-from strainkit.prepare.runfolder import plan_run
-from strainkit.run.plan import Plan
+from strainkit.prepare.runfolder import plan_run, write_run
+from strainkit.run.plan import Plan, job_folder
 from strainkit.tensors.rotations import rotate_matrix, rotation6
 from strainkit.tensors.sixvectors import from_mandel, to_mandel
 from strainkit.tensors.strain import cauchy_from_pk2
@@ -133,6 +138,26 @@ def clean_set(
     return CleanSet(plan, outputs, clamped)
 
 
+def computed_set(crystal: Crystal, engine: Engine, magnitudes: tuple[float, ...], folder: Path) -> CleanSet:
+    """A set that a local engine computed: real energies, forces, relaxed ions and noise, read back from its files."""
+    relaxed = relax_reference(crystal, engine, fmax=1e-4).crystal
+    plan, _ = write_run(plan_run(relaxed, magnitudes), folder)
+    evaluate_run(folder, plan, engine, fmax=1e-4, workers=1)
+    outputs: dict[str, Returned] = {}
+    for job in plan.jobs:
+        found = read_outputs(folder, scan(folder, job_folder(job.label), plan.files))[0].returned
+        assert found is not None
+        outputs[job.label] = replace(found, settings=dict(SETTINGS), version="1")
+    # with the ions where they started: only of use for injected faults of the ions
+    clamped = {job.label: 1.5 * _stress_of(outputs[job.label]) for job in plan.jobs}
+    return CleanSet(plan, outputs, clamped)
+
+
+def _stress_of(output: Returned) -> np.ndarray:
+    assert output.stress is not None
+    return output.stress
+
+
 def collected(case: Faulty) -> StressTable:
     """What collect makes of outputs in memory: the same steps as for a run folder, without the files."""
     records = []
@@ -187,7 +212,8 @@ def _setting(key: str, *values: object) -> Callable[[Faulty, np.random.Generator
         output = case.outputs[label]
         assert output is not None
         assert output.stress is not None
-        value = values[rng.integers(len(values))]
+        other = [value for value in values if value != output.settings.get(key)]
+        value = other[rng.integers(len(other))]
         if key == "program":
             _change(case, label, program=value)
         elif key == "version":
@@ -412,6 +438,9 @@ def _no_reference(case: Faulty, rng: np.random.Generator) -> Fault:
     return Fault("reference missing", (case.plan.jobs[0].label,), ("reference-missing",))
 
 
+#: codes that say no more than that a job, or the set, does not fit
+OUTLIERS = ("outlier", "energy-mismatch", "set-inconsistent")
+
 FAULTS: dict[str, Callable[[Faulty, np.random.Generator], Fault]] = {
     "output truncated": _problem("unfinished", "output truncated"),
     "electronic steps not converged": _problem("unconverged", "electronic steps not converged"),
@@ -460,7 +489,7 @@ def inject(clean: CleanSet, names: list[str], rng: np.random.Generator) -> Fault
 
 
 def verdict(clean: CleanSet, case: Faulty) -> list[str]:
-    """For each fault: named, outlier (the fit says that the job does not fit), mislabelled, missed or harmless.
+    """For each fault: named, outlier (the job or the set is said not to fit), mislabelled, missed or harmless.
 
     Harmless: not seen, and no constant moved by its error bar.
     """
@@ -474,7 +503,7 @@ def verdict(clean: CleanSet, case: Faulty) -> list[str]:
         whole = len(fault.jobs) > 2
         if any(_places(f.where, f.message, fault.jobs, whole) for f in fitting):
             words.append("named")
-        elif any(f.code in ("outlier", "energy-mismatch") and _near(f.where, fault.jobs) for f in late):
+        elif any(f.code in OUTLIERS and _near(f.where, fault.jobs) for f in [*found, *late]):
             words.append("outlier")
         elif any(f.severity != "info" for f in [*found, *late]) or fit is None:
             words.append("mislabelled")
@@ -484,12 +513,13 @@ def verdict(clean: CleanSet, case: Faulty) -> list[str]:
 
 
 def _places(where: str, message: str, jobs: tuple[str, ...], whole: bool) -> bool:
-    return whole or any(label in where or f"{label}:" in message for label in jobs)
+    named = f"{where} {message}" if where == "strain set" else where
+    return whole or any(label in named or f"{label}:" in message for label in jobs)
 
 
 def _near(where: str, jobs: tuple[str, ...]) -> bool:
     """Is a job of the same shape named? The two sides of a pair cannot be told apart by the odd part."""
-    return any(label.split("-")[0] + "-" in where for label in jobs)
+    return where == "strain set" or any(label.split("-")[0] + "-" in where for label in jobs)
 
 
 def moved(clean: CleanSet, fit: Fit) -> bool:
@@ -500,6 +530,15 @@ def moved(clean: CleanSet, fit: Fit) -> bool:
         return False
     bars = np.sqrt(np.diag(truth.regression.covariance))
     return bool((np.abs(fit.regression.values - truth.regression.values) > bars).any())
+
+
+def shift(clean: CleanSet, case: Faulty) -> float:
+    """Largest change of a constant, as a part of the largest constant."""
+    fit = fitted(case.plan, collected(case))
+    truth = fitted(clean.plan, collected(Faulty(clean.plan, dict(clean.outputs), clean.clamped)))
+    if fit is None or truth is None:
+        return float("nan")
+    return float(np.nanmax(np.abs(fit.regression.values - truth.regression.values)) / np.abs(truth.regression.values).max())
 
 
 def alarms(clean: CleanSet) -> list[str]:

@@ -1,0 +1,129 @@
+"""How well the stresses of a set follow what any set must: one stiffness, small even responses, positive work.
+
+This weighs changes to the stresses against each other; it is no fit, and its numbers are no errors.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from strainkit.collect.table import StressRecord
+from strainkit.design.jobs import StrainJob
+from strainkit.design.model import LinearModel, build_model
+from strainkit.run.plan import Plan
+from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.leastsquares import factorise
+from strainkit.tensors.sixvectors import from_mandel, stress_from_voigt, to_mandel
+from strainkit.tensors.strain import pk2_from_cauchy
+
+__all__ = ["Group", "typical_change"]
+
+#: weight of an even response, in units of the typical stress, against a misfit of the same size: this at strains up to the
+#: second number, less beyond (even responses of some times the strain are usual: common practice, no source)
+EVEN, EVEN_UP_TO = 0.2, 0.01
+
+
+@dataclass(frozen=True)
+class Group:
+    """The stresses of a strain set and the model they must follow.
+
+    Attributes
+    ----------
+    records, jobs : list
+        Of the finished jobs of the set, in one order.
+    cauchy : (jobs, 6)
+        Their Cauchy stresses, Mandel, GPa, given frame.
+    to_second : (jobs, 6, 6)
+        What makes second Piola-Kirchhoff stresses of them.
+    model : LinearModel
+    basis : (rows, p)
+        Orthonormal: what the model can follow, even responses at their weight.
+    rest : int or None
+        Index of the unstrained job.
+    spare : int
+        Components less the parameters of the model.
+    """
+
+    records: list[StressRecord]
+    jobs: list[StrainJob]
+    cauchy: FloatArray
+    to_second: FloatArray
+    model: LinearModel
+    basis: FloatArray
+    rest: int | None
+    spare: int
+
+    @classmethod
+    def of(cls, plan: Plan, pairs: list[tuple[StrainJob, StressRecord]]) -> Group:
+        """The group of finished jobs with their records."""
+        jobs, records = [job for job, _ in pairs], [record for _, record in pairs]
+        gradients = np.array([job.gradient for job in jobs])
+        cauchy = to_mandel(stress_from_voigt(np.array([record.stress for record in records])))
+        to_second = _to_second(gradients)
+        model = build_model(np.array([job.strain for job in jobs]), plan.symmetry.rotations, plan.basis.matrices)
+        largest = float(np.abs(model.signed_magnitudes).max())
+        width = model.matrix.shape[1]
+        even = np.arange(width)[model.even]
+        prior = np.zeros((len(even), width))
+        prior[np.arange(len(even)), even] = EVEN * EVEN_UP_TO / max(EVEN_UP_TO, largest)
+        stacked = np.vstack([model.matrix, prior])
+        u, s, _ = np.linalg.svd(stacked / np.maximum(np.linalg.norm(stacked, axis=0), 1e-300), full_matrices=False)
+        basis = u[: len(model.matrix), s > 1e-9 * s[0]]
+        rest = next((i for i, job in enumerate(jobs) if not job.shape), None)
+        spare = 6 * len(jobs) - factorise(model.matrix).rank
+        return cls(records, jobs, cauchy, to_second, model, basis, rest, spare)
+
+    def misfits(self, cauchy: FloatArray) -> FloatArray:
+        """Roots (k,) of the sums of squares of all that does not fit in sets (k, jobs, 6), in units of the typical stress."""
+        second = np.einsum("jab,kjb->kja", self.to_second, cauchy)
+        rows = np.concatenate([second[:, j] @ p for j, p in enumerate(self.model.projections)], axis=1)
+        allowed = (rows**2).sum(axis=1)
+        left = allowed - ((rows @ self.basis) ** 2).sum(axis=1)
+        outside = (second**2).sum(axis=(1, 2)) - allowed  # components that symmetry forbids
+        at_rest = second[:, self.rest] if self.rest is not None else second.mean(axis=1)
+        work = np.einsum("ja,kja->kj", self.directions, second - at_rest[:, None])
+        negative = (np.minimum(work, 0.0) ** 2).sum(axis=1)
+        return np.asarray(
+            np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical_change(second, self.rest)
+        )
+
+    def without_one(self) -> tuple[int, float]:
+        """The job whose stress, left free, takes away most of the misfit, and the misfit that is left then."""
+        second = np.einsum("jab,jb->ja", self.to_second, self.cauchy)
+        parts = [s @ p for s, p in zip(second, self.model.projections, strict=True)]
+        rows = np.concatenate(parts)
+        left = rows - self.basis @ (self.basis.T @ rows)
+        outside = (second**2).sum(axis=1) - np.array([part @ part for part in parts])
+        gains = np.zeros(len(second))
+        for job, part in enumerate(parts):
+            mine = self.model.job_of_row == job
+            own = np.eye(len(part)) - self.basis[mine] @ self.basis[mine].T
+            gains[job] = left[mine] @ np.linalg.pinv(own, rcond=1e-6) @ left[mine] + outside[job]
+        worst = int(gains.argmax())
+        rest = max(float(left @ left + outside.sum() - gains[worst]), 0.0)
+        return worst, float(np.sqrt(rest) / typical_change(second, self.rest))
+
+    @cached_property
+    def directions(self) -> FloatArray:
+        """Strains (jobs, 6), Mandel, of length one; zero at rest."""
+        strains = to_mandel(np.array([job.strain for job in self.jobs]))
+        sizes = np.linalg.norm(strains, axis=1, keepdims=True)
+        return np.asarray(strains / np.where(sizes > 0, sizes, 1.0))
+
+
+def _to_second(gradients: FloatArray) -> FloatArray:
+    """Matrices (jobs, 6, 6) from Cauchy to second Piola-Kirchhoff stress, both Mandel."""
+    units = from_mandel(np.eye(6))
+    return np.array([to_mandel(pk2_from_cauchy(units, np.broadcast_to(f, (6, 3, 3)))).T for f in gradients])
+
+
+def typical_change(second: FloatArray, rest: int | None) -> FloatArray:
+    """Typical change of stress (norm, GPa) of sets (..., jobs, 6): the geometric mean, which no single job rules."""
+    at_rest = np.median(second, axis=-2, keepdims=True) if rest is None else second[..., rest : rest + 1, :]
+    apart = np.linalg.norm(second - at_rest, axis=-1)
+    apart = apart if rest is None else np.delete(apart, rest, axis=-1)
+    floor = np.maximum(1e-4 * apart.max(axis=-1, keepdims=True), 1e-9)
+    return np.asarray(np.exp(np.log(np.maximum(apart, floor)).mean(axis=-1)))
