@@ -9,14 +9,14 @@ from typing import TYPE_CHECKING, Any
 
 import typer
 
-from strainkit.cli.each import FitOptions, collect_one, derive_one, fit_one, progress_one
+from strainkit.cli.each import FitOptions, collect_one, derive_one, fit_one, progress_one, report_one
 from strainkit.cli.loop import loop
 from strainkit.cli.options import deliver, note, progress
 
 if TYPE_CHECKING:
     from strainkit.run.campaign import Campaign
 
-__all__ = ["collect_campaign", "derive_campaign", "fit_campaign", "progress_campaign"]
+__all__ = ["collect_campaign", "derive_campaign", "fit_campaign", "progress_campaign", "report_campaign"]
 
 
 def _problems(found: dict[str, dict[str, Any]]) -> dict[str, str]:
@@ -204,6 +204,29 @@ def derive_campaign(folder: Path, options: FitOptions, workers: int | None, json
     deliver(
         lambda: {"schema": "strainkit/screening/1", "columns": list(COLUMNS), "rows": rows},
         lambda: tally_text(f"Screening table of {len(rows)} crystals, {len(rows) - len(problems)} with moduli", {}, problems),
+        json,
+    )
+    if problems:
+        raise typer.Exit(4)
+
+
+def report_campaign(
+    folder: Path, options: FitOptions, force: bool, again: bool, workers: int | None, json: bool, quiet: bool
+) -> None:
+    """A report in every run folder."""
+    from strainkit.present.campaign import tally_text
+
+    campaign, found = loop(folder, "report", partial(report_one, options, force, again), workers, quiet)
+    problems = _problems(found)
+    written = sum(summary.get("kept") is False for summary in found.values())
+    deliver(
+        lambda: {
+            "schema": "strainkit/campaign-reports/1",
+            "written": written,
+            "kept": _kept(found),
+            "crystals": _crystals(campaign, found),
+        },
+        lambda: tally_text(f"{written} reports written, {_kept(found)} unchanged: report.html of each run", {}, problems),
         json,
     )
     if problems:

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from strainkit.run.plan import Plan
     from strainkit.run.queues import Queued
 
-__all__ = ["FitOptions", "collect_one", "derive_one", "fit_one", "progress_one"]
+__all__ = ["FitOptions", "collect_one", "derive_one", "fit_one", "progress_one", "report_one"]
 
 Summary = dict[str, Any]
 
@@ -79,22 +79,21 @@ def collect_one(again: bool, run: Path) -> Summary:
 
 @_guarded
 def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
-    """Stiffness of a run; kept when table, plan and options are those it was made from."""
+    """Stiffness of a run; kept when table, plan and options are those it was made from.
+
+    Jobs that `strainkit fit RUN --drop` left out of the fit that is there stay left out.
+    """
     from strainkit import __version__
     from strainkit.fit.result import FITTED
-    from strainkit.run.files import atomic_write, checksum, dump_json, in_a_hurry, load_json
+    from strainkit.run.files import atomic_write, checksum, dump_json, in_a_hurry
     from strainkit.run.plan import load_plan
     from strainkit.run.state import INPUTS
 
     digest = checksum(_inputs(run) + f"{options} {__version__}".encode())
     path = run / FITTED
-    if not again and path.is_file():
-        try:
-            data = load_json(path, "strainkit/stiffness")
-        except StrainkitError:
-            data = {}
-        if data.get(INPUTS) == digest:
-            return _fitted(data) | {"kept": True}
+    saved = _saved(run)
+    if not again and saved.get(INPUTS) == digest:
+        return _fitted(saved) | {"kept": True}
     result = _fit(load_plan(run), run, options)
     data = result.to_dict(options.frame) | {INPUTS: digest}
     with in_a_hurry():  # half a file would not be JSON, and is made again
@@ -110,12 +109,25 @@ def _inputs(run: Path) -> bytes:
     return b"".join((run / name).read_bytes() for name in (MANIFEST, TABLE) if (run / name).is_file())
 
 
+def _saved(run: Path) -> dict[str, Any]:
+    """The fit that is there; empty when there is none that can be used."""
+    from strainkit.fit.result import FITTED
+    from strainkit.run.files import load_json
+
+    try:
+        return load_json(run / FITTED, "strainkit/stiffness")
+    except StrainkitError:
+        return {}
+
+
 def _fit(plan: Plan, run: Path, options: FitOptions) -> Fit:
     from strainkit.collect.table import load_table
     from strainkit.fit.result import fit_run
 
     table = load_table(run, ions=plan.ions == "clamped")
-    return fit_run(plan, table, options.order, options.noise, (), options.reading)
+    labels = {job.label for job in plan.jobs}
+    drop = tuple(label for label in _saved(run).get("jobs_dropped", ()) if label in labels)
+    return fit_run(plan, table, options.order, options.noise, drop, options.reading)
 
 
 def _fitted(data: dict[str, Any]) -> Summary:
@@ -154,3 +166,25 @@ def derive_one(options: FitOptions, run: Path) -> Summary:
         return {"row": screening_row(plan, None, error.what), "problem": error.what, "exit": error.exit_code}
     row = screening_row(plan, fit)
     return {"row": row, "problem": row["problem"]}
+
+
+@_guarded
+def report_one(options: FitOptions, force: bool, again: bool, run: Path) -> Summary:
+    """Report of a run; kept when it is younger than plan and table and nothing is out of the ordinary."""
+    from strainkit.collect.table import TABLE, load_table
+    from strainkit.errors import NoTensorError
+    from strainkit.present.report import REPORT, refuse_foreign, report_run
+    from strainkit.run.plan import MANIFEST, load_plan
+
+    path = run / REPORT
+    usual = not again and options == FitOptions() and path.is_file()
+    if usual and path.stat().st_mtime_ns > max((run / name).stat().st_mtime_ns for name in (TABLE, MANIFEST)):
+        return {"kept": True}
+    refuse_foreign(path, force)
+    plan, fit, why = load_plan(run), None, ""
+    try:
+        fit = _fit(plan, run, options)
+    except NoTensorError as error:
+        why = error.what
+    report_run(plan, load_table(run), fit, options.frame, run=run, why=why).save(path, force)
+    return {"kept": False} | ({"problem": why} if why else {})

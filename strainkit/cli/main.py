@@ -4,39 +4,70 @@ from __future__ import annotations
 
 import os
 import sys
-from typing import Annotated
+from importlib import import_module
+from typing import Annotated, Any
 
 # the matrices here are small: threads of the linear algebra library only get in each other's way
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import typer
+from typer.core import TyperGroup
 
 from strainkit import __version__
-from strainkit.cli.collect import collect
-from strainkit.cli.compare import compare
-from strainkit.cli.converge import converge
-from strainkit.cli.demo import demo
-from strainkit.cli.derive import derive
-from strainkit.cli.evaluate import evaluate
-from strainkit.cli.fit import fit
-from strainkit.cli.inspect import inspect
-from strainkit.cli.prepare import prepare
-from strainkit.cli.progress import progress
-from strainkit.cli.relax import relax
-from strainkit.cli.report import report
 
 __all__ = ["app", "main"]
 
+#: command -> what it is for; it is the function of that name in the module of that name, imported when it is called
+COMMANDS = {
+    "inspect": "What is this cell: symmetry, constants, jobs needed, problems.",
+    "relax": "Bring a reference cell to zero stress.",
+    "prepare": "Strained cells for one relaxed crystal, or for many.",
+    "evaluate": "Run the set on this machine with a local engine.",
+    "progress": "Which jobs are done, running, missing or broken, and why.",
+    "collect": "Read what came back into the stress table.",
+    "fit": "Stiffness with error bars and findings.",
+    "converge": "Is the strain magnitude right?",
+    "derive": "What the tensor means: moduli, planes, directions, waves.",
+    "report": "One self-contained HTML file.",
+    "compare": "Crystals side by side, with what the error bars allow.",
+    "demo": "The whole path on a sample cell, here and now.",
+}
+
+
+class Commands(TyperGroup):
+    """Commands that are built one at a time: typer takes longer over the options of all of them than over starting."""
+
+    def __init__(self, **attributes: Any) -> None:
+        super().__init__(**attributes)
+        self.commands = dict.fromkeys(COMMANDS)  # type: ignore[assignment] # the names, for typer's suggestions
+
+    def list_commands(self, ctx: Any) -> list[str]:
+        """Names in the order of the work."""
+        return list(COMMANDS)
+
+    def get_command(self, ctx: Any, cmd_name: str) -> Any:
+        """The command of a name, or None."""
+        if cmd_name not in COMMANDS:
+            return None
+        alone = typer.Typer(rich_markup_mode=None, pretty_exceptions_enable=False, add_completion=False)
+        alone.command(cmd_name)(getattr(import_module(f"strainkit.cli.{cmd_name}"), cmd_name))
+        return typer.main.get_command(alone)
+
+    def format_commands(self, ctx: Any, formatter: Any) -> None:
+        """The list in the help text."""
+        with formatter.section("Commands"):
+            formatter.write_dl(list(COMMANDS.items()))
+
+
 app = typer.Typer(
     name="strainkit",
+    cls=Commands,
     help="From one relaxed crystal to the fewest strained cells, and from their stresses to a stiffness tensor.",
     no_args_is_help=True,
     rich_markup_mode=None,
     pretty_exceptions_enable=False,
     add_completion=False,
 )
-for command in (inspect, relax, prepare, evaluate, progress, collect, fit, converge, derive, report, compare, demo):
-    app.command()(command)
 
 
 def _print_version(wanted: bool) -> None:

@@ -1,4 +1,4 @@
-"""strainkit report RUN."""
+"""strainkit report RUN, or a campaign."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ import typer
 
 from strainkit.cli.derive import Directions, ForceConstants, Indices, Planes
 from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
-from strainkit.cli.options import Frame, Json, Quiet, Run, deliver, note
+from strainkit.cli.options import Again, Frame, Json, Quiet, RunOrCampaign, Workers, deliver, note
 
 Out = Annotated[Path | None, typer.Option(help="File to write. [default: RUN/report.html]")]
 FiguresFolder = Annotated[Path | None, typer.Option("--figures", help="Write every figure into this folder too.")]
@@ -17,7 +17,7 @@ FigureFormat = Annotated[Literal["png", "svg", "pdf"], typer.Option(help="Format
 
 
 def report(
-    run: Run,
+    run: RunOrCampaign,
     out: Out = None,
     figures: FiguresFolder = None,
     figure_format: FigureFormat = "svg",
@@ -31,10 +31,12 @@ def report(
     force_constants: ForceConstants = None,
     frame: Frame = "ieee",
     force: Annotated[bool, typer.Option("--force", help="Replace files that strainkit did not write.")] = False,
+    again: Again = False,
+    workers: Workers = None,
     json: Json = False,
     quiet: Quiet = False,
 ) -> None:
-    """One self-contained HTML file: verdict, tensor, figures, moduli, provenance (report.html)."""
+    """One self-contained HTML file a crystal: verdict, tensor, figures, moduli, provenance (report.html)."""
     from strainkit.cli.load import fitted
     from strainkit.collect.table import load_table
     from strainkit.crystal.lattice import parse_indices
@@ -45,7 +47,13 @@ def report(
     from strainkit.run.plan import load_plan
 
     if is_campaign(run):
-        raise UsageError("a report is about one crystal, this is a campaign", run, "Name one of its run folders.")
+        from strainkit.cli.campaign import report_campaign
+        from strainkit.cli.load import fit_options
+
+        if out or figures or plane or direction or indices != "conventional" or force_constants:
+            raise UsageError("of a campaign every crystal gets the standard report", "report", "Name one of its run folders.")
+        report_campaign(run, fit_options(order, noise, drop, frame, reference_stress), force, again, workers, json, quiet)
+        return
     planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
     directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
     path = out or run / REPORT

@@ -122,11 +122,13 @@ def _expand(
         shift -= np.round(shift)
         same = np.linalg.norm(shift @ lattice, axis=1) < SPECIAL_POSITION
         start = start + shift[same].mean(axis=0) if same.any() else start
-        kept: list[FloatArray] = []
-        for image in (rotations @ start + translations) % 1.0:
-            away = [np.linalg.norm((d - np.round(d)) @ lattice) for d in (image - other for other in kept)]
-            if not away or min(away) > 0.5 * SPECIAL_POSITION:
+        images = (rotations @ start + translations) % 1.0
+        between = images[:, None] - images
+        near = np.linalg.norm((between - np.round(between)) @ lattice, axis=-1) <= 0.5 * SPECIAL_POSITION
+        kept: list[int] = []
+        for image, others in enumerate(near):
+            if not others[kept].any():
                 kept.append(image)
-        positions += kept
+        positions += list(images[kept])
         sites += [index] * len(kept)
     return np.array(positions), sites

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from strainkit.crystal.crystal import Crystal
+from strainkit.crystal.pairs import close_pairs
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray
@@ -146,8 +147,11 @@ def physical_axes(crystal: Crystal, symmetry: Symmetry) -> FloatArray:
     if len(choices) <= len(symmetry.rotations):
         return axes
     vectors, weights = _neighbours(crystal)
-    powers = np.einsum("gij,jk,nk,pi->gnp", choices, axes, vectors, _PROBES, optimize=True) ** 8
-    scores = np.round(np.einsum("gnp,n,p->g", powers, weights, [1.0, -0.7, 0.4, -0.2], optimize=True), 8)
+    probes = (_PROBES @ choices @ axes).reshape(-1, 3)  # in every choice of axes, seen from the given frame
+    cosines = probes @ vectors.T
+    for _ in range(3):  # the eighth power
+        cosines *= cosines
+    scores = np.round((cosines @ weights).reshape(len(choices), -1) @ [1.0, -0.7, 0.4, -0.2], 8)
     return np.asarray(choices[int(scores.argmax())] @ axes)
 
 
@@ -172,12 +176,10 @@ def _lattice_rotations(system: str) -> FloatArray:
 
 def _neighbours(crystal: Crystal) -> tuple[FloatArray, FloatArray]:
     """Unit vectors (n, 3) between atoms within a few atomic distances, and smooth weights a volume."""
-    from ase.neighborlist import neighbor_list
-
     reach = 3.0 * (crystal.volume / len(crystal.numbers)) ** (1 / 3)
-    first, second, vectors, lengths = neighbor_list("ijDd", crystal.to_atoms(), reach)
-    charges = crystal.numbers[first] * np.sqrt(crystal.numbers[second])
-    return vectors / lengths[:, None], charges * (1.0 - (lengths / reach) ** 2) ** 4 / len(crystal.numbers)
+    pairs = close_pairs(crystal.lattice, crystal.positions, np.full(len(crystal.numbers), 0.5 * reach))
+    charges = crystal.numbers[pairs.first] * np.sqrt(crystal.numbers[pairs.second])
+    return pairs.vectors / pairs.lengths[:, None], charges * (1.0 - (pairs.lengths / reach) ** 2) ** 4 / len(crystal.numbers)
 
 
 def _ieee(system: str, axes: FloatArray) -> tuple[FloatArray, str]:

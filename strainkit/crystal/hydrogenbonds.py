@@ -6,6 +6,7 @@ import numpy as np
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.neighbours import Neighbours, find_neighbours
+from strainkit.crystal.pairs import close_pairs
 
 __all__ = ["count_hydrogen_bonds"]
 
@@ -27,25 +28,21 @@ def count_hydrogen_bonds(crystal: Crystal, neighbours: Neighbours | None = None)
         Of this crystal, when they are known already.
     """
     from ase.data.vdw import vdw_radii
-    from ase.neighborlist import primitive_neighbor_list
 
     numbers = crystal.numbers
     if not (numbers == 1).any() or not np.isin(numbers, _DONORS).any():
         return 0
     bonds = (neighbours or find_neighbours(crystal)).bonds
     donated = (numbers[bonds.first] == 1) & np.isin(numbers[bonds.second], _DONORS)
-    limit = {int(z): float(vdw_radii[1] + vdw_radii[z]) - _CLOSER for z in set(numbers.tolist()) & set(_ACCEPTORS)}
-    pairs = {(1, z): reach for z, reach in limit.items()}
-    first, second, vectors, shifts = primitive_neighbor_list(
-        "ijDS", (True, True, True), crystal.lattice, crystal.positions @ crystal.lattice, pairs, numbers=numbers
-    )
+    acceptor = np.isin(numbers, _ACCEPTORS)
+    reach = np.where(acceptor | (numbers == 1), np.nan_to_num(vdw_radii)[numbers] - 0.5 * _CLOSER, 0.0)
+    near = close_pairs(crystal.lattice, crystal.positions, reach)
     count = 0
     taken = {(int(i), int(j), *map(int, s)) for i, j, s in zip(bonds.first, bonds.second, bonds.shifts, strict=True)}
     for hydrogen, to_donor in zip(bonds.first[donated], bonds.vectors[donated], strict=True):
-        mine = np.flatnonzero((first == hydrogen) & np.isin(numbers[second], _ACCEPTORS))
-        for k in mine:
-            if (int(hydrogen), int(second[k]), *map(int, shifts[k])) in taken:
+        for k in np.flatnonzero((near.first == hydrogen) & acceptor[near.second]):
+            if (int(hydrogen), int(near.second[k]), *map(int, near.shifts[k])) in taken:
                 continue
-            cosine = float(vectors[k] @ to_donor / np.linalg.norm(vectors[k]) / np.linalg.norm(to_donor))
+            cosine = float(near.vectors[k] @ to_donor / near.lengths[k] / np.linalg.norm(to_donor))
             count += np.degrees(np.arccos(np.clip(cosine, -1.0, 1.0))) > _STRAIGHTER
     return int(count)

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from strainkit.crystal.pairs import close_pairs
 from strainkit.tensors.arrays import BoolArray, FloatArray, IntArray
 
 if TYPE_CHECKING:
@@ -90,19 +91,14 @@ def find_neighbours(crystal: Crystal) -> Neighbours:
     middle binds both.
     """
     from ase.data import covalent_radii
-    from ase.neighborlist import primitive_neighbor_list
 
     numbers = crystal.numbers
     radii = covalent_radii[np.clip(numbers, 0, len(covalent_radii) - 1)]
     metal = is_metal(numbers)
     soft = metal | (numbers == 1)
     reach = np.maximum(np.where(soft, METALLIC_STRETCH, METAL_STRETCH) * radii, radii + 0.5 * BOND_TOLERANCE)
-    first, second, vectors, lengths, shifts = primitive_neighbor_list(
-        "ijDdS",
-        (True, True, True),
-        crystal.lattice,
-        crystal.positions @ crystal.lattice,
-        np.maximum(reach, 0.5 * CONTACT_RANGE),
+    first, second, shifts, vectors, lengths = close_pairs(
+        crystal.lattice, crystal.positions, np.maximum(reach, 0.5 * CONTACT_RANGE)
     )
     total = radii[first] + radii[second]
     any_metal, both_soft = metal[first] | metal[second], soft[first] & soft[second]

@@ -134,13 +134,12 @@ def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetr
     """
     data, kinds = space_group_data(crystal, symprec)
     standard = standard_rotations(data.hall_number)
-    point_group = data.pointgroup.strip()
-    laue_class, system = next((lc, sy) for lc, (sy, groups) in LAUE_CLASSES.items() if point_group in groups)
+    laue_class, system = _class_of(data.pointgroup)
     lattice, rotations = _cartesian(np.linalg.inv(data.transformation_matrix).T @ crystal.lattice, standard)
     return Symmetry(
         space_group=data.international,
         number=int(data.number),
-        point_group=point_group,
+        point_group=data.pointgroup.strip(),
         laue_class=laue_class,
         system=system,
         rotations=rotations,
@@ -149,6 +148,11 @@ def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetr
         tolerance=symprec,
         deviation=deviation(crystal, kinds, *exact_operations(data)),
     )
+
+
+def _class_of(point_group: str) -> tuple[str, str]:
+    """Laue class and crystal system of a point group."""
+    return next((lc, sy) for lc, (sy, groups) in LAUE_CLASSES.items() if point_group.strip() in groups)
 
 
 def mean_lattice(lattice: FloatArray, rotations: IntArray) -> FloatArray:
@@ -173,8 +177,10 @@ def _cartesian(lattice: FloatArray, operations: IntArray) -> tuple[FloatArray, F
     return exact, np.array(distinct)
 
 
-def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float, str, str]], list[Finding]]:
-    """Space group at a tenth, one and ten times the tolerance, and a finding where it changes.
+def tolerance_ladder(
+    crystal: Crystal, symprec: float, known: Symmetry | None = None
+) -> tuple[list[tuple[float, str, str]], list[Finding]]:
+    """Space group at a tenth, one and ten times the tolerance (whose own may be `known`), and a finding where it changes.
 
     Returns
     -------
@@ -182,15 +188,19 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[list[tuple[float
         A rung where the search fails is left out.
     findings : list of Finding
     """
-    found = []
+    rungs = []
     for factor in (0.1, 1.0, 10.0):
+        tolerance = symprec * factor
         with suppress(InputError):
-            found.append(find_symmetry(crystal, symprec * factor))
-    rungs = [(symmetry.tolerance, symmetry.space_group, symmetry.laue_class) for symmetry in found]
+            if factor == 1.0 and known is not None:
+                rungs.append((tolerance, known.space_group, known.laue_class))
+            else:
+                data, _ = space_group_data(crystal, tolerance)
+                rungs.append((tolerance, data.international, _class_of(data.pointgroup)[0]))
     findings = []
     if len({group for _, group, _ in rungs}) > 1:
         text = ", ".join(f"{group} at {tolerance:g} A" for tolerance, group, _ in rungs)
-        loosest = found[-1]
+        loosest = find_symmetry(crystal, rungs[-1][0])
         offer = (
             f"; if {loosest.space_group} is meant (atoms are up to {loosest.deviation:.2g} A off it), "
             f"prepare --symmetrize --symprec {loosest.tolerance:g} moves them onto it"

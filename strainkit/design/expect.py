@@ -64,6 +64,7 @@ def expect(
     basis: ConstantBasis,
     noise: float = ASSUMED_NOISE,
     guess: Stiffness | None = None,
+    naming: FloatArray | None = None,
 ) -> tuple[Expectation, list[Finding]]:
     """Promise of a list of jobs, and what to warn about.
 
@@ -78,7 +79,31 @@ def expect(
         Standard deviation of one Mandel stress component, GPa.
     guess : Stiffness, optional
         In the given frame; the errors of the Hill averages are taken at it.
+    naming : (3, 3), optional
+        Rows: the axes in which the constants are named, in the given frame. Without a guess the promise is the same for all
+        crystals with the same strains in them, and kept.
     """
+    if naming is None or guess is not None:
+        return _expect(jobs, rotations, basis, noise, guess)
+    strains = np.array([job.strain for job in jobs]).reshape(-1, 3, 3)
+    mine, group = (bytes((np.round(naming @ x @ naming.T, 12) + 0.0).tobytes()) for x in (strains, rotations))
+    key = mine, group, noise
+    if key not in _KEPT:
+        if len(_KEPT) >= _MOST_KEPT:
+            _KEPT.clear()
+        _KEPT[key] = _expect(jobs, rotations, basis, noise, None)
+    expectation, findings = _KEPT[key]
+    return expectation, list(findings)
+
+
+#: (strains and rotations in naming axes, noise) -> promise
+_KEPT: dict[tuple[bytes, bytes, float], tuple[Expectation, list[Finding]]] = {}
+_MOST_KEPT = 256
+
+
+def _expect(
+    jobs: Sequence[StrainJob], rotations: FloatArray, basis: ConstantBasis, noise: float, guess: Stiffness | None
+) -> tuple[Expectation, list[Finding]]:
     model = model_of(jobs, rotations, basis)
     covariance = noise**2 * factorise(model.matrix).inverse[model.constants, model.constants]
     errors = [None if np.isnan(v) else float(v**0.5) for v in np.diag(covariance)]

@@ -83,8 +83,8 @@ def plan_run(
         wish = Wish(magnitudes=tuple(wish))
     basis = basis_of_group(symmetry.rotations, frames["ieee"].rotation)
     jobs, remarks = choose_strains(crystal, symmetry, basis, wish)
-    expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise, guess)
-    _, changes = tolerance_ladder(crystal, symprec)
+    expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise, guess, naming=frames["ieee"].rotation)
+    _, changes = tolerance_ladder(crystal, symprec, symmetry)
     if displaced:
         if ions != "clamped":
             raise UsageError("displaced cells belong to clamped ions", "--displaced", "Relaxed ions need none.")

@@ -231,6 +231,31 @@ def test_only_what_changed_is_done_again(cli, out):
     assert cli("fit", out, "--order", "cubic", "--again", "--json").json["kept"] == 0
 
 
+def test_jobs_dropped_by_hand_stay_dropped(cli, out):
+    cli("collect", out)
+    cli("fit", out)
+    run = out / load_campaign(out).members[0].run
+    by_hand = cli("fit", run, "--drop", "s1-plus-0.5", "--json").json
+    assert cli("fit", out, "--json").json["kept"] == 4
+    together = json.loads((run / "stiffness.json").read_text())
+    assert together["jobs_dropped"] == ["s1-plus-0.5"]
+    np.testing.assert_allclose(together["stiffness_GPa"], by_hand["stiffness_GPa"], rtol=1e-10, atol=1e-10)
+    assert cli("fit", out, "--json").json["kept"] == 5
+
+
+def test_reports_and_comparison(cli, out):
+    cli("collect", out)
+    first = load_campaign(out).members[0]
+    for member in load_campaign(out).members[1:]:  # reports take their time
+        shutil.rmtree(out / member.run)
+    result = cli("report", out, "--json")
+    assert result.code == 4
+    assert result.json["written"] == 1
+    assert sum("problem" in c for c in result.json["crystals"]) == 4
+    assert b"<html" in (out / first.run / "report.html").read_bytes()
+    assert cli("report", out, "--json").json["kept"] == 1
+
+
 @pytest.mark.slow
 def test_a_killed_prepare_is_completed(made, out, tmp_path, cli):
     fresh = tmp_path / "fresh"

@@ -10,7 +10,6 @@ from __future__ import annotations
 import os
 import re
 import signal
-import socket
 import subprocess
 import time
 from pathlib import Path
@@ -20,7 +19,6 @@ import pytest
 from support.files import SILICON, write
 from support.published import entries
 
-SCRIPT = Path(__file__).parent.parent / "support" / "slurm.sh"
 #: largest difference of one functional in two programs, percent: what pseudopotentials at coarse cutoffs may differ by (our
 #: choice; well-converged programs differ by about one percent: from memory of Lejaeghere et al., Science 351, aad3000, 2016)
 SPREAD = 3.0
@@ -62,34 +60,15 @@ exec pw.x "$@"
 """
 
 
-def free_port() -> int:
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        return probe.getsockname()[1]
-
-
 @pytest.fixture
-def slurm(need, tmp_path, monkeypatch):
+def slurm(need, start_slurm, monkeypatch):
     """A running Slurm with more CPUs than the machine has, so that nothing waits but what is throttled."""
-    need("sbatch", "pw.x", "abinit")
-    monkeypatch.setenv("PATH", f"{os.environ['PATH']}:/usr/sbin:/sbin")
-    need("slurmctld", "slurmd", "munged")
-    base = tmp_path / "slurm"
-    arguments = [str(free_port()), str(free_port()), "16"]
-    conf = subprocess.run(
-        ["bash", SCRIPT, "start", base, *arguments], capture_output=True, text=True, timeout=120, stdin=subprocess.DEVNULL
-    )
-    try:
-        assert conf.returncode == 0, conf.stderr
-        monkeypatch.setenv("SLURM_CONF", conf.stdout.strip())
-        monkeypatch.setenv("OMP_NUM_THREADS", "1")
-        monkeypatch.setenv("STRAINKIT_BEAT", "5")  # a dead task is known as such sooner
-        # the sandbox of MPI inside a scheduler it knows nothing of
-        monkeypatch.setenv("OMPI_ALLOW_RUN_AS_ROOT", "1")
-        monkeypatch.setenv("OMPI_ALLOW_RUN_AS_ROOT_CONFIRM", "1")
-        yield base
-    finally:
-        subprocess.run(["bash", SCRIPT, "stop", base], capture_output=True, timeout=60, stdin=subprocess.DEVNULL)
+    need("pw.x", "abinit")
+    monkeypatch.setenv("STRAINKIT_BEAT", "5")  # a dead task is known as such sooner
+    # the sandbox of MPI inside a scheduler it knows nothing of
+    monkeypatch.setenv("OMPI_ALLOW_RUN_AS_ROOT", "1")
+    monkeypatch.setenv("OMPI_ALLOW_RUN_AS_ROOT_CONFIRM", "1")
+    return start_slurm(16)
 
 
 def submit(folder: Path, command: str) -> str:

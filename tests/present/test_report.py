@@ -254,7 +254,7 @@ def test_reports_of_what_is_not_a_tensor(cli, tmp_path, case, code, lead):
     assert cli("report", folder).code == code
 
 
-def test_report_needs_one_run_with_a_stress_table(cli, tmp_path):
+def test_report_needs_a_stress_table(cli, tmp_path):
     assert cli("prepare", write(tmp_path, "dry.cif", NASTY), "--out", tmp_path / "run").code == 0
     result = cli("report", tmp_path / "run")
     assert result.code == 3
@@ -262,9 +262,10 @@ def test_report_needs_one_run_with_a_stress_table(cli, tmp_path):
     assert cli("report", tmp_path / "nothing").code == 3
     cells = [write(tmp_path, f"{name}.vasp", SILICON) for name in "ab"]
     assert cli("prepare", *cells, "--out", tmp_path / "many").code == 0
-    result = cli("report", tmp_path / "many")
-    assert result.code == 2
-    assert "about one crystal" in result.err
+    result = cli("report", tmp_path / "many", "--json")
+    assert result.code == 4
+    assert all("no stress table yet" in crystal["problem"] for crystal in result.json["crystals"])
+    assert "one of its run folders" in cli("report", tmp_path / "many", "--out", tmp_path / "x.html").err
 
 
 def test_the_same_from_a_notebook(silicon):
