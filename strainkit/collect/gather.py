@@ -127,7 +127,7 @@ def _with_typed(record: StressRecord, old: StressRecord | None, typed: StressRec
 
 def _read_one(run: Path, plan: Plan, others: _Others, job: StrainJob) -> StressRecord:
     folder, seen = _look(run, plan, job, others)
-    return replace(record_of(plan, job, folder, read_outputs(run, folder)), seen=seen)
+    return record_of(plan, job, folder, read_outputs(run, folder), seen)
 
 
 def _read_all(run: Path, plan: Plan, jobs: Sequence[StrainJob], others: _Others, workers: int | None) -> Iterator[StressRecord]:

@@ -7,6 +7,7 @@ that must be nil: a strain that remains means that the job changed its cell, or 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -67,7 +68,7 @@ class Match:
     displacements: FloatArray
     drift: float
 
-    @property
+    @cached_property
     def farthest(self) -> float:
         """Largest displacement, A."""
         return float(np.sqrt((self.displacements**2).sum(axis=1).max(initial=0.0)))

@@ -73,26 +73,28 @@ def _read(run: Path, name: str, reader: Reader) -> Output:
         return Output(name, reader.program, "", None, error.strerror or "cannot be read")
 
 
-def record_of(plan: Plan, job: StrainJob, folder: Folder, outputs: list[Output]) -> StressRecord:
-    """What came back of a job from the outputs of a folder."""
+def record_of(plan: Plan, job: StrainJob, folder: Folder, outputs: list[Output], seen: str = "") -> StressRecord:
+    """What came back of a job from the outputs of a folder; `seen` is the fingerprint that the record keeps."""
     doubts = []
     if folder.links:
         text = f"{folder.name}: symbolic links are not followed: {', '.join(folder.links[:3])}; put the file itself there"
         doubts.append(finding("link-not-followed", job.label, text))
     if not outputs:
-        return StressRecord(job.label, "missing", findings=tuple(doubts))
-    record = _record(plan, job, outputs[0])
+        return StressRecord(job.label, "missing", findings=tuple(doubts), seen=seen)
+    record = _record(plan, job, outputs[0], seen)
     if len(outputs) > 1 and outputs[1].finished and record.status == "done":
         doubts += _second(record, _record(plan, job, outputs[1]))
-    return replace(record, findings=(*record.findings, *doubts))
+    return replace(record, findings=(*record.findings, *doubts)) if doubts else record
 
 
-def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
+def _record(plan: Plan, job: StrainJob, output: Output, seen: str = "") -> StressRecord:
     name, returned = printable(output.name), output.returned
     if returned is None:
         status = "unfinished" if "end-of-job" in output.error else "broken"
         doubt = finding("unreadable-output", job.label, f"{name}: {output.error}")
-        return StressRecord(job.label, status, program=output.program, file=name, file_sha256=output.digest, findings=(doubt,))
+        return StressRecord(
+            job.label, status, program=output.program, file=name, file_sha256=output.digest, findings=(doubt,), seen=seen
+        )
     blank = StressRecord(
         label=job.label,
         status=returned.problems[0][0] if returned.problems else "done",
@@ -102,6 +104,7 @@ def _record(plan: Plan, job: StrainJob, output: Output) -> StressRecord:
         settings={key: value if isinstance(value, str | float) else str(value) for key, value in returned.settings.items()},
         file=name,
         file_sha256=output.digest,
+        seen=seen,
         findings=tuple(finding(f"job-{status}", job.label, f"{name}: {text}") for status, text in returned.problems),
     )
     try:
