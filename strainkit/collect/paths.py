@@ -23,8 +23,8 @@ Done = Sequence[tuple[StrainJob, StressRecord]]
 JUMP, JUMP_SPREAD, JUMP_EV = 0.5, 6.0, 1e-4
 #: ions are elsewhere when they move this far (A), and so many times farther per strain than in the other jobs
 ELSEWHERE_A, ELSEWHERE = 0.15, 4.0
-#: left-over forces matter when they can put the stress off by this part of its change under strain
-FORCES_MATTER = 0.05
+#: left-over forces matter when they put the stress off by this part of its change under strain
+FORCES_MATTER = 0.03
 #: force constant (eV/A^2) of an ion that has not moved at all: common practice, no source
 _SPRING = 10.0
 
@@ -143,9 +143,10 @@ def _largest(moves: FloatArray) -> float:
 
 
 def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
-    """Jobs whose ions are not relaxed enough: forces f leave the stress off by up to |f| |du/d(eta)| / V.
+    """Jobs whose ions are not relaxed enough: forces f leave the stress off by f.du/d(eta) / V.
 
-    du/d(eta) is the way of the ions by the strain of the job, or by that of the set, whichever is larger.
+    du/d(eta) is the way of the ions by the strain of the job, or by that of the set, whichever is larger. Of two directions
+    among those of n atoms the product is |f| |du/d(eta)| / sqrt(3 n) typically; three times that is taken, at most all.
     """
     if plan.ions != "relaxed":
         return []
@@ -165,11 +166,11 @@ def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
         force = float(np.linalg.norm(record.forces))  # type: ignore[arg-type]
         rate = float(np.linalg.norm(record.displacements)) / abs(job.magnitude) if job.shape else usual  # type: ignore[arg-type]
         reach = max(rate, usual, force / _SPRING / size)
-        doubt = force * reach / plan.crystal.volume * EV_PER_A3_IN_GPA
+        doubt = force * reach * min(1.0, (3.0 / len(record.forces)) ** 0.5) / plan.crystal.volume * EV_PER_A3_IN_GPA  # type: ignore[arg-type]
         if doubt > FORCES_MATTER * signal:
             text = (
-                f"largest force {record.max_force:.2g} eV/A: can put its stress off by {doubt:.2g} GPa "
-                f"(a strain changes it by {signal:.2g}), up to {100 * doubt / signal:.2g} % of the constants; relax it harder"
+                f"largest force {record.max_force:.2g} eV/A: may put its stress off by {doubt:.2g} GPa "
+                f"(a strain changes it by {signal:.2g}), {100 * doubt / signal:.2g} % of the constants; relax it harder"
             )
             findings.append(finding("forces-left", job.label, text))
     return findings
