@@ -149,8 +149,10 @@ def _covered(crystal: Crystal, clearance: FloatArray, probe: float) -> BoolArray
     steps = np.stack(np.meshgrid(*(np.arange(-n, n + 1) for n in reach), indexing="ij"), axis=-1).reshape(-1, 3)
     lengths = np.linalg.norm(steps / shape @ crystal.lattice, axis=1)
     covered = centres > 0
-    for step, length in zip(steps[lengths <= most], lengths[lengths <= most], strict=True):
-        covered |= np.roll(centres > length, step, axis=(0, 1, 2))
+    around = np.pad(centres, [(n, n) for n in reach], mode="wrap")
+    a, b, c = centres.shape
+    for (i, j, k), length in zip((reach - steps[lengths <= most]).tolist(), lengths[lengths <= most].tolist(), strict=True):
+        covered |= around[i : i + a, j : j + b, k : k + c] > length
     return covered
 
 
