@@ -5,7 +5,7 @@ from __future__ import annotations
 import multiprocessing
 import os
 import threading
-from collections.abc import Iterator, Mapping, Sequence, Set
+from collections.abc import Iterator, Mapping, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass, replace
@@ -30,12 +30,18 @@ _MANY = 400
 
 
 @dataclass(frozen=True)
-class _Task:
-    """A folder to read for a job."""
+class _Others:
+    """Folders of no job: their names, fingerprint, and whether all are old enough to be sure of it."""
 
-    job: StrainJob
-    folder: Folder
-    seen: str
+    names: frozenset[str]
+    state: str
+    settled: bool
+
+    @classmethod
+    def of(cls, folders: Sequence[Folder]) -> _Others:
+        text = "".join(f"{folder.name}{folder.state}" for folder in folders)
+        state = checksum(text.encode("utf-8", "surrogatepass"))[:16] if folders else ""
+        return cls(frozenset(folder.name for folder in folders), state, all(folder.settled for folder in folders))
 
 
 def collect_run(
@@ -58,25 +64,19 @@ def collect_run(
         Processes; when left out, all cores for some hundred folders to read and more, one for less.
     """
     known = _known(run)
-    folders = {job.label: scan(run, job_folder(job.label), plan.files) for job in plan.jobs}
     foreign = [scan(run, name) for name in foreign_folders(run, plan)]
-    elsewhere = (
-        checksum("".join(f"{f.name}{f.state}" for f in foreign).encode("utf-8", "surrogatepass"))[:16] if foreign else ""
-    )
+    others = _Others.of(foreign)
     kept: dict[str, StressRecord] = {}
-    tasks: list[_Task] = []
     for job in plan.jobs:
-        folder = folders[job.label]
-        seen = checksum(f"{plan_fingerprint(plan, job)}{folder.state}".encode())[:32]
-        if (old := _unchanged(run, known.get(job.label), seen, elsewhere, {f.name for f in foreign})) is not None:
-            kept[job.label] = replace(old, seen=_stamp(seen, elsewhere, folder, foreign))
-        else:
-            tasks.append(_Task(job, folder, _stamp(seen, elsewhere, folder, foreign)))
-    for record in _read_all(run, plan, tasks, workers):
-        kept[record.label] = record
+        if (old := known.get(job.label)) is not None:
+            seen = _look(run, plan, job, others)[1]
+            if _unchanged(run, old, seen, others):
+                kept[job.label] = replace(old, seen=seen)
+    jobs = [job for job in plan.jobs if job.label not in kept]
+    kept |= {record.label: record for record in _read_all(run, plan, jobs, others, workers)}
     records = [kept[job.label] for job in plan.jobs]
     placed = {record.file.rpartition("/")[0] for record in records}
-    records, doubts = place_strays(run, plan, records, folders, [f for f in foreign if f.name not in placed])
+    records, doubts = place_strays(run, plan, records, [f for f in foreign if f.name not in placed])
     records = [_with_typed(record, known.get(record.label), (typed or {}).get(record.label)) for record in records]
     records, found = judge_set(plan, records)
     return StressTable(tuple(records), (*doubts, *found))
@@ -92,27 +92,28 @@ def _known(run: Path) -> dict[str, StressRecord]:
         return {}
 
 
-def _stamp(seen: str, elsewhere: str, folder: Folder, foreign: Sequence[Folder]) -> str:
-    settled = folder.settled and all(other.settled for other in foreign)
-    return f"{seen}.{elsewhere}{'' if settled else '?'}"
+def _look(run: Path, plan: Plan, job: StrainJob, others: _Others) -> tuple[Folder, str]:
+    """A job's folder as it is now, and the fingerprint of all that its record depends on."""
+    folder = scan(run, job_folder(job.label), plan.files)
+    mine = checksum(f"{plan_fingerprint(plan, job)}{folder.state}".encode())[:32]
+    return folder, f"{mine}.{others.state}{'' if folder.settled and others.settled else '?'}"
 
 
-def _unchanged(run: Path, old: StressRecord | None, seen: str, elsewhere: str, foreign: Set[str]) -> StressRecord | None:
-    """The old record if its folder is as it was; files that were too young then are compared by their content."""
-    if old is None or old.program == TABLE_PROGRAM or old.status == "mismatch":
-        return None
-    mine, _, others = old.seen.removesuffix("?").partition(".")
+def _unchanged(run: Path, old: StressRecord, seen: str, others: _Others) -> bool:
+    """May the old record stand? Where files were too young to be sure, their content is compared."""
+    if old.program == TABLE_PROGRAM or old.status == "mismatch" or (old.forces is None and old.max_force is not None):
+        return False
+    before, _, elsewhere = old.seen.removesuffix("?").partition(".")
     place = old.file.rpartition("/")[0]
-    at_home = place in ("", job_folder(old.label)) or (place in foreign and others == elsewhere)
-    if mine != seen or not at_home or (old.forces is None and old.max_force is not None):
-        return None
-    if old.seen.endswith("?"):
-        try:
-            same = bool(old.file_sha256) and checksum((run / old.file).read_bytes()) == old.file_sha256
-        except OSError:
-            return None
-        return old if same else None
-    return old
+    at_home = place in ("", job_folder(old.label)) or (place in others.names and elsewhere == others.state)
+    if before != seen.partition(".")[0] or not at_home:
+        return False
+    if not old.seen.endswith("?"):
+        return True
+    try:
+        return bool(old.file_sha256) and checksum((run / old.file).read_bytes()) == old.file_sha256
+    except OSError:
+        return False
 
 
 def _with_typed(record: StressRecord, old: StressRecord | None, typed: StressRecord | None) -> StressRecord:
@@ -124,42 +125,43 @@ def _with_typed(record: StressRecord, old: StressRecord | None, typed: StressRec
     return record
 
 
-def _read_one(run: Path, plan: Plan, task: _Task) -> StressRecord:
-    return replace(record_of(plan, task.job, task.folder, read_outputs(run, task.folder)), seen=task.seen)
+def _read_one(run: Path, plan: Plan, others: _Others, job: StrainJob) -> StressRecord:
+    folder, seen = _look(run, plan, job, others)
+    return replace(record_of(plan, job, folder, read_outputs(run, folder)), seen=seen)
 
 
-def _read_all(run: Path, plan: Plan, tasks: Sequence[_Task], workers: int | None) -> Iterator[StressRecord]:
-    count = workers or (os.cpu_count() or 1 if len(tasks) >= _MANY else 1)
-    if count == 1 or len(tasks) < 2:
-        for task in tasks:
-            yield _read_one(run, plan, task)
+def _read_all(run: Path, plan: Plan, jobs: Sequence[StrainJob], others: _Others, workers: int | None) -> Iterator[StressRecord]:
+    count = workers or (os.cpu_count() or 1 if len(jobs) >= _MANY else 1)
+    if count == 1 or len(jobs) < 2:
+        for job in jobs:
+            yield _read_one(run, plan, others, job)
         return
     # a fork is cheap but safe from a single thread only
     alone = threading.active_count() == 1 and "fork" in multiprocessing.get_all_start_methods()
     context = multiprocessing.get_context("fork" if alone else "spawn")
-    size = max(1, min(50, len(tasks) // (4 * count)))
-    chunks = [tasks[i : i + size] for i in range(0, len(tasks), size)]
+    size = max(1, min(50, len(jobs) // (4 * count)))
+    chunks = [jobs[i : i + size] for i in range(0, len(jobs), size)]
     done = 0
-    pool = ProcessPoolExecutor(count, mp_context=context, initializer=_begin, initargs=(run, plan))
+    pool = ProcessPoolExecutor(count, mp_context=context, initializer=_begin, initargs=(run, plan, others))
     try:
         for records in pool.map(_read_chunk, chunks):
             done += len(records)
             yield from records
     except BrokenProcessPool:  # a worker died: go on alone
-        for task in tasks[done:]:
-            yield _read_one(run, plan, task)
+        for job in jobs[done:]:
+            yield _read_one(run, plan, others, job)
     finally:
         pool.shutdown(cancel_futures=True)
 
 
-_WORK: tuple[Path, Plan] | None = None
+_WORK: tuple[Path, Plan, _Others] | None = None
 
 
-def _begin(run: Path, plan: Plan) -> None:
+def _begin(run: Path, plan: Plan, others: _Others) -> None:
     global _WORK
-    _WORK = (run, plan)
+    _WORK = (run, plan, others)
 
 
-def _read_chunk(tasks: Sequence[_Task]) -> list[StressRecord]:
+def _read_chunk(jobs: Sequence[StrainJob]) -> list[StressRecord]:
     assert _WORK is not None
-    return [_read_one(*_WORK, task) for task in tasks]
+    return [_read_one(*_WORK, job) for job in jobs]

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import re
 import time
-from collections.abc import Iterable
+from collections.abc import Container
 from dataclasses import dataclass
 from pathlib import Path
 from stat import S_ISREG
@@ -53,18 +53,17 @@ def natural(name: str) -> list[tuple[int, str]]:
     return [(int(part), "") if part.isdecimal() else (-1, part) for part in re.split(r"(\d+)", name)]
 
 
-def scan(run: Path, name: str, written: Iterable[str] = ()) -> Folder:
+def scan(run: Path, name: str, written: Container[str] = ()) -> Folder:
     """Look into one folder of a run; one that is missing, a link or unreadable is empty."""
     path = run / name
     if path.is_symlink() or path.parent.is_symlink():
         return Folder(name, (), (name,), "link", True)
     found: list[tuple[str, int, int]] = []
     links = []
-    known = set(written)
     try:
         with os.scandir(path) as entries:
             for entry in entries:
-                if entry.name.startswith(".") or f"{name}/{entry.name}" in known:
+                if entry.name.startswith(".") or f"{name}/{entry.name}" in written:
                     continue
                 if entry.is_symlink():
                     links.append(entry.name)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
 from pathlib import Path
@@ -12,7 +12,7 @@ import numpy as np
 from strainkit.collect.match import LEAST_TOLERANCE, MismatchError, match
 from strainkit.collect.readjob import Output, read_outputs, record_of
 from strainkit.collect.returned import Returned
-from strainkit.collect.scan import Folder
+from strainkit.collect.scan import Folder, scan
 from strainkit.collect.table import StressRecord
 from strainkit.crystal.crystal import Crystal
 from strainkit.design.jobs import StrainJob
@@ -52,7 +52,7 @@ def _key(lattice: FloatArray) -> FloatArray:
 
 
 def place_strays(
-    run: Path, plan: Plan, records: Sequence[StressRecord], folders: Mapping[str, Folder], foreign: Sequence[Folder]
+    run: Path, plan: Plan, records: Sequence[StressRecord], foreign: Sequence[Folder]
 ) -> tuple[list[StressRecord], list[Finding]]:
     """Give outputs that lie in another job's folder, or in a folder of no job, to the job whose cell they have.
 
@@ -62,8 +62,6 @@ def place_strays(
     plan : Plan
     records : sequence of StressRecord
         From the jobs' own folders.
-    folders : mapping
-        Label -> own folder.
     foreign : sequence of Folder
         Folders of no job.
 
@@ -73,7 +71,7 @@ def place_strays(
     findings : list of Finding
         About outputs that belong to no job.
     """
-    lost = [folders[r.label] for r in records if _may_be_elsewhere(r)]
+    lost = [scan(run, job_folder(r.label), plan.files) for r in records if _may_be_elsewhere(r)]
     keys = _Keys(plan)
     by_label = {record.label: record for record in records}
     doubts: list[Finding] = []

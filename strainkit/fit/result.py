@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -264,9 +264,17 @@ def fit_run(
 
 
 def _carried(table: StressTable, used: tuple[str, ...]) -> list[Finding]:
-    """What collect doubted about the set and the jobs that are used."""
+    """What collect doubted about the set and the jobs that are used, one finding a code."""
     own = [f for record in table.records if record.label in used for f in record.findings]
-    return [f for f in (*table.findings, *own) if f.severity != "info"]
+    alike: dict[str, list[Finding]] = {}
+    for found in (*table.findings, *own):
+        if found.severity != "info":
+            alike.setdefault(found.code, []).append(found)
+    merged = []
+    for first, *others in alike.values():
+        more = f"; and {len(others)} more such: {', '.join(f.where for f in others)}" if others else ""
+        merged.append(replace(first, message=first.message + more))
+    return merged
 
 
 def _without_offset(jobs: list[StrainJob], gradients: FloatArray, stresses: FloatArray) -> tuple[FloatArray, list[Finding]]:
