@@ -143,14 +143,19 @@ def _covered(crystal: Crystal, clearance: FloatArray, probe: float) -> BoolArray
     radius about the grid's centres alone would miss what lies between the last centre and the atoms.
     """
     shape = np.array(clearance.shape)
-    centres = np.where(clearance >= probe, clearance, 0.0)
+    places = np.argwhere(clearance >= probe)
+    radii = clearance[tuple(places.T)]
+    order = np.argsort(-radii)  # the largest spheres first: those that reach as far as a step stand in front
+    places, radii = places[order], radii[order]
     most = probe + 2.0 * _half_diagonal(crystal, clearance.shape)
     reach = np.ceil(most * np.linalg.norm(np.linalg.inv(crystal.lattice), axis=0) * shape).astype(int)
     steps = np.stack(np.meshgrid(*(np.arange(-n, n + 1) for n in reach), indexing="ij"), axis=-1).reshape(-1, 3)
     lengths = np.linalg.norm(steps / shape @ crystal.lattice, axis=1)
-    covered = centres > 0
-    for step, length in zip(steps[lengths <= most], lengths[lengths <= most], strict=True):
-        covered |= np.roll(centres > length, step, axis=(0, 1, 2))
+    near = lengths <= most
+    counts = np.searchsorted(-radii, -lengths[near])  # spheres with a radius above the length
+    covered = clearance >= probe
+    for step, count in zip(steps[near], counts.tolist(), strict=True):
+        covered[tuple(((places[:count] + step) % shape).T)] = True
     return covered
 
 

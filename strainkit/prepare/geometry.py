@@ -60,7 +60,7 @@ def atom_kinds(crystal: Crystal) -> tuple[list[Kind], list[int]]:
 
 def numbers(values: FloatArray) -> str:
     """Numbers on one line with 16 decimals: 16 or more significant digits for lengths above 1 A."""
-    return " ".join(f"{x:20.16f}" for x in values)
+    return " ".join(["%20.16f" % x for x in np.asarray(values).tolist()])  # noqa: UP031 (half the time of an f-string)
 
 
 def _lattice(crystal: Crystal, before: tuple[str, ...] = ("", "", "")) -> list[str]:
@@ -84,9 +84,9 @@ def cif_text(crystal: Crystal, title: str) -> str:
     lines += ["_space_group_name_H-M_alt 'P 1'", "loop_", "_space_group_symop_operation_xyz", "'x, y, z'", "loop_"]
     lines += [f"_atom_site_{key}" for key in ("label", "type_symbol", "fract_x", "fract_y", "fract_z", "occupancy")]
     seen: Counter[str] = Counter()
-    for symbol, position in zip(crystal.symbols, crystal.positions, strict=True):
+    for symbol, (x, y, z) in zip(crystal.symbols, crystal.positions.tolist(), strict=True):
         seen[symbol] += 1
-        lines.append(f"{symbol}{seen[symbol]} {symbol} " + " ".join(f"{x:.16f}" for x in position) + " 1.0")
+        lines.append(f"{symbol}{seen[symbol]} {symbol} {x:.16f} {y:.16f} {z:.16f} 1.0")
     return "\n".join(lines) + "\n"
 
 

@@ -191,6 +191,8 @@ def load_plan(run: Path) -> Plan:
         Not a run folder, or a manifest that is damaged or newer than this strainkit.
     """
     path = run / MANIFEST
+    if (run / "campaign.json").is_file() and not path.is_file():
+        raise InputError("a campaign, and this is for one crystal", run, "Name one of its run folders, in runs/001 and so on.")
     if not path.is_file():
         what = "not a run folder" if run.is_dir() else "no such run folder"
         raise InputError(f"{what} (no {MANIFEST})", run, "Make one with: strainkit prepare CELL --out RUN")

@@ -24,6 +24,7 @@ timer=$!
 trap 'kill "$timer" 2>/dev/null' EXIT
 {% endif %}
 
+echo "task $task${job_id:+ of $job_id}"
 status=0
 while read -r job; do
   [ -n "$stopped" ] && break

@@ -7,7 +7,7 @@ them alone by strainkit's own reader. fit: crystals a second of one core, two ma
 command, files included. memory: peak of one process over 1,000 crystals against 100. help: strainkit --help against a typer
 program with one command.
 
-Run: python tests/benchmarks/campaigns.py [CRYSTALS] [SIMULATED]     by default 1000 and 10000; it takes some minutes
+Run: python tests/benchmarks/campaigns.py [CRYSTALS] [SIMULATED]     by default 200 and 10000; it takes some minutes
 """
 
 from __future__ import annotations
@@ -142,22 +142,27 @@ def fit_rate(runs: list[Path]) -> float:
     return len(loaded) / min(cpu(lambda: [fit_run(*pair) for pair in loaded]) for _ in range(5))
 
 
-def memory(out: Path, count: int) -> float:
-    """Peak memory, MB, of collect and fit of the first crystals in a process of its own."""
+def memory(base: Path, runs: list[Path], count: int) -> float:
+    """Peak memory, MB, of collect and fit of a campaign of so many crystals in a process of its own."""
     code = (
         "import resource, sys\nfrom functools import partial\nfrom pathlib import Path\n"
         "from strainkit.cli.loop import loop\nfrom strainkit.cli.each import FitOptions, collect_one, fit_one\n"
-        "loop(Path(sys.argv[1]), 'collect', partial(collect_one, True), 1, True)\n"
+        "loop(Path(sys.argv[1]), 'collect', partial(collect_one, False), 1, True)\n"
         "loop(Path(sys.argv[1]), 'fit', partial(fit_one, FitOptions(), True), 1, True)\n"
         "print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024)\n"
     )
-    manifest = json.loads((out / "campaign.json").read_text())
-    part = out.parent / f"first-{count}"
-    part.mkdir(exist_ok=True)
-    (part / "campaign.json").write_text(json.dumps({**manifest, "crystals": manifest["crystals"][:count]}))
-    if not (part / "runs").exists():
-        (part / "runs").symlink_to(out / "runs")
-    return float(subprocess.run([sys.executable, "-c", code, part], capture_output=True, text=True, check=True).stdout)
+    campaign = base / f"first-{count}"
+    place = campaign / "runs/001"
+    place.mkdir(parents=True)
+    names = [f"c{number}" for number in range(count)]
+    for number, name in enumerate(names):  # the same runs again and again
+        (place / name).symlink_to(runs[number % len(runs)])
+    crystals = [
+        {"name": n, "run": f"runs/001/{n}", "source": n, "source_sha256": "", "laue_class": "", "jobs": 0} for n in names
+    ]
+    data = {"schema": "strainkit/campaign/1", "recipe_sha256": "", "refused_cells": [], "crystals": crystals}
+    (campaign / "campaign.json").write_text(json.dumps(data))
+    return float(subprocess.run([sys.executable, "-c", code, campaign], capture_output=True, text=True, check=True).stdout)
 
 
 def help_ratio() -> float:
@@ -186,18 +191,8 @@ def simulate(count: int, runs: list[Path]) -> tuple[float, float]:
     )
 
 
-def as_campaign(out: Path, runs: list[Path]) -> None:
-    """A manifest for run folders that lie in runs/001."""
-    crystals = [
-        {"name": r.name, "run": f"runs/001/{r.name}", "source": r.name, "source_sha256": "", "laue_class": "", "jobs": 0}
-        for r in runs
-    ]
-    data = {"schema": "strainkit/campaign/1", "recipe_sha256": "", "refused_cells": [], "crystals": crystals}
-    (out / "campaign.json").write_text(json.dumps(data))
-
-
 def main() -> None:
-    count = int(sys.argv[1]) if len(sys.argv) > 1 else 1000
+    count = int(sys.argv[1]) if len(sys.argv) > 1 else 200
     many = int(sys.argv[2]) if len(sys.argv) > 2 else 10_000
     rng = np.random.default_rng(0)
     with tempfile.TemporaryDirectory() as folder:
@@ -223,9 +218,8 @@ def main() -> None:
         rate = fit_rate(runs[:200])
         whole = cpu(lambda: [fit_one(FitOptions(), True, run) for run in runs])
         print(f"fit       {rate:6.0f} crystals a second a core, files included {count / whole:.0f}")
-        as_campaign(base / "out", runs)
-        small, large = memory(base / "out", max(1, count // 10)), memory(base / "out", count)
-        print(f"memory    {large:6.0f} MB at {count} crystals, {large / small:.2f} times that at {count // 10}")
+        small, large = (memory(base, runs[:50], number) for number in (100, 1000))
+        print(f"memory    {large:6.0f} MB at 1000 crystals, {large / small:.2f} times that at 100")
         print(f"help      {help_ratio():6.2f} times a bare typer program")
         if many:
             one, two = simulate(many, runs)

@@ -405,6 +405,36 @@ def test_progress_and_resubmission_across_the_campaign(cli, made, tmp_path):
     assert sum_of_done(cli("progress", out, "--json")) == campaign.jobs
 
 
+@pytest.mark.parametrize(
+    ("scheduler", "task", "place"),
+    [
+        ("slurm", "SLURM_ARRAY_TASK_ID", "SLURM_SUBMIT_DIR"),
+        ("pbs", "PBS_ARRAY_INDEX", "PBS_O_WORKDIR"),
+        ("lsf", "LSB_JOBINDEX", "LS_SUBCWD"),
+        ("sge", "SGE_TASK_ID", "SGE_O_WORKDIR"),
+    ],
+)
+def test_the_script_of_the_campaign_runs_those_of_the_runs(cli, need, tmp_path, scheduler, task, place):
+    """From a copy elsewhere, as schedulers keep it, with stand-ins for their variables; and read by shellcheck."""
+    need("shellcheck")
+    write_cells(tmp_path / "cells", np.random.default_rng(1), classes=("m-3m", "m-3"))
+    deck, out = write_deck(tmp_path / "deck"), tmp_path / "out"
+    settings = tmp_path / "site.toml"
+    settings.write_text('[site]\nbundle = 2\nwalltime = "00:10:00"\n')
+    options = ("--deck", deck, "--settings", settings, "--scheduler", scheduler, "--format", "extxyz")
+    assert cli("prepare", tmp_path / "cells", "--out", out, *options).code == 0
+    checked = subprocess.run(["shellcheck", "--severity=style", out / "submit.sh"], capture_output=True, text=True)
+    assert checked.returncode == 0, checked.stdout
+    spool = tmp_path / "spool"
+    spool.mkdir()
+    shutil.copy(out / "submit.sh", spool / "script")
+    environment = {**os.environ, task: "2", place: str(out)}
+    done = subprocess.run(["bash", spool / "script"], cwd=spool, env=environment, capture_output=True, text=True)
+    assert done.returncode == 0, done.stderr
+    listed = (out / "joblist.txt").read_text().split()
+    assert [job for job in listed if (out / job / "done").exists()] == listed[2:4]
+
+
 def sum_of_done(result) -> int:
     """Jobs that ended well; the checks of a whole set may suspect the one stress that this program knows."""
     return result.json["states"].get("done", 0) + result.json["states"].get("suspect", 0)

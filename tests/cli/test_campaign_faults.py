@@ -142,6 +142,13 @@ def test_a_manifest_of_a_newer_strainkit(cli, out):
     assert "newer strainkit" in result.err
 
 
+def test_commands_for_one_crystal_say_so(cli, out):
+    for arguments in (("converge", out), ("evaluate", out, "--engine", "lj"), ("prepare", "--extend", out, "--more", 1)):
+        result = cli(*arguments)
+        assert result.code == 3
+        assert "for one crystal" in result.err
+
+
 def test_a_lost_run_folder_costs_itself_only(cli, out):
     lost = load_campaign(out).members[1]
     (out / lost.run).rename(out / "elsewhere")
