@@ -20,6 +20,9 @@ LOUD = 5.0
 CHANCE = 0.02
 #: misfit below this part of the typical stress is not looked into; below the second not for two faults at a time
 NOTABLE, NOTABLE_TWICE = 0.003, 0.03
+#: a stress below this part of the typical one, such as that of a relaxed reference, explains no misfit below the second of
+#: those: made larger, it would only stand in for the even response of the crystal
+SLIGHT = 0.03
 #: jobs beyond which single jobs are not tried
 MANY = 150
 #: faults at one time, and partial explanations that are followed
@@ -67,7 +70,7 @@ def explain(group: Group, start: Attempt, choices: list[Mend]) -> tuple[Attempt,
         # in so many tries, a vector of so many random components becomes so short by chance
         lucky = (CHANCE / len(places) / len(choices)) ** (depth / max(group.spare, 1))
         need = min(PART, lucky) * start.misfit
-        good = [t for t in tried if t.misfit < need and t.misfit < CLEAN * len(group.jobs) ** 0.5 and _tells(group, t)]
+        good = [t for t in tried if t.misfit < need and t.misfit < CLEAN * len(group.jobs) ** 0.5 and _tells(group, start, t)]
         if good:
             best = good[0]
             rivals = [t for t in good[1:] if t.misfit < 3 * best.misfit + 0.01 and _differs(t, best)]
@@ -77,11 +80,16 @@ def explain(group: Group, start: Attempt, choices: list[Mend]) -> tuple[Attempt,
     return start, []
 
 
-def _tells(group: Group, found: Attempt) -> bool:
-    """Are the changed stresses more than noise? Making a stress of noise smaller always helps."""
+def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
+    """Are the changed stresses more than noise, before and after? Making a stress of noise smaller always helps."""
     second = np.einsum("jab,jb->ja", group.to_second, found.cauchy)
-    noise = found.misfit * float(typical_change(second, group.rest)) / len(group.jobs) ** 0.5
-    return all(np.linalg.norm(found.cauchy[place]) > LOUD * noise for place, _ in found.steps if place is not None)
+    typical = float(typical_change(second, group.rest))
+    size = len(group.jobs) ** 0.5
+    places = [place for place, _ in found.steps if place is not None]
+    slight = any(np.linalg.norm(group.cauchy[place]) < SLIGHT * typical for place in places)
+    if slight and start.misfit <= NOTABLE_TWICE * size:
+        return False
+    return all(np.linalg.norm(found.cauchy[place]) > LOUD * found.misfit * typical / size for place in places)
 
 
 def _differs(one: Attempt, other: Attempt) -> bool:
