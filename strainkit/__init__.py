@@ -1,6 +1,6 @@
 """strainkit: from one relaxed crystal to the fewest strained cells, and from their stresses to a stiffness tensor.
 
-The whole job from a notebook::
+The whole job from a notebook; in a script under ``if __name__ == "__main__":``, as evaluate_run starts processes::
 
     crystal = strainkit.read_crystal("cell.cif")
     plan, _ = strainkit.write_run(strainkit.plan_run(crystal, [0.01]), Path("run"))

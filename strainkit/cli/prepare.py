@@ -121,6 +121,9 @@ def prepare(
             raise UsageError("--deck and its options are the run's own", "--extend", "Leave them out.")
         _extend(extend, magnitudes, more, finer, format, dry_run, json, quiet)
         return
+    for option, given in (("--more", more), ("--finer", finer)):
+        if given is not None:
+            raise UsageError("this adds to a run", option, "It goes with --extend RUN.")
     if not cell:
         raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
     if out is None and not dry_run:
@@ -178,6 +181,8 @@ def _extend(
     json: bool,
     quiet: bool,
 ) -> None:
+    from dataclasses import replace
+
     from strainkit.cli.known import moved
     from strainkit.design.extend import at_magnitudes, more_jobs
     from strainkit.prepare.extend import at_finer_settings, extend_plan, write_extension
@@ -200,4 +205,6 @@ def _extend(
             note(f"{learned} of them start from what the ions did in the {len(taught)} jobs collected", quiet)
         if "scheduler" in plan.calculation:
             note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
-    deliver(plan.to_dict, lambda: plan_text(plan), json)
+    # the list and the script of the first jobs do not hold the new ones
+    shown = replace(plan, calculation={k: v for k, v in plan.calculation.items() if k != "submit"})
+    deliver(plan.to_dict, lambda: plan_text(shown), json)

@@ -9,7 +9,8 @@ from pathlib import Path
 
 from strainkit.crystal.read import ENDINGS, crystal_name, is_always_called
 from strainkit.errors import InputError
-from strainkit.run.campaign import Refusal
+from strainkit.run.campaign import CAMPAIGN, Refusal
+from strainkit.run.plan import MANIFEST
 
 __all__ = ["find_cells", "is_one_cell", "names_of", "natural"]
 
@@ -48,6 +49,9 @@ def find_cells(arguments: Iterable[str]) -> tuple[list[Path], list[Refusal]]:
     refused = []
     for argument in arguments:
         paths = _expand(argument)
+        if any((Path(argument) / name).is_file() for name in (MANIFEST, CAMPAIGN)):
+            remedy = "Give structure files; to add jobs to a run use --extend."
+            raise InputError("a folder that strainkit prepared, not one of reference cells", argument, remedy)
         if not paths:
             what = "no structure files in it" if Path(argument).is_dir() else "no such file"
             refused.append(Refusal(argument, what))

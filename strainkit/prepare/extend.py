@@ -7,6 +7,8 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from strainkit.design.expect import expect
 from strainkit.design.extend import finer_jobs, restoring_jobs
 from strainkit.design.jobs import StrainJob
@@ -50,10 +52,16 @@ def adopt_jobs(plan: Plan, adopted: Sequence[StrainJob]) -> Plan:
     first = max((job.shape for job in others), default=0)
     own = [replace(job, shape=job.shape + first) for job in plan.strain_set if job.shape]
     needed = restoring_jobs([*reference, *others], own, plan.symmetry, plan.basis, by_pairs=True)
+    # of a pair whose one side is there already, only the other
+    needed = [job for job in needed if not any(_same_strain(job, other) for other in others)]
     jobs = (*reference, *others, *needed)
     promise, doubts = expect(jobs, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
     kept = tuple(f for f in plan.findings if f.code not in ("few-spare-degrees", "target-error"))
     return replace(plan, jobs=jobs, expectation=promise, findings=(*kept, *doubts))
+
+
+def _same_strain(one: StrainJob, other: StrainJob) -> bool:
+    return float(np.abs(one.strain - other.strain).max()) < 1e-3 * abs(one.magnitude)
 
 
 def at_finer_settings(plan: Plan, settings: Settings, displacements: Mapping[str, FloatArray] | None = None) -> Plan:

@@ -100,9 +100,9 @@ class Report:
             "findings": [f.to_dict() for f in self.page.findings],
         }
 
-    def save(self, path: Path, force: bool = False) -> None:
+    def save(self, path: Path | str, force: bool = False) -> None:
         """Write the page; a file that strainkit did not make is replaced only with `force`."""
-        save_own(path, self.html.encode(), force)
+        save_own(Path(path), self.html.encode(), force)
 
     def _repr_html_(self) -> str:
         frame = 'width="100%" height="720" style="border:0" title="strainkit report"'

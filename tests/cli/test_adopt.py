@@ -8,6 +8,7 @@ from support.crystals import conventional, random_rotation
 from support.published import mandel
 from support.returned import write_return
 
+from strainkit.prepare.runfolder import plan_run
 from strainkit.prepare.writers import FORMATS
 from strainkit.run.plan import load_plan
 from strainkit.tensors.sixvectors import stiffness_to_voigt, to_mandel
@@ -111,3 +112,29 @@ def test_what_cannot_be_adopted_is_named(cli, cell, tmp_path):
     assert "no finished calculation of this cell" in refused.err
     assert not (tmp_path / "run").exists()
     assert cli("prepare", path, "--out", tmp_path / "run", "--adopt", tmp_path / "nowhere").code == 3
+
+
+def test_of_a_pair_only_the_missing_side_is_planned(cli, cell, tmp_path):
+    """One side of one of the set's own pairs is there already: it is not planned again."""
+    crystal, path = cell
+    plan = plan_run(crystal, [0.01])
+    old, run = tmp_path / "old", tmp_path / "run"
+    returned(old / "one", crystal, plan.strain_set[1].gradient, np.eye(3))
+    assert cli("prepare", path, "--out", run, "--adopt", old).code == 0
+    strains = np.array([job.strain for job in load_plan(run).strain_set])
+    apart = np.abs(strains[:, None] - strains[None]).max(axis=(2, 3)) + np.eye(len(strains))
+    assert apart.min() > 1e-3
+    for job in load_plan(run).jobs:
+        returned(run / "jobs" / job.label, crystal, job.gradient, np.eye(3))
+    assert cli("collect", run).code == 0
+    fit = cli("fit", run, "--frame", "given", "--json").json
+    np.testing.assert_allclose(fit["stiffness_GPa"], stiffness_to_voigt(STIFFNESS), rtol=0, atol=1e-6 * STIFFNESS.max())
+
+
+def test_a_run_folder_is_no_cell(cli, cell, tmp_path):
+    _, path = cell
+    assert cli("prepare", path, "--out", tmp_path / "run").code == 0
+    refused = cli("prepare", tmp_path / "run", "--out", tmp_path / "other")
+    assert refused.code == 3
+    assert "a folder that strainkit prepared" in refused.err
+    assert cli("prepare", path, "--more", 4, "--out", tmp_path / "third").code == 2
