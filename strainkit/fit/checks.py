@@ -171,7 +171,7 @@ def _curvature(
         return p, "curved beyond what this set can correct", [finding("curved", "strain set", text)]
     if order == "linear":
         code = "magnitude-matters" if part[worst] > 0.01 else "cubic-response"
-        return p, "curved and corrected", [finding(code, "strain set", f"{text}; --order cubic removes it")]
+        return p, "curved; --order cubic corrects it", [finding(code, "strain set", f"{text}; --order cubic removes it")]
     return p, "curved and corrected", [finding("cubic-response", "strain set", f"{text}; removed by this fit")]
 
 

@@ -17,6 +17,7 @@ __all__ = ["Response", "Verdict", "extra_terms_test", "responses"]
 
 Verdict = Literal[
     "linear within noise",
+    "curved; --order cubic corrects it",
     "curved and corrected",
     "curved beyond what this set can correct",
     "cannot be told from one magnitude",
