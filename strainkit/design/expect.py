@@ -13,7 +13,7 @@ from strainkit.design.model import LinearModel, build_model
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.averages import averages_of
-from strainkit.tensors.constants import ConstantBasis
+from strainkit.tensors.constants import ConstantBasis, basis_of_group
 from strainkit.tensors.leastsquares import factorise
 from strainkit.tensors.stiffness import Stiffness
 
@@ -83,15 +83,17 @@ def expect(
         Rows: the axes in which the constants are named, in the given frame. Without a guess the promise is the same for all
         crystals with the same strains in them, and kept.
     """
-    if naming is None or guess is not None:
-        return _expect(jobs, rotations, basis, noise, guess)
     strains = np.array([job.strain for job in jobs]).reshape(-1, 3, 3)
-    mine, group = (bytes((np.round(naming @ x @ naming.T, 12) + 0.0).tobytes()) for x in (strains, rotations))
-    key = mine, group, noise
+    if naming is None or guess is not None:
+        return _expect(strains, rotations, basis, noise, guess)
+    # what is kept follows from the key alone: it must not matter which crystal of a class came first
+    strains, group = (np.round(naming @ x @ naming.T, 12) + 0.0 for x in (strains, rotations))
+    key = strains.tobytes(), group.tobytes(), noise
     if key not in _KEPT:
         if len(_KEPT) >= _MOST_KEPT:
             _KEPT.clear()
-        _KEPT[key] = _expect(jobs, rotations, basis, noise, None)
+        u, _, vt = np.linalg.svd(group)
+        _KEPT[key] = _expect(strains, u @ vt, basis_of_group(u @ vt, np.eye(3)), noise, None)
     expectation, findings = _KEPT[key]
     return expectation, list(findings)
 
@@ -102,9 +104,9 @@ _MOST_KEPT = 256
 
 
 def _expect(
-    jobs: Sequence[StrainJob], rotations: FloatArray, basis: ConstantBasis, noise: float, guess: Stiffness | None
+    strains: FloatArray, rotations: FloatArray, basis: ConstantBasis, noise: float, guess: Stiffness | None
 ) -> tuple[Expectation, list[Finding]]:
-    model = model_of(jobs, rotations, basis)
+    model = build_model(strains, rotations, basis.matrices)
     covariance = noise**2 * factorise(model.matrix).inverse[model.constants, model.constants]
     errors = [None if np.isnan(v) else float(v**0.5) for v in np.diag(covariance)]
     cost = sum(len(rotations) / len(model.shapes[i].residual) for i in model.shape_of_job if i >= 0)

@@ -68,11 +68,14 @@ def constant_basis(invariants: FloatArray, naming_rotation: FloatArray) -> Const
 def basis_of_group(rotations: FloatArray, naming_rotation: FloatArray) -> ConstantBasis:
     """`constant_basis` for a Laue group (m, 3, 3), given frame, kept for the groups that look alike in the naming axes."""
     group = naming_rotation @ rotations @ naming_rotation.T
-    key = (np.round(group, 12) + 0.0).tobytes()
+    # what is kept follows from the key alone: it must not matter which crystal of a class came first
+    rounded = np.round(group, 12) + 0.0
+    key = rounded.tobytes()
     if key not in _KEPT:
         if len(_KEPT) >= _MOST_KEPT:
             _KEPT.clear()
-        _KEPT[key] = constant_basis(invariant_matrices(group), np.eye(3))
+        u, _, vt = np.linalg.svd(rounded)
+        _KEPT[key] = constant_basis(invariant_matrices(u @ vt), np.eye(3))
     named = _KEPT[key]
     return ConstantBasis(named.names, rotate_matrix(naming_rotation.T, named.matrices))
 
