@@ -1,4 +1,4 @@
-"""Blind fault injector: cells of another strain, that drifted, or of another crystal; blindfaults says how these are written."""
+"""Blind fault injector: cells of another strain, that drifted, or of another crystal (see blindfaults)."""
 
 from __future__ import annotations
 
