@@ -1,6 +1,6 @@
 """Faults that no one may overlook, injected by code that was written without knowledge of how `collect` judges.
 
-The sets: real silicon of Quantum ESPRESSO (tests/data), and invented lawful ones. The whole bench: tests/benchmarks/blind_bench.py.
+The sets: real silicon of Quantum ESPRESSO (tests/data), and invented lawful ones. The bench: tests/benchmarks/blind_bench.py.
 """
 
 from __future__ import annotations
@@ -10,7 +10,6 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-
 import support.blindcells
 import support.blindfiles  # noqa: F401  (both register their faults)
 from support.blindjudge import CONSEQUENCES, Seen, inject, judge, look
