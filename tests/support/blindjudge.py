@@ -138,6 +138,8 @@ def touches(finding: tuple[str, str, str, str], injected: Injected, work: Strain
     names = {x for x in work.labels if re.search(rf"(?<![\w.-]){re.escape(x)}(?![\w-]|\.\d)", f"{where} {message}")}
     shapes = {f"s{job.shape}" for job in work.plan.strain_set if job.label in injected.labels}
     right = bool(names & set(injected.labels)) or bool(shapes & set(re.findall(r"\bs\d+\b(?!-)", where)))
+    if finding[0] in DOES_NOT_FIT | WEAK:  # the right pair will do
+        right = right or bool(shapes & {f"s{job.shape}" for job in work.plan.strain_set if job.label in names})
     return right or not names or injected.whole
 
 
@@ -163,15 +165,16 @@ def judge(
     foreign = frozenset[str]().union(*(i.codes for i in others)) - injected.codes
     mine = [f for f in mine if not (f[2] in elsewhere and (f[0] in foreign or not injected.whole))]
     said = tuple(sorted(f"{f[0]} ({f[2]}): {f[3]}" for f in (mine or new)))
-    if seen.trouble:
-        word = "mislabelled"
+    if seen.trouble:  # a table that is refused with its line, column and reason
+        refused = "job-broken" in injected.codes and "is not a number" in seen.trouble
+        word = "named" if refused else "mislabelled"
     elif any(f[0] in injected.codes for f in mine):
         word = "named"
     elif any(f[0] not in DOES_NOT_FIT | WEAK for f in mine) or (blamed and not mine):
         word = "mislabelled"
     elif any(f[0] in DOES_NOT_FIT for f in mine):
         word = "outlier"
-    elif mine:
+    elif mine or (new and not others):
         word = "mislabelled"
     elif size <= 1.0:
         word = "no effect"

@@ -96,14 +96,14 @@ def _espresso_functional(job: Espresso, rng: np.random.Generator) -> bool:
 
 
 def _espresso_dispersion(job: Espresso, rng: np.random.Generator) -> bool:
-    line = "     " + "-" * (44 if rng.random() < 0.5 else 38)
-    if len(line) == 49:
-        head = f"{line}\n     Parameters for DFT-D3 Dispersion Correction:\n{line}\n\n"
-        job.swap(r"(     ewald contribution .*\n)", r"\g<1>     DFT-D3 Dispersion         =      -0.04332427 Ry\n", 0)
-    else:
-        head = f"{line}\n     Parameters for Dispersion Correction:\n{line}\n       atom      VdW radius       C_6     \n\n"
-        head += "        Si          3.243       320.089\n\n"
-        job.swap(r"(     ewald contribution .*\n)", r"\g<1>     Dispersion Correction     =      -0.04332427 Ry\n", 0)
+    if rng.random() < 0.5:
+        line, words, term = "     " + "-" * 44, "Parameters for DFT-D3 Dispersion Correction:\n", "DFT-D3 Dispersion        "
+    else:  # words of pw.x 6.7
+        line, words, term = "     " + "-" * 49, "Parameters for Dispersion (Grimme-D2) Correction:\n", "Dispersion Correction    "
+    head = f"{line}\n     {words}{line}\n"
+    if "D2" in words:
+        head += "       atom      VdW radius       C_6     \n\n        Si          3.243       320.089\n\n"
+    job.swap(r"(     ewald contribution .*\n)", rf"\g<1>     {term} =      -0.04332427 Ry\n", 0)
     return job.swap(r"(     Subspace diagonalization in iterative)", head + r"\g<1>")
 
 
