@@ -23,8 +23,9 @@ sys.path.insert(0, str(Path(__file__).parents[1]))
 import numpy as np
 import support.blindcells
 import support.blindfiles  # noqa: F401  (registers its faults)
+from support.blindclean import DISGUISES, disguised
 from support.blindfaults import NUMBERS
-from support.blindjudge import CONSEQUENCES, Seen, Verdict, inject, judge, look, mends
+from support.blindjudge import CONSEQUENCES, Seen, Verdict, inject, judge, look, mends, moved
 from support.blindsets import MANIFEST, StrainSet, real_set, synthetic_set
 from support.groups import LAUE_CLASSES
 
@@ -109,6 +110,18 @@ def false_alarms(bench: Bench) -> tuple[list[str], list[str]]:
         fits[row] += any(f not in seen.collected for f in wrong)
         others[row] += any(f[0] in CONSEQUENCES for f in seen.findings)
         words += [f"- {name}: {f[0]} ({f[2]}): {f[3]}" for f in wrong] + [f"- {name}: {seen.trouble}"] * bool(seen.trouble)
+    for name in bench.real:
+        plain, row = bench.clean(name), f"{bench.set_of(name).kind}, in disguise"
+        known = {(f[0], f[2]) for f in plain.findings}
+        for k, disguise in enumerate(DISGUISES):
+            seen = look(disguised(bench.set_of(name), disguise, np.random.default_rng([bench.seed, k])))
+            new = sorted(f for f in seen.findings if (f[0], f[2]) not in known)
+            size, shift = moved(plain, seen)
+            sets[row] += 1
+            alarms[row] += bool(seen.trouble) or size > 1e-3 or any(f in seen.collected for f in new)
+            fits[row] += any(f not in seen.collected for f in new)
+            words += [f"- {name}, {disguise}: {f[0]} ({f[2]}): {f[3]}" for f in new]
+            words += [f"- {name}, {disguise}: {seen.trouble} {shift}"] * (bool(seen.trouble) or size > 1e-3)
     return [f"| {row} | {sets[row]} | {alarms[row]} | {fits[row]} | {others[row]} |" for row in sets], words
 
 

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import lzma
+import re
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 
@@ -11,6 +14,15 @@ from support.blindfaults import CELLS, SYNTHETIC, Injected, fault, pick
 from support.blindsets import Output, StrainSet, synthetic_set
 from support.blindtext import editor
 from support.crystals import SPACE_GROUPS, random_rotation
+
+OUTPUTS = Path(__file__).parent.parent / "data" / "outputs"
+#: outputs of other crystals by the same programs
+FOREIGN = {
+    "qe": ("qe/relaxed.out", "qe/two-species.out"),
+    "abinit": ("abinit/relaxed.abo", "abinit/two-species.abo"),
+    "cp2k": ("cp2k/relaxed.out", "cp2k/two-species.out"),
+    "gpaw": ("gpaw/relaxed.txt", "gpaw26/relaxed.txt"),
+}
 
 
 def strained_output(work: StrainSet, label: str, strain: np.ndarray, rng: np.random.Generator) -> None:
@@ -82,3 +94,26 @@ def other_crystal(work: StrainSet, rng: np.random.Generator, taken: frozenset[st
         output.cell = replace(output.cell, numbers=numbers, positions=positions)
     codes = ("cell-mismatch", "cell-drifted") if way == 0 else ("cell-mismatch",)
     return Injected((label,), frozenset(codes), note)
+
+
+@fault("another crystal, real output", frozenset(("real",)))
+def foreign(work: StrainSet, rng: np.random.Generator, taken: frozenset[str]) -> Injected | None:
+    """A finished output of another crystal by the same program, or the same output with another element in every place."""
+    label = pick(work, rng, taken)
+    if label is None:
+        return None
+    job = editor(work, label)
+    if rng.random() < 0.5:
+        source = str(rng.choice(FOREIGN[work.kind]))
+        main = job.main
+        for name in job.names:
+            if name.endswith((".restart", "returned.extxyz", ".inp")):
+                work.files[name] = ""
+        work.files[main] = lzma.decompress((OUTPUTS / f"{source}.xz").read_bytes()).decode()
+        return Injected((label,), frozenset(("cell-mismatch", "cell-drifted")), source)
+    if not re.search(r"\bSi\b", job.text):
+        return None
+    for name in job.names:
+        text = re.sub(r"\bSi\b", "Ge", work.files[name])
+        work.files[name] = re.sub(r"(znucl +|- )14\.00000", r"\g<1>32.00000", text)
+    return Injected((label,), frozenset(("cell-mismatch",)), "Ge for Si in every place")

@@ -67,6 +67,8 @@ class StrainSet:
         Label -> Output, of synthetic sets.
     files : dict
         Path relative to the run folder -> text, of real sets; faults may add to it in any set, and "" removes a file.
+    packed : dict
+        Further files that are not text.
     law : callable or None
         Second Piola-Kirchhoff stress (3, 3), GPa, of a Green-Lagrange strain.
     """
@@ -76,6 +78,7 @@ class StrainSet:
     plan: Plan
     outputs: dict[str, Output] = field(default_factory=dict)
     files: dict[str, str] = field(default_factory=dict)
+    packed: dict[str, bytes] = field(default_factory=dict)
     law: Callable[[np.ndarray], np.ndarray] | None = None
     table_energies: bool = True
 
@@ -91,14 +94,14 @@ class StrainSet:
 
     def copy(self) -> StrainSet:
         """A set that faults may change; the plan and the law are shared."""
-        return replace(self, outputs=deepcopy(self.outputs), files=dict(self.files))
+        return replace(self, outputs=deepcopy(self.outputs), files=dict(self.files), packed=dict(self.packed))
 
     def write(self, folder: Path) -> list[str]:
         """Write the run folder; returns the options that `collect` needs."""
         folder.mkdir(parents=True, exist_ok=True)
         self.plan.save(folder)
-        for label in self.labels:
-            (folder / job_folder(label)).mkdir(parents=True, exist_ok=True)
+        for job in self.plan.jobs:
+            (folder / job_folder(job.label)).mkdir(parents=True, exist_ok=True)
         options: list[str] = []
         if self.kind == "table":
             (folder / "table.csv").write_text(self.table())
@@ -108,9 +111,11 @@ class StrainSet:
                 (folder / job_folder(label) / RETURNED).write_text(output.text())
         for name, text in self.files.items():
             if text or name.endswith(".empty"):
-                (folder / name.removesuffix(".empty")).write_text(text)
+                (folder / name.removesuffix(".empty")).write_text(text, newline="")
             else:
                 (folder / name).unlink(missing_ok=True)
+        for name, data in self.packed.items():
+            (folder / name).write_bytes(data)
         return options
 
     def table(self) -> str:
@@ -129,7 +134,7 @@ def real_set(folder: Path) -> StrainSet:
     """A run folder of real outputs, or packed files LABEL.NAME.xz beside the manifest as in tests/data."""
     plan = load_plan(folder)
     files = {}
-    for job in plan.strain_set:
+    for job in plan.jobs:
         place = folder / job_folder(job.label)
         sources = sorted(place.iterdir()) if place.is_dir() else sorted(folder.glob(f"{job.label}.*"))
         for path in sources:

@@ -96,11 +96,11 @@ def _espresso_functional(job: Espresso, rng: np.random.Generator) -> bool:
 
 
 def _espresso_dispersion(job: Espresso, rng: np.random.Generator) -> bool:
-    if rng.random() < 0.5:
-        line, words, term = "     " + "-" * 44, "Parameters for DFT-D3 Dispersion Correction:\n", "DFT-D3 Dispersion        "
-    else:  # words of pw.x 6.7
-        line, words, term = "     " + "-" * 49, "Parameters for Dispersion (Grimme-D2) Correction:\n", "Dispersion Correction    "
-    head = f"{line}\n     {words}{line}\n"
+    words, term = "Parameters for DFT-D3 Dispersion Correction:", "DFT-D3 Dispersion        "
+    if rng.random() > 0.5:  # words of pw.x 6.7
+        words, term = "Parameters for Dispersion (Grimme-D2) Correction:", "Dispersion Correction    "
+    line = "     " + "-" * len(words)
+    head = f"{line}\n     {words}\n{line}\n"
     if "D2" in words:
         head += "       atom      VdW radius       C_6     \n\n        Si          3.243       320.089\n\n"
     job.swap(r"(     ewald contribution .*\n)", rf"\g<1>     {term} =      -0.04332427 Ry\n", 0)
