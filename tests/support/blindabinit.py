@@ -54,6 +54,10 @@ class Abinit(Editor):
         echo = [new[0, 0], new[1, 1], new[2, 2], new[2, 1], new[2, 0], new[1, 0]]
         self.swap(r"( strten .*\n)(.*\n)", lambda m: rewrite(m[1], echo[:3]) + rewrite(m[2], echo[3:]))
 
+    def energy(self) -> float:
+        """The last energy, eV."""
+        return float(re.findall(r"\(etotal\) \[Ha\]=\s*(\S+)", self.text)[-1]) * HARTREE
+
     def change_energy(self, jump: float) -> None:
         """Shift the last energy (eV)."""
         old = float(re.findall(r"\(etotal\) \[Ha\]=\s*(\S+)", self.text)[-1])

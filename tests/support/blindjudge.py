@@ -166,8 +166,8 @@ def judge(
     mine = [f for f in mine if not (f[2] in elsewhere and (f[0] in foreign or not injected.whole))]
     said = tuple(sorted(f"{f[0]} ({f[2]}): {f[3]}" for f in (mine or new)))
     if seen.trouble:  # a table that is refused with its line, column and reason
-        refused = "job-broken" in injected.codes and "is not a number" in seen.trouble
-        word = "named" if refused else "mislabelled"
+        refused = "is not a number" in seen.trouble
+        word = "named" if refused and "job-broken" in injected.codes else "no effect" if refused else "mislabelled"
     elif any(f[0] in injected.codes for f in mine):
         word = "named"
     elif any(f[0] not in DOES_NOT_FIT | WEAK for f in mine) or (blamed and not mine):

@@ -125,7 +125,7 @@ class StrainSet:
         for label, output in self.outputs.items():
             if output.stress is None:
                 continue
-            cells = [label, *(f"{output.stress[place]:.6f}" for place in _PLACES)]
+            cells = [label, *(f"{output.stress[place]:.10g}" for place in _PLACES)]
             rows.append(",".join([*cells, f"{output.energy:.8f}"] if self.table_energies else cells))
         return "\n".join(rows) + "\n"
 

@@ -130,6 +130,10 @@ class Editor:
         """Print another one in every place of the last."""
         raise NotImplementedError
 
+    def energy(self) -> float:
+        """The last energy, eV."""
+        raise NotImplementedError
+
     def stress(self) -> np.ndarray:
         """The last stress."""
         return self.matrix() * self.unit
@@ -163,6 +167,10 @@ class Espresso(Editor):
         rows = [rewrite(row, [*new[i], *kbar[i]]) for i, row in enumerate(last[3].splitlines())]
         block = last[1] + rewrite(last[2], [np.trace(kbar) / 3]) + "\n" + "\n".join(rows) + "\n"
         self.text = self.text[: last.start()] + block + self.text[last.end() :]
+
+    def energy(self) -> float:
+        """The last energy, eV."""
+        return float(re.findall(r"!    total energy\s+=\s+(\S+)", self.text)[-1]) * HARTREE / 2
 
     def change_energy(self, jump: float) -> None:
         """Shift the last energy (eV)."""

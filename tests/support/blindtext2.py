@@ -38,6 +38,10 @@ class Cp2k(Editor):
                     lines[i] = head + word + rewrite(rest, value)
         self.text = self.text[: last.start()] + "\n".join(lines) + self.text[last.end() :]
 
+    def energy(self) -> float:
+        """The last energy, eV."""
+        return float(re.findall(r"ENERGY\| Total FORCE_EVAL.*?(-?\d+\.\d+)", self.text)[-1]) * HARTREE
+
     def change_energy(self, jump: float) -> None:
         """Shift the last energies (eV): of the last step, and of the evaluation at the end."""
         found = re.findall(r"ENERGY\| Total FORCE_EVAL.*?(-?\d+\.\d+)", self.text)[-2:]
@@ -105,6 +109,10 @@ class Gpaw(Editor):
         if self.xyz:
             stress = " ".join(repr(float(x)) for x in new.ravel())
             self.files[self.xyz] = re.sub(r'stress="[^"]*"', f'stress="{stress}"', self.files[self.xyz])
+
+    def energy(self) -> float:
+        """The last free energy, eV."""
+        return float(re.findall(r"Free energy: +(\S+)", self.text)[-1])
 
     def change_energy(self, jump: float) -> None:
         """Shift the last energies (eV), free and extrapolated."""
