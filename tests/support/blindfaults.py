@@ -194,7 +194,9 @@ def energy_jump(work: StrainSet, rng: np.random.Generator, taken: frozenset[str]
 
 def _disturb(work: StrainSet, label: str, rng: np.random.Generator, size: float) -> None:
     """Add a random stress of a given size, as a part of the largest stress change in the set."""
-    largest = max(np.abs(stress_of(work, x)).max() for x in work.labels)
+    here = [x for x in work.labels if work.real or (x in work.outputs and work.outputs[x].stress is not None)]
+    present = [stress_of(work, x) for x in here]
+    largest = max(np.abs(s).max() for s in present if np.isfinite(s).all())
     noise = rng.normal(size=(3, 3)) * size * largest / 2
     change_stress(work, label, lambda s: s + noise + noise.T)
 

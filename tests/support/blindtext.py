@@ -135,8 +135,11 @@ class Editor:
         raise NotImplementedError
 
     def stress(self) -> np.ndarray:
-        """The last stress."""
-        return self.matrix() * self.unit
+        """The last stress; NaN where another fault took it away."""
+        try:
+            return self.matrix() * self.unit
+        except (IndexError, TypeError, ValueError):
+            return np.full((3, 3), np.nan)
 
     def change_stress(self, change: Change) -> None:
         """Change the last stress in every place and unit in which it is printed."""

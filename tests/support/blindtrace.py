@@ -29,6 +29,8 @@ def trace(work: StrainSet, used: set[str]) -> str:
             continue
         if work.real:
             turned = editor(work, job.label).stress()
+            if not np.isfinite(turned).all():
+                continue
             energies.append(editor(work, job.label).energy())
         else:
             output = work.outputs.get(job.label)
