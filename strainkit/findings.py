@@ -106,6 +106,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),
     "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
     # the comparison
+    "not-compared": ("error", "a crystal without a tensor is left out of the comparison"),
     "temperatures-differ": ("warning", "values of different temperatures, or static and measured ones, are compared"),
     "clamped-compared": ("warning", "constants of clamped ions, without the answer of the ions, are compared"),
     "methods-differ": ("info", "runs of different programs or settings are compared"),
