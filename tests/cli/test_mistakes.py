@@ -176,8 +176,30 @@ def test_partial_set_is_fitted_as_far_as_it_goes(cli, run):
     (run / "jobs" / "s1-minus-1" / "returned.extxyz").unlink()
     assert cli("collect", run).code == 4
     result = cli("fit", run, "--json")
-    assert result.code in (4, 5)
-    assert (run / "stiffness.json").exists() == (result.code == 4)
+    assert result.code == 5
+    assert "with s1-minus-1 they would" in result.err  # the two jobs of the set stand alone: both are needed
+    assert not (run / "stiffness.json").exists()
+
+
+def test_cubic_terms_of_one_magnitude_ask_for_another_that_suffices(cli, run):
+    assert cli("evaluate", run, "--engine", "tersoff", "--workers", 1).code == 0
+    cli("collect", run)
+    result = cli("fit", run, "--order", "cubic")
+    assert result.code == 5
+    assert "second magnitude" in result.err
+    command = result.err.partition("strainkit prepare --extend RUN ")[2].split()[:2]
+    assert command == ["--magnitude", "0.5"]
+    assert cli("prepare", "--extend", run, *command).code == 0
+    assert cli("evaluate", run, "--engine", "tersoff", "--workers", 1).code == 0
+    cli("collect", run)
+    assert cli("fit", run, "--order", "cubic").code == 0
+    for label in ("s1-minus-0.5", "s1-minus-1"):
+        (run / "jobs" / label / "returned.extxyz").unlink()
+    cli("collect", run)
+    result = cli("fit", run, "--order", "cubic")
+    assert result.code == 5
+    assert "with s1-minus-" in result.err
+    assert "second magnitude" not in result.err
 
 
 def test_results_go_to_stdout_and_chatter_to_stderr(cli, cell, run):
