@@ -28,7 +28,7 @@ _IONS_KIND = "strainkit/ions"
 #: status of a job -> meaning
 STATUSES = {
     "done": "finished, converged, and of the planned cell",
-    "missing": "no output found",
+    "missing": "no output that strainkit reads",
     "unfinished": "the output has no end-of-job mark or no stress",
     "unconverged": "electronic steps or ions not converged",
     "broken": "the output cannot be read or holds impossible numbers",
