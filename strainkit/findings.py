@@ -58,6 +58,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "ions-moved": ("error", "ions that had to stay where they were have moved"),
     "output-of-other-job": ("error", "a job's folder holds an output with the cell of another job"),
     "unmatched-output": ("warning", "an output in a folder of no job cannot be given to one"),
+    "unit-assumed": ("info", "a typed table does not name the unit of its stresses: taken to be GPa"),
     "matched-by-cell": ("info", "an output lay in another folder and was given to the job whose cell it has"),
     "outputs-disagree": ("warning", "two finished outputs of one job differ"),
     "link-not-followed": ("warning", "a symbolic link in a job folder is not followed"),

@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from strainkit import __version__
-from strainkit.collect.table import STATUSES, TABLE, StressTable
+from strainkit.collect.table import TABLE, StressTable
 from strainkit.present.calculation import settings_text
 from strainkit.present.report_page import Block, Cell, Facts, Paragraph, Row, Section, Table
 from strainkit.present.terminal import molecules_text
@@ -135,7 +135,7 @@ def _jobs(table: StressTable) -> Table:
         force = "-" if record.max_force is None else Cell(f"{record.max_force:.2g}", record.max_force)
         energy = "-" if record.energy is None else Cell(f"{record.energy:.6f}", record.energy)
         digest = Cell(record.file_sha256[:16] or "-", whole=record.file_sha256)
-        status = Cell(record.status, whole=STATUSES[record.status])
+        status = Cell(record.status, whole=record.meaning)
         rows.append([record.label, status, record.file or "-", digest, energy, force])
     caption = (
         "What came back: status, file, the first digits of its SHA-256 (all of them in stresses.json), free energy, largest "

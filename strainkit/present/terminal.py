@@ -174,9 +174,10 @@ def inspection_text(
 
 def table_text(table: StressTable, every: bool = False) -> str:
     """States of the jobs by class, and what is wrong with the ones that cannot be used."""
-    counts = Counter(record.status for record in table.records)
+    counts = Counter((record.status, record.meaning) for record in table.records)
+    ordered = sorted(counts.items(), key=lambda item: list(STATUSES).index(item[0][0]))
     lines = [heading(f"{len(table.usable)} of {len(table.records)} jobs usable")]
-    lines.append(columns([[s, str(counts[s]), meaning] for s, meaning in STATUSES.items() if counts[s]], left=3))
+    lines.append(columns([[s, str(n), meaning] for (s, meaning), n in ordered], left=3))
     if every:
         rows = [
             [r.label, r.status, *(plain(None if r.stress is None else r.stress[i]) for i in range(6))] for r in table.records
