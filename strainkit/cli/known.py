@@ -9,11 +9,12 @@ from strainkit.cli.options import note
 
 if TYPE_CHECKING:
     from strainkit.crystal.crystal import Crystal
+    from strainkit.prepare.settings import Settings
     from strainkit.run.plan import Plan
     from strainkit.tensors.arrays import FloatArray
     from strainkit.tensors.stiffness import Stiffness
 
-__all__ = ["adopted", "guessed", "keep", "moved", "predicted"]
+__all__ = ["adopted", "check_engine", "guessed", "keep", "moved", "predicted"]
 
 
 def guessed(path: Path, crystal: Crystal, symprec: float) -> Stiffness:
@@ -45,6 +46,28 @@ def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str
     files = [(job.label, one.path) for job, one in zip(jobs, found, strict=True) if job.label in used]
     note(f"adopted {len(files)} calculations; {len(longer.jobs) - len(files)} jobs are left to compute", quiet)
     return longer, files
+
+
+def check_engine(run: Path, plan: Plan, settings: Settings) -> None:
+    """Refuse finer settings that the engine does not know which computed the reference, where it is one of strainkit's own.
+
+    Raises
+    ------
+    InputError
+    """
+    from strainkit.errors import InputError
+    from strainkit.evaluate.engines import ENGINES, Engine
+    from strainkit.run.extxyz import RETURNED, recorded_engine
+    from strainkit.run.plan import job_folder
+
+    returned = run / job_folder(plan.jobs[0].label) / RETURNED
+    name = (recorded_engine(returned) or "").partition(" ")[0]
+    if not settings.engine or name not in ENGINES:
+        return
+    try:
+        Engine(name, settings.engine).calculator()
+    except InputError as error:
+        raise InputError(error.what, settings.source, error.remedy) from None
 
 
 def keep(path: Path, folder: Path) -> None:

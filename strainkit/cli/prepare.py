@@ -199,7 +199,7 @@ def _extend(
 ) -> None:
     from dataclasses import replace
 
-    from strainkit.cli.known import moved
+    from strainkit.cli.known import check_engine, moved
     from strainkit.design.extend import at_magnitudes, more_jobs
     from strainkit.prepare.extend import at_finer_settings, extend_plan, write_extension
     from strainkit.prepare.settings import read_settings
@@ -209,7 +209,9 @@ def _extend(
     old = load_plan(run)
     taught = moved(run)
     if finer is not None:
-        plan = at_finer_settings(old, read_settings([finer]), taught)
+        settings = read_settings([finer])
+        check_engine(run, old, settings)
+        plan = at_finer_settings(old, settings, taught)
     elif more is None:
         plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry), taught)
     else:

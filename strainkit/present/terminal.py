@@ -14,9 +14,9 @@ from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.cost import JobCost
 from strainkit.fit.finer import FinerChange
 from strainkit.fit.result import Fit
-from strainkit.present.calculation import calculation_lines
+from strainkit.present.calculation import calculation_lines, finer_lines
 from strainkit.present.numbers import plain, uncertain
-from strainkit.present.text import columns, findings_text, heading, paragraph
+from strainkit.present.text import columns, counted, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
 from strainkit.tensors.rotations import rotate_matrix
 from strainkit.tensors.sixvectors import (
@@ -101,16 +101,25 @@ def plan_text(plan: Plan, out: Path | None = None, costs: Sequence[JobCost] = ()
         columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS), *(["class", "k"] if known else [])]),
         *_kpoints(plan, costs),
         *_beyond(plan),
-        f"  starting cells: {_MOVES[plan.atoms]}",
+        paragraph(f"starting cells: {_moves(plan)}", "  "),
         "  Green-Lagrange strain, engineering shear, in the frame of the input cell",
         _promise(plan),
         f"  spare degrees of freedom {plan.expectation.spare}; cost by lost symmetry about "
         f"{plan.expectation.relative_cost:g} reference jobs",
         *calculation_lines(plan.calculation, out),
+        *finer_lines(plan.calculation, plan.finer),
         "",
         findings_text(plan.findings),
     ]
     return "\n".join(lines)
+
+
+def _moves(plan: Plan) -> str:
+    """Where the ions of the jobs start."""
+    known = sum(job.label in plan.starts for job in plan.jobs)
+    others = sum(bool(job.shape) for job in plan.jobs) - known
+    words = [f"{_MOVES[plan.atoms]} in {counted(others, 'job')}" if known else _MOVES[plan.atoms]] if others else []
+    return ", ".join([*words, *([f"ions where they are expected to go in {counted(known, 'job')}"] if known else [])])
 
 
 def _kpoints(plan: Plan, costs: Sequence[JobCost]) -> list[str]:
