@@ -18,12 +18,26 @@ __all__ = ["adopted", "check_engine", "guessed", "keep", "moved", "predicted"]
 
 
 def guessed(path: Path, crystal: Crystal, symprec: float) -> Stiffness:
-    """A typed tensor in the frame of the cell."""
+    """A typed tensor in the frame of the cell.
+
+    Raises
+    ------
+    InputError
+        When it has an eigenvalue that is not positive: it has no moduli to expect errors of.
+    """
+    import numpy as np
+
     from strainkit.crystal.symmetry import find_symmetry
     from strainkit.derive.elastic import from_tensor_file
+    from strainkit.errors import InputError
     from strainkit.tensors.textfile import read_tensor
 
-    return from_tensor_file(read_tensor(path), crystal, find_symmetry(crystal, symprec)).waves
+    guess = from_tensor_file(read_tensor(path), crystal, find_symmetry(crystal, symprec)).waves
+    smallest = float(np.linalg.eigvalsh(guess.mandel)[0])
+    if smallest <= 0:
+        what = f"no stable crystal has this tensor: its smallest eigenvalue, {smallest:.3g} GPa, is not positive"
+        raise InputError(what, path, "Check the constants, the axes and the unit.")
+    return guess
 
 
 def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str, Path]]]:
