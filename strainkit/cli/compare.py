@@ -85,7 +85,7 @@ def _members(places: list[tuple[str, bool]], read_as: str | None, symprec: float
         try:
             members.append(_member(place, read_as, symprec))
         except StrainkitError as error:
-            if not (of_campaign or isinstance(error, NoTensorError)):
+            if not (of_campaign or isinstance(error, NoTensorError | IncompleteError)):
                 raise
             left_out[place] = error.what
     if len(members) < 2:

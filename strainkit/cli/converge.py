@@ -17,6 +17,5 @@ def converge(run: Run, noise: KnownNoise = None, drop: Drop = None, json: Json =
     plan, jobs, records = usable(run, drop)
     found = study(plan, jobs, records, noise)
     deliver(found.to_dict, lambda: convergence_text(plan.crystal.name, found), json)
-    if found.common.determined.all():
-        return
-    raise typer.Exit(4)
+    if not found.common.determined.all():
+        raise typer.Exit(4 if found.common.determined.any() else 5)

@@ -12,7 +12,7 @@ from functools import wraps
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from strainkit.errors import DiskError, StrainkitError
+from strainkit.errors import DiskError, IncompleteError, NoTensorError, StrainkitError
 
 if TYPE_CHECKING:
     from strainkit.design.model import Order
@@ -46,7 +46,9 @@ def _guarded(work: Callable[..., Summary]) -> Callable[..., Summary]:
         except DiskError as error:
             return {"disk": error}
         except StrainkitError as error:
-            return {"problem": f"{error.what}" + (f" ({error.where})" if error.where else ""), "exit": error.exit_code}
+            # what concerns the crystal as a whole is said of it by name already
+            place = "" if isinstance(error, NoTensorError | IncompleteError) or not error.where else f" ({error.where})"
+            return {"problem": error.what + place, "exit": error.exit_code}
         except OSError as error:
             return {"problem": f"{error.strerror} ({error.filename})", "exit": 3}
         except Exception as error:
@@ -156,7 +158,7 @@ def progress_one(queued: dict[str, dict[str, Queued]] | None, run: Path) -> Summ
 def derive_one(options: FitOptions, run: Path) -> Summary:
     """Row of the screening table of a run; one without a tensor has its descriptors."""
     from strainkit.derive.screen import screening_row
-    from strainkit.errors import InputError, NoTensorError
+    from strainkit.errors import InputError
     from strainkit.run.plan import load_plan
 
     plan = load_plan(run)
@@ -172,7 +174,6 @@ def derive_one(options: FitOptions, run: Path) -> Summary:
 def report_one(options: FitOptions, force: bool, again: bool, run: Path) -> Summary:
     """Report of a run; kept when it is younger than plan and table and nothing is out of the ordinary."""
     from strainkit.collect.table import TABLE, load_table
-    from strainkit.errors import NoTensorError
     from strainkit.present.report import REPORT, refuse_foreign, report_run
     from strainkit.run.plan import MANIFEST, load_plan
 

@@ -46,7 +46,7 @@ def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str
 
     from strainkit.collect.adopt import find_strained
     from strainkit.design.extend import adopted_jobs
-    from strainkit.errors import InputError
+    from strainkit.errors import InputError, counted
     from strainkit.prepare.extend import adopt_jobs
 
     found, refused = find_strained(plan.crystal, folder)
@@ -58,7 +58,9 @@ def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str
     longer = adopt_jobs(plan, jobs)
     used = {job.label for job in longer.jobs}
     files = [(job.label, one.path) for job, one in zip(jobs, found, strict=True) if job.label in used]
-    note(f"adopted {len(files)} calculations; {len(longer.jobs) - len(files)} jobs are left to compute", quiet)
+    note(
+        f"adopted {counted(len(files), 'calculation')}; {counted(len(longer.jobs) - len(files), 'job')} left to compute", quiet
+    )
     return longer, files
 
 

@@ -8,7 +8,7 @@ from typing import Annotated, Literal
 import typer
 
 from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver, note, spelt, typed
-from strainkit.errors import UsageError
+from strainkit.errors import UsageError, counted
 
 Aim = Annotated[
     Literal["fewest", "symmetric", "sharpest"],
@@ -218,9 +218,9 @@ def _extend(
         plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry), taught)
     if not dry_run:
         plan = write_extension(run, old, plan, formats)
-        note(f"{run}: {len(plan.jobs) - len(old.jobs)} more job folders", quiet)
+        note(f"{run}: {counted(len(plan.jobs) - len(old.jobs), 'more job folder')}", quiet)
         if learned := len(plan.starts) - len(old.starts):
-            note(f"{learned} of them start from what the ions did in the {len(taught)} jobs collected", quiet)
+            note(f"{learned} of them start from what the ions did in the {counted(len(taught), 'job')} collected", quiet)
         if "scheduler" in plan.calculation:
             note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
     # the list and the script of the first jobs do not hold the new ones

@@ -40,7 +40,7 @@ def report(
     from strainkit.cli.load import fitted
     from strainkit.collect.table import load_table
     from strainkit.crystal.lattice import parse_indices
-    from strainkit.errors import NoTensorError, UsageError
+    from strainkit.errors import NoTensorError, UsageError, counted
     from strainkit.present.report import REPORT, refuse_foreign, report_run, write_figures
     from strainkit.present.reported import report_text
     from strainkit.run.campaign import is_campaign
@@ -74,7 +74,7 @@ def report(
     note(f"wrote {path}", quiet)
     files = [] if figures is None else write_figures(made.figures.values(), figures, figure_format, force)
     if files:
-        note(f"wrote {len(files)} figures into {figures}", quiet)
+        note(f"wrote {counted(len(files), 'figure')} into {figures}", quiet)
     written = {"report": str(path), "bytes": len(made.html.encode()), "figure_files": [str(file) for file in files]}
     deliver(lambda: made.to_dict() | written, lambda: report_text(made, path), json)
     if made.exit_code:

@@ -10,6 +10,7 @@ import numpy as np
 from strainkit.design.exchange import SPARE
 from strainkit.design.jobs import StrainJob
 from strainkit.design.model import LinearModel, Order, build_model
+from strainkit.errors import counted
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.averages import averages_of
@@ -113,7 +114,7 @@ def _expect(
     spare = model.odd_degrees_of_freedom
     findings = []
     if spare < SPARE:
-        text = f"{spare} spare degrees of freedom: "
+        text = f"{counted(spare, 'spare degree')} of freedom: "
         text += "this set cannot estimate its own noise" if spare < 1 else "the noise will be poorly estimated"
         findings.append(finding("few-spare-degrees", "strain set", text))
     named = dict(zip(basis.names, errors, strict=True))

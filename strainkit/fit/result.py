@@ -12,7 +12,7 @@ from strainkit.collect.table import StressTable
 from strainkit.crystal.frames import Frame
 from strainkit.design.jobs import StrainJob
 from strainkit.design.model import Order
-from strainkit.errors import NoTensorError
+from strainkit.errors import IncompleteError, NoTensorError
 from strainkit.findings import Finding, finding
 from strainkit.fit.checks import Checks, examine
 from strainkit.fit.finer import FinerChange, finer_change
@@ -81,11 +81,11 @@ class Fit:
 
         Raises
         ------
-        NoTensorError
+        IncompleteError
             When some constants are undetermined.
         """
         if self.undetermined:
-            raise NoTensorError(f"undetermined constants: {', '.join(self.undetermined)}", self.plan.crystal.name)
+            raise IncompleteError(f"undetermined constants: {', '.join(self.undetermined)}", self.plan.crystal.name)
         r, basis = self.regression, self.plan.basis
         spread = basis.matrices.reshape(len(basis.names), 36)
         covariance = None if r.covariance is None else spread.T @ r.covariance @ spread

@@ -13,6 +13,7 @@ from typing import Any
 
 from strainkit import __version__
 from strainkit.collect.table import TABLE, StressTable
+from strainkit.errors import counted
 from strainkit.present.calculation import settings_text
 from strainkit.present.report_page import Block, Cell, Facts, Paragraph, Row, Section, Table
 from strainkit.present.terminal import molecules_text
@@ -50,7 +51,7 @@ def provenance_section(plan: Plan, table: StressTable, run: Path | None) -> Sect
     ]
     if plan.molecules is not None:
         facts.append(("Molecules", molecules_text(plan.molecules).removeprefix("molecules "), ""))
-    jobs = f"{len(plan.strain_set) - 1} strained jobs and the reference, ions {plan.ions}"
+    jobs = f"{counted(len(plan.strain_set) - 1, 'strained job')} and the reference, ions {plan.ions}"
     facts.append(("Strain set", f"aim {plan.aim}", jobs))
     facts += _outputs(plan, table, run)
     facts += _calculation(plan.calculation)

@@ -10,7 +10,7 @@ from collections.abc import Iterable, Sequence
 
 from strainkit.findings import Finding
 
-__all__ = ["WIDTH", "columns", "counted", "findings_text", "heading", "paragraph", "printable"]
+__all__ = ["WIDTH", "columns", "findings_text", "heading", "paragraph", "printable"]
 
 #: columns of a line
 WIDTH = 80
@@ -31,11 +31,6 @@ def heading(text: str) -> str:
 def paragraph(text: str, indent: str = "") -> str:
     """Text wrapped to the width of a terminal, continuation lines indented by four more."""
     return textwrap.fill(text, WIDTH, initial_indent=indent, subsequent_indent=indent + "    ", break_on_hyphens=False)
-
-
-def counted(count: int, thing: str) -> str:
-    """A number of things: 1 job, 2 jobs."""
-    return f"{count} {thing}{'' if count == 1 else 's'}"
 
 
 def columns(rows: Iterable[Sequence[str]], header: Sequence[str] = (), left: int = 1) -> str:

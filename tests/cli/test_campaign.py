@@ -335,6 +335,10 @@ def test_a_crystal_without_a_tensor_stays_in_the_table(cli, out):
     fitted = cli("fit", out, "--json")
     assert fitted.code == 4
     assert fitted.json["fitted"] == 3
+    again = cli("fit", out)
+    assert again.err.startswith("0 crystals fitted, 3 unchanged")
+    assert f"({member.name})" not in again.out  # its name stands before the reason already
+    assert f"{member.name}: none of the" in " ".join(again.out.split())
     result = cli("derive", out, "--json")
     assert result.code == 4
     first, second = result.json["rows"][:2]

@@ -6,6 +6,7 @@ import json
 
 import pytest
 from support.files import DRY_ICE, SILICON, write
+from support.runs import returned_run
 
 
 @pytest.fixture
@@ -229,3 +230,25 @@ def test_json_never_holds_nan(cli, run):
     assert "NaN" not in result.out
     assert result.json["residual_stress_GPa"] == [None] * 6
     assert "reference-stress-unknown" in [f["code"] for f in result.json["findings"]]
+
+
+def test_one_exit_code_for_one_state(cli, tmp_path):
+    """Invented stresses of an orthorhombic crystal: some constants undetermined is 4, none determined is 5, everywhere."""
+    run = tmp_path / "run"
+    returned_run(run, "mmm", keep=lambda label: label.startswith(("reference", "s1")))
+    codes = {command: cli(command, run).code for command in ("collect", "fit", "converge", "derive", "report")}
+    assert codes == dict.fromkeys(codes, 4)
+    returned_run(tmp_path / "other", "m-3m", keep=lambda label: label in ("reference", "s1-plus-1"))
+    codes = {command: cli(command, tmp_path / "other").code for command in ("fit", "converge", "derive", "report")}
+    assert codes == dict.fromkeys(codes, 5)
+
+
+def test_things_are_counted_in_words(cli, cell, tmp_path):
+    made = cli("prepare", cell, "--campaign", "--out", tmp_path / "one")
+    assert made.out.startswith("Campaign of 1 crystal in")
+    found = cli("collect", tmp_path / "one")
+    assert "of 1 crystal usable" in found.out
+    assert "1 crystal to look at" in found.out
+    plan = cli("prepare", cell, "--dry-run").out
+    assert not any(line.endswith(" k") for line in plan.splitlines())  # no k-points, no column for them
+    assert any(line.endswith(" k") for line in cli("prepare", cell, "--dry-run", "--kspacing", 0.4).out.splitlines())
