@@ -76,8 +76,6 @@ def derive(
             )
         derive_campaign(run, fit_options(order, noise, drop, frame, reference_stress), workers, json, quiet)
         return
-    planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
-    directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
     if (run is None) == (tensor is None):
         raise UsageError("one tensor is needed", "derive", "Give either a run folder or a file with --tensor.")
     if tensor is not None:
@@ -91,6 +89,8 @@ def derive(
         found = fitted(run, order, noise, drop, "ieee", reference_stress, force_constants)
         elastic = from_fit(found, frame, indices == "given")
         blind = BLIND_SPOT
+    planes = [parse_indices(text, "--plane", True, elastic.axes) for text in plane or []]
+    directions = [parse_indices(text, "--direction", False, elastic.axes) for text in direction or []]
     study = None
     if force_constants is not None:
         from strainkit.dynamics.phonons import load_phonopy

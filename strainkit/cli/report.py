@@ -39,7 +39,7 @@ def report(
     """One self-contained HTML file a crystal: verdict, tensor, figures, moduli, provenance (report.html)."""
     from strainkit.cli.load import fitted
     from strainkit.collect.table import load_table
-    from strainkit.crystal.lattice import parse_indices
+    from strainkit.crystal.lattice import index_axes, parse_indices
     from strainkit.errors import NoTensorError, UsageError, counted
     from strainkit.present.report import REPORT, refuse_foreign, report_run, write_figures
     from strainkit.present.reported import report_text
@@ -54,8 +54,10 @@ def report(
             raise UsageError("of a campaign every crystal gets the standard report", "report", "Name one of its run folders.")
         report_campaign(run, fit_options(order, noise, drop, frame, reference_stress), force, again, workers, json, quiet)
         return
-    planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
-    directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
+    plan = load_plan(run)
+    axes = index_axes(plan.symmetry, indices == "given")
+    planes = [parse_indices(text, "--plane", True, axes) for text in plane or []]
+    directions = [parse_indices(text, "--direction", False, axes) for text in direction or []]
     path = out or run / REPORT
     refuse_foreign(path, force)
     fit, why = None, ""
@@ -63,7 +65,6 @@ def report(
         fit = fitted(run, order, noise, drop, frame, reference_stress, force_constants)
     except NoTensorError as error:
         why = error.what
-    plan = load_plan(run) if fit is None else fit.plan
     study = None
     if force_constants is not None:
         from strainkit.dynamics.phonons import load_phonopy
