@@ -9,12 +9,13 @@ from typing import TYPE_CHECKING, Any
 
 import typer
 
-from strainkit.cli.each import FitOptions, collect_one, derive_one, fit_one, progress_one, report_one
+from strainkit.cli.each import collect_one, derive_one, fit_one, progress_one, report_one
 from strainkit.cli.loop import loop
 from strainkit.cli.options import deliver, note, progress
 from strainkit.errors import counted
 
 if TYPE_CHECKING:
+    from strainkit.fit.options import FitOptions
     from strainkit.run.campaign import Campaign
 
 __all__ = ["collect_campaign", "derive_campaign", "fit_campaign", "progress_campaign", "report_campaign"]
@@ -194,7 +195,7 @@ def _queued(folder: Path, record: dict[str, Any]) -> dict[str, dict[str, Any]]:
     return found
 
 
-def derive_campaign(folder: Path, options: FitOptions, workers: int | None, json: bool, quiet: bool) -> None:
+def derive_campaign(folder: Path, options: dict[str, Any], workers: int | None, json: bool, quiet: bool) -> None:
     """The screening table: screening.csv and screening.jsonl in the campaign folder."""
     from strainkit.derive.screen import COLUMNS
     from strainkit.present.campaign import screening_files, tally_text
@@ -221,12 +222,19 @@ def derive_campaign(folder: Path, options: FitOptions, workers: int | None, json
 
 
 def report_campaign(
-    folder: Path, options: FitOptions, force: bool, again: bool, workers: int | None, json: bool, quiet: bool
+    folder: Path,
+    options: dict[str, Any],
+    frame: str,
+    force: bool,
+    again: bool,
+    workers: int | None,
+    json: bool,
+    quiet: bool,
 ) -> None:
     """A report in every run folder."""
     from strainkit.present.campaign import tally_text
 
-    campaign, found = loop(folder, "report", partial(report_one, options, force, again), workers, quiet)
+    campaign, found = loop(folder, "report", partial(report_one, options, frame, force, again), workers, quiet)
     problems = _problems(found)
     written = _anew(found)
     deliver(

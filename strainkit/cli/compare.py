@@ -106,7 +106,7 @@ def _places(text: str) -> list[str]:
 
 def _member(text: str, read_as: str | None, symprec: float) -> Member:
     """A run folder, a tensor file, or FILE:CELL."""
-    from strainkit.cli.load import fitted_as_saved
+    from strainkit.cli.load import fitted
     from strainkit.collect.table import load_table
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import find_symmetry
@@ -120,4 +120,4 @@ def _member(text: str, read_as: str | None, symprec: float) -> Member:
     if separator and not path.exists() and Path(file).is_file():
         crystal = read_crystal(Path(cell), read_as)
         return member_of_file(read_tensor(file), crystal, find_symmetry(crystal, symprec))
-    return member_of_fit(fitted_as_saved(path), load_table(path), path)
+    return member_of_fit(fitted(path, {}), load_table(path), path)

@@ -110,10 +110,11 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
     moduli = fit.effective
     asymmetry = _asymmetry(fit.answer, stress)
     ions = f"ions {plan.ions}" if fit.relaxed is None else "clamped ions and their answer to strain"
+    without = f", without {', '.join(fit.dropped)}" if fit.dropped else ""
     removed = ", reference stress removed as an offset" if fit.reading == "offset" else ""
     return ElasticCrystal(
         name=plan.crystal.name,
-        origin=f"fit of {counted(len(fit.jobs_used), 'job')}, {ions}, order {fit.order}{removed}",
+        origin=f"fit of {counted(len(fit.jobs_used), 'job')}, {ions}, order {fit.order}{removed}{without}",
         moduli=moduli,
         waves=fit.answer,
         stress=stress,

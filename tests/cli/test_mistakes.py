@@ -252,3 +252,38 @@ def test_things_are_counted_in_words(cli, cell, tmp_path):
     plan = cli("prepare", cell, "--dry-run").out
     assert not any(line.endswith(" k") for line in plan.splitlines())  # no k-points, no column for them
     assert any(line.endswith(" k") for line in cli("prepare", cell, "--dry-run", "--kspacing", 0.4).out.splitlines())
+
+
+def test_what_comes_after_the_fit_follows_it(cli, tmp_path):
+    """Invented stresses at two magnitudes: order, noise, dropped jobs of the last fit hold unless an option says otherwise."""
+    run = tmp_path / "run"
+    returned_run(run, "m-3m", magnitudes=(0.01, 0.005))
+
+    def seen():
+        data = cli("derive", run, "--json").json
+        cli("report", run)
+        page = (run / "report.html").read_text()
+        dropped = "without s1-plus-0.5" in data["origin"]
+        return "order cubic" in data["origin"], dropped, "order cubic" in page
+
+    assert seen() == (False, False, False)
+    plain = cli("derive", run, "--json").json["stress_strain_GPa"]
+    assert cli("fit", run, "--order", "cubic", "--noise", 0.02, "--drop", "s1-plus-0.5").code == 0
+    assert seen() == (True, True, True)
+    cubic = cli("derive", run, "--json").json
+    assert cubic["stress_strain_GPa"] != plain
+    other = cli("derive", run, "--order", "linear", "--json").json
+    assert "order linear" in other["origin"]
+    assert "without s1-plus-0.5" in other["origin"]
+    whole = cli("converge", run, "--drop", "s1-minus-1", "--json").json
+    assert cli("converge", run, "--json").json["common"] != whole["common"]
+    assert "s1-plus-0.5" not in cli("derive", run, "--drop", "s1-minus-1", "--json").json["origin"]
+    assert cli("fit", run).code == 0  # a fit begins anew
+    assert seen() == (False, False, False)
+    assert cli("derive", run, "--json").json["stress_strain_GPa"] == plain
+    (run / "stiffness.json").write_text("{")
+    for command in ("derive", "report", "converge"):
+        result = cli(command, run)
+        assert result.code == 3
+        assert "stiffness.json" in result.err
+    assert cli("fit", run).code == 0
