@@ -214,7 +214,7 @@ def _judge(found: Convergence, best: float | None) -> list[Finding]:
         text = "the effect of the strain magnitude cannot be seen"
         half = 50 * found.magnitudes[0]
         findings.append(
-            finding("one-magnitude", f"{sizes} %", f"{text}; add another: prepare --extend RUN --magnitude {half:g}")
+            finding("one-magnitude", f"{sizes} %", f"{text}; add another: strainkit prepare --extend RUN --magnitude {half:g}")
         )
         return findings
     if found.p_value is None or found.shift is None:

@@ -82,6 +82,8 @@ def at_finer_settings(plan: Plan, settings: Settings, displacements: Mapping[str
         )
     if not settings.deck and not settings.engine:
         raise InputError("neither [deck] nor [engine] settings", settings.source, "Say what is finer: cutoff, kmesh, grid.")
+    if settings.pseudopotentials or settings.folder:
+        raise InputError("finer jobs keep the pseudopotentials of the run", settings.source, "Leave [pseudopotentials] out.")
     finer: dict[str, Any] = {"engine": settings.engine}
     if settings.deck:
         record = dict(plan.calculation)

@@ -58,7 +58,7 @@ def test_a_set_made_by_hand_needs_nothing_more(cli, cell, tmp_path):
     run = tmp_path / "run"
     made = cli("prepare", path, "--out", run, "--adopt", old)
     assert made.code == 0, made.err
-    assert "adopted 25 calculations; 0 jobs are left" in made.err
+    assert "adopted 25 calculations; 0 jobs left" in made.err
     assert (old / "case0" / "returned.extxyz").is_file()
     assert cli("collect", run).code == 0
     fit = cli("fit", run, "--frame", "given", "--json").json
