@@ -135,9 +135,15 @@ class _Tries:
 
 
 def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
-    """Are the changed stresses more than noise, before and after? Making a stress of noise smaller always helps."""
-    second = np.einsum("jab,jb->ja", group.to_second, found.cauchy)
-    typical = float(typical_change(second, group.rest))
+    """Are the changed stresses more than noise, before and after, and is less left in GPa too?
+
+    Making a stress of noise smaller always helps, and beside a stress made larger every misfit is small.
+    """
+    before, typical = (
+        float(typical_change(np.einsum("jab,jb->ja", group.to_second, a.cauchy), group.rest)) for a in (start, found)
+    )
+    if found.misfit * typical > PART * start.misfit * before:
+        return False
     size = len(group.jobs) ** 0.5
     places = [place for place, _ in found.steps if place is not None]
     slight = any(np.linalg.norm(group.cauchy[place]) < SLIGHT * typical for place in places)

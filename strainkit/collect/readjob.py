@@ -23,8 +23,8 @@ __all__ = ["Output", "read_outputs", "record_of"]
 
 #: ions that had to stay moved farther than this (A)
 _MOVED = 5e-3
-#: two finished outputs of one job differ when their stresses do by more than this part of the larger, and this many GPa
-_DISAGREE, _DISAGREE_GPA = 0.05, 0.02
+#: two finished outputs of one job differ when their stresses do by more than this part of the larger one, and this many GPa
+_DISAGREE, _DISAGREE_GPA = 0.002, 0.005
 
 
 @dataclass(frozen=True)
