@@ -147,7 +147,7 @@ def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
 
 
 def _differs(one: Attempt, other: Attempt) -> bool:
-    return not np.allclose(one.cauchy, other.cauchy, rtol=1e-6, atol=1e-9)
+    return bool((np.abs(one.cauchy - other.cauchy) > 1e-9 + 1e-6 * np.abs(other.cauchy)).any())
 
 
 def _distinct(tried: Iterable[Attempt], most: int) -> list[Attempt]:

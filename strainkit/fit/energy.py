@@ -132,7 +132,7 @@ def check_energies(
     errors = np.full(len(at), np.nan)
     if regression.covariance is not None:
         errors = np.sqrt(np.maximum(((a @ regression.covariance) * a).sum(axis=1), 0.0))
-    answer = apart @ np.tensordot(regression.values, matrices, axes=1)
+    answer = apart @ np.einsum("n,nij->ij", regression.values, matrices)
     slopes = scale * (up - down) / (2 * t) - even * t**2 / 3 - t * (answer * unit).sum(axis=1)
     bends = scale * (up + down - 2 * rest) / t**2 - cubic * t**2 / 2
     bends -= (answer * apart).sum(axis=1) + 2.0 / t * (apart @ known(regression.reference_stress))

@@ -167,7 +167,7 @@ class Fit:
         r, basis = self.regression, self.plan.basis
         turned = rotate_matrix(frame.rotation, basis.matrices)
         unknown = (np.abs(turned[~r.determined]) > 1e-7).any(axis=0)
-        mandel = np.tensordot(known(r.values), turned, axes=1)
+        mandel = np.einsum("n,nij->ij", known(r.values), turned)
         variance = np.full((6, 6), np.nan)
         if r.covariance is not None:
             flat = turned.reshape(len(turned), 36)
