@@ -130,7 +130,7 @@ def prepare(
         raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
     if out is None and not dry_run:
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
-    _refuse_idle(typed(context), target_error, ions, force_constants)
+    _refuse_idle(typed(context), ions)
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
     with_displaced = displaced and ions == "clamped"
     if campaign or not is_one_cell(cell):
@@ -176,15 +176,17 @@ def prepare(
     deliver(lambda: with_costs(plan.to_dict(), costs), lambda: plan_text(plan, out, costs), json)
 
 
-def _refuse_idle(given: list[str], target_error: float | None, ions: str, force_constants: Path | None) -> None:
+def _refuse_idle(given: list[str], ions: str) -> None:
     """Refuse options that would change nothing beside the others."""
+    bound = "target_error" in given and "magnitude" not in given
     for name, idle, why in (
-        ("ceiling", target_error is None, "it bounds what --target-error chooses"),
+        ("ceiling", not bound, "it bounds the magnitude that --target-error chooses where --magnitude does not"),
         ("displaced", ions == "relaxed", "displaced cells are for --ions clamped"),
-        ("atoms", force_constants is not None, "with --force-constants jobs start where these move the ions"),
+        ("atoms", "force_constants" in given, "with --force-constants jobs start where these move the ions"),
+        ("target_error", "adopt" in given, "with --adopt only what the calculations there leave undetermined is planned"),
     ):
         if idle and name in given:
-            raise UsageError(f"this would change nothing: {why}", f"--{name}", "Leave it out, or give what it goes with.")
+            raise UsageError(f"this would change nothing: {why}", spelt(name), "Leave it out, or give what it goes with.")
 
 
 def _extend(

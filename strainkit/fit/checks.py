@@ -9,11 +9,11 @@ from typing import Any
 
 import numpy as np
 
-from strainkit.design.jobs import StrainJob
+from strainkit.design.jobs import StrainJob, magnitudes_of
 from strainkit.design.model import Order
 from strainkit.findings import Finding, finding
 from strainkit.fit.energy import EnergyCheck, check_energies
-from strainkit.fit.magnitude import LEVEL, magnitudes_of
+from strainkit.fit.magnitude import LEVEL
 from strainkit.fit.nonlinearity import Response, Verdict, extra_terms_test, responses
 from strainkit.fit.outliers import MATTERS, find_outliers
 from strainkit.fit.regression import Layout, Regression, solve

@@ -7,10 +7,9 @@ from collections.abc import Sequence
 import numpy as np
 
 from strainkit.design.extend import lost_constants, restoring_jobs
-from strainkit.design.jobs import StrainJob
+from strainkit.design.jobs import StrainJob, magnitudes_of
 from strainkit.design.model import Order
 from strainkit.findings import Finding, finding
-from strainkit.fit.magnitude import magnitudes_of
 from strainkit.fit.regression import Regression
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import known

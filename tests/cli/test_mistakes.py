@@ -238,6 +238,8 @@ def test_one_exit_code_for_one_state(cli, tmp_path):
     returned_run(run, "mmm", keep=lambda label: label.startswith(("reference", "s1")))
     codes = {command: cli(command, run).code for command in ("collect", "fit", "converge", "derive", "report")}
     assert codes == dict.fromkeys(codes, 4)
+    lost = next(f for f in cli("converge", run, "--json").json["findings"] if f["code"] == "undetermined-constants")
+    assert "with s" in lost["message"]
     returned_run(tmp_path / "other", "m-3m", keep=lambda label: label in ("reference", "s1-plus-1"))
     codes = {command: cli(command, tmp_path / "other").code for command in ("fit", "converge", "derive", "report")}
     assert codes == dict.fromkeys(codes, 5)

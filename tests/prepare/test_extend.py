@@ -77,6 +77,8 @@ def test_contradictions_are_usage_errors(cli, run, tmp_path, arguments):
         (["--extend", "RUN", "--more", 2, "--symprec", 0.01, "--noise", 0.1], "--symprec, --noise"),
         (["CELL", "--dry-run", "--no-displaced"], "--displaced"),
         (["CELL", "--dry-run", "--ceiling", 4], "--ceiling"),
+        (["CELL", "--dry-run", "--ceiling", 4, "--target-error", 1, "--magnitude", 1], "--ceiling"),
+        (["CELL", "--dry-run", "--adopt", "RUN", "--target-error", 1], "--target-error"),
         (["CELL", "--campaign", "--dry-run", "--kspacing", 0.3], "--kspacing"),
         (["CELL", "--dry-run", "--atoms", "affine", "--force-constants", "phonopy.yaml"], "--atoms"),
     ],
