@@ -162,8 +162,10 @@ def _identical(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[t
         if record.file_sha256 and record.file.startswith("jobs/"):
             groups["the same file, byte for byte", record.file_sha256].append((job, record.label))
         printed = _printed(record)
-        if len(set(np.abs(printed[np.abs(printed) > 1e-6]).tolist())) > 1:  # one number alone may repeat by chance
-            groups["the same stress to the last digit", *printed.tolist()].append((job, record.label))
+        distinct = len(set(np.abs(printed[np.abs(printed) > 1e-6]).tolist()))
+        if distinct:  # one number, a pressure, may repeat by chance, but not together with the energy
+            energy = None if distinct > 1 or record.energy is None else round(record.energy, 7)
+            groups["the same stress to the last digit", energy, *printed.tolist()].append((job, record.label))
     found = []
     seen: set[tuple[str, ...]] = set()
     for (what, *_), members in groups.items():
