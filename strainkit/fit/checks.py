@@ -167,7 +167,7 @@ def _curvature(
     moved = f"{name} by {shift[worst]:.3g} GPa ({100 * part[worst]:.2g} %)"
     text = f"cubic response (p = {p:.2g}) of {shapes or 'the set'} moves {moved}"
     if beyond:
-        text += ": more than cubic terms can be trusted to correct; use smaller strains"
+        text += ": more than cubic terms can be trusted to correct; use smaller strains, or find the job that is wrong"
         return p, "curved beyond what this set can correct", [finding("curved", "strain set", text)]
     if order == "linear":
         code = "magnitude-matters" if part[worst] > 0.01 else "cubic-response"
