@@ -148,8 +148,7 @@ def _curvature(
 ) -> tuple[float | None, str, list[Finding]]:
     """p-value of the cubic terms, the verdict, and what to say."""
     if linear is None or cubic is None:
-        text = "cubic terms leave constants undetermined"
-        return None, "curved beyond what this set can correct", [finding("curved", "strain set", text)]
+        return None, "cannot be told from these jobs", []
     _, p = extra_terms_test(linear, cubic)
     if p is None or p >= LEVEL:
         return p, "linear within noise", []

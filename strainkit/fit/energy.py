@@ -196,8 +196,8 @@ def _verdict(pairs: list[PairCheck], energy_stress: FloatArray | None) -> Energy
     tilted = [p for p in pairs if slope_off(p) > max(PART * 0.01 * abs(p.curvature_stress), 0.02)]
     findings = []
     causes = (
-        "a basis-set (Pulay) stress, ions not fully relaxed, a term missing from the stress (dispersion, +U), or a job of the pair "
-        "(or the reference) in another minimum"
+        "a basis-set (Pulay) stress, ions not fully relaxed, a term missing from the stress (dispersion, +U), or a job of the "
+        "pair or the reference in another minimum"
     )
     if bent:
         p = max(bent, key=off)
