@@ -163,7 +163,8 @@ def judge(
     mine = [f for f in new if touches(f, injected, work)]
     elsewhere = {x for i in others for x in i.labels} - (set() if injected.whole else set(injected.labels))
     foreign = frozenset[str]().union(*(i.codes for i in others)) - injected.codes
-    mine = [f for f in mine if not (f[2] in elsewhere and (f[0] in foreign or not injected.whole))]
+    mine = [f for f in mine if not (f[2] in elsewhere and not injected.whole)]
+    mine = [f for f in mine if not (f[0] in foreign and (f[2] in elsewhere or f[2] not in injected.labels))]
     said = tuple(sorted(f"{f[0]} ({f[2]}): {f[3]}" for f in (mine or new)))
     if seen.trouble:  # a table that is refused with its line, column and reason
         refused = "is not a number" in seen.trouble
