@@ -10,7 +10,21 @@ StrainkitError            exit 1   the root; raised itself only for the unexpect
 
 from __future__ import annotations
 
-__all__ = ["DiskError", "IncompleteError", "InputError", "NoTensorError", "StrainkitError", "UsageError", "printable"]
+__all__ = [
+    "DiskError",
+    "IncompleteError",
+    "InputError",
+    "NoTensorError",
+    "StrainkitError",
+    "UsageError",
+    "counted",
+    "printable",
+]
+
+
+def counted(count: int, thing: str) -> str:
+    """A number of things: 1 job, 2 jobs."""
+    return f"{count} {thing}{'' if count == 1 else 's'}"
 
 
 def printable(text: str) -> str:

@@ -58,6 +58,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "ions-moved": ("error", "ions that had to stay where they were have moved"),
     "output-of-other-job": ("error", "a job's folder holds an output with the cell of another job"),
     "unmatched-output": ("warning", "an output in a folder of no job cannot be given to one"),
+    "unit-assumed": ("info", "a typed table does not name the unit of its stresses: taken to be GPa"),
     "matched-by-cell": ("info", "an output lay in another folder and was given to the job whose cell it has"),
     "outputs-disagree": ("warning", "two finished outputs of one job differ"),
     "link-not-followed": ("warning", "a symbolic link in a job folder is not followed"),
@@ -106,6 +107,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "stability-uncertain": ("warning", "the error bars leave more than 1 % probability that the crystal is unstable"),
     "tensor-breaks-symmetry": ("warning", "the symmetry of the cell changes the tensor that was typed"),
     # the comparison
+    "not-compared": ("error", "a crystal without a tensor is left out of the comparison"),
     "temperatures-differ": ("warning", "values of different temperatures, or static and measured ones, are compared"),
     "clamped-compared": ("warning", "constants of clamped ions, without the answer of the ions, are compared"),
     "methods-differ": ("info", "runs of different programs or settings are compared"),

@@ -9,11 +9,13 @@ from typing import TYPE_CHECKING, Any
 
 import typer
 
-from strainkit.cli.each import FitOptions, collect_one, derive_one, fit_one, progress_one, report_one
+from strainkit.cli.each import collect_one, derive_one, fit_one, progress_one, report_one
 from strainkit.cli.loop import loop
 from strainkit.cli.options import deliver, note, progress
+from strainkit.errors import counted
 
 if TYPE_CHECKING:
+    from strainkit.fit.options import FitOptions
     from strainkit.run.campaign import Campaign
 
 __all__ = ["collect_campaign", "derive_campaign", "fit_campaign", "progress_campaign", "report_campaign"]
@@ -37,6 +39,17 @@ def _sum(found: dict[str, dict[str, Any]], key: str) -> Counter[str]:
     return total
 
 
+def _anew(found: dict[str, dict[str, Any]]) -> int:
+    """Crystals on which the work was done now, and with a result."""
+    return sum(summary.get("kept") is False for summary in found.values())
+
+
+def _end(problems: dict[str, str], results: int) -> None:
+    """Exit code 4 where some crystals have no full result, 5 where none has any."""
+    if problems:
+        raise typer.Exit(4 if results else 5)
+
+
 def _kept(found: dict[str, dict[str, Any]]) -> int:
     return sum(bool(summary.get("kept")) for summary in found.values())
 
@@ -54,7 +67,7 @@ def collect_campaign(folder: Path, export: Path | None, again: bool, workers: in
         if name not in problems and summary["usable"] < summary["expected"]:
             bad = ", ".join(f"{n} {s}" for s, n in summary["statuses"].items() if s != "done")
             problems[name] = f"{summary['usable']} of {summary['expected']} jobs usable ({bad})"
-    note(f"{len(found) - _kept(found)} crystals read, {_kept(found)} unchanged since they were read last", quiet)
+    note(f"{counted(_anew(found), 'crystal')} read, {_kept(found)} unchanged since they were read last", quiet)
     if export is not None:
         _export([folder / m.run for m in campaign.members if "usable" in found[m.name]], export, quiet)
     deliver(
@@ -67,7 +80,7 @@ def collect_campaign(folder: Path, export: Path | None, again: bool, workers: in
             "crystals": _crystals(campaign, found),
         },
         lambda: tally_text(
-            f"{usable} of {campaign.jobs} jobs of {len(found)} crystals usable",
+            f"{usable} of {campaign.jobs} jobs of {counted(len(found), 'crystal')} usable",
             {status: (statuses[status], meaning) for status, meaning in STATUSES.items() if statuses[status]},
             problems,
         ),
@@ -83,7 +96,7 @@ def _export(runs: list[Path], export: Path, quiet: bool) -> None:
     with progress("export", quiet) as report:
         done = iter(range(1, len(runs) + 1))
         count = export_structures(runs, export, lambda run: report(next(done), len(runs), run.name))
-    note(f"wrote {count} structures to {export}", quiet)
+    note(f"wrote {counted(count, 'structure')} to {export}", quiet)
 
 
 def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | None, json: bool, quiet: bool) -> None:
@@ -99,7 +112,7 @@ def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | 
         if summary.get("undetermined")
     }
     codes = Counter(code for summary in found.values() for code in summary.get("findings", ()))
-    note(f"{len(found) - _kept(found)} crystals fitted, {_kept(found)} unchanged since they were fitted last", quiet)
+    note(f"{counted(_anew(found), 'crystal')} fitted, {_kept(found)} unchanged since they were fitted last", quiet)
     deliver(
         lambda: {
             "schema": "strainkit/campaign-fit/1",
@@ -117,10 +130,7 @@ def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | 
         ),
         json,
     )
-    if not fitted and problems:
-        raise typer.Exit(5)
-    if problems:
-        raise typer.Exit(4)
+    _end(problems, fitted)
 
 
 def progress_campaign(folder: Path, queue: bool, resubmit: bool, workers: int | None, json: bool, quiet: bool) -> None:
@@ -157,7 +167,7 @@ def progress_campaign(folder: Path, queue: bool, resubmit: bool, workers: int | 
         lambda: "\n".join(
             [
                 tally_text(
-                    f"{usable} of {campaign.jobs} jobs of {len(found)} crystals usable",
+                    f"{usable} of {campaign.jobs} jobs of {counted(len(found), 'crystal')} usable",
                     {state: (states[state], meaning) for state, (meaning, _) in STATES.items() if states[state]},
                     problems,
                     [f"core hours used {sum(used):.3g}"] if used else [],
@@ -185,7 +195,7 @@ def _queued(folder: Path, record: dict[str, Any]) -> dict[str, dict[str, Any]]:
     return found
 
 
-def derive_campaign(folder: Path, options: FitOptions, workers: int | None, json: bool, quiet: bool) -> None:
+def derive_campaign(folder: Path, options: dict[str, Any], workers: int | None, json: bool, quiet: bool) -> None:
     """The screening table: screening.csv and screening.jsonl in the campaign folder."""
     from strainkit.derive.screen import COLUMNS
     from strainkit.present.campaign import screening_files, tally_text
@@ -203,22 +213,30 @@ def derive_campaign(folder: Path, options: FitOptions, workers: int | None, json
     problems = _problems(found)
     deliver(
         lambda: {"schema": "strainkit/screening/1", "columns": list(COLUMNS), "rows": rows},
-        lambda: tally_text(f"Screening table of {len(rows)} crystals, {len(rows) - len(problems)} with moduli", {}, problems),
+        lambda: tally_text(
+            f"Screening table of {counted(len(rows), 'crystal')}, {len(rows) - len(problems)} with moduli", {}, problems
+        ),
         json,
     )
-    if problems:
-        raise typer.Exit(4)
+    _end(problems, len(found) - len(problems))
 
 
 def report_campaign(
-    folder: Path, options: FitOptions, force: bool, again: bool, workers: int | None, json: bool, quiet: bool
+    folder: Path,
+    options: dict[str, Any],
+    frame: str,
+    force: bool,
+    again: bool,
+    workers: int | None,
+    json: bool,
+    quiet: bool,
 ) -> None:
     """A report in every run folder."""
     from strainkit.present.campaign import tally_text
 
-    campaign, found = loop(folder, "report", partial(report_one, options, force, again), workers, quiet)
+    campaign, found = loop(folder, "report", partial(report_one, options, frame, force, again), workers, quiet)
     problems = _problems(found)
-    written = sum(summary.get("kept") is False for summary in found.values())
+    written = _anew(found)
     deliver(
         lambda: {
             "schema": "strainkit/campaign-reports/1",
@@ -226,8 +244,9 @@ def report_campaign(
             "kept": _kept(found),
             "crystals": _crystals(campaign, found),
         },
-        lambda: tally_text(f"{written} reports written, {_kept(found)} unchanged: report.html of each run", {}, problems),
+        lambda: tally_text(
+            f"{counted(written, 'report')} written, {_kept(found)} unchanged: report.html of each run", {}, problems
+        ),
         json,
     )
-    if problems:
-        raise typer.Exit(4)
+    _end(problems, len(found) - len(problems))

@@ -36,7 +36,7 @@ def collect(
     from strainkit.collect.csvtable import Convention, read_csv
     from strainkit.collect.gather import collect_run
     from strainkit.collect.table import TABLE
-    from strainkit.errors import UsageError
+    from strainkit.errors import UsageError, counted
     from strainkit.present.terminal import table_text
     from strainkit.run.campaign import is_campaign
     from strainkit.run.plan import load_plan
@@ -61,7 +61,7 @@ def collect(
     if export is not None:
         from strainkit.present.structures import export_structures
 
-        note(f"wrote {export_structures([run], export)} structures to {export}", quiet)
+        note(f"wrote {counted(export_structures([run], export), 'structure')} to {export}", quiet)
     deliver(found.to_dict, lambda: table_text(found, every=True), json)
     if len(found.usable) < len(found.records):
         raise typer.Exit(4)

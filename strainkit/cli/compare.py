@@ -45,12 +45,13 @@ def compare(
     from strainkit.present.comparison import comparison_text
     from strainkit.present.comparison_csv import save_csv
 
-    places = [place for text in crystals or [] for place in _places(text)]
+    places = [(place, place != text) for text in crystals or [] for place in _places(text)]
     if len(places) < 2:
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
     if len(places) > MOST:
         raise UsageError(f"{len(places)} crystals are too many to set side by side", "compare", f"Choose at most {MOST}.")
-    result = compare_crystals([_member(place, read_as, symprec) for place in places], by, baseline)
+    members, left_out = _members(places, read_as, symprec)
+    result = compare_crystals(members, by, baseline, left_out)
     if csv is not None:
         save_csv(result, csv, force)
         note(f"wrote {csv}", quiet)
@@ -64,6 +65,34 @@ def compare(
     deliver(result.to_dict, lambda: comparison_text(result), json)
     if any(m.moduli is None for m in result.members):
         raise typer.Exit(5)
+    if left_out:
+        raise typer.Exit(4)
+
+
+def _members(places: list[tuple[str, bool]], read_as: str | None, symprec: float) -> tuple[list[Member], dict[str, str]]:
+    """What can be compared, and why the others cannot; a place that was typed must at least be what it should be.
+
+    Raises
+    ------
+    IncompleteError
+        Fewer than two crystals can be compared.
+    """
+    from strainkit.errors import IncompleteError, NoTensorError, StrainkitError
+
+    members: list[Member] = []
+    left_out: dict[str, str] = {}
+    for place, of_campaign in places:
+        try:
+            members.append(_member(place, read_as, symprec))
+        except StrainkitError as error:
+            if not (of_campaign or isinstance(error, NoTensorError | IncompleteError)):
+                raise
+            left_out[place] = error.what
+    if len(members) < 2:
+        why = "; ".join(f"{place}: {reason}" for place, reason in left_out.items())
+        what = f"a comparison needs two crystals, and {len(members)} of {len(places)} have all their constants"
+        raise IncompleteError(what, "compare", why)
+    return members, left_out
 
 
 def _places(text: str) -> list[str]:
@@ -77,7 +106,7 @@ def _places(text: str) -> list[str]:
 
 def _member(text: str, read_as: str | None, symprec: float) -> Member:
     """A run folder, a tensor file, or FILE:CELL."""
-    from strainkit.cli.load import fitted_as_saved
+    from strainkit.cli.load import fitted
     from strainkit.collect.table import load_table
     from strainkit.crystal.read import read_crystal
     from strainkit.crystal.symmetry import find_symmetry
@@ -91,4 +120,4 @@ def _member(text: str, read_as: str | None, symprec: float) -> Member:
     if separator and not path.exists() and Path(file).is_file():
         crystal = read_crystal(Path(cell), read_as)
         return member_of_file(read_tensor(file), crystal, find_symmetry(crystal, symprec))
-    return member_of_fit(fitted_as_saved(path), load_table(path), path)
+    return member_of_fit(fitted(path, {}), load_table(path), path)

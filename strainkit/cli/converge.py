@@ -4,19 +4,18 @@ from __future__ import annotations
 
 import typer
 
-from strainkit.cli.fit import Drop, KnownNoise
+from strainkit.cli.fit import LastDrop, LastNoise
 from strainkit.cli.options import Json, Quiet, Run, deliver
 
 
-def converge(run: Run, noise: KnownNoise = None, drop: Drop = None, json: Json = False, quiet: Quiet = False) -> None:
+def converge(run: Run, noise: LastNoise = None, drop: LastDrop = None, json: Json = False, quiet: Quiet = False) -> None:
     """Is the strain magnitude right: constants per magnitude, extrapolation, best magnitude."""
-    from strainkit.cli.load import usable
+    from strainkit.cli.load import given_options, usable
     from strainkit.fit.magnitude import converge as study
     from strainkit.present.convergence import convergence_text
 
-    plan, jobs, records = usable(run, drop)
-    found = study(plan, jobs, records, noise)
+    plan, jobs, stresses, known = usable(run, given_options(noise=noise, drop=drop))
+    found = study(plan, jobs, stresses, known)
     deliver(found.to_dict, lambda: convergence_text(plan.crystal.name, found), json)
-    if found.common.determined.all():
-        return
-    raise typer.Exit(4)
+    if not found.common.determined.all():
+        raise typer.Exit(4 if found.common.determined.any() else 5)

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 
 import typer
 
-from strainkit.cli.fit import Drop, KnownNoise, Order, Reading
+from strainkit.cli.fit import LastDrop, LastNoise, LastOrder, LastReading
 from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver
 
 if TYPE_CHECKING:
@@ -44,10 +44,10 @@ def derive(
     read_as: ReadAs = None,
     symprec: Symprec = 1e-3,
     indices: Indices = "conventional",
-    order: Order = "linear",
-    noise: KnownNoise = None,
-    drop: Drop = None,
-    reference_stress: Reading = "real",
+    order: LastOrder = None,
+    noise: LastNoise = None,
+    drop: LastDrop = None,
+    reference_stress: LastReading = None,
     force_constants: ForceConstants = None,
     frame: Frame = "ieee",
     workers: Workers = None,
@@ -55,7 +55,7 @@ def derive(
     quiet: Quiet = False,
 ) -> None:
     """What the tensor means: moduli, planes, directions, waves, each with its error."""
-    from strainkit.cli.load import fitted
+    from strainkit.cli.load import fitted, given_options, one_run_drops
     from strainkit.crystal.lattice import parse_indices
     from strainkit.derive.derived import derive_properties
     from strainkit.derive.elastic import from_fit
@@ -64,9 +64,9 @@ def derive(
     from strainkit.present.terminal import BLIND_SPOT
     from strainkit.run.campaign import is_campaign
 
+    options = given_options(order, noise, drop, reference_stress)
     if run is not None and is_campaign(run):
         from strainkit.cli.campaign import derive_campaign
-        from strainkit.cli.load import fit_options
 
         if plane or direction or tensor is not None or force_constants is not None or frame != "ieee":
             raise UsageError(
@@ -74,23 +74,23 @@ def derive(
                 "derive",
                 "Derive one run folder.",
             )
-        derive_campaign(run, fit_options(order, noise, drop, frame, reference_stress), workers, json, quiet)
+        one_run_drops(options)
+        derive_campaign(run, options, workers, json, quiet)
         return
-    planes = [parse_indices(text, "--plane", plane=True) for text in plane or []]
-    directions = [parse_indices(text, "--direction", plane=False) for text in direction or []]
     if (run is None) == (tensor is None):
         raise UsageError("one tensor is needed", "derive", "Give either a run folder or a file with --tensor.")
     if tensor is not None:
-        if order != "linear" or noise is not None or drop or reference_stress != "real":
+        if options:
             raise UsageError("--order, --noise, --drop and --reference-stress are for run folders", "--tensor")
         elastic, blind = _typed(tensor, cell, density, read_as, symprec, frame, indices == "given"), ""
     else:
         assert run is not None
         if cell is not None or density is not None:
             raise UsageError("--cell and --density belong to --tensor: a run folder has its own", "derive")
-        found = fitted(run, order, noise, drop, "ieee", reference_stress, force_constants)
-        elastic = from_fit(found, frame, indices == "given")
+        elastic = from_fit(fitted(run, options, force_constants), frame, indices == "given")
         blind = BLIND_SPOT
+    planes = [parse_indices(text, "--plane", True, elastic.axes) for text in plane or []]
+    directions = [parse_indices(text, "--direction", False, elastic.axes) for text in direction or []]
     study = None
     if force_constants is not None:
         from strainkit.dynamics.phonons import load_phonopy

@@ -7,33 +7,20 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import replace
 from functools import wraps
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from strainkit.errors import DiskError, StrainkitError
+from strainkit.errors import DiskError, IncompleteError, NoTensorError, StrainkitError
 
 if TYPE_CHECKING:
-    from strainkit.design.model import Order
-    from strainkit.fit.residual import ReferenceStress
-    from strainkit.fit.result import Fit
-    from strainkit.run.plan import Plan
+    from strainkit.fit.options import FitOptions
     from strainkit.run.queues import Queued
 
-__all__ = ["FitOptions", "collect_one", "derive_one", "fit_one", "progress_one", "report_one"]
+__all__ = ["collect_one", "derive_one", "fit_one", "progress_one", "report_one"]
 
 Summary = dict[str, Any]
-
-
-@dataclass(frozen=True)
-class FitOptions:
-    """How every crystal is fitted."""
-
-    order: Order = "linear"
-    noise: float | None = None
-    reading: ReferenceStress = "real"
-    frame: str = "ieee"
 
 
 def _guarded(work: Callable[..., Summary]) -> Callable[..., Summary]:
@@ -46,7 +33,9 @@ def _guarded(work: Callable[..., Summary]) -> Callable[..., Summary]:
         except DiskError as error:
             return {"disk": error}
         except StrainkitError as error:
-            return {"problem": f"{error.what}" + (f" ({error.where})" if error.where else ""), "exit": error.exit_code}
+            # what concerns the crystal as a whole is said of it by name already
+            place = "" if isinstance(error, NoTensorError | IncompleteError) or not error.where else f" ({error.where})"
+            return {"problem": error.what + place, "exit": error.exit_code}
         except OSError as error:
             return {"problem": f"{error.strerror} ({error.filename})", "exit": 3}
         except Exception as error:
@@ -81,9 +70,10 @@ def collect_one(again: bool, run: Path) -> Summary:
 def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
     """Stiffness of a run; kept when table, plan and options are those it was made from.
 
-    Jobs that `strainkit fit RUN --drop` left out of the fit that is there stay left out.
+    Jobs that `strainkit fit RUN --drop` left out of the fit that is there stay left out, its force constants stay in.
     """
     from strainkit import __version__
+    from strainkit.fit.options import fit_with, recorded_options
     from strainkit.fit.result import FITTED
     from strainkit.run.files import atomic_write, checksum, dump_json, in_a_hurry
     from strainkit.run.plan import load_plan
@@ -94,7 +84,9 @@ def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
     saved = _saved(run)
     if not again and saved.get(INPUTS) == digest:
         return _fitted(saved) | {"kept": True}
-    result = _fit(load_plan(run), run, options)
+    plan = load_plan(run)
+    own = recorded_options(saved, plan)
+    result = fit_with(plan, run, replace(options, drop=own.drop, force_constants=own.force_constants))
     data = result.to_dict(options.frame) | {INPUTS: digest}
     with in_a_hurry():  # half a file would not be JSON, and is made again
         atomic_write(path, dump_json(data))
@@ -120,16 +112,6 @@ def _saved(run: Path) -> dict[str, Any]:
         return {}
 
 
-def _fit(plan: Plan, run: Path, options: FitOptions) -> Fit:
-    from strainkit.collect.table import load_table
-    from strainkit.fit.result import fit_run
-
-    table = load_table(run, ions=plan.ions == "clamped")
-    labels = {job.label for job in plan.jobs}
-    drop = tuple(label for label in _saved(run).get("jobs_dropped", ()) if label in labels)
-    return fit_run(plan, table, options.order, options.noise, drop, options.reading)
-
-
 def _fitted(data: dict[str, Any]) -> Summary:
     codes = sorted({f["code"] for f in data["findings"] if f["severity"] != "info"})
     return {"undetermined": data["undetermined"], "findings": codes, "jobs_used": len(data["jobs_used"])}
@@ -153,15 +135,16 @@ def progress_one(queued: dict[str, dict[str, Queued]] | None, run: Path) -> Summ
 
 
 @_guarded
-def derive_one(options: FitOptions, run: Path) -> Summary:
-    """Row of the screening table of a run; one without a tensor has its descriptors."""
+def derive_one(options: dict[str, Any], run: Path) -> Summary:
+    """Row of the screening table of a run, fitted as last but for the options; one without a tensor has its descriptors."""
     from strainkit.derive.screen import screening_row
-    from strainkit.errors import InputError, NoTensorError
+    from strainkit.errors import InputError
+    from strainkit.fit.options import fit_with, last_options
     from strainkit.run.plan import load_plan
 
     plan = load_plan(run)
     try:
-        fit = _fit(plan, run, options)
+        fit = fit_with(plan, run, replace(last_options(run, plan), **options))
     except (InputError, NoTensorError) as error:
         return {"row": screening_row(plan, None, error.what), "problem": error.what, "exit": error.exit_code}
     row = screening_row(plan, fit)
@@ -169,22 +152,24 @@ def derive_one(options: FitOptions, run: Path) -> Summary:
 
 
 @_guarded
-def report_one(options: FitOptions, force: bool, again: bool, run: Path) -> Summary:
-    """Report of a run; kept when it is younger than plan and table and nothing is out of the ordinary."""
+def report_one(options: dict[str, Any], frame: str, force: bool, again: bool, run: Path) -> Summary:
+    """Report of a run, fitted as last but for the options; kept when younger than plan, table and fit, and as usual."""
     from strainkit.collect.table import TABLE, load_table
-    from strainkit.errors import NoTensorError
+    from strainkit.fit.options import fit_with, last_options
+    from strainkit.fit.result import FITTED
     from strainkit.present.report import REPORT, refuse_foreign, report_run
     from strainkit.run.plan import MANIFEST, load_plan
 
     path = run / REPORT
-    usual = not again and options == FitOptions() and path.is_file()
-    if usual and path.stat().st_mtime_ns > max((run / name).stat().st_mtime_ns for name in (TABLE, MANIFEST)):
+    usual = not again and not options and frame == "ieee" and path.is_file()
+    sources = [run / TABLE, run / MANIFEST, *([run / FITTED] if (run / FITTED).is_file() else [])]
+    if usual and path.stat().st_mtime_ns > max(source.stat().st_mtime_ns for source in sources):
         return {"kept": True}
     refuse_foreign(path, force)
     plan, fit, why = load_plan(run), None, ""
     try:
-        fit = _fit(plan, run, options)
+        fit = fit_with(plan, run, replace(last_options(run, plan), **options))
     except NoTensorError as error:
         why = error.what
-    report_run(plan, load_table(run), fit, options.frame, run=run, why=why).save(path, force)
+    report_run(plan, load_table(run), fit, frame, run=run, why=why).save(path, force)
     return {"kept": False} | ({"problem": why} if why else {})

@@ -34,7 +34,7 @@ def inspect(
 
     crystal = read_crystal(cell, read_as)
     mesh = None if kspacing is None else kpoint_mesh(crystal, kspacing)
-    rungs, _ = tolerance_ladder(crystal, symprec)
+    _, rungs, _ = tolerance_ladder(crystal, symprec)
     sizes = (magnitude / 100.0,)
     judged = judge_cell(crystal)
     first = plan_run(crystal, Wish(magnitudes=sizes, noise=noise), symprec=symprec, judged=judged)

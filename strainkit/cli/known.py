@@ -9,20 +9,35 @@ from strainkit.cli.options import note
 
 if TYPE_CHECKING:
     from strainkit.crystal.crystal import Crystal
+    from strainkit.prepare.settings import Settings
     from strainkit.run.plan import Plan
     from strainkit.tensors.arrays import FloatArray
     from strainkit.tensors.stiffness import Stiffness
 
-__all__ = ["adopted", "guessed", "keep", "moved", "predicted"]
+__all__ = ["adopted", "check_engine", "guessed", "keep", "moved", "predicted"]
 
 
 def guessed(path: Path, crystal: Crystal, symprec: float) -> Stiffness:
-    """A typed tensor in the frame of the cell."""
+    """A typed tensor in the frame of the cell.
+
+    Raises
+    ------
+    InputError
+        When it has an eigenvalue that is not positive: it has no moduli to expect errors of.
+    """
+    import numpy as np
+
     from strainkit.crystal.symmetry import find_symmetry
     from strainkit.derive.elastic import from_tensor_file
+    from strainkit.errors import InputError
     from strainkit.tensors.textfile import read_tensor
 
-    return from_tensor_file(read_tensor(path), crystal, find_symmetry(crystal, symprec)).waves
+    guess = from_tensor_file(read_tensor(path), crystal, find_symmetry(crystal, symprec)).waves
+    smallest = float(np.linalg.eigvalsh(guess.mandel)[0])
+    if smallest <= 0:
+        what = f"no stable crystal has this tensor: its smallest eigenvalue, {smallest:.3g} GPa, is not positive"
+        raise InputError(what, path, "Check the constants, the axes and the unit.")
+    return guess
 
 
 def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str, Path]]]:
@@ -31,7 +46,7 @@ def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str
 
     from strainkit.collect.adopt import find_strained
     from strainkit.design.extend import adopted_jobs
-    from strainkit.errors import InputError
+    from strainkit.errors import InputError, counted
     from strainkit.prepare.extend import adopt_jobs
 
     found, refused = find_strained(plan.crystal, folder)
@@ -43,8 +58,32 @@ def adopted(plan: Plan, folder: Path, quiet: bool) -> tuple[Plan, list[tuple[str
     longer = adopt_jobs(plan, jobs)
     used = {job.label for job in longer.jobs}
     files = [(job.label, one.path) for job, one in zip(jobs, found, strict=True) if job.label in used]
-    note(f"adopted {len(files)} calculations; {len(longer.jobs) - len(files)} jobs are left to compute", quiet)
+    note(
+        f"adopted {counted(len(files), 'calculation')}; {counted(len(longer.jobs) - len(files), 'job')} left to compute", quiet
+    )
     return longer, files
+
+
+def check_engine(run: Path, plan: Plan, settings: Settings) -> None:
+    """Refuse finer settings that the engine does not know which computed the reference, where it is one of strainkit's own.
+
+    Raises
+    ------
+    InputError
+    """
+    from strainkit.errors import InputError
+    from strainkit.evaluate.engines import ENGINES, Engine
+    from strainkit.run.extxyz import RETURNED, recorded_engine
+    from strainkit.run.plan import job_folder
+
+    returned = run / job_folder(plan.jobs[0].label) / RETURNED
+    name = (recorded_engine(returned) or "").partition(" ")[0]
+    if not settings.engine or name not in ENGINES:
+        return
+    try:
+        Engine(name, settings.engine).calculator()
+    except InputError as error:
+        raise InputError(error.what, settings.source, error.remedy) from None
 
 
 def keep(path: Path, folder: Path) -> None:

@@ -25,6 +25,8 @@ __all__ = [
     "deliver",
     "note",
     "progress",
+    "spelt",
+    "typed",
 ]
 
 Cell = Annotated[Path, typer.Argument(help="Structure file: CIF, POSCAR, extended XYZ, or any ASE format with --read-as.")]
@@ -37,6 +39,17 @@ Again = Annotated[bool, typer.Option("--again", help="For a campaign: do crystal
 Frame = Annotated[str, typer.Option(help="Axes of printed tensors: given, ieee or crystal (x||a, z||c*).")]
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON object to standard output.")]
 Quiet = Annotated[bool, typer.Option("--quiet", help="No notes and no progress bar; results are printed all the same.")]
+
+
+def typed(context: typer.Context) -> list[str]:
+    """Names of the parameters that stand on the command line, in its order."""
+    sources = {name: context.get_parameter_source(name) for name in context.params}
+    return [name for name, source in sources.items() if source is not None and source.name == "COMMANDLINE"]
+
+
+def spelt(name: str) -> str:
+    """A parameter as it is typed: --dry-run; the cells have no option."""
+    return "CELL" if name == "cell" else "--" + name.replace("_", "-")
 
 
 def deliver(data: Callable[[], dict[str, Any]], text: Callable[[], str], as_json: bool) -> None:

@@ -7,7 +7,8 @@ from typing import Annotated, Literal
 
 import typer
 
-from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver, note
+from strainkit.cli.options import Json, Quiet, ReadAs, Symprec, Workers, deliver, note, spelt, typed
+from strainkit.errors import UsageError, counted
 
 Aim = Annotated[
     Literal["fewest", "symmetric", "sharpest"],
@@ -33,7 +34,12 @@ KSpacing = Annotated[float | None, typer.Option(help="k-point spacing, 1/A, 2 pi
 SchedulerName = Annotated[str | None, typer.Option(help="Job script for slurm, pbs, lsf, sge or bash; needs --deck.")]
 
 
+#: what --extend goes with; all else is the run's own
+_WITH_EXTEND = ("extend", "magnitude", "more", "finer", "format", "dry_run", "json", "quiet")
+
+
 def prepare(
+    context: typer.Context,
     cell: Cells = None,
     out: Annotated[Path | None, typer.Option(help="Run folder to make, or campaign folder for several cells.")] = None,
     campaign: Annotated[bool, typer.Option("--campaign", help="Make a campaign also of a single cell.")] = False,
@@ -101,7 +107,6 @@ def prepare(
     from strainkit.crystal.read import read_crystal
     from strainkit.design.cost import job_costs, with_costs
     from strainkit.design.strainset import Wish
-    from strainkit.errors import UsageError
     from strainkit.prepare.cells import is_one_cell
     from strainkit.prepare.runfolder import plan_run, plan_with_files, write_run
     from strainkit.prepare.writers import cell_formats
@@ -111,14 +116,11 @@ def prepare(
     cell_formats(format or [])
     magnitudes = tuple(m / 100.0 for m in magnitude or ())
     if extend is not None:
-        if cell or campaign or out is not None or [more is not None, bool(magnitudes), finer is not None].count(True) != 1:
-            raise UsageError(
-                "--extend goes with one of --magnitude, --more and --finer",
-                "--extend",
-                "It takes neither a CELL nor --out: they are the run's.",
-            )
-        if deck or settings or scheduler or kspacing is not None:
-            raise UsageError("--deck and its options are the run's own", "--extend", "Leave them out.")
+        idle = [spelt(name) for name in typed(context) if name not in _WITH_EXTEND]
+        if idle:
+            raise UsageError(f"{', '.join(idle)} would change nothing: a run keeps its own", "--extend", "Leave that out.")
+        if [more is not None, bool(magnitudes), finer is not None].count(True) != 1:
+            raise UsageError("--extend goes with one of --magnitude, --more and --finer", "--extend", "Give one of them.")
         _extend(extend, magnitudes, more, finer, format, dry_run, json, quiet)
         return
     for option, given in (("--more", more), ("--finer", finer)):
@@ -128,12 +130,15 @@ def prepare(
         raise UsageError("no cell given", "CELL", "Name the structure file, or a run folder with --extend.")
     if out is None and not dry_run:
         raise UsageError("no place to write to", "--out", "Name the run folder with --out RUN, or use --dry-run.")
+    _refuse_idle(typed(context), ions)
     wish = Wish(aim, magnitudes, jobs, target_error, noise, ceiling / 100.0)
     with_displaced = displaced and ions == "clamped"
     if campaign or not is_one_cell(cell):
         for option, given in (("--force-constants", force_constants), ("--adopt", adopt), ("--guess", guess)):
             if given is not None:
                 raise UsageError("this belongs to one crystal", option, "Prepare that crystal alone.")
+        if kspacing is not None and deck is None:
+            raise UsageError("a campaign without an input deck counts no k-points", "--kspacing", "Name one with --deck.")
         from strainkit.cli.prepare_campaign import prepare_campaign
         from strainkit.prepare.campaign import Recipe
         from strainkit.prepare.settings import read_settings
@@ -171,6 +176,19 @@ def prepare(
     deliver(lambda: with_costs(plan.to_dict(), costs), lambda: plan_text(plan, out, costs), json)
 
 
+def _refuse_idle(given: list[str], ions: str) -> None:
+    """Refuse options that would change nothing beside the others."""
+    bound = "target_error" in given and "magnitude" not in given
+    for name, idle, why in (
+        ("ceiling", not bound, "it bounds the magnitude that --target-error chooses where --magnitude does not"),
+        ("displaced", ions == "relaxed", "displaced cells are for --ions clamped"),
+        ("atoms", "force_constants" in given, "with --force-constants jobs start where these move the ions"),
+        ("target_error", "adopt" in given, "with --adopt only what the calculations there leave undetermined is planned"),
+    ):
+        if idle and name in given:
+            raise UsageError(f"this would change nothing: {why}", spelt(name), "Leave it out, or give what it goes with.")
+
+
 def _extend(
     run: Path,
     magnitudes: tuple[float, ...],
@@ -183,7 +201,7 @@ def _extend(
 ) -> None:
     from dataclasses import replace
 
-    from strainkit.cli.known import moved
+    from strainkit.cli.known import check_engine, moved
     from strainkit.design.extend import at_magnitudes, more_jobs
     from strainkit.prepare.extend import at_finer_settings, extend_plan, write_extension
     from strainkit.prepare.settings import read_settings
@@ -193,16 +211,18 @@ def _extend(
     old = load_plan(run)
     taught = moved(run)
     if finer is not None:
-        plan = at_finer_settings(old, read_settings([finer]), taught)
+        settings = read_settings([finer])
+        check_engine(run, old, settings)
+        plan = at_finer_settings(old, settings, taught)
     elif more is None:
         plan = extend_plan(old, at_magnitudes(old.strain_set, magnitudes, old.symmetry), taught)
     else:
         plan = extend_plan(old, more_jobs(old.strain_set, more, old.crystal, old.symmetry), taught)
     if not dry_run:
         plan = write_extension(run, old, plan, formats)
-        note(f"{run}: {len(plan.jobs) - len(old.jobs)} more job folders", quiet)
+        note(f"{run}: {counted(len(plan.jobs) - len(old.jobs), 'more job folder')}", quiet)
         if learned := len(plan.starts) - len(old.starts):
-            note(f"{learned} of them start from what the ions did in the {len(taught)} jobs collected", quiet)
+            note(f"{learned} of them start from what the ions did in the {counted(len(taught), 'job')} collected", quiet)
         if "scheduler" in plan.calculation:
             note(f"for their list and script: strainkit progress {run} --resubmit", quiet)
     # the list and the script of the first jobs do not hold the new ones

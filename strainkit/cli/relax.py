@@ -101,7 +101,7 @@ def relax_here(
 ) -> None:
     """Relax a cell with a local engine and write it."""
     from strainkit.crystal.read import read_crystal
-    from strainkit.errors import InputError, UsageError
+    from strainkit.errors import InputError, UsageError, counted
     from strainkit.evaluate.engines import Engine, parse_settings
     from strainkit.evaluate.reference import relax_reference
     from strainkit.prepare.writers import write_cell
@@ -125,7 +125,7 @@ def relax_here(
         state = "at rest" if found.converged else "NOT at rest: run again from the file written"
         return "\n".join(
             [
-                f"{crystal.name}: {state} after {found.steps} steps",
+                f"{crystal.name}: {state} after {counted(found.steps, 'step')}",
                 f"  cell strained by {' '.join(plain(x, 2) for x in strain)} % (xx yy zz yz xz xy, engineering shear)",
                 f"  volume {crystal.volume:.2f} -> {found.crystal.volume:.2f} A^3",
                 f"  atoms moved by up to {found.largest_shift:.4f} A against the cell",

@@ -17,14 +17,15 @@ from pathlib import Path
 
 import numpy as np
 
-from strainkit.collect.table import StressRecord
+from strainkit.collect.table import TABLE_PROGRAM, StressRecord
 from strainkit.errors import InputError, UsageError
+from strainkit.findings import Finding, finding
 from strainkit.run.files import checksum
 from strainkit.run.plan import Plan
 from strainkit.tensors.sixvectors import COMPONENTS
 from strainkit.units import STRESS_UNITS_IN_GPA
 
-__all__ = ["Convention", "read_csv"]
+__all__ = ["Convention", "read_csv", "unit_doubts"]
 
 _UNITS = {name.lower().replace("^", ""): name for name in STRESS_UNITS_IN_GPA}
 _SIGNS = {"tension": 1.0, "compression": -1.0}
@@ -86,6 +87,7 @@ class _Columns:
     stress: dict[str, int]
     units: dict[str, str]
     energy: int | None
+    assumed: tuple[str, ...]
 
 
 def read_csv(path: Path, plan: Plan, convention: Convention) -> dict[str, StressRecord]:
@@ -111,6 +113,8 @@ def read_csv(path: Path, plan: Plan, convention: Convention) -> dict[str, Stress
     columns = _columns(path, *rows[0], convention)
     order = " ".join(columns.stress)
     said = {"stress_unit": columns.units["xx"], "stress_sign": convention.sign, "stress_order": order}
+    if columns.assumed:
+        said["stress_unit_assumed"] = " ".join(columns.assumed)
     digest = checksum(content)
     planned = {job.label for job in plan.jobs}
     found: dict[str, StressRecord] = {}
@@ -135,12 +139,21 @@ def read_csv(path: Path, plan: Plan, convention: Convention) -> dict[str, Stress
             status="done",
             stress=np.array(stress),
             energy=energy,
-            program="table",
+            program=TABLE_PROGRAM,
             file=path.name,
             file_sha256=digest,
             settings=dict(said),
         )
     return found
+
+
+def unit_doubts(records: Sequence[StressRecord]) -> list[Finding]:
+    """Say of each table in which columns the unit was not named anywhere, so that the default counts."""
+    silent = {r.file: str(r.settings["stress_unit_assumed"]) for r in records if "stress_unit_assumed" in r.settings}
+    return [
+        finding("unit-assumed", name, f"neither its header nor --stress-unit names the unit of {columns}: read as GPa")
+        for name, columns in silent.items()
+    ]
 
 
 def _rows(path: Path, text: str) -> list[tuple[int, list[str]]]:
@@ -171,6 +184,7 @@ def _columns(path: Path, line: int, head: Sequence[str], convention: Convention)
         )
     stress: dict[str, int] = {}
     units: dict[str, str] = {}
+    silent: list[str] = []
     numbered: list[int] = []
     for i, name in enumerate(lower):
         match = re.fullmatch(r"(?:stress_|sigma_|s_)?([xyz]{2})(?:[_ (\[]+(.+?)[)\]]?)?", name)
@@ -180,8 +194,10 @@ def _columns(path: Path, line: int, head: Sequence[str], convention: Convention)
                 raise InputError(f"line {line}: two columns for {component}", path)
             stress[component] = i
             units[component] = _unit_of(path, line, names[i], match[2], convention)
+            silent += [names[i]] if match[2] is None else []
         elif re.fullmatch(r"(stress_|s)[1-6]", name):
             numbered.append(i)
+            silent.append(names[i])
     if not stress and len(numbered) == 6 and convention.order is not None:
         stress = dict(zip(convention.order, numbered, strict=True))
         units = dict.fromkeys(stress, convention.unit or "GPa")
@@ -196,7 +212,7 @@ def _columns(path: Path, line: int, head: Sequence[str], convention: Convention)
     missing = [c for c in COMPONENTS if c not in stress]
     if missing:
         raise InputError(f"line {line}: no column for {', '.join(missing)}", path, "Name six: xx, yy, zz, yz, xz, xy.")
-    return _Columns(label, stress, units, energy)
+    return _Columns(label, stress, units, energy, tuple(silent) if convention.unit is None else ())
 
 
 def _unit_of(path: Path, line: int, name: str, word: str | None, convention: Convention) -> str:

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
+from itertools import islice
 
 import numpy as np
 
 from strainkit.collect.consistency import Group, typical_change
 from strainkit.collect.mends import Mend
-from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.arrays import FloatArray, IntArray
 
 __all__ = ["MANY", "Attempt", "explain", "unchanged"]
 
@@ -60,30 +62,88 @@ def explain(group: Group, start: Attempt, choices: list[Mend]) -> tuple[Attempt,
     """
     if start.misfit <= NOTABLE * len(group.jobs) ** 0.5:
         return start, []
-    places: list[int | None] = [None, *(range(len(group.jobs)) if len(group.jobs) <= MANY else ())]
+    matrices = np.array([mend.matrices for mend in choices])
+    single = len(group.jobs) <= MANY
     frontier = [start]
     deepest = DEEPEST if start.misfit > NOTABLE_TWICE * len(group.jobs) ** 0.5 else 1
     most = max(1, sum(bool(job.shape) for job in group.jobs) // 3)  # of a few jobs, two wrong ones prove nothing
     for depth in range(1, deepest + 1):
-        tried = [new for base in frontier for new in _changed(group, base, places, choices) if new.singles <= most]
-        tried.sort(key=lambda t: (t.misfit, t.steps[-1][0] is not None))
+        tries = _Tries.of(group, frontier, choices, matrices, most if single else 0)
         # in so many tries, a vector of so many random components becomes so short by chance
-        lucky = (CHANCE / len(places) / len(choices)) ** (depth / max(group.spare, 1))
-        need = min(PART, lucky) * start.misfit
-        good = [t for t in tried if t.misfit < need and t.misfit < CLEAN * len(group.jobs) ** 0.5 and _tells(group, start, t)]
-        if good:
-            best = good[0]
-            rivals = [t for t in good[1:] if t.misfit < 3 * best.misfit + 0.01 and _differs(t, best)]
-            return best, rivals[:3]
+        lucky = (CHANCE / (1 + single * len(group.jobs)) / len(choices)) ** (depth / max(group.spare, 1))
+        need = min(min(PART, lucky) * start.misfit, CLEAN * len(group.jobs) ** 0.5)
+        good = (t for t in tries.in_order(below=need) if _tells(group, start, t))
+        if (best := next(good, None)) is not None:
+            return best, list(islice((t for t in good if t.misfit < 3 * best.misfit + 0.01 and _differs(t, best)), 3))
         # a change of all stresses may help only together with another one
-        frontier = _distinct(tried, WIDTH) + [t for t in tried if depth == 1 and not t.singles]
+        frontier = _distinct(tries.in_order(), WIDTH) + (list(tries.in_order(of_all=True)) if depth == 1 else [])
     return start, []
 
 
+@dataclass(frozen=True)
+class _Tries:
+    """One more change to some attempts, each in each place; made an Attempt only when it is looked at.
+
+    misfits (k,); bases, mends, places (k,) of each: the attempt it changes, the change, and the job, -1 for all.
+    """
+
+    frontier: list[Attempt]
+    choices: list[Mend]
+    matrices: FloatArray
+    misfits: FloatArray
+    bases: IntArray
+    mends: IntArray
+    places: IntArray
+
+    @classmethod
+    def of(cls, group: Group, frontier: list[Attempt], choices: list[Mend], matrices: FloatArray, most: int) -> _Tries:
+        """All of them, with at most so many changes of single jobs."""
+        # a factor common to all stresses leaves the misfit as it is
+        common = np.array([n for n, mend in enumerate(choices) if mend.code != "stress-unit"], dtype=np.int64)
+        count, jobs = len(choices), np.arange(len(group.jobs))
+        misfits, bases, mends, places = [], [], [], []
+        for number, base in enumerate(frontier):
+            changed = np.einsum("mjab,jb->mja", matrices, base.cauchy)
+            sets, which, where = [changed[common]], [common], [np.full(len(common), -1)]
+            if base.singles < most:
+                one = np.tile(base.cauchy, (count, len(jobs), 1, 1))
+                one[:, jobs, jobs] = changed
+                sets.append(one.reshape(-1, len(jobs), 6))
+                which.append(np.repeat(np.arange(count), len(jobs)))
+                where.append(np.tile(jobs, count))
+            misfits.append(group.misfits(np.concatenate(sets)))
+            mends += which
+            places += where
+            bases.append(np.full(len(misfits[-1]), number))
+        return cls(frontier, choices, matrices, np.concatenate(misfits), *map(np.concatenate, (bases, mends, places)))
+
+    def in_order(self, below: float = np.inf, of_all: bool = False) -> Iterator[Attempt]:
+        """The best first, changes of all stresses before those of one; below a misfit, or of all stresses only."""
+        for k in np.lexsort((self.places >= 0, self.misfits)):
+            if self.misfits[k] >= below:
+                return
+            place, base = int(self.places[k]), self.frontier[self.bases[k]]
+            matrices = self.matrices[self.mends[k]]
+            mend = self.choices[self.mends[k]]
+            if place < 0:
+                cauchy = np.einsum("jab,jb->ja", matrices, base.cauchy)
+                yield Attempt((*base.steps, (None, mend)), cauchy, float(self.misfits[k]))
+            elif not of_all:
+                cauchy = base.cauchy.copy()
+                cauchy[place] = matrices[place] @ cauchy[place]
+                yield Attempt((*base.steps, (place, mend)), cauchy, float(self.misfits[k]))
+
+
 def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
-    """Are the changed stresses more than noise, before and after? Making a stress of noise smaller always helps."""
-    second = np.einsum("jab,jb->ja", group.to_second, found.cauchy)
-    typical = float(typical_change(second, group.rest))
+    """Are the changed stresses more than noise, before and after, and is less left in GPa too?
+
+    Making a stress of noise smaller always helps, and beside a stress made larger every misfit is small.
+    """
+    before, typical = (
+        float(typical_change(np.einsum("jab,jb->ja", group.to_second, a.cauchy), group.rest)) for a in (start, found)
+    )
+    if found.misfit * typical > PART * start.misfit * before:
+        return False
     size = len(group.jobs) ** 0.5
     places = [place for place, _ in found.steps if place is not None]
     slight = any(np.linalg.norm(group.cauchy[place]) < SLIGHT * typical for place in places)
@@ -93,10 +153,10 @@ def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
 
 
 def _differs(one: Attempt, other: Attempt) -> bool:
-    return not np.allclose(one.cauchy, other.cauchy, rtol=1e-6, atol=1e-9)
+    return bool((np.abs(one.cauchy - other.cauchy) > 1e-9 + 1e-6 * np.abs(other.cauchy)).any())
 
 
-def _distinct(tried: list[Attempt], most: int) -> list[Attempt]:
+def _distinct(tried: Iterable[Attempt], most: int) -> list[Attempt]:
     kept: list[Attempt] = []
     for candidate in tried:
         if all(_differs(candidate, other) for other in kept):
@@ -104,22 +164,3 @@ def _distinct(tried: list[Attempt], most: int) -> list[Attempt]:
         if len(kept) == most:
             break
     return kept
-
-
-def _changed(group: Group, base: Attempt, places: list[int | None], choices: list[Mend]) -> list[Attempt]:
-    """One more change to a set, each in each place."""
-    steps, sets = [], []
-    for mend in choices:
-        # a factor common to all stresses leaves the misfit as it is
-        for place in places[1:] if mend.code == "stress-unit" else places:
-            if place is None:
-                cauchy = np.einsum("jab,jb->ja", mend.matrices, base.cauchy)
-            else:
-                cauchy = base.cauchy.copy()
-                cauchy[place] = mend.matrices[place] @ cauchy[place]
-            steps.append((place, mend))
-            sets.append(cauchy)
-    if not sets:
-        return []
-    misfits = group.misfits(np.array(sets))
-    return [Attempt((*base.steps, step), cauchy, float(m)) for step, cauchy, m in zip(steps, sets, misfits, strict=True)]

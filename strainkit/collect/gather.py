@@ -11,20 +11,19 @@ from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass, replace
 from pathlib import Path
 
+from strainkit.collect.csvtable import unit_doubts
 from strainkit.collect.readjob import read_outputs, record_of
 from strainkit.collect.scan import Folder, foreign_folders, plan_fingerprint, scan
 from strainkit.collect.strays import place_strays
-from strainkit.collect.table import TABLE, StressRecord, StressTable, load_table
+from strainkit.collect.table import TABLE, TABLE_PROGRAM, StressRecord, StressTable, load_table
 from strainkit.collect.trust import judge_set, unjudged
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError
 from strainkit.run.files import checksum
 from strainkit.run.plan import Plan, job_folder
 
-__all__ = ["TABLE_PROGRAM", "collect_run"]
+__all__ = ["collect_run"]
 
-#: "program" of a record that was typed into a table
-TABLE_PROGRAM = "table"
 #: folders to read before a second process is worth its start
 _MANY = 400
 
@@ -79,7 +78,7 @@ def collect_run(
     records, doubts = place_strays(run, plan, records, [f for f in foreign if f.name not in placed])
     records = [_with_typed(record, known.get(record.label), (typed or {}).get(record.label)) for record in records]
     records, found = judge_set(plan, records)
-    return StressTable(tuple(records), (*doubts, *found))
+    return StressTable(tuple(records), (*doubts, *found, *unit_doubts(records)))
 
 
 def _known(run: Path) -> dict[str, StressRecord]:

@@ -132,7 +132,8 @@ def _state(record: StressRecord, attempts: Attempts, asked: str | None) -> str:
     if record.status not in ("missing", "unfinished") and not (record.status == "broken" and attempts.ended != "done"):
         return record.status
     if attempts.count == 0:
-        return record.status
+        unknown = record.status == "missing" and any(f.code == "unreadable-output" for f in record.findings)
+        return "broken" if unknown else record.status
     if attempts.ended == "failed":
         return "failed"
     return "unfinished" if attempts.ended == "done" else "stopped"

@@ -29,7 +29,7 @@ __all__ = ["prove"]
 #: jobs beyond which nothing is proved
 TOO_MANY = 600
 #: misfit a job, in parts of the typical change of stress, that is too large to say nothing
-INCONSISTENT = 0.15
+INCONSISTENT = 0.10
 #: decades by which a factor may miss a known one, and by which single comparisons may miss the usual one
 NEAR, SCATTER = 0.06, 0.15
 

@@ -23,8 +23,8 @@ __all__ = ["Output", "read_outputs", "record_of"]
 
 #: ions that had to stay moved farther than this (A)
 _MOVED = 5e-3
-#: two finished outputs of one job differ when their stresses do by more than this part of the larger, and this many GPa
-_DISAGREE, _DISAGREE_GPA = 0.05, 0.02
+#: two finished outputs of one job differ when their stresses do by more than this part of the larger one, and this many GPa
+_DISAGREE, _DISAGREE_GPA = 0.002, 0.005
 
 
 @dataclass(frozen=True)
@@ -80,6 +80,9 @@ def record_of(plan: Plan, job: StrainJob, folder: Folder, outputs: list[Output],
         text = f"{folder.name}: symbolic links are not followed: {', '.join(folder.links[:3])}; put the file itself there"
         doubts.append(finding("link-not-followed", job.label, text))
     if not outputs:
+        for name in folder.named_outputs[:1]:
+            text = f"{folder.name}/{name}: not recognised as the output of a program that strainkit reads"
+            doubts.append(finding("unreadable-output", job.label, text))
         return StressRecord(job.label, "missing", findings=tuple(doubts), seen=seen)
     record = _record(plan, job, outputs[0], seen)
     if len(outputs) > 1 and outputs[1].finished and record.status == "done":

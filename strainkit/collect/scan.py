@@ -19,6 +19,10 @@ from strainkit.run.plan import Plan, job_folder
 
 __all__ = ["Folder", "foreign_folders", "natural", "plan_fingerprint", "scan"]
 
+#: names of outputs, also of continuations and packed ones; what a scheduler writes is none
+_OUTPUT_NAME = re.compile(
+    r"(?!slurm-)(.*\.(out|abo|castep|xml)|OUTCAR[^.]*|returned\.extxyz)(\.\d+)?(\.(gz|xz|bz2))?", re.IGNORECASE
+)
 #: a file younger than this (s) may still change within one tick of its clock
 _SETTLED = 2.0
 
@@ -39,6 +43,8 @@ class Folder:
         Fingerprint of names, sizes and times of the files.
     settled : bool
         False when a file is so young that it may have changed without a change of its time.
+    named_outputs : tuple of str
+        Those of the files that are not empty and are called what programs call their outputs.
     """
 
     name: str
@@ -46,6 +52,7 @@ class Folder:
     links: tuple[str, ...]
     state: str
     settled: bool
+    named_outputs: tuple[str, ...] = ()
 
 
 def natural(name: str) -> list[tuple[int, str]]:
@@ -81,6 +88,7 @@ def scan(run: Path, name: str, written: Container[str] = ()) -> Folder:
         links=tuple(sorted(links)),
         state=checksum(repr(found).encode("utf-8", "surrogatepass"))[:32],
         settled=newest < time.time_ns() - _SETTLED * 1e9,
+        named_outputs=tuple(file for file, size, _ in found if size and _OUTPUT_NAME.fullmatch(file)),
     )
 
 

@@ -18,7 +18,7 @@ from strainkit.run.files import atomic_write, dump_json, load_json
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import COMPONENTS
 
-__all__ = ["IONS", "STATUSES", "TABLE", "StressRecord", "StressTable", "load_table"]
+__all__ = ["IONS", "STATUSES", "TABLE", "TABLE_PROGRAM", "StressRecord", "StressTable", "load_table"]
 
 TABLE = "stresses.json"
 IONS = "ions.json"
@@ -28,13 +28,16 @@ _IONS_KIND = "strainkit/ions"
 #: status of a job -> meaning
 STATUSES = {
     "done": "finished, converged, and of the planned cell",
-    "missing": "no output found",
+    "missing": "no output that strainkit reads",
     "unfinished": "the output has no end-of-job mark or no stress",
     "unconverged": "electronic steps or ions not converged",
     "broken": "the output cannot be read or holds impossible numbers",
     "mismatch": "the output is of another cell or crystal than planned",
     "suspect": "finished, but a check of the whole set refuses its numbers",
 }
+#: "program" of a record that was typed into a table, and what its being done means
+TABLE_PROGRAM = "table"
+_TYPED = "from a table: its end, convergence and cell were not seen"
 
 
 @dataclass(frozen=True)
@@ -82,6 +85,11 @@ class StressRecord:
     settings: Mapping[str, str | float] = field(default_factory=dict)
     rotation: FloatArray | None = None
     seen: str = ""
+
+    @property
+    def meaning(self) -> str:
+        """What its status means."""
+        return _TYPED if (self.status, self.program) == ("done", TABLE_PROGRAM) else STATUSES[self.status]
 
     def to_dict(self) -> dict[str, Any]:
         """JSON-ready record."""

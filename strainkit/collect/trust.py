@@ -14,6 +14,8 @@ from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.run.plan import Plan
+from strainkit.tensors.arrays import FloatArray
+from strainkit.tensors.sixvectors import stress_from_voigt, stress_to_voigt
 
 __all__ = ["judge_set", "unjudged"]
 
@@ -23,8 +25,10 @@ SETTINGS = {
     "dispersion": "dispersion correction",
     "cutoff_eV": "cutoff (eV)",
     "kpoints": "k-points",
+    "kpoint_total": "points of the k-mesh",
     "smearing": "smearing",
     "spin": "spin",
+    "pseudopotentials": "pseudopotentials",
 }
 #: of these, the ones that all files of a program print alike
 NUMBERS = ("cutoff_eV", "kpoints")
@@ -153,22 +157,31 @@ def _some(labels: Sequence[str]) -> str:
 
 def _identical(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[tuple[Finding, tuple[str, ...]]]:
     """Different jobs cannot give the same numbers to the last digit."""
-    groups: dict[tuple[object, ...], list[str]] = defaultdict(list)
-    for _, record in done:
+    groups: dict[tuple[object, ...], list[tuple[StrainJob, str]]] = defaultdict(list)
+    for job, record in done:
         if record.file_sha256 and record.file.startswith("jobs/"):
-            groups["file", record.file_sha256].append(record.label)
-        if record.stress is not None and np.abs(record.stress).max() > 1e-6:
-            energy = None if record.energy is None else round(record.energy, 7)
-            groups["stress", energy, *np.round(record.stress, 7).tolist()].append(record.label)
+            groups["the same file, byte for byte", record.file_sha256].append((job, record.label))
+        printed = _printed(record)
+        distinct = len(set(np.abs(printed[np.abs(printed) > 1e-6]).tolist()))
+        if distinct:  # one number, a pressure, may repeat by chance, but not together with the energy
+            energy = None if distinct > 1 or record.energy is None else round(record.energy, 7)
+            groups["the same stress to the last digit", energy, *printed.tolist()].append((job, record.label))
     found = []
     seen: set[tuple[str, ...]] = set()
-    for key, labels in groups.items():
-        if len(labels) > 1 and tuple(labels) not in seen:
-            seen.add(tuple(labels))
-            what = "the same file, byte for byte" if key[0] == "file" else "the same stress to the last digit"
-            where = " and ".join(labels[:3])
-            found.append((finding("identical-outputs", where, f"{what}: one of them is a copy"), tuple(labels)))
+    for (what, *_), members in groups.items():
+        labels = tuple(label for _, label in members)
+        apart = any(np.abs(job.gradient - members[0][0].gradient).max() > 1e-7 for job, _ in members[1:])
+        if len(labels) > 1 and labels not in seen and (apart or members[0][0].moved):
+            seen.add(labels)
+            found.append((finding("identical-outputs", " and ".join(labels[:3]), f"{what}: one of them is a copy"), labels))
     return found
+
+
+def _printed(record: StressRecord) -> FloatArray:
+    """A stress (6,), Voigt, GPa, in the axes of its file, to seven decimals."""
+    assert record.stress is not None
+    turn = np.eye(3) if record.rotation is None else record.rotation
+    return np.asarray(np.round(stress_to_voigt(turn @ stress_from_voigt(record.stress) @ turn.T), 7) + 0.0)
 
 
 def _reference(plan: Plan, records: Sequence[StressRecord]) -> list[Finding]:

@@ -6,7 +6,8 @@ import numpy as np
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.molecules import Molecules
-from strainkit.crystal.neighbours import Neighbours, find_neighbours, is_metal
+from strainkit.crystal.neighbours import Neighbours, is_metal
+from strainkit.crystal.pairs import close_pairs
 from strainkit.errors import InputError
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import BoolArray, FloatArray, IntArray
@@ -27,7 +28,7 @@ _ORGANIC = (6, 7, 8, 9, 14, 15, 16, 17, 35)
 _MOST_BONDS = {1: 2, 6: 4, 7: 4, 8: 3, 9: 2}
 
 
-def refuse_coincident(crystal: Crystal, neighbours: Neighbours | None = None) -> None:
+def refuse_coincident(crystal: Crystal) -> None:
     """Refuse a crystal in which atoms sit on top of each other.
 
     Raises
@@ -35,8 +36,8 @@ def refuse_coincident(crystal: Crystal, neighbours: Neighbours | None = None) ->
     InputError
         Two atoms closer than 0.2 A, with their names.
     """
-    found = neighbours or find_neighbours(crystal)
-    mine = np.flatnonzero((found.lengths < COINCIDENT) & (found.first <= found.second))
+    found = close_pairs(crystal.lattice, crystal.positions, np.full(len(crystal.numbers), 0.5 * COINCIDENT))
+    mine = np.flatnonzero(found.first <= found.second)
     if not len(mine):
         return
     pairs = [(int(found.first[k]), int(found.second[k]), found.lengths[k]) for k in mine]

@@ -143,8 +143,8 @@ def physical_axes(crystal: Crystal, symmetry: Symmetry) -> FloatArray:
     fixed polynomial of the directions between neighbouring atoms is largest.
     """
     axes = standard_axes(symmetry)
-    choices = _lattice_rotations(symmetry.system)
-    if len(choices) <= len(symmetry.rotations):
+    choices = _distinct(_lattice_rotations(symmetry.system), axes @ symmetry.rotations @ axes.T)
+    if len(choices) == 1:
         return axes
     vectors, weights = _neighbours(crystal)
     probes = (_PROBES @ choices @ axes).reshape(-1, 3)  # in every choice of axes, seen from the given frame
@@ -172,6 +172,17 @@ def _lattice_rotations(system: str) -> FloatArray:
             return np.asarray(Rotation.create_group("O").as_matrix())
         case _:
             return np.eye(3)[None]
+
+
+def _distinct(choices: FloatArray, group: FloatArray) -> FloatArray:
+    """The first of the rotations (k, 3, 3) in every set that the crystal's own ones (m, 3, 3), in the same axes, make equal."""
+    left = list(range(len(choices)))
+    kept = []
+    while left:
+        kept.append(left[0])
+        same = choices[left[0]] @ group
+        left = [n for n in left if np.abs(same - choices[n]).max(axis=(1, 2)).min() > 1e-6]
+    return choices[kept]
 
 
 def _neighbours(crystal: Crystal) -> tuple[FloatArray, FloatArray]:

@@ -38,8 +38,8 @@ def judge_cell(crystal: Crystal) -> tuple[Molecules, list[Finding]]:
     InputError
         When atoms are on top of each other.
     """
+    refuse_coincident(crystal)
     neighbours = find_neighbours(crystal)
-    refuse_coincident(crystal, neighbours)
     molecules = find_molecules(crystal, neighbours)
     return molecules, [
         *judge_contacts(crystal, neighbours, molecules),

@@ -64,6 +64,15 @@ class IndexAxes:
         """a*, b*, c* as rows, 1/angstrom (without 2 pi)."""
         return np.linalg.inv(self.vectors).T
 
+    @property
+    def hexagonal(self) -> bool:
+        """Are they axes for four indices: a and b alike at 120 degrees, c a threefold axis across them?"""
+        metric = self.vectors @ self.vectors.T / np.dot(self.vectors[0], self.vectors[0])
+        threefold = (np.abs(np.trace(self.rotations, axis1=1, axis2=2)) < 1e-6) & (
+            np.abs(self.rotations @ self.vectors[2] - self.vectors[2]).max(axis=1) < 1e-6 * np.abs(self.vectors).max()
+        )
+        return bool(np.allclose(metric[:2], [[1.0, -0.5, 0.0], [-0.5, 1.0, 0.0]], rtol=0, atol=1e-6) and threefold.any())
+
     def normal(self, plane: IntArray) -> FloatArray:
         """Unit normals (..., 3), given frame, of planes (..., 3)."""
         return _unit(np.asarray(plane) @ self.reciprocal)
@@ -169,20 +178,25 @@ def index_axes(symmetry: Symmetry, given: bool = False) -> IndexAxes:
     )
 
 
-def parse_indices(text: str, option: str, plane: bool) -> tuple[int, ...]:
+def parse_indices(text: str, option: str, plane: bool, axes: IndexAxes | None = None) -> tuple[int, ...]:
     """Indices (3,) from "0,1,-2" or "0 1 -2"; four are Miller-Bravais ones of a hexagonal lattice (i = -h-k, t = -u-v).
 
     Raises
     ------
     UsageError
-        Not three or four whole numbers, all zero, or four that do not add up.
+        Not three or four whole numbers, all zero, or four that do not add up or refer to axes that are not hexagonal.
     """
     try:
         numbers = [int(part) for part in text.replace(",", " ").split()]
     except ValueError:
         numbers = []
-    if len(numbers) == 4 and sum(numbers[:3]) == 0:
+    if len(numbers) == 4:
         h, k, i, last = numbers
+        if axes is not None and not axes.hexagonal:
+            what = f"{text!r} has four indices, and the axes are not hexagonal ({axes.words})"
+            raise UsageError(what, option, "Give three.")
+        if h + k + i:
+            raise UsageError(f"the first three of {text!r} add up to {h + k + i}, not to zero", option, "The third is -h-k.")
         numbers = [h, k, last] if plane else [h - i, k - i, last]
     if len(numbers) != 3 or not any(numbers):
         raise UsageError(

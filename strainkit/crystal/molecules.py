@@ -128,7 +128,7 @@ def find_molecules(crystal: Crystal, neighbours: Neighbours | None = None) -> Mo
 
     bonds = (neighbours or find_neighbours(crystal)).bonds
     atoms = len(crystal.numbers)
-    steps = {(int(i), int(j)): shift for i, j, shift in zip(bonds.first, bonds.second, bonds.shifts, strict=True)}
+    steps = dict(zip(zip(bonds.first.tolist(), bonds.second.tolist(), strict=True), bonds.shifts, strict=True))
     pairs = np.array(list(steps)).reshape(-1, 2).T
     graph = csr_array((np.ones(len(steps)), pairs), shape=(atoms, atoms))
     count, part = connected_components(graph, directed=False)

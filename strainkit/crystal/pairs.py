@@ -58,6 +58,8 @@ def close_pairs(lattice: FloatArray, positions: FloatArray, reach: FloatArray) -
     itself = (first == second) & (moved == 0).all(axis=1)
     keep = np.flatnonzero((lengths < reach[first] + reach[second]) & ~itself)
     shifts = moved[keep] - home[second[keep]] + home[first[keep]]
-    order = np.lexsort((*shifts.T[::-1], second[keep], first[keep]))
+    low = shifts.min(axis=0, initial=0)
+    places = np.ravel_multi_index(tuple((shifts - low).T), tuple(shifts.max(axis=0, initial=0) - low + 1))
+    order = np.lexsort((places, first[keep] * len(positions) + second[keep]))
     keep = keep[order]
     return Pairs(first[keep], second[keep], shifts[order], vectors[keep], lengths[keep])

@@ -16,6 +16,7 @@ __all__ = [
     "DEFAULT_SYMPREC",
     "deviation",
     "exact_operations",
+    "higher_symmetry_possible",
     "operations",
     "space_group_data",
     "species",
@@ -137,3 +138,50 @@ def deviation(crystal: Crystal, kinds: IntArray, rotations: IntArray, translatio
         ways[:, kinds == kind] = away - np.round(away)
     ways -= ways.mean(axis=1, keepdims=True)  # spglib places an operation only within its tolerance
     return float(np.linalg.norm(ways @ crystal.lattice, axis=-1).max())
+
+
+def higher_symmetry_possible(crystal: Crystal, kinds: IntArray, data: Any, reach: float) -> bool:
+    """Could an operation that the group found lacks map the crystal onto itself with every atom within `reach` (angstrom)?
+
+    No is certain; yes asks for a search. One operation of every coset of the lattice's point group is tried, with every
+    translation that takes one atom of the rarest kind to another.
+    """
+    from scipy.spatial import cKDTree
+
+    lattice = data.primitive_lattice
+    kept = np.unique(data.mapping_to_primitive, return_index=True)[1]
+    to_primitive = crystal.lattice @ np.linalg.inv(lattice)
+    positions, kinds = crystal.positions[kept] @ to_primitive % 1.0 % 1.0, kinds[kept]
+    trees = {kind: cKDTree(positions[kinds == kind], boxsize=1.0) for kind in np.unique(kinds)}
+    rarest = min(trees, key=lambda kind: trees[kind].n)
+    least = reach * float(np.linalg.norm(np.linalg.inv(lattice), 2))  # as a distance in fractional coordinates, or less
+    mine = np.unique(np.round(to_primitive.T @ data.rotations @ np.linalg.inv(to_primitive.T)).astype(int), axis=0)
+    tried = [np.eye(3, dtype=int)]
+    for rotation in _lattice_rotations(lattice, reach):
+        if not any((rotation == other @ mine).all(axis=(1, 2)).any() for other in tried):
+            tried.append(rotation)
+    for number, rotation in enumerate(tried):
+        images = positions @ rotation.T
+        shifts = trees[rarest].data - images[kinds == rarest][0]
+        shifts = shifts if number else shifts[1:]  # without a rotation: translations other than none
+        for image, kind in zip(images, kinds, strict=True):
+            away, _ = trees[kind].query((image + shifts) % 1.0 % 1.0, distance_upper_bound=least)
+            shifts = shifts[away < least]
+            if not len(shifts):
+                break
+        else:
+            return True
+    return False
+
+
+def _lattice_rotations(lattice: FloatArray, reach: float) -> IntArray:
+    """Integer matrices (m, 3, 3) that map a lattice of shortest vectors (rows) onto itself within `reach`, angstrom."""
+    lengths = np.linalg.norm(lattice, axis=1)
+    steps = np.stack(np.meshgrid(*[(-1, 0, 1)] * 3, indexing="ij"), axis=-1).reshape(-1, 3)
+    alike = np.abs(np.linalg.norm(steps @ lattice, axis=1)[:, None] - lengths) < reach
+    rows = np.meshgrid(*(np.flatnonzero(column) for column in alike.T), indexing="ij")
+    matrices = np.stack([steps[row.ravel()] for row in rows], axis=1)
+    images = matrices @ lattice
+    change = images @ images.transpose(0, 2, 1) - lattice @ lattice.T
+    found: IntArray = matrices[(np.abs(change) < reach * (lengths + lengths[:, None])).all(axis=(1, 2))].transpose(0, 2, 1)
+    return found

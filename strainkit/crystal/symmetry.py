@@ -14,6 +14,7 @@ from strainkit.crystal.spacegroup import (
     DEFAULT_SYMPREC,
     deviation,
     exact_operations,
+    higher_symmetry_possible,
     space_group_data,
     species,
     spglib_raises,
@@ -132,7 +133,10 @@ def find_symmetry(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> Symmetr
     InputError
         When spglib finds no group (atoms on top of each other, a tolerance larger than the crystal).
     """
-    data, kinds = space_group_data(crystal, symprec)
+    return _symmetry(crystal, symprec, *space_group_data(crystal, symprec))
+
+
+def _symmetry(crystal: Crystal, symprec: float, data: Any, kinds: IntArray) -> Symmetry:
     standard = standard_rotations(data.hall_number)
     laue_class, system = _class_of(data.pointgroup)
     lattice, rotations = _cartesian(np.linalg.inv(data.transformation_matrix).T @ crystal.lattice, standard)
@@ -177,26 +181,28 @@ def _cartesian(lattice: FloatArray, operations: IntArray) -> tuple[FloatArray, F
     return exact, np.array(distinct)
 
 
-def tolerance_ladder(
-    crystal: Crystal, symprec: float, known: Symmetry | None = None
-) -> tuple[list[tuple[float, str, str]], list[Finding]]:
-    """Space group at a tenth, one and ten times the tolerance (whose own may be `known`), and a finding where it changes.
+def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[Symmetry, list[tuple[float, str, str]], list[Finding]]:
+    """Symmetry at a tolerance, the space groups at a tenth and ten times of it, and a finding where they differ.
 
     Returns
     -------
+    symmetry : Symmetry
+        As by `find_symmetry`, which raises the same errors.
     rungs : list of (tolerance in angstrom, space group, Laue class)
-        A rung where the search fails is left out.
+        A tenth, one and ten times the tolerance; one where the search fails is left out.
     findings : list of Finding
     """
+    data, kinds = space_group_data(crystal, symprec)
+    symmetry = _symmetry(crystal, symprec, data, kinds)
+    given = np.linalg.inv(symmetry.transformation).T @ crystal.lattice
+    off = max(symmetry.deviation, float(np.abs(given - symmetry.standard_lattice).max()))
+    # searches that cannot find another group are left out: they take longer than all else that is known of a cell
+    same = {0.1: off < 0.01 * symprec, 1.0: True, 10.0: not higher_symmetry_possible(crystal, kinds, data, 30.0 * symprec)}
     rungs = []
-    for factor in (0.1, 1.0, 10.0):
-        tolerance = symprec * factor
+    for factor, known in same.items():
         with suppress(InputError):
-            if factor == 1.0 and known is not None:
-                rungs.append((tolerance, known.space_group, known.laue_class))
-            else:
-                data, _ = space_group_data(crystal, tolerance)
-                rungs.append((tolerance, data.international, _class_of(data.pointgroup)[0]))
+            found = data if known else space_group_data(crystal, symprec * factor)[0]
+            rungs.append((symprec * factor, found.international, _class_of(found.pointgroup)[0]))
     findings = []
     if len({group for _, group, _ in rungs}) > 1:
         text = ", ".join(f"{group} at {tolerance:g} A" for tolerance, group, _ in rungs)
@@ -207,7 +213,7 @@ def tolerance_ladder(
         )
         where = crystal.source or crystal.name
         findings.append(finding("symmetry-depends-on-tolerance", where, text + offer))
-    return rungs, findings
+    return symmetry, rungs, findings
 
 
 def translation_denominators(crystal: Crystal, symprec: float = DEFAULT_SYMPREC) -> tuple[int, int, int]:

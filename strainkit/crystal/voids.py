@@ -54,19 +54,23 @@ def find_voids(crystal: Crystal, probe: float = PROBE) -> Voids:
     given, crystal = crystal, _reduced(crystal)
     rough_shape = _grid_shape(crystal, COARSE)
     points = _points(rough_shape)
-    rough = _clearance(crystal, points)
+    rough = _clearance(crystal, points, probe)
     packing = float((rough < 0).mean())
     # no point of the cell is farther from a grid point than half a grid cell's longest diagonal
     promising = rough + _half_diagonal(crystal, rough_shape) >= probe
     if not promising.any():
         return Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
+    # the same with half the spacing about what is left: in most crystals nothing is
+    octants = (np.stack(np.meshgrid(*[(-0.25, 0.25)] * 3, indexing="ij"), axis=-1).reshape(-1, 3)) / np.array(rough_shape)
+    closer = _clearance(crystal, (points[promising][:, None] + octants).reshape(-1, 3), probe).reshape(-1, 8).max(axis=1)
+    promising[promising] = closer + 0.5 * _half_diagonal(crystal, rough_shape) >= probe
+    if not promising.any():
+        return Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
     shape = _grid_shape(crystal, FINE)
-    points = _points(shape)
-    nearest = np.round(points * rough_shape).astype(int) % rough_shape
-    worth = promising.reshape(rough_shape)[tuple(nearest.T)]
-    clearance = np.zeros(len(points))
-    clearance[worth] = _clearance(crystal, points[worth])
-    clearance = clearance.reshape(shape)
+    nearest = [np.round(np.arange(n) / n * m).astype(int) % m for n, m in zip(shape, rough_shape, strict=True)]
+    worth = promising.reshape(rough_shape)[np.ix_(*nearest)]
+    clearance = np.zeros(shape)
+    clearance[worth] = _clearance(crystal, np.argwhere(worth) / np.array(shape))
     if clearance.max() < probe:
         return Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
     labels = _connected(_covered(crystal, clearance, probe))
@@ -119,12 +123,11 @@ def _images(crystal: Crystal, positions: FloatArray, reach: float) -> FloatArray
     return images
 
 
-def _clearance(crystal: Crystal, fractional: FloatArray) -> FloatArray:
-    """Distance of points (n, 3) of the cell from the nearest van der Waals surface, angstrom, negative inside; at most 4 A."""
+def _clearance(crystal: Crystal, fractional: FloatArray, limit: float = 4.0) -> FloatArray:
+    """Distance of points (n, 3) of the cell from the nearest van der Waals surface, A, negative inside; at most `limit`."""
     from ase.data.vdw import vdw_radii
     from scipy.spatial import cKDTree
 
-    limit = 4.0
     points = fractional @ crystal.lattice
     best = np.full(len(points), limit)
     for number in np.unique(crystal.numbers):

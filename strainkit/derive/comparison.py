@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -15,7 +15,7 @@ from strainkit.derive.sameaxes import common_names, obstacle
 from strainkit.derive.significance import LEVEL
 from strainkit.derive.spread import WithError
 from strainkit.errors import UsageError
-from strainkit.findings import Finding
+from strainkit.findings import Finding, finding
 from strainkit.fit.result import Fit
 
 __all__ = ["MOST", "Comparison", "compare_crystals"]
@@ -103,7 +103,12 @@ def _softest(member: Member) -> dict[str, Any] | None:
     return member.moduli.ends["shear_GPa"][0].to_dict(member.elastic.frame.rotation)
 
 
-def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseline: str | None = None) -> Comparison:
+def compare_crystals(
+    crystals: Sequence[Member | Fit],
+    by: str = "young",
+    baseline: str | None = None,
+    left_out: Mapping[str, str] | None = None,
+) -> Comparison:
     """Compare crystals.
 
     Parameters
@@ -115,6 +120,8 @@ def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseli
         What to rank by: a key of `QUANTITIES`, or a constant such as "C11" that all members share.
     baseline : str, optional
         Label, or folder or file as given, of the member that the others are held against; all pairs when left out.
+    left_out : mapping, optional
+        Crystals that were wanted but have no tensor -> why; each becomes a finding.
 
     Raises
     ------
@@ -131,6 +138,7 @@ def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseli
     every = [*moduli, *(column for _, columns in shared for column in columns)]
     differences = tested(every, len(members), base)
     compositions, reactions, doubts = energies_of(members)
+    absent = [finding("not-compared", place, f"left out of the comparison: {why}") for place, why in (left_out or {}).items()]
 
     def finished(columns: Sequence[Column]) -> tuple[Column, ...]:
         return tuple(columns) if base is not None else tuple(lettered(column, differences) for column in columns)
@@ -145,7 +153,7 @@ def compare_crystals(crystals: Sequence[Member | Fit], by: str = "young", baseli
         ranking=ranked(_wanted(every, by)),
         compositions=tuple(compositions),
         reactions=tuple(reactions),
-        findings=(*doubts_about(members, moduli), *doubts),
+        findings=(*absent, *doubts_about(members, moduli), *doubts),
     )
 
 

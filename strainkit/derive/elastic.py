@@ -12,7 +12,7 @@ from strainkit.crystal.frames import Frame, chosen_frame, crystal_frame
 from strainkit.crystal.lattice import IndexAxes, index_axes
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.derive.spread import stable_draws
-from strainkit.errors import UsageError
+from strainkit.errors import UsageError, counted
 from strainkit.findings import Finding, finding
 from strainkit.fit.result import Fit
 from strainkit.tensors.arrays import FloatArray
@@ -102,7 +102,7 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
 
     Raises
     ------
-    NoTensorError
+    IncompleteError
         When some constants are undetermined.
     """
     plan = fit.plan
@@ -110,10 +110,11 @@ def from_fit(fit: Fit, frame: str = "ieee", given_indices: bool = False) -> Elas
     moduli = fit.effective
     asymmetry = _asymmetry(fit.answer, stress)
     ions = f"ions {plan.ions}" if fit.relaxed is None else "clamped ions and their answer to strain"
+    without = f", without {', '.join(fit.dropped)}" if fit.dropped else ""
     removed = ", reference stress removed as an offset" if fit.reading == "offset" else ""
     return ElasticCrystal(
         name=plan.crystal.name,
-        origin=f"fit of {len(fit.jobs_used)} jobs, {ions}, order {fit.order}{removed}",
+        origin=f"fit of {counted(len(fit.jobs_used), 'job')}, {ions}, order {fit.order}{removed}{without}",
         moduli=moduli,
         waves=fit.answer,
         stress=stress,

@@ -15,7 +15,7 @@ import numpy as np
 from strainkit.design.criterion import best_continuous
 from strainkit.design.exchange import SPARE, Candidates, exchange
 from strainkit.design.shapes import image_strains, one_of_each, reflection_strains, smallest_directions
-from strainkit.errors import UsageError
+from strainkit.errors import UsageError, counted
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.invariants import invariant_matrices, invariant_vectors
 
@@ -139,7 +139,7 @@ def sharpest(
     if jobs % 2:
         return sharpest(rotations, jobs - 1, start, rows, taken)
     raise UsageError(
-        f"{jobs} strained jobs cannot fix every constant",
+        f"{counted(jobs, 'strained job')} cannot fix every constant",
         "--jobs",
         f"This Laue class needs at least {fewest_jobs(rotations)}.",
     )

@@ -9,7 +9,8 @@ import numpy as np
 
 from strainkit.design.exchange import SPARE
 from strainkit.design.jobs import StrainJob
-from strainkit.design.model import LinearModel, build_model
+from strainkit.design.model import LinearModel, Order, build_model
+from strainkit.errors import counted
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.averages import averages_of
@@ -53,9 +54,9 @@ class Expectation:
         return max(float("inf") if e is None else e for e in self.standard_errors.values())
 
 
-def model_of(jobs: Sequence[StrainJob], rotations: FloatArray, basis: ConstantBasis) -> LinearModel:
+def model_of(jobs: Sequence[StrainJob], rotations: FloatArray, basis: ConstantBasis, order: Order = "linear") -> LinearModel:
     """Linear model of a list of jobs, all of one weight."""
-    return build_model(np.array([job.strain for job in jobs]).reshape(-1, 3, 3), rotations, basis.matrices)
+    return build_model(np.array([job.strain for job in jobs]).reshape(-1, 3, 3), rotations, basis.matrices, order)
 
 
 def expect(
@@ -113,7 +114,7 @@ def _expect(
     spare = model.odd_degrees_of_freedom
     findings = []
     if spare < SPARE:
-        text = f"{spare} spare degrees of freedom: "
+        text = f"{counted(spare, 'spare degree')} of freedom: "
         text += "this set cannot estimate its own noise" if spare < 1 else "the noise will be poorly estimated"
         findings.append(finding("few-spare-degrees", "strain set", text))
     named = dict(zip(basis.names, errors, strict=True))

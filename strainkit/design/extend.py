@@ -13,7 +13,7 @@ from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.aims import sharpest
 from strainkit.design.expect import expect, model_of
 from strainkit.design.jobs import REFERENCE, JobKind, StrainJob, percent, strained_jobs, units_of
-from strainkit.design.model import build_model
+from strainkit.design.model import Order, build_model
 from strainkit.design.shapes import largest_principal_of
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray
@@ -93,9 +93,11 @@ def finer_jobs(jobs: Sequence[StrainJob]) -> list[StrainJob]:
     ]
 
 
-def lost_constants(jobs: Sequence[StrainJob], symmetry: Symmetry, basis: ConstantBasis, by_pairs: bool = False) -> list[str]:
+def lost_constants(
+    jobs: Sequence[StrainJob], symmetry: Symmetry, basis: ConstantBasis, by_pairs: bool = False, order: Order = "linear"
+) -> list[str]:
     """Names of the constants that jobs do not determine; `by_pairs`: not to second order, by central differences."""
-    model = model_of(jobs, symmetry.rotations, basis)
+    model = model_of(jobs, symmetry.rotations, basis, order)
     if by_pairs:
         known = factorise(model.odd_matrix).determined[: len(basis.names)]
     else:
@@ -109,12 +111,14 @@ def restoring_jobs(
     symmetry: Symmetry,
     basis: ConstantBasis,
     by_pairs: bool = False,
+    order: Order = "linear",
 ) -> list[StrainJob]:
     """The fewest of the missing jobs that determine every constant again, the best one where one is enough.
 
-    Empty when nothing is lost or nothing helps. `by_pairs` is that of `lost_constants`; jobs then come with their opposites.
+    Empty when nothing is lost or nothing helps. `by_pairs` and `order` are those of `lost_constants`; with pairs, jobs come
+    with their opposites.
     """
-    if not lost_constants(present, symmetry, basis, by_pairs):
+    if not lost_constants(present, symmetry, basis, by_pairs, order):
         return []
     chosen: list[StrainJob] = []
     left = [job for job in missing if job.shape]
@@ -126,12 +130,12 @@ def restoring_jobs(
 
     def merit(step: list[StrainJob]) -> tuple[int, float]:
         trial = [*present, *chosen, *step]
-        return len(lost_constants(trial, symmetry, basis, by_pairs)), expect(trial, symmetry.rotations, basis)[0].largest
+        return len(lost_constants(trial, symmetry, basis, by_pairs, order)), expect(trial, symmetry.rotations, basis)[0].largest
 
     while left:
         best = min(steps(), key=merit)
         chosen += best
         left = [job for job in left if all(job is not other for other in best)]
-        if not lost_constants([*present, *chosen], symmetry, basis, by_pairs):
+        if not lost_constants([*present, *chosen], symmetry, basis, by_pairs, order):
             return chosen
     return []

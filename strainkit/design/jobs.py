@@ -8,13 +8,23 @@ from typing import Literal
 
 import numpy as np
 
-from strainkit.design.shapes import Shape
+from strainkit.design.shapes import Shape, same_magnitude
 from strainkit.errors import UsageError
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.sixvectors import to_mandel
 from strainkit.tensors.strain import gradient_from_strain, green_lagrange
 
-__all__ = ["REFERENCE", "JobKind", "StrainJob", "check_magnitude", "percent", "reference_job", "strained_jobs", "units_of"]
+__all__ = [
+    "REFERENCE",
+    "JobKind",
+    "StrainJob",
+    "check_magnitude",
+    "magnitudes_of",
+    "percent",
+    "reference_job",
+    "strained_jobs",
+    "units_of",
+]
 
 JobKind = Literal["reference", "strained", "finer", "displaced"]
 
@@ -80,6 +90,17 @@ def strained_jobs(units: FloatArray, magnitudes: Sequence[float], rotations: Flo
                 label = f"s{number}-{word}-{percent(size)}"
                 jobs.append(StrainJob(label, number, side * size, gradient_from_strain(side * size * unit)))
     return jobs
+
+
+def magnitudes_of(jobs: Sequence[StrainJob]) -> tuple[float, ...]:
+    """Distinct magnitudes (fractions) of the strained jobs, ascending; those that are one to second order as their mean."""
+    groups: list[list[float]] = []
+    for size in sorted(abs(job.magnitude) for job in jobs if job.shape):
+        if groups and same_magnitude(groups[-1][0], size):
+            groups[-1].append(size)
+        else:
+            groups.append([size])
+    return tuple(round(float(np.mean(group)), 9) for group in groups)
 
 
 def units_of(jobs: Sequence[StrainJob]) -> dict[int, FloatArray]:

@@ -15,7 +15,7 @@ from strainkit.design.aims import fewest, fewest_jobs, sharpest
 from strainkit.design.expect import ASSUMED_NOISE, expect
 from strainkit.design.jobs import StrainJob, percent, reference_job, strained_jobs
 from strainkit.design.symmetric import most_symmetric
-from strainkit.errors import UsageError
+from strainkit.errors import UsageError, counted
 from strainkit.findings import Finding, finding
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.constants import ConstantBasis
@@ -146,6 +146,6 @@ def _reach(
             )
         jobs = _jobs(aimed(symmetry, axes, "sharpest", count), magnitudes, symmetry)
     sizes = ", ".join(percent(m) for m in magnitudes)
-    notes.append(f"{len(jobs) - 1} strained jobs at {sizes} % promise {error(jobs):.3g} GPa for the worst constant")
+    notes.append(f"{counted(len(jobs) - 1, 'strained job')} at {sizes} % promise {error(jobs):.3g} GPa for the worst constant")
     text = f"target {wish.target_error:g} GPa at a noise of {wish.noise:g} GPa: {'; '.join(notes)}"
     return jobs, [finding("target-error", "strain set", text)]

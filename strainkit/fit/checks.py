@@ -9,11 +9,11 @@ from typing import Any
 
 import numpy as np
 
-from strainkit.design.jobs import StrainJob
+from strainkit.design.jobs import StrainJob, magnitudes_of
 from strainkit.design.model import Order
 from strainkit.findings import Finding, finding
 from strainkit.fit.energy import EnergyCheck, check_energies
-from strainkit.fit.magnitude import LEVEL, magnitudes_of
+from strainkit.fit.magnitude import LEVEL
 from strainkit.fit.nonlinearity import Response, Verdict, extra_terms_test, responses
 from strainkit.fit.outliers import MATTERS, find_outliers
 from strainkit.fit.regression import Layout, Regression, solve
@@ -148,8 +148,7 @@ def _curvature(
 ) -> tuple[float | None, str, list[Finding]]:
     """p-value of the cubic terms, the verdict, and what to say."""
     if linear is None or cubic is None:
-        text = "cubic terms leave constants undetermined"
-        return None, "curved beyond what this set can correct", [finding("curved", "strain set", text)]
+        return None, "cannot be told from these jobs", []
     _, p = extra_terms_test(linear, cubic)
     if p is None or p >= LEVEL:
         return p, "linear within noise", []
@@ -167,7 +166,7 @@ def _curvature(
     moved = f"{name} by {shift[worst]:.3g} GPa ({100 * part[worst]:.2g} %)"
     text = f"cubic response (p = {p:.2g}) of {shapes or 'the set'} moves {moved}"
     if beyond:
-        text += ": more than cubic terms can be trusted to correct; use smaller strains"
+        text += ": more than cubic terms can be trusted to correct; use smaller strains, or find the job that is wrong"
         return p, "curved beyond what this set can correct", [finding("curved", "strain set", text)]
     if order == "linear":
         code = "magnitude-matters" if part[worst] > 0.01 else "cubic-response"

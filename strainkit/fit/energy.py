@@ -132,7 +132,7 @@ def check_energies(
     errors = np.full(len(at), np.nan)
     if regression.covariance is not None:
         errors = np.sqrt(np.maximum(((a @ regression.covariance) * a).sum(axis=1), 0.0))
-    answer = apart @ np.tensordot(regression.values, matrices, axes=1)
+    answer = apart @ np.einsum("n,nij->ij", regression.values, matrices)
     slopes = scale * (up - down) / (2 * t) - even * t**2 / 3 - t * (answer * unit).sum(axis=1)
     bends = scale * (up + down - 2 * rest) / t**2 - cubic * t**2 / 2
     bends -= (answer * apart).sum(axis=1) + 2.0 / t * (apart @ known(regression.reference_stress))
@@ -195,7 +195,10 @@ def _verdict(pairs: list[PairCheck], energy_stress: FloatArray | None) -> Energy
     # a slope is wrong by so much as makes a difference of PART at one percent strain
     tilted = [p for p in pairs if slope_off(p) > max(PART * 0.01 * abs(p.curvature_stress), 0.02)]
     findings = []
-    causes = "a basis-set (Pulay) stress, ions not fully relaxed, or a term missing from the stress (dispersion, +U)"
+    causes = (
+        "a basis-set (Pulay) stress, ions not fully relaxed, a term missing from the stress (dispersion, +U), or a job of the "
+        "pair or the reference in another minimum"
+    )
     if bent:
         p = max(bent, key=off)
         text = f"energies give {p.curvature_energy:.2f}, stresses {p.curvature_stress:.2f} GPa for this shape: {causes}"

@@ -6,8 +6,9 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from strainkit.design.extend import restoring_jobs
-from strainkit.design.jobs import StrainJob
+from strainkit.design.extend import lost_constants, restoring_jobs
+from strainkit.design.jobs import StrainJob, magnitudes_of
+from strainkit.design.model import Order
 from strainkit.findings import Finding, finding
 from strainkit.fit.regression import Regression
 from strainkit.run.plan import Plan
@@ -15,21 +16,35 @@ from strainkit.tensors.arrays import known
 from strainkit.tensors.prestress import stress_strain_coefficients
 from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt
 
-__all__ = ["judge"]
+__all__ = ["judge", "what_determines"]
 
 #: residual stress above this part of the smallest diagonal constant is a warning
 NOTABLE_STRESS = 0.05
 
 
-def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob]) -> list[Finding]:
+def what_determines(plan: Plan, jobs: Sequence[StrainJob], order: Order) -> str:
+    """What would determine the constants that these jobs do not: planned jobs, or another magnitude for cubic terms."""
+    used = {job.label for job in jobs}
+    missing = [job for job in plan.strain_set if job.label not in used]
+    wanted = restoring_jobs(jobs, missing, plan.symmetry, plan.basis, order=order)
+    words = []
+    if not wanted and order != "linear":
+        sizes = magnitudes_of(plan.strain_set)
+        wanted = restoring_jobs(jobs, missing, plan.symmetry, plan.basis)
+        if len(sizes) == 1 and not lost_constants([*jobs, *wanted], plan.symmetry, plan.basis):
+            command = f"strainkit prepare --extend RUN --magnitude {50 * sizes[0]:g}"
+            words.append(f"{order} terms need jobs at a second magnitude too: {command}")
+    if wanted:
+        words.insert(0, f"with {' '.join(job.label for job in wanted)} they would")
+    return "; ".join(words) or "no planned job fixes these; more jobs may: strainkit prepare --extend RUN --more N"
+
+
+def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob], order: Order) -> list[Finding]:
     """Findings about a fit of the given jobs."""
     findings: list[Finding] = []
     lost = [name for name, known in zip(plan.basis.names, regression.determined, strict=True) if not known]
     if lost:
-        used = {job.label for job in jobs}
-        remedy = restoring_jobs(jobs, [j for j in plan.strain_set if j.label not in used], plan.symmetry, plan.basis)
-        names = " ".join(job.label for job in remedy)
-        text = f"the usable jobs do not determine these; with {names} they would" if remedy else "no planned job fixes these"
+        text = f"the usable jobs do not determine these; {what_determines(plan, jobs, order)}"
         findings.append(finding("undetermined-constants", ", ".join(lost), text))
     used = {job.label for job in jobs}
     absent = [job.label for job in plan.strain_set if job.label not in used]

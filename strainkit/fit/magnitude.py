@@ -12,16 +12,17 @@ from typing import Any
 
 import numpy as np
 
-from strainkit.design.jobs import StrainJob
+from strainkit.design.jobs import StrainJob, magnitudes_of
 from strainkit.design.model import build_model
 from strainkit.design.shapes import same_magnitude
 from strainkit.findings import Finding, finding
+from strainkit.fit.judge import what_determines
 from strainkit.fit.nonlinearity import extra_terms_test
 from strainkit.fit.regression import Estimator, Regression, regress
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
 
-__all__ = ["Convergence", "converge", "magnitudes_of"]
+__all__ = ["Convergence", "converge"]
 
 #: level of the test on the cubic terms
 LEVEL = 0.05
@@ -106,17 +107,6 @@ class Convergence:
         }
 
 
-def magnitudes_of(jobs: Sequence[StrainJob]) -> tuple[float, ...]:
-    """Distinct magnitudes (fractions) of the strained jobs, ascending; those that are one to second order as their mean."""
-    groups: list[list[float]] = []
-    for size in sorted(abs(job.magnitude) for job in jobs if job.shape):
-        if groups and same_magnitude(groups[-1][0], size):
-            groups[-1].append(size)
-        else:
-            groups.append([size])
-    return tuple(round(float(np.mean(group)), 9) for group in groups)
-
-
 def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise: float | None = None) -> Convergence:
     """Study the dependence on magnitude.
 
@@ -163,7 +153,14 @@ def converge(plan: Plan, jobs: Sequence[StrainJob], stresses: FloatArray, noise:
         plan.basis.names, sizes, tuple(each), common, zero, f, p, shift, shift_error, bias, bias_error, noise_error, None, ()
     )
     best = _best(partial)
-    return Convergence(**{**vars(partial), "best": best, "findings": tuple(_judge(partial, best))})
+    return Convergence(**{**vars(partial), "best": best, "findings": (*_lost(plan, jobs, common), *_judge(partial, best))})
+
+
+def _lost(plan: Plan, jobs: Sequence[StrainJob], common: Regression) -> list[Finding]:
+    """Constants that the jobs do not determine, and what would."""
+    lost = [name for name, known in zip(plan.basis.names, common.determined, strict=True) if not known]
+    text = f"the usable jobs do not determine these; {what_determines(plan, jobs, 'linear')}" if lost else ""
+    return [finding("undetermined-constants", ", ".join(lost), text)] if lost else []
 
 
 def _contrast(common: Regression, zero: Regression, level: float | None) -> tuple[FloatArray, FloatArray | None]:
@@ -214,7 +211,7 @@ def _judge(found: Convergence, best: float | None) -> list[Finding]:
         text = "the effect of the strain magnitude cannot be seen"
         half = 50 * found.magnitudes[0]
         findings.append(
-            finding("one-magnitude", f"{sizes} %", f"{text}; add another: prepare --extend RUN --magnitude {half:g}")
+            finding("one-magnitude", f"{sizes} %", f"{text}; add another: strainkit prepare --extend RUN --magnitude {half:g}")
         )
         return findings
     if found.p_value is None or found.shift is None:

@@ -20,6 +20,7 @@ Verdict = Literal[
     "curved; --order cubic corrects it",
     "curved and corrected",
     "curved beyond what this set can correct",
+    "cannot be told from these jobs",
     "cannot be told from one magnitude",
 ]
 

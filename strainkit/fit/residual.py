@@ -62,7 +62,7 @@ def treatments(
     matrices : (n, 6, 6)
         Mandel matrices of the constants, given frame.
     """
-    plain = np.tensordot(regression.values, matrices, axes=1)
+    plain = np.einsum("n,nij->ij", regression.values, matrices)
     t = from_mandel(known(regression.reference_stress))
     model = regression.estimator.model
     removed = second_stresses(gradients, remove_offset(stresses, gradients, offset))
@@ -70,5 +70,5 @@ def treatments(
     return [
         Treatment("C as fitted", stiffness_to_voigt(plain)),
         Treatment("B, stress real", stiffness_to_voigt(stress_strain_coefficients(plain, t))),
-        Treatment("C, stress an offset", stiffness_to_voigt(np.tensordot(cleared, matrices, axes=1))),
+        Treatment("C, stress an offset", stiffness_to_voigt(np.einsum("n,nij->ij", cleared, matrices))),
     ]

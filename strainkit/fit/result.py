@@ -12,12 +12,12 @@ from strainkit.collect.table import StressTable
 from strainkit.crystal.frames import Frame
 from strainkit.design.jobs import StrainJob
 from strainkit.design.model import Order
-from strainkit.errors import NoTensorError
+from strainkit.errors import IncompleteError, NoTensorError
 from strainkit.findings import Finding, finding
 from strainkit.fit.checks import Checks, examine
 from strainkit.fit.finer import FinerChange, finer_change
 from strainkit.fit.ions import RelaxedIons, relax_ions
-from strainkit.fit.judge import judge
+from strainkit.fit.judge import judge, what_determines
 from strainkit.fit.regression import Layout, Regression, second_stresses, solve
 from strainkit.fit.residual import ReferenceStress, remove_offset
 from strainkit.run.files import atomic_write, dump_json
@@ -81,11 +81,11 @@ class Fit:
 
         Raises
         ------
-        NoTensorError
+        IncompleteError
             When some constants are undetermined.
         """
         if self.undetermined:
-            raise NoTensorError(f"undetermined constants: {', '.join(self.undetermined)}", self.plan.crystal.name)
+            raise IncompleteError(f"undetermined constants: {', '.join(self.undetermined)}", self.plan.crystal.name)
         r, basis = self.regression, self.plan.basis
         spread = basis.matrices.reshape(len(basis.names), 36)
         covariance = None if r.covariance is None else spread.T @ r.covariance @ spread
@@ -167,7 +167,7 @@ class Fit:
         r, basis = self.regression, self.plan.basis
         turned = rotate_matrix(frame.rotation, basis.matrices)
         unknown = (np.abs(turned[~r.determined]) > 1e-7).any(axis=0)
-        mandel = np.tensordot(known(r.values), turned, axes=1)
+        mandel = np.einsum("n,nij->ij", known(r.values), turned)
         variance = np.full((6, 6), np.nan)
         if r.covariance is not None:
             flat = turned.reshape(len(turned), 36)
@@ -242,7 +242,8 @@ def fit_run(
     layout = Layout(green_lagrange(gradients), plan.symmetry.rotations, plan.basis.matrices, plan.standard_axes)
     regression = solve(layout.estimator(order), second_stresses(gradients, stresses), noise)
     if not regression.determined.any():
-        raise NoTensorError("the usable jobs determine no constant", plan.crystal.name, "See: strainkit progress RUN")
+        what = f"the usable jobs do not determine the constants; {what_determines(plan, jobs, order)}"
+        raise NoTensorError(what, plan.crystal.name, "See: strainkit progress RUN")
     energies = {record.label: record.energy for record in table.records}
     checks = examine(plan, jobs, stresses, [energies[job.label] for job in jobs], regression, layout, order)
     finer = finer_change(plan, table, regression)
@@ -259,7 +260,7 @@ def fit_run(
         checks=checks,
         finer=finer,
         relaxed=relaxed,
-        findings=(*_carried(table, used), *doubts, *judge(plan, regression, jobs), *checks.findings, *changes, *remarks),
+        findings=(*_carried(table, used), *doubts, *judge(plan, regression, jobs, order), *checks.findings, *changes, *remarks),
     )
 
 

@@ -45,7 +45,8 @@ def extend_plan(plan: Plan, new: Sequence[StrainJob], displacements: Mapping[str
 def adopt_jobs(plan: Plan, adopted: Sequence[StrainJob]) -> Plan:
     """The plan with jobs that are finished already, and of its own strained jobs only those that are needed beside them.
 
-    These are the fewest that determine every constant; none when the adopted ones do. A reference job stays in any case.
+    These are the fewest that determine every constant; none when the adopted ones do. A reference job stays in any case, and
+    so do displaced cells.
     """
     reference = [job for job in adopted if not job.shape][:1] or [plan.jobs[0]]
     others = [job for job in adopted if job.shape]
@@ -54,8 +55,9 @@ def adopt_jobs(plan: Plan, adopted: Sequence[StrainJob]) -> Plan:
     needed = restoring_jobs([*reference, *others], own, plan.symmetry, plan.basis, by_pairs=True)
     # of a pair whose one side is there already, only the other
     needed = [job for job in needed if not any(_same_strain(job, other) for other in others)]
-    jobs = (*reference, *others, *needed)
-    promise, doubts = expect(jobs, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
+    strained = (*reference, *others, *needed)
+    jobs = (*strained, *(job for job in plan.jobs if job.kind == "displaced"))
+    promise, doubts = expect(strained, plan.symmetry.rotations, plan.basis, plan.expectation.noise)
     kept = tuple(f for f in plan.findings if f.code not in ("few-spare-degrees", "target-error"))
     return replace(plan, jobs=jobs, expectation=promise, findings=(*kept, *doubts))
 
@@ -82,6 +84,8 @@ def at_finer_settings(plan: Plan, settings: Settings, displacements: Mapping[str
         )
     if not settings.deck and not settings.engine:
         raise InputError("neither [deck] nor [engine] settings", settings.source, "Say what is finer: cutoff, kmesh, grid.")
+    if settings.pseudopotentials or settings.folder:
+        raise InputError("finer jobs keep the pseudopotentials of the run", settings.source, "Leave [pseudopotentials] out.")
     finer: dict[str, Any] = {"engine": settings.engine}
     if settings.deck:
         record = dict(plan.calculation)

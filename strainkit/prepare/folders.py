@@ -25,12 +25,11 @@ def write_folder(out: Path, files: Mapping[str, str], folders: Iterable[str] = (
         out.parent.mkdir(parents=True, exist_ok=True)
         building = Path(tempfile.mkdtemp(prefix=f".{out.name}.", dir=out.parent))
         try:
-            for folder in folders:
-                (building / folder).mkdir(parents=True, exist_ok=True)
+            for folder in {*folders, *map(os.path.dirname, files)}:
+                os.makedirs(building / folder, exist_ok=True)
             for name, text in files.items():
-                path = building / name
-                path.parent.mkdir(parents=True, exist_ok=True)
-                path.write_text(text, encoding="utf-8")
+                with open(building / name, "w", encoding="utf-8") as file:
+                    file.write(text)
             building.chmod(0o755)
             os.rename(building, out)
         except BaseException:

@@ -58,9 +58,18 @@ def atom_kinds(crystal: Crystal) -> tuple[list[Kind], list[int]]:
     return kinds, [distinct.index(key) for key in keys]
 
 
+#: 16 decimals: 16 or more significant digits for lengths above 1 A
+_ROW = "%20.16f %20.16f %20.16f"
+
+
 def numbers(values: FloatArray) -> str:
-    """Numbers on one line with 16 decimals: 16 or more significant digits for lengths above 1 A."""
-    return " ".join(["%20.16f" % x for x in np.asarray(values).tolist()])  # noqa: UP031 (half the time of an f-string)
+    """Three numbers on one line with 16 decimals."""
+    return _ROW % tuple(np.asarray(values).tolist())
+
+
+def _lines(rows: FloatArray, pattern: str) -> list[str]:
+    """Lines from rows (n, 3), three numbers each, and a pattern of n lines: one formatting call is several times faster."""
+    return (pattern % tuple(rows.ravel().tolist())).split("\n")
 
 
 def _lattice(crystal: Crystal, before: tuple[str, ...] = ("", "", "")) -> list[str]:
@@ -72,7 +81,7 @@ def poscar_text(crystal: Crystal, title: str) -> str:
     runs = [(symbol, len(list(group))) for symbol, group in groupby(crystal.symbols)]
     lines = [title, "1.0", *_lattice(crystal)]
     lines += [" ".join(symbol for symbol, _ in runs), " ".join(str(count) for _, count in runs), "Direct"]
-    lines += [numbers(row) for row in crystal.positions]
+    lines += _lines(crystal.positions, "\n".join([_ROW] * len(crystal.numbers)))
     return "\n".join(lines) + "\n"
 
 
@@ -84,9 +93,11 @@ def cif_text(crystal: Crystal, title: str) -> str:
     lines += ["_space_group_name_H-M_alt 'P 1'", "loop_", "_space_group_symop_operation_xyz", "'x, y, z'", "loop_"]
     lines += [f"_atom_site_{key}" for key in ("label", "type_symbol", "fract_x", "fract_y", "fract_z", "occupancy")]
     seen: Counter[str] = Counter()
-    for symbol, (x, y, z) in zip(crystal.symbols, crystal.positions.tolist(), strict=True):
+    sites = []
+    for symbol in crystal.symbols:
         seen[symbol] += 1
-        lines.append(f"{symbol}{seen[symbol]} {symbol} {x:.16f} {y:.16f} {z:.16f} 1.0")
+        sites.append(f"{symbol}{seen[symbol]} {symbol} %.16f %.16f %.16f 1.0")
+    lines += _lines(crystal.positions, "\n".join(sites))
     return "\n".join(lines) + "\n"
 
 

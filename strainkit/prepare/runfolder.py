@@ -12,7 +12,7 @@ from strainkit.crystal.frames import FRAMES, crystal_frame
 from strainkit.crystal.judge import judge_cell, judge_setting
 from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetrize import symmetrize as symmetrized
-from strainkit.crystal.symmetry import DEFAULT_SYMPREC, find_symmetry, tolerance_ladder
+from strainkit.crystal.symmetry import DEFAULT_SYMPREC, tolerance_ladder
 from strainkit.design.expect import expect
 from strainkit.design.jobs import StrainJob
 from strainkit.design.strainset import Wish, choose_strains
@@ -77,14 +77,13 @@ def plan_run(
         moved = symmetrized(crystal, symprec)
         crystal, problems = moved.crystal, [*problems, moved.finding]
     moves = _atom_moves(atoms, ions, molecules, crystal)
-    symmetry = find_symmetry(crystal, symprec)
+    symmetry, _, changes = tolerance_ladder(crystal, symprec)
     frames = {name: crystal_frame(name, symmetry) for name in FRAMES}
     if not isinstance(wish, Wish):
         wish = Wish(magnitudes=tuple(wish))
     basis = basis_of_group(symmetry.rotations, frames["ieee"].rotation)
     jobs, remarks = choose_strains(crystal, symmetry, basis, wish)
     expectation, doubts = expect(jobs, symmetry.rotations, basis, wish.noise, guess, naming=frames["ieee"].rotation)
-    _, changes = tolerance_ladder(crystal, symprec, symmetry)
     if displaced:
         if ions != "clamped":
             raise UsageError("displaced cells belong to clamped ions", "--displaced", "Relaxed ions need none.")

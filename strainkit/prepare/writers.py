@@ -132,7 +132,8 @@ def format_findings(names: Sequence[str]) -> list[Finding]:
         finding(
             "orientation-not-in-format",
             FORMATS[name].file_name,
-            "holds cell lengths and angles only: its reader chooses the axes, and the stress comes back in those",
+            f"{name.upper()} holds cell lengths and angles only: its reader chooses the axes, and the stress comes back in "
+            "those",
         )
         for name in names
         if not FORMATS[name].keeps_orientation

@@ -9,7 +9,7 @@ from typing import Any
 
 from strainkit.present.text import heading, paragraph
 
-__all__ = ["calculation_lines", "settings_text"]
+__all__ = ["calculation_lines", "finer_lines", "settings_text"]
 
 _TASKS = {
     "cell": "cell and ions relaxed",
@@ -38,6 +38,16 @@ def calculation_lines(calculation: Mapping[str, Any], out: Path | None) -> list[
         place = f"cd {shlex.quote(str(out))} && " if out is not None else ""
         lines += ["  submit it yourself:", f"    {place}{calculation['submit']}"]
     return lines
+
+
+def finer_lines(calculation: Mapping[str, Any], finer: Mapping[str, Any]) -> list[str]:
+    """What differs in the jobs at finer settings; nothing when there are none."""
+    settings, changed = calculation.get("settings", {}), finer.get("calculation", {})
+    other = {key: value for key, value in changed.get("settings", {}).items() if value != settings.get(key)}
+    if changed and changed["kmesh"] != calculation["kmesh"]:
+        other["k-mesh"] = "x".join(map(str, changed["kmesh"]))
+    other |= finer.get("engine") or {}
+    return [paragraph(f"finer     {settings_text(other)}, in the jobs at finer settings", "  ")] if other else []
 
 
 def settings_text(settings: Mapping[str, Any]) -> str:

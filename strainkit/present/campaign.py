@@ -12,6 +12,7 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
+from strainkit.errors import counted
 from strainkit.prepare.assemble import Estimate, Made
 from strainkit.present.text import columns, heading, paragraph
 from strainkit.run.campaign import Refusal
@@ -38,12 +39,12 @@ def size_text(size: float) -> str:
 
 def estimate_text(estimate: Estimate) -> str:
     """What is about to be written, on one line."""
-    kept = f"; {estimate.kept} crystals are there already" if estimate.kept else ""
+    kept = f"; {counted(estimate.kept, 'crystal')} there already" if estimate.kept else ""
     if not estimate.crystals:
         return f"nothing to write{kept}"
     return (
-        f"{estimate.crystals} crystals, {estimate.jobs} jobs: {estimate.files} files, about {size_text(estimate.bytes)} "
-        f"of disk{kept}"
+        f"{counted(estimate.crystals, 'crystal')}, {counted(estimate.jobs, 'job')}: {counted(estimate.files, 'file')}, "
+        f"about {size_text(estimate.bytes)} of disk{kept}"
     )
 
 
@@ -51,7 +52,10 @@ def made_text(made: Made, out: Path | None) -> str:
     """The campaign, its classes, the refused cells with reasons, and how its jobs are submitted."""
     estimate = made.estimate
     place = "" if out is None else f" in {out}"
-    lines = [heading(f"Campaign of {estimate.crystals + estimate.kept} crystals{place}"), f"  {estimate_text(estimate)}"]
+    lines = [
+        heading(f"Campaign of {counted(estimate.crystals + estimate.kept, 'crystal')}{place}"),
+        f"  {estimate_text(estimate)}",
+    ]
     lines.append("  Laue classes: " + ", ".join(f"{count} x {name}" for name, count in estimate.laue_classes.items()))
     if made.submit and out is not None:
         lines += ["  submit it yourself:", f"    cd {shlex.quote(str(out))} && {made.submit}"]
@@ -61,7 +65,7 @@ def made_text(made: Made, out: Path | None) -> str:
 def _refused_lines(refused: Sequence[Refusal]) -> list[str]:
     if not refused:
         return []
-    lines = ["", heading(f"{len(refused)} cells cannot be used")]
+    lines = ["", heading(f"{counted(len(refused), 'cell')} cannot be used")]
     lines += [paragraph(f"{r.source}: {r.reason}", "  ") for r in refused[:_SHOWN]]
     return lines + ([f"  and {len(refused) - _SHOWN} more (see --json)"] if len(refused) > _SHOWN else [])
 
@@ -75,7 +79,7 @@ def tally_text(
         lines.append(columns([[word, str(count), meaning] for word, (count, meaning) in counts.items()], left=1))
     lines += [paragraph(note, "  ") for note in notes]
     if problems:
-        lines += ["", heading(f"{len(problems)} crystals to look at")]
+        lines += ["", heading(f"{counted(len(problems), 'crystal')} to look at")]
         lines += [paragraph(f"{name}: {reason}", "  ") for name, reason in list(problems.items())[:_SHOWN]]
         if len(problems) > _SHOWN:
             lines.append(f"  and {len(problems) - _SHOWN} more (see --json)")
@@ -93,7 +97,7 @@ def next_text(again: int, folder: Path, scripted: bool, asked: bool, written: Ma
     if not again:
         return []
     place = shlex.quote(str(folder))
-    lines = ["", f"  {again} jobs are worth another run"]
+    lines = ["", f"  worth another run: {counted(again, 'job')}"]
     if written:
         lines += [f"  wrote {' '.join(written['lists'])}; submit them yourself:", f"    cd {place} && {written['submit']}"]
     elif scripted:

@@ -99,7 +99,7 @@ def places(derived: Derived) -> list[tuple[str, str, Along]]:
     rows = [(indices_text(axis.indices, False), letters, axis.along) for letters, axis in _alike_axes(derived)]
     rows += [(indices_text(d.indices, False), f"asked for; {d.length:.3f} A long", d.along) for d in derived.directions]
     rows += [
-        (f"normal of {indices_text(p.indices, True)}", f"asked for; d-spacing {p.spacing:.3f} A", p.along_normal)
+        (f"normal of {indices_text(p.indices, True)}", f"asked for; d {p.lattice_spacing:.3f} A", p.along_normal)
         for p in derived.planes
     ]
     return rows

@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from strainkit.errors import counted
 from strainkit.fit.magnitude import Convergence
 from strainkit.fit.regression import Regression
 from strainkit.fit.result import Fit
@@ -148,7 +149,7 @@ def _one_shape(shape: ShapeData, noise: float | None, frame: str) -> Drawing:
     strains = ", ".join(f"{c} {plain(x, 2)}" for c, x in zip(COMPONENTS, shape.unit, strict=True) if abs(x) > 5e-3)
     largest = 1e3 * float(np.abs(shape.residual).max())
     words = [
-        f"Stress against strain for shape {shape.name} ({strains}), {len(shape.labels)} jobs.",
+        f"Stress against strain for shape {shape.name} ({strains}), {counted(len(shape.labels), 'job')}.",
         f"Largest residual {largest:.2g} MPa.",
     ]
     caption = (

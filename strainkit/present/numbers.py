@@ -10,8 +10,8 @@ __all__ = ["plain", "uncertain"]
 def uncertain(value: float | None, error: float | None, digits: int = 2) -> str:
     """Value with its standard error in the last digits: uncertain(12.345, 0.42) is "12.35(42)".
 
-    The error keeps two digits below 20 units of the last place and one above ("12.3(4)"). Without an error the value is
-    printed with `digits` decimals; unknown values are a dash.
+    The error keeps two digits below 20 units of the last place and one above ("12.3(4)"); one that six decimals do not show
+    is "(0)". Without an error the value is printed with `digits` decimals; unknown values are a dash.
     """
     if value is None or not math.isfinite(value):
         return "-"
@@ -25,7 +25,7 @@ def uncertain(value: float | None, error: float | None, digits: int = 2) -> str:
     if places <= 0:
         return f"{round(value, places):.0f}({round(error, places):.0f})"
     if places > 6:
-        return f"{value:.6f}(<1)"
+        return f"{value:.6f}({round(error * 1e6)})"
     return f"{value:.{places}f}({round(error * 10**places)})"
 
 

@@ -50,7 +50,10 @@ def _one_plane(plane: OnPlane) -> list[str]:
     if cut is not None:
         bonds = "no bonds" if cut.bonds_per_nm2 == 0 else f"{cut.bonds_per_nm2:.1f} bonds a nm^2"
         gap = f"a gap of {cut.gap:.2f} A" if cut.gap > 0 else f"molecules interlocked by {-cut.gap:.2f} A"
-        where_to = f"lattice planes {plane.lattice_spacing:.3f} A apart; the easiest flat cut crosses {bonds}, {gap}"
+        apart = f"{plane.lattice_spacing:.3f} A apart"
+        if abs(plane.spacing - plane.lattice_spacing) > 1e-6 * plane.spacing:
+            apart += f" (centring counted; by the indices alone {plane.spacing:.3f} A)"
+        where_to = f"lattice planes {apart}; the easiest flat cut crosses {bonds}, {gap}"
         lines.append(paragraph(where_to, "    "))
     return lines
 

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import shlex
+from collections import Counter
 from collections.abc import Mapping
 from pathlib import Path
 
-from strainkit.collect.progress import STATES, Progress
+from strainkit.collect.progress import STATES, JobState, Progress
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
 
@@ -17,10 +18,8 @@ def progress_text(progress: Progress, run: Path, plan: Plan, written: Mapping[st
     """Counts a state, jobs that need attention, core hours, and what to resubmit and how."""
     total = len(progress.jobs)
     lines = [heading(f"{len(progress.table.usable)} of {total} jobs usable")]
-    for state, count in progress.counts.items():
-        meaning = STATES[state][0]
-        if state == "missing" and progress.asked:
-            meaning = "neither begun nor in the queue"
+    found = Counter((job.state, _meaning(job, progress.asked)) for job in progress.jobs)
+    for (state, meaning), count in sorted(found.items(), key=lambda item: list(STATES).index(item[0][0])):
         lines.append(paragraph(f"{state:12s}{count:4d}  {meaning}", "  "))
     rows = [
         [job.record.label, job.state, str(job.attempts.count), f"{job.attempts.core_hours:.2f}", _last(job.attempts.ended)]
@@ -38,6 +37,13 @@ def progress_text(progress: Progress, run: Path, plan: Plan, written: Mapping[st
     return "\n".join(
         [*lines, "", findings_text([*progress.findings, *(f for job in progress.jobs for f in job.record.findings)])]
     )
+
+
+def _meaning(job: JobState, asked: bool) -> str:
+    """What its state means."""
+    if job.state == "missing" and asked:
+        return "neither begun nor in the queue"
+    return job.record.meaning if job.state == "done" else STATES[job.state][0]
 
 
 def _last(ended: str) -> str:

@@ -12,7 +12,8 @@ from pathlib import Path
 from typing import Any
 
 from strainkit import __version__
-from strainkit.collect.table import STATUSES, TABLE, StressTable
+from strainkit.collect.table import TABLE, StressTable
+from strainkit.errors import counted
 from strainkit.present.calculation import settings_text
 from strainkit.present.report_page import Block, Cell, Facts, Paragraph, Row, Section, Table
 from strainkit.present.terminal import molecules_text
@@ -50,7 +51,7 @@ def provenance_section(plan: Plan, table: StressTable, run: Path | None) -> Sect
     ]
     if plan.molecules is not None:
         facts.append(("Molecules", molecules_text(plan.molecules).removeprefix("molecules "), ""))
-    jobs = f"{len(plan.strain_set) - 1} strained jobs and the reference, ions {plan.ions}"
+    jobs = f"{counted(len(plan.strain_set) - 1, 'strained job')} and the reference, ions {plan.ions}"
     facts.append(("Strain set", f"aim {plan.aim}", jobs))
     facts += _outputs(plan, table, run)
     facts += _calculation(plan.calculation)
@@ -135,7 +136,7 @@ def _jobs(table: StressTable) -> Table:
         force = "-" if record.max_force is None else Cell(f"{record.max_force:.2g}", record.max_force)
         energy = "-" if record.energy is None else Cell(f"{record.energy:.6f}", record.energy)
         digest = Cell(record.file_sha256[:16] or "-", whole=record.file_sha256)
-        status = Cell(record.status, whole=STATUSES[record.status])
+        status = Cell(record.status, whole=record.meaning)
         rows.append([record.label, status, record.file or "-", digest, energy, force])
     caption = (
         "What came back: status, file, the first digits of its SHA-256 (all of them in stresses.json), free energy, largest "

@@ -9,6 +9,7 @@ import numpy as np
 
 from strainkit.collect.table import StressTable
 from strainkit.derive.derived import Derived
+from strainkit.errors import counted
 from strainkit.findings import Finding, worst
 from strainkit.fit.finer import FinerChange
 from strainkit.fit.result import Fit
@@ -106,7 +107,7 @@ def _percent(value: float) -> str:
 def _finer(fit: Fit) -> str:
     if fit.finer is None:
         return "finer settings were not tried"
-    return f"finer settings, tried on {len(fit.finer.labels)} jobs, move {_largest_change(fit.finer, fit)}"
+    return f"finer settings, tried on {counted(len(fit.finer.labels), 'job')}, move {_largest_change(fit.finer, fit)}"
 
 
 def _largest_change(finer: FinerChange, fit: Fit) -> str:

@@ -12,9 +12,10 @@ from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.molecules import Molecules
 from strainkit.crystal.symmetry import Symmetry
 from strainkit.design.cost import JobCost
+from strainkit.errors import counted
 from strainkit.fit.finer import FinerChange
 from strainkit.fit.result import Fit
-from strainkit.present.calculation import calculation_lines
+from strainkit.present.calculation import calculation_lines, finer_lines
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.text import columns, findings_text, heading, paragraph
 from strainkit.run.plan import Plan
@@ -85,32 +86,44 @@ def _promise(plan: Plan) -> str:
 def plan_text(plan: Plan, out: Path | None = None, costs: Sequence[JobCost] = ()) -> str:
     """The plan of a run: constants, jobs, expected errors, and how its jobs are computed and submitted."""
     known = {cost.label: cost for cost in costs}
+    pointed = any(cost.kpoints for cost in costs)
+    more = [*(["class"] if known else []), *(["k"] if pointed else [])]
     rows = [
         [
             job.label,
             f"{100 * abs(job.magnitude):.4g}",
             *(plain(100 * x) for x in strain_to_voigt(job.strain)),
-            *([known[job.label].laue_class, str(known[job.label].kpoints or "")] if known else []),
+            *([known[job.label].laue_class] if known else []),
+            *([str(known[job.label].kpoints or "")] if pointed else []),
         ]
         for job in plan.strain_set
     ]
     lines = [
         *_head(plan),
         "",
-        heading(f"{len(plan.strain_set) - 1} strained jobs and the reference, aim {plan.aim}, ions {plan.ions}"),
-        columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS), *(["class", "k"] if known else [])]),
+        heading(f"{counted(len(plan.strain_set) - 1, 'strained job')} and the reference, aim {plan.aim}, ions {plan.ions}"),
+        columns(rows, ["job", "size %", *(f"{c} %" for c in COMPONENTS), *more]),
         *_kpoints(plan, costs),
         *_beyond(plan),
-        f"  starting cells: {_MOVES[plan.atoms]}",
+        paragraph(f"starting cells: {_moves(plan)}", "  "),
         "  Green-Lagrange strain, engineering shear, in the frame of the input cell",
         _promise(plan),
         f"  spare degrees of freedom {plan.expectation.spare}; cost by lost symmetry about "
         f"{plan.expectation.relative_cost:g} reference jobs",
         *calculation_lines(plan.calculation, out),
+        *finer_lines(plan.calculation, plan.finer),
         "",
         findings_text(plan.findings),
     ]
     return "\n".join(lines)
+
+
+def _moves(plan: Plan) -> str:
+    """Where the ions of the jobs start."""
+    known = sum(job.label in plan.starts for job in plan.jobs)
+    others = sum(bool(job.shape) for job in plan.jobs) - known
+    words = [f"{_MOVES[plan.atoms]} in {counted(others, 'job')}" if known else _MOVES[plan.atoms]] if others else []
+    return ", ".join([*words, *([f"ions where they are expected to go in {counted(known, 'job')}"] if known else [])])
 
 
 def _kpoints(plan: Plan, costs: Sequence[JobCost]) -> list[str]:
@@ -128,9 +141,9 @@ def _beyond(plan: Plan) -> list[str]:
     counts = Counter(job.kind for job in plan.jobs)
     words = []
     if counts["displaced"]:
-        words.append(f"  and {counts['displaced']} displaced cells, for the answer of the ions")
+        words.append(f"  and {counted(counts['displaced'], 'displaced cell')}, for the answer of the ions")
     if counts["finer"]:
-        words.append(f"  and {counts['finer']} of these jobs again at finer settings")
+        words.append(f"  and {counts['finer']} of the jobs above again at finer settings")
     return words
 
 
@@ -146,12 +159,12 @@ def inspection_text(
     rows, classes = [], []
     for plan, cost in zip(plans, costs, strict=True):
         e = plan.expectation
-        points = "" if mesh is None else str(sum(c.kpoints or 0 for c in cost[1:]))
+        points = [] if mesh is None else [str(sum(c.kpoints or 0 for c in cost[1:]))]
         sharp = [f"{x:.2g}" if x is not None else "-" for x in (e.largest, e.averages["bulk"], e.averages["shear"])]
-        rows.append([plan.aim, str(len(plan.strain_set) - 1), str(e.spare), f"{e.relative_cost:g}", points, *sharp])
+        rows.append([plan.aim, str(len(plan.strain_set) - 1), str(e.spare), f"{e.relative_cost:g}", *points, *sharp])
         kinds = Counter(c.laue_class for c in cost[1:])
         classes.append(f"  {plan.aim}: cells of Laue class {', '.join(f'{n} x {k}' for k, n in kinds.items())}")
-    header = ["aim", "jobs", "spare", "cost", "k-points" if mesh else "", "worst C", "K", "G"]
+    header = ["aim", "jobs", "spare", "cost", *(["k-points"] if mesh else []), "worst C", "K", "G"]
     lines = [
         *_head(first),
         "",
@@ -174,9 +187,10 @@ def inspection_text(
 
 def table_text(table: StressTable, every: bool = False) -> str:
     """States of the jobs by class, and what is wrong with the ones that cannot be used."""
-    counts = Counter(record.status for record in table.records)
+    counts = Counter((record.status, record.meaning) for record in table.records)
+    ordered = sorted(counts.items(), key=lambda item: list(STATUSES).index(item[0][0]))
     lines = [heading(f"{len(table.usable)} of {len(table.records)} jobs usable")]
-    lines.append(columns([[s, str(counts[s]), meaning] for s, meaning in STATUSES.items() if counts[s]], left=3))
+    lines.append(columns([[s, str(n), meaning] for (s, meaning), n in ordered], left=3))
     if every:
         rows = [
             [r.label, r.status, *(plain(None if r.stress is None else r.stress[i]) for i in range(6))] for r in table.records
@@ -199,11 +213,13 @@ def fit_text(fit: Fit, frame: str = "ieee") -> str:
         value = uncertain(constant["value_GPa"], constant["standard_error_GPa"])
         rows.append([constant["name"], value, f"{plain(low, 2)} to {plain(high, 2)}", change])
     noise, dof = fit.regression.noise, fit.regression.degrees_of_freedom
-    source = "given" if dof is None else f"from {dof} degrees of freedom"
+    source = "given" if dof is None else f"from {counted(dof, 'degree')} of freedom"
     chosen = fit.plan.frames[frame]
     stress = stress_to_voigt(chosen.rotation @ fit.reference_stress @ chosen.rotation.T)
     lines = [
-        heading(f"{fit.plan.crystal.name}: stiffness, {len(fit.jobs_used)} jobs, ions {fit.plan.ions}, order {fit.order}"),
+        heading(
+            f"{fit.plan.crystal.name}: stiffness, {counted(len(fit.jobs_used), 'job')}, ions {fit.plan.ions}, order {fit.order}"
+        ),
         columns(rows, ["IEEE axes", "GPa", "95 % interval", "" if fit.finer is None else "finer settings"]),
         *_relaxed_ions(fit, data["relaxed_ion"]),
         "",
@@ -250,8 +266,8 @@ def _changes(finer: FinerChange) -> list[str]:
 def _finer_words(fit: Fit) -> str:
     """Whether finer settings were tried."""
     if fit.finer is None:
-        return "not tried (prepare --extend RUN --finer FILE)"
-    return f"{len(fit.finer.labels)} jobs compared; ~ marks what they do not fix by themselves"
+        return "not tried (strainkit prepare --extend RUN --finer FILE)"
+    return f"{counted(len(fit.finer.labels), 'job')} compared; ~ marks what they do not fix by themselves"
 
 
 def _energy_words(fit: Fit) -> str:
@@ -263,6 +279,9 @@ def _energy_words(fit: Fit) -> str:
     values = f"{worst.curvature_energy:.2f} against {worst.curvature_stress:.2f} GPa at worst"
     if check.curvature_agrees and check.slope_agrees:
         return f"agree with the stresses ({values})"
+    if check.curvature_agrees:
+        worst = max(check.pairs, key=lambda p: abs(p.slope_energy - p.slope_stress))
+        values = f"reference stress {worst.slope_energy:.3f} against {worst.slope_stress:.3f} GPa at worst"
     return f"do NOT agree with the stresses ({values})"
 
 

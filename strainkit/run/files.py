@@ -10,6 +10,7 @@ import re
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -83,19 +84,31 @@ def _text(value: Any, line: str) -> str:
         return _text(value.tolist(), line)
     inside = line + " "
     if isinstance(value, dict):
-        items = (f"{json.dumps(str(key), ensure_ascii=False)}: {_text(item, inside)}" for key, item in value.items())
+        items = (f"{_key(str(key))}: {_text(item, inside)}" for key, item in value.items())
         return f"{{{inside}{f',{inside}'.join(items)}{line}}}" if value else "{}"
     if isinstance(value, list | tuple):
         if not value:
             return "[]"
         if _PLAIN.issuperset(map(type, value)):
-            text = json.dumps(value)  # one call for all numbers
-            return re.sub("-?Infinity|NaN", "null", text) if "N" in text or "I" in text else text
+            return _finite(json.dumps(value))  # one call for all numbers
         value = [item.tolist() if hasattr(item, "tolist") else item for item in value]
+        if all(type(item) is list and item and _PLAIN.issuperset(map(type, item)) for item in value):  # rows of an array
+            text = json.dumps(value).replace("], [", f"],{inside}[")
+            return f"[{inside}{_finite(text[1:-1])}{line}]"
         if not any(isinstance(item, str | dict | list | tuple) for item in value):
             return f"[{', '.join(_text(item, inside) for item in value)}]"
         return f"[{inside}{f',{inside}'.join(_text(item, inside) for item in value)}{line}]"
     return json.dumps(value)
+
+
+@lru_cache(4096)
+def _key(key: str) -> str:
+    return json.dumps(key, ensure_ascii=False)
+
+
+def _finite(text: str) -> str:
+    """Numbers as json writes them, with null for what is none."""
+    return re.sub("-?Infinity|NaN", "null", text) if "N" in text or "I" in text else text
 
 
 def load_json(path: Path, kind: str) -> dict[str, Any]:

@@ -9,6 +9,7 @@ from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from getpass import getuser
 from pathlib import Path
+from textwrap import shorten
 from typing import Literal
 from xml.etree import ElementTree
 
@@ -101,7 +102,7 @@ def ask_queue(run: Path, scheduler: str, job_name: str) -> dict[str, Queued]:
     try:
         done = subprocess.run(command, capture_output=True, text=True, timeout=60, check=False)
         if done.returncode != 0:
-            raise OSError(" ".join(done.stderr.split())[:200] or f"exit code {done.returncode}")
+            raise OSError(shorten(done.stderr, 200, placeholder=" ...") or f"exit code {done.returncode}")
         tasks = list(queue.tasks(done.stdout))
     except (OSError, subprocess.TimeoutExpired, ValueError, ElementTree.ParseError) as error:
         raise InputError(

@@ -25,7 +25,7 @@ def stress_strain_coefficients(mandel: FloatArray, stress: FloatArray) -> FloatA
     stress : (3, 3)
         Initial Cauchy stress t, GPa, positive in tension.
     """
-    part = np.tensordot(to_mandel(stress), _parts(), axes=1)
+    part = np.einsum("n,nij->ij", to_mandel(stress), _parts())
     return np.asarray(np.asarray(mandel, dtype=float) + part)
 
 

@@ -32,6 +32,9 @@ COMPONENTS = ("xx", "yy", "zz", "yz", "xz", "xy")
 
 _I = np.array([0, 1, 2, 1, 0, 0])
 _J = np.array([0, 1, 2, 2, 2, 1])
+#: places of the six components in the nine of a flat tensor, of their transposes, and of the nine in the six
+_FLAT, _TRANSPOSED = 3 * _I + _J, 3 * _J + _I
+_NINE = np.array([0, 5, 4, 5, 1, 3, 4, 3, 2])
 _W = np.array([1.0, 1.0, 1.0, 2.0**0.5, 2.0**0.5, 2.0**0.5])
 _WW = np.outer(_W, _W)
 
@@ -39,16 +42,14 @@ _WW = np.outer(_W, _W)
 def to_mandel(tensor: FloatArray) -> FloatArray:
     """Mandel 6-vector (..., 6) of a symmetric tensor (..., 3, 3); off-diagonal pairs are averaged."""
     tensor = np.asarray(tensor, dtype=float)
-    return np.asarray(0.5 * (tensor[..., _I, _J] + tensor[..., _J, _I]) * _W)
+    flat = tensor.reshape(*tensor.shape[:-2], 9)
+    return np.asarray(0.5 * (flat.take(_FLAT, axis=-1) + flat.take(_TRANSPOSED, axis=-1)) * _W)
 
 
 def from_mandel(vector: FloatArray) -> FloatArray:
     """Symmetric tensor (..., 3, 3) of a Mandel 6-vector (..., 6)."""
     vector = np.asarray(vector, dtype=float) / _W
-    out = np.empty((*vector.shape[:-1], 3, 3))
-    out[..., _I, _J] = vector
-    out[..., _J, _I] = vector
-    return out
+    return np.asarray(vector.take(_NINE, axis=-1).reshape(*vector.shape[:-1], 3, 3))
 
 
 def stress_to_voigt(tensor: FloatArray) -> FloatArray:

@@ -42,6 +42,8 @@ AXES = ("ieee", "crystal", "given")
 #: whatever the unit, a larger number is a slip of the pen
 _LARGEST = 1e9
 _WORDS = ("name", "source", "unit", "axes", "laue", "density", "temperature")
+#: those whose value is prose, in which commas and brackets stay
+_FREE = ("name", "source")
 _NUMBER = re.compile(r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?")
 _CONSTANT = re.compile(r"[Cc]_?([1-6])([1-6])\s*[=:]?\s*(.*)")
 _VALUE = re.compile(rf"({_NUMBER.pattern})(?:\((\d+)\)|\s*(?:\+-|\+/-|±)?\s*({_NUMBER.pattern}))?")
@@ -128,7 +130,8 @@ def parse_tensor(text: str, where: str = "tensor") -> TensorFile:
     rows: dict[str, list[list[str]]] = {"values": [], "errors": []}
     block = "values"
     for number, raw in enumerate(text.splitlines(), start=1):
-        line = re.sub(r"[\[\];,|]", " ", raw.split("#")[0]).strip()
+        written = raw.split("#")[0].strip()
+        line = re.sub(r"[\[\];,|]", " ", written).strip()
         place = f"{where}, line {number}"
         if not line:
             continue
@@ -140,7 +143,7 @@ def parse_tensor(text: str, where: str = "tensor") -> TensorFile:
         elif all(_NUMBER.fullmatch(cell) for cell in line.split()):
             rows[block].append(line.split())
         else:
-            _word(words, line, place)
+            _word(words, written if line.lower().startswith(_FREE) else line, place)
     if named and rows["values"]:
         raise InputError("both a matrix and named constants", where, "Keep one of them.")
     scale = _scale(words, where)

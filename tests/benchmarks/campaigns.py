@@ -33,11 +33,12 @@ from ase.spacegroup import Spacegroup
 from support.campaigns import published_law, return_jobs
 from support.crystals import SPACE_GROUPS, random_rotation, rewritten
 
-from strainkit.cli.each import FitOptions, collect_one, fit_one
+from strainkit.cli.each import collect_one, fit_one
 from strainkit.collect.readers import READERS, read_returned
 from strainkit.collect.table import load_table
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.read import read_crystal
+from strainkit.fit.options import FitOptions
 from strainkit.fit.result import fit_run
 from strainkit.prepare.runfolder import plan_run, write_run
 from strainkit.run.extxyz import RETURNED, extxyz_text
@@ -146,7 +147,8 @@ def memory(base: Path, runs: list[Path], count: int) -> float:
     """Peak memory, MB, of collect and fit of a campaign of so many crystals in a process of its own."""
     code = (
         "import resource, sys\nfrom functools import partial\nfrom pathlib import Path\n"
-        "from strainkit.cli.loop import loop\nfrom strainkit.cli.each import FitOptions, collect_one, fit_one\n"
+        "from strainkit.cli.loop import loop\nfrom strainkit.cli.each import collect_one, fit_one\n"
+        "from strainkit.fit.options import FitOptions\n"
         "loop(Path(sys.argv[1]), 'collect', partial(collect_one, False), 1, True)\n"
         "loop(Path(sys.argv[1]), 'fit', partial(fit_one, FitOptions(), True), 1, True)\n"
         "print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024)\n"

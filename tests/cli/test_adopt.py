@@ -58,7 +58,7 @@ def test_a_set_made_by_hand_needs_nothing_more(cli, cell, tmp_path):
     run = tmp_path / "run"
     made = cli("prepare", path, "--out", run, "--adopt", old)
     assert made.code == 0, made.err
-    assert "adopted 25 calculations; 0 jobs are left" in made.err
+    assert "adopted 25 calculations; 0 jobs left" in made.err
     assert (old / "case0" / "returned.extxyz").is_file()
     assert cli("collect", run).code == 0
     fit = cli("fit", run, "--frame", "given", "--json").json
@@ -138,3 +138,15 @@ def test_a_run_folder_is_no_cell(cli, cell, tmp_path):
     assert refused.code == 3
     assert "a folder that strainkit prepared" in refused.err
     assert cli("prepare", path, "--more", 4, "--out", tmp_path / "third").code == 2
+
+
+def test_displaced_cells_stay_beside_adopted_ones(cli, cell, tmp_path):
+    crystal, path = cell
+    returned(tmp_path / "old", crystal, np.eye(3), np.eye(3))
+    plain = cli("prepare", path, "--ions", "clamped", "--dry-run", "--json").json["jobs"]
+    wanted = [job["label"] for job in plain if job["kind"] == "displaced"]
+    assert wanted
+    made = cli("prepare", path, "--ions", "clamped", "--adopt", tmp_path / "old", "--out", tmp_path / "run", "--json")
+    assert made.code == 0, made.err
+    assert [job["label"] for job in made.json["jobs"] if job["kind"] == "displaced"] == wanted
+    assert cli("collect", tmp_path / "run", "--json").json["expected"] == len(made.json["jobs"])

@@ -254,6 +254,8 @@ def test_reports_and_comparison(cli, out):
     assert sum("problem" in c for c in result.json["crystals"]) == 4
     assert b"<html" in (out / first.run / "report.html").read_bytes()
     assert cli("report", out, "--json").json["kept"] == 1
+    assert cli("fit", out / first.run, "--noise", 0.5).code == 0
+    assert cli("report", out, "--json").json["written"] == 1  # a report older than the fit is not kept
 
 
 @pytest.mark.slow
@@ -325,6 +327,15 @@ def test_screening_table_says_what_derive_says(cli, out):
         assert row["density_kg_per_m3"] == pytest.approx(alone["density_kg_per_m3"])
 
 
+def test_the_screening_table_follows_the_last_fit_of_each_crystal(cli, out):
+    cli("collect", out)
+    assert cli("fit", out / load_campaign(out).members[0].run, "--noise", 0.5).code == 0
+    first, second = cli("derive", out, "--json").json["rows"][:2]
+    assert first["noise_GPa"] == 0.5
+    assert second["noise_GPa"] < 0.1  # the noise of the invented outputs is a hundredth of that
+    assert cli("derive", out, "--noise", 0.25, "--json").json["rows"][0]["noise_GPa"] == 0.25
+
+
 def test_a_crystal_without_a_tensor_stays_in_the_table(cli, out):
     cli("collect", out)
     member = load_campaign(out).members[0]
@@ -335,6 +346,10 @@ def test_a_crystal_without_a_tensor_stays_in_the_table(cli, out):
     fitted = cli("fit", out, "--json")
     assert fitted.code == 4
     assert fitted.json["fitted"] == 3
+    again = cli("fit", out)
+    assert again.err.startswith("0 crystals fitted, 3 unchanged")
+    assert f"({member.name})" not in again.out  # its name stands before the reason already
+    assert f"{member.name}: none of the" in " ".join(again.out.split())
     result = cli("derive", out, "--json")
     assert result.code == 4
     first, second = result.json["rows"][:2]

@@ -259,3 +259,35 @@ def test_a_campaign_is_its_crystals(cli, tmp_path):
     data = cli("compare", campaign, "--json").json
     assert [c["label"] for c in data["crystals"]] == ["one", "two"]
     assert len(data["energies"]) == 1  # the same metal twice: one form against the lower one
+
+
+def test_an_incomplete_crystal_of_a_campaign_does_not_stop_the_others(cli, tmp_path):
+    """Invented: copper at three lattice constants; one run loses a job, then another one everything."""
+    copper = bulk("Cu", "fcc", a=3.59)
+    for name, scale in (("one", 1.0), ("two", 1.001), ("three", 1.002)):
+        copper.set_cell(scale * bulk("Cu", "fcc", a=3.59).cell, scale_atoms=True)
+        copper.write(tmp_path / f"{name}.vasp", direct=True)
+    cells, campaign = [tmp_path / f"{name}.vasp" for name in ("one", "two", "three")], tmp_path / "campaign"
+    assert cli("prepare", *cells, "--out", campaign, "--ions", "clamped", "--no-displaced").code == 0
+    runs = {run.name: run for run in (campaign / "runs" / "001").iterdir()}
+    for run in runs.values():
+        assert cli("evaluate", run, "--engine", "emt", "--workers", 1).code == 0
+    for file in (runs["three"] / "jobs").glob("s1-*/returned.extxyz"):
+        file.unlink()
+    for run in runs.values():
+        cli("collect", run)
+    result = cli("compare", campaign, "--html", tmp_path / "c.html")
+    assert result.code == 4
+    assert "1 one" in result.out
+    assert "2 two" in result.out
+    assert "error not-compared" in result.out
+    assert "none of the" in result.out
+    assert "not-compared" in (tmp_path / "c.html").read_text()
+    data = cli("compare", campaign, "--json").json
+    assert [c["label"] for c in data["crystals"]] == ["one", "two"]
+    assert [f["where"] for f in data["findings"] if f["code"] == "not-compared"] == [str(runs["three"])]
+    (runs["two"] / "stresses.json").unlink()
+    result = cli("compare", campaign)
+    assert result.code == 4
+    assert "1 of 3" in result.err
+    assert "strainkit: compare" in result.err

@@ -5,6 +5,8 @@ from __future__ import annotations
 import pytest
 from support.files import SILICON, write
 
+from strainkit.shipped import shipped_folder
+
 TYPED = """# Gammon et al. 1983, 257 K (seen; see tests/data/published_stiffness.json)
 name ice Ih
 laue 6/mmm
@@ -134,3 +136,19 @@ def test_mistakes(cli, tmp_path, typed, lattice, arguments, code, message):
     assert result.code == code
     assert message in result.err
     assert result.out == ""
+
+
+def test_one_distance_of_lattice_planes(cli, tmp_path):
+    """Corundum, rhombohedrally centred: the obverse setting has -h+k+l = 3n, so (0 1 2) but not (0 1 -2).
+
+    Distances by hand from a 4.7589, c 12.991 A of the sample cell; the constants are invented.
+    """
+    tensor = write(tmp_path, "tensor.txt", "axes ieee\nC11 497\nC12 163\nC13 116\nC14 22\nC33 501\nC44 147\n")
+    cell = shipped_folder("sample_cells") / "corundum.cif"
+    by_indices = (4 / 3 / 4.7589**2 + 4 / 12.991**2) ** -0.5
+    page = " ".join(cli("derive", "--tensor", tensor, "--cell", cell, "--plane", "0,1,-2").out.split())
+    assert page.count(f"asked for; d {by_indices / 3:.3f} A") == 2
+    assert f"{by_indices / 3:.3f} A apart (centring counted; by the indices alone {by_indices:.3f} A)" in page
+    page = " ".join(cli("derive", "--tensor", tensor, "--cell", cell, "--plane", "0,1,2").out.split())
+    assert page.count(f"asked for; d {by_indices:.3f} A") == 2
+    assert "by the indices alone" not in page

@@ -43,3 +43,12 @@ def test_irreducible_points_of_every_job(cli, cell):
     # 3 x 3 x 3: Gamma and 26 points in pairs
     assert jobs["s1-plus-1"]["irreducible_kpoints"] == 14
     assert "times the reference's" in " ".join(cli("prepare", cell, "--dry-run", "--kspacing", 0.4).out.split())
+
+
+def test_an_unstable_guess_is_refused(cli, cell, tmp_path):
+    """C11 < C12: a tetragonal shear would cost no energy (Born's conditions for cubic crystals)."""
+    guess = tensor(tmp_path / "guess.txt", 60, 64, 80)
+    result = cli("prepare", cell, "--guess", guess, "--dry-run")
+    assert result.code == 3
+    assert "not positive" in result.err
+    assert str(guess) in result.err

@@ -6,6 +6,7 @@ import json
 
 import pytest
 from support.files import DRY_ICE, SILICON, write
+from support.runs import returned_run
 
 
 @pytest.fixture
@@ -176,8 +177,30 @@ def test_partial_set_is_fitted_as_far_as_it_goes(cli, run):
     (run / "jobs" / "s1-minus-1" / "returned.extxyz").unlink()
     assert cli("collect", run).code == 4
     result = cli("fit", run, "--json")
-    assert result.code in (4, 5)
-    assert (run / "stiffness.json").exists() == (result.code == 4)
+    assert result.code == 5
+    assert "with s1-minus-1 they would" in result.err  # the two jobs of the set stand alone: both are needed
+    assert not (run / "stiffness.json").exists()
+
+
+def test_cubic_terms_of_one_magnitude_ask_for_another_that_suffices(cli, run):
+    assert cli("evaluate", run, "--engine", "tersoff", "--workers", 1).code == 0
+    cli("collect", run)
+    result = cli("fit", run, "--order", "cubic")
+    assert result.code == 5
+    assert "second magnitude" in result.err
+    command = result.err.partition("strainkit prepare --extend RUN ")[2].split()[:2]
+    assert command == ["--magnitude", "0.5"]
+    assert cli("prepare", "--extend", run, *command).code == 0
+    assert cli("evaluate", run, "--engine", "tersoff", "--workers", 1).code == 0
+    cli("collect", run)
+    assert cli("fit", run, "--order", "cubic").code == 0
+    for label in ("s1-minus-0.5", "s1-minus-1"):
+        (run / "jobs" / label / "returned.extxyz").unlink()
+    cli("collect", run)
+    result = cli("fit", run, "--order", "cubic")
+    assert result.code == 5
+    assert "with s1-minus-" in result.err
+    assert "second magnitude" not in result.err
 
 
 def test_results_go_to_stdout_and_chatter_to_stderr(cli, cell, run):
@@ -207,3 +230,62 @@ def test_json_never_holds_nan(cli, run):
     assert "NaN" not in result.out
     assert result.json["residual_stress_GPa"] == [None] * 6
     assert "reference-stress-unknown" in [f["code"] for f in result.json["findings"]]
+
+
+def test_one_exit_code_for_one_state(cli, tmp_path):
+    """Invented stresses of an orthorhombic crystal: some constants undetermined is 4, none determined is 5, everywhere."""
+    run = tmp_path / "run"
+    returned_run(run, "mmm", keep=lambda label: label.startswith(("reference", "s1")))
+    codes = {command: cli(command, run).code for command in ("collect", "fit", "converge", "derive", "report")}
+    assert codes == dict.fromkeys(codes, 4)
+    lost = next(f for f in cli("converge", run, "--json").json["findings"] if f["code"] == "undetermined-constants")
+    assert "with s" in lost["message"]
+    returned_run(tmp_path / "other", "m-3m", keep=lambda label: label in ("reference", "s1-plus-1"))
+    codes = {command: cli(command, tmp_path / "other").code for command in ("fit", "converge", "derive", "report")}
+    assert codes == dict.fromkeys(codes, 5)
+
+
+def test_things_are_counted_in_words(cli, cell, tmp_path):
+    made = cli("prepare", cell, "--campaign", "--out", tmp_path / "one")
+    assert made.out.startswith("Campaign of 1 crystal in")
+    found = cli("collect", tmp_path / "one")
+    assert "of 1 crystal usable" in found.out
+    assert "1 crystal to look at" in found.out
+    plan = cli("prepare", cell, "--dry-run").out
+    assert not any(line.endswith(" k") for line in plan.splitlines())  # no k-points, no column for them
+    assert any(line.endswith(" k") for line in cli("prepare", cell, "--dry-run", "--kspacing", 0.4).out.splitlines())
+
+
+def test_what_comes_after_the_fit_follows_it(cli, tmp_path):
+    """Invented stresses at two magnitudes: order, noise, dropped jobs of the last fit hold unless an option says otherwise."""
+    run = tmp_path / "run"
+    returned_run(run, "m-3m", magnitudes=(0.01, 0.005))
+
+    def seen():
+        data = cli("derive", run, "--json").json
+        cli("report", run)
+        page = (run / "report.html").read_text()
+        dropped = "without s1-plus-0.5" in data["origin"]
+        return "order cubic" in data["origin"], dropped, "order cubic" in page
+
+    assert seen() == (False, False, False)
+    plain = cli("derive", run, "--json").json["stress_strain_GPa"]
+    assert cli("fit", run, "--order", "cubic", "--noise", 0.02, "--drop", "s1-plus-0.5").code == 0
+    assert seen() == (True, True, True)
+    cubic = cli("derive", run, "--json").json
+    assert cubic["stress_strain_GPa"] != plain
+    other = cli("derive", run, "--order", "linear", "--json").json
+    assert "order linear" in other["origin"]
+    assert "without s1-plus-0.5" in other["origin"]
+    whole = cli("converge", run, "--drop", "s1-minus-1", "--json").json
+    assert cli("converge", run, "--json").json["common"] != whole["common"]
+    assert "s1-plus-0.5" not in cli("derive", run, "--drop", "s1-minus-1", "--json").json["origin"]
+    assert cli("fit", run).code == 0  # a fit begins anew
+    assert seen() == (False, False, False)
+    assert cli("derive", run, "--json").json["stress_strain_GPa"] == plain
+    (run / "stiffness.json").write_text("{")
+    for command in ("derive", "report", "converge"):
+        result = cli(command, run)
+        assert result.code == 3
+        assert "stiffness.json" in result.err
+    assert cli("fit", run).code == 0

@@ -15,7 +15,7 @@ import support.blindfiles  # noqa: F401  (both register their faults)
 from support.blindjudge import CONSEQUENCES, Seen, inject, judge, look
 from support.blindsets import StrainSet, real_set, synthetic_set
 
-SILICON = Path(__file__).parent.parent / "data" / "silicon_qe_set"
+SILICON = Path(__file__).parent.parent / "data" / "sets" / "silicon_qe"
 
 
 @cache

@@ -115,3 +115,32 @@ def test_a_table_and_outputs_give_the_same_stresses_and_stay(cli, tmp_path):
             np.testing.assert_allclose(record["stress_GPa"], truth.stress, rtol=1e-12)
     assert cli("fit", second).code == 0
     assert cli("progress", second, "--json").json["states"] == {"done": len(plan.jobs)}
+
+
+@pytest.mark.parametrize(
+    ("suffix", "options", "assumed"), [("", [], True), ("_GPa", [], False), ("", ["--stress-unit", "GPa"], False)]
+)
+def test_a_unit_named_nowhere_is_said_to_be_assumed(cli, made, tmp_path, suffix, options, assumed):
+    run = tmp_path / "run"
+    write_run(made[1], run)
+    typed = tmp_path / "typed.csv"
+    head = ",".join(f"{c}{suffix}" for c in ("xx", "yy", "zz", "yz", "xz", "xy"))
+    typed.write_text(f"label,{head}\n" + "\n".join(f"{job.label},{line(STRESS)}" for job in made[1].jobs[:1]))
+    for arguments in (["--table", typed, *options], []):  # the second time from the stress table that the first one wrote
+        out = cli("collect", run, *arguments)
+        assert ("info unit-assumed" in out.out) == assumed
+        assert ("[typed.csv]" in out.out) == assumed
+
+
+def test_a_table_does_not_vouch_for_the_jobs_behind_it(cli, made, tmp_path):
+    run = tmp_path / "run"
+    write_run(made[1], run)
+    law = linear_law(mandel("Si_CRC"))
+    write_returns(run, made[1], law, only={made[1].jobs[0].label})
+    typed = tmp_path / "typed.csv"
+    typed.write_text(f"label,xx,yy,zz,yz,xz,xy\n{made[1].jobs[1].label},{line(STRESS)}")
+    cli("collect", run, "--table", typed)
+    for command in ("collect", "progress"):
+        text = " ".join(cli(command, run).out.split())
+        assert "done 1 finished, converged, and of the planned cell" in text
+        assert "done 1 from a table" in text

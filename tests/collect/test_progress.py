@@ -128,3 +128,32 @@ def test_core_hours_from_strained_jobs_where_there_are_some(made):
     assert found.core_hours_left == pytest.approx(3.0 * 5, rel=1e-9)
     log(run, plan, 2, 3600, ended="stopped-by-TERM 143")
     assert read_progress(run, plan).core_hours_used == pytest.approx(9.0)
+
+
+@pytest.mark.parametrize(
+    "name", ["pw-1.out", "abinit-2.abo", "si.castep", "vasprun.xml", "OUTCAR", "returned.extxyz", "x.out.gz"]
+)
+def test_a_file_called_an_output_that_is_none_is_not_passed_over(made, name):
+    run, plan = made
+    (run / job_folder(plan.jobs[1].label) / name).write_text("srun: error: invented\n")
+    found = read_progress(run, plan)
+    assert found.jobs[1].state == "broken"
+    (doubt,) = found.jobs[1].record.findings
+    assert doubt.code == "unreadable-output"
+    assert name in doubt.message
+    assert [job.state for job in found.jobs].count("missing") == len(plan.jobs) - 1
+
+
+def test_what_is_no_output_raises_no_doubt(made):
+    """Inputs, cells, notes and logs of schedulers: common names of each, no source."""
+    run, plan = made
+    folder = run / job_folder(plan.jobs[1].label)
+    for name in ("pw.in", "INCAR", "KPOINTS", "README", "slurm-1234.out", "job.o1234", "geometry.in", "notes.txt", "run.log"):
+        (folder / name).write_text("invented\n")
+    (folder / "pw-1.out").write_text("")
+    finish(run, plan, 2)
+    (run / job_folder(plan.jobs[2].label) / "other.out").write_text("invented\n")
+    log(run, plan, 3, 100)
+    found = read_progress(run, plan)
+    assert [job.state for job in found.jobs[1:4]] == ["missing", "done", "unread"]
+    assert not any(job.record.findings for job in found.jobs)

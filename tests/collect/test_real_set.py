@@ -1,15 +1,15 @@
-"""A real strain set of Quantum ESPRESSO (tests/data/silicon_qe_set): silent as it is, and each fault in it named."""
+"""A real strain set of Quantum ESPRESSO (tests/data/sets/silicon_qe): silent as it is, and each fault in it named."""
 
 from __future__ import annotations
 
 import lzma
 import re
 from dataclasses import replace
-from pathlib import Path
 
 import numpy as np
 import pytest
 from support.faultbench import FAULTS, CleanSet, inject, verdict
+from support.realsets import NAMES, SETS, unpack
 
 from strainkit.collect.gather import collect_run
 from strainkit.collect.readjob import read_outputs
@@ -18,7 +18,7 @@ from strainkit.fit.result import fit_run
 from strainkit.run.plan import job_folder, load_plan
 from strainkit.tensors.sixvectors import stress_from_voigt
 
-DATA = Path(__file__).parent.parent / "data" / "silicon_qe_set"
+NAME = "silicon_qe"
 #: of the ions' own making, or too faint to be asked for here
 LEFT_OUT = (
     "ions not converged",
@@ -33,17 +33,13 @@ LEFT_OUT = (
 @pytest.fixture
 def run(tmp_path):
     """The run folder as it came back, outputs packed."""
-    (tmp_path / "strain-set.json").write_bytes((DATA / "strain-set.json").read_bytes())
-    for path in DATA.glob("*.xz"):
-        folder = tmp_path / job_folder(path.name.removesuffix(".out.xz"))
-        folder.mkdir(parents=True)
-        (folder / "pw.out.xz").write_bytes(path.read_bytes())
+    unpack(NAME, tmp_path)
     return tmp_path
 
 
 def printed_stress(label):
     """The last stress block as it stands in the file, GPa, positive in tension: kbar and the other sign (pw.x manual)."""
-    text = lzma.decompress((DATA / f"{label}.out.xz").read_bytes()).decode()
+    text = lzma.decompress((SETS / NAME / f"{label}.out.xz").read_bytes()).decode()
     block = re.split(r"total\s+stress .*\n", text)[-1].splitlines()[:3]
     return -0.1 * np.array([[float(word) for word in line.split()[3:6]] for line in block])
 
@@ -60,6 +56,15 @@ def test_it_is_silent_and_right(run):
     assert not [f for f in fit.findings if f.code in ("outlier", "energy-mismatch", "set-inconsistent")]
 
 
+@pytest.mark.parametrize("name", NAMES)
+def test_no_real_set_raises_an_alarm(name, tmp_path):
+    """Four programs, and cutoffs down to where the stress is off by gigapascals: a wrong number for all is no wrong job."""
+    plan = unpack(name, tmp_path)
+    table = collect_run(tmp_path, plan)
+    assert not table.findings
+    assert [(r.status, r.findings) for r in table.records] == [("done", ())] * len(plan.jobs)
+
+
 def test_renamed_and_exchanged_folders_make_no_difference(run):
     plan = load_plan(run)
     before = collect_run(run, plan)
@@ -74,14 +79,8 @@ def test_renamed_and_exchanged_folders_make_no_difference(run):
 @pytest.fixture(scope="module")
 def clean(tmp_path_factory):
     run = tmp_path_factory.mktemp("set")
-    (run / "strain-set.json").write_bytes((DATA / "strain-set.json").read_bytes())
-    plan = load_plan(run)
-    outputs = {}
-    for job in plan.jobs:
-        folder = run / job_folder(job.label)
-        folder.mkdir(parents=True)
-        (folder / "pw.out.xz").write_bytes((DATA / f"{job.label}.out.xz").read_bytes())
-        outputs[job.label] = read_outputs(run, scan(run, job_folder(job.label)))[0].returned
+    plan = unpack(NAME, run)
+    outputs = {job.label: read_outputs(run, scan(run, job_folder(job.label)))[0].returned for job in plan.jobs}
     # pw.x prints no mesh: said here for the fault of another one
     outputs = {k: replace(v, settings={**v.settings, "kpoints": "4x4x4"}) for k, v in outputs.items()}
     return CleanSet(plan, outputs, {})

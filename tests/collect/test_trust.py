@@ -105,7 +105,7 @@ def test_the_unit_is_advised_from_the_energies(cli, tmp_path, plan, unit, factor
     out = cli("collect", run, "--table", path, "--json")
     assert out.code == 4, out.err
     found = out.json["findings"]
-    assert [f["code"] for f in found] == ["stress-unit"]
+    assert [f["code"] for f in found] == ["stress-unit", "unit-assumed"]
     assert f"--stress-unit {unit}" in found[0]["message"]
     assert cli("collect", run, "--table", path, "--stress-unit", unit).code == 0
 

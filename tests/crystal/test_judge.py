@@ -416,7 +416,7 @@ def test_settings_other_than_the_standard_one_are_kept_and_named():
 def test_rounded_coordinates_are_offered_their_symmetry():
     start = conventional("-3m")
     rounded = replace(start, positions=np.round(start.positions, 4))
-    _, findings = tolerance_ladder(rounded, 1e-4)
+    _, _, findings = tolerance_ladder(rounded, 1e-4)
     (found,) = findings
     assert "prepare --symmetrize --symprec 0.001" in found.message
     assert "off-symmetry" in setting_codes(rounded, 1e-2)

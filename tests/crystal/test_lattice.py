@@ -172,9 +172,23 @@ def test_parse_indices():
     assert parse_indices("1 0 -1 0", "--plane", plane=True) == (1, 0, 0)
     assert parse_indices("2,-1,-1,0", "--direction", plane=False) == (3, 0, 0)
     assert parse_indices("1,0,-1,0", "--direction", plane=False) == (2, 1, 0)
-    for bad in ("", "1,2", "0,0,0", "1,x,2", "1,1,1,0", "1.5,0,0", "1,2,3,4,5"):
+    with pytest.raises(UsageError, match="add up to 3"):
+        parse_indices("1,1,1,0", "--plane", plane=True)
+    for bad in ("", "1,2", "0,0,0", "1,x,2", "1.5,0,0", "1,2,3,4,5"):
         with pytest.raises(UsageError, match="are not indices"):
             parse_indices(bad, "--plane", plane=True)
+
+
+@pytest.mark.parametrize("laue", ["-3m", "6/mmm", "m-3m", "4/mmm", "mmm", "2/m", "-1"])
+def test_four_indices_are_for_hexagonal_axes(laue):
+    """Those of the trigonal and hexagonal families only (common practice, no source)."""
+    axes = axes_of(conventional(laue))
+    if laue in ("-3m", "6/mmm"):
+        assert parse_indices("1,0,-1,1", "--plane", True, axes) == (1, 0, 1)
+        return
+    assert parse_indices("1,0,1", "--plane", True, axes) == (1, 0, 1)
+    with pytest.raises(UsageError, match="not hexagonal"):
+        parse_indices("1,0,-1,1", "--plane", True, axes)
 
 
 def test_directions_of_hexagonal_crystals_are_brought_beside_the_axes():

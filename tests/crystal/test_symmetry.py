@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from ase.build import bulk
@@ -10,6 +12,7 @@ from support.groups import LAUE_CLASSES, rotations
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import crystal_frame
+from strainkit.crystal.spacegroup import space_group_data
 from strainkit.crystal.symmetry import find_symmetry, tolerance_ladder
 from strainkit.errors import InputError, UsageError
 from strainkit.tensors.constants import constant_basis
@@ -116,10 +119,10 @@ def test_ladder_warns_where_the_group_changes():
     atoms = bulk("Si", cubic=True)
     atoms.positions[0, 0] += 3e-3
     crystal = Crystal.from_atoms(atoms)
-    rungs, findings = tolerance_ladder(crystal, 1e-3)
+    _, rungs, findings = tolerance_ladder(crystal, 1e-3)
     assert len({group for _, group, _ in rungs}) == 2
     assert [f.code for f in findings] == ["symmetry-depends-on-tolerance"]
-    assert tolerance_ladder(Crystal.from_atoms(bulk("Si")), 1e-3)[1] == []
+    assert tolerance_ladder(Crystal.from_atoms(bulk("Si")), 1e-3)[2] == []
 
 
 def test_magnetic_moments_lower_the_symmetry():
@@ -149,3 +152,20 @@ def test_spglib_switch_is_put_back():
 def test_unknown_frame():
     with pytest.raises(UsageError, match="unknown frame"):
         crystal_frame("lab", find_symmetry(Crystal.from_atoms(bulk("Si"))))
+
+
+@pytest.mark.parametrize("laue", ["-1", "2/m", "4/m", "-3m", "m-3", "m-3m"])
+def test_the_ladder_leaves_out_no_search_that_would_find_another_group(laue):
+    """Against spglib at every rung, for a crystal whose atoms or lattice are off by little to much."""
+    rng = np.random.default_rng(7)
+    start = conventional(laue)
+    changed = 0
+    for size in (0.0, 1e-5, 1e-4, 5e-4, 1e-3, 3e-3, 5e-3, 1e-2):
+        shift = rng.normal(size=start.positions.shape) * size @ np.linalg.inv(start.lattice)
+        shear = np.eye(3) + rng.normal(size=(3, 3)) * 0.1 * size
+        for crystal in (replace(start, positions=start.positions + shift), replace(start, lattice=start.lattice @ shear)):
+            _, rungs, _ = tolerance_ladder(crystal, 1e-3)
+            for tolerance, group, _ in rungs:
+                assert group == space_group_data(crystal, tolerance)[0].international
+            changed += len({group for _, group, _ in rungs}) > 1
+    assert changed >= (0 if laue == "-1" else 2)

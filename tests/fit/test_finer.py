@@ -70,7 +70,13 @@ def test_through_the_command_line(cli, tmp_path):
     assert cli("fit", run).code == 3
     assert cli("collect", run).code == 0
     assert cli("fit", run, "--json").json["finer_settings"] is None
-    assert cli("prepare", "--extend", run, "--finer", finer).code == 0
+    slip = write(tmp_path, "slip.toml", "[engine]\nrcut = 20.0\n")
+    refused = cli("prepare", "--extend", run, "--finer", slip)
+    assert refused.code == 3
+    assert f"{slip}: the engine lj has no setting 'rcut'" in refused.err
+    made = cli("prepare", "--extend", run, "--finer", finer)
+    assert made.code == 0
+    assert "rc 20, in the jobs at finer settings" in made.out
     assert cli("prepare", "--extend", run, "--finer", finer).code == 3
     assert cli("evaluate", run, *engine).code == 0
     assert cli("collect", run).code == 0
@@ -80,7 +86,10 @@ def test_through_the_command_line(cli, tmp_path):
     assert "finer settings" in cli("fit", run).out
 
 
-@pytest.mark.parametrize("text", ["[site]\nthreads = 1\n", "[deck]\necutwfc = 80.0\n"])
+PSEUDOPOTENTIALS = '[pseudopotentials]\nSi = "other.upf"\n[engine]\naccuracy = 0.1\n'
+
+
+@pytest.mark.parametrize("text", ["[site]\nthreads = 1\n", "[deck]\necutwfc = 80.0\n", PSEUDOPOTENTIALS])
 def test_settings_that_make_no_sense(cli, tmp_path, text):
     run = tmp_path / "run"
     cli("prepare", write(tmp_path, "POSCAR", SILICON), "--out", run)

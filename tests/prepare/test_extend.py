@@ -68,3 +68,24 @@ def test_contradictions_are_usage_errors(cli, run, tmp_path, arguments):
     words = {"RUN": run, "CELL": tmp_path / "POSCAR"}
     result = cli("prepare", *(words.get(a, a) for a in arguments))
     assert result.code == 2
+
+
+@pytest.mark.parametrize(
+    ("arguments", "named"),
+    [
+        (["--extend", "RUN", "--magnitude", 0.5, "--aim", "symmetric"], "--aim"),
+        (["--extend", "RUN", "--more", 2, "--symprec", 0.01, "--noise", 0.1], "--symprec, --noise"),
+        (["CELL", "--dry-run", "--no-displaced"], "--displaced"),
+        (["CELL", "--dry-run", "--ceiling", 4], "--ceiling"),
+        (["CELL", "--dry-run", "--ceiling", 4, "--target-error", 1, "--magnitude", 1], "--ceiling"),
+        (["CELL", "--dry-run", "--adopt", "RUN", "--target-error", 1], "--target-error"),
+        (["CELL", "--campaign", "--dry-run", "--kspacing", 0.3], "--kspacing"),
+        (["CELL", "--dry-run", "--atoms", "affine", "--force-constants", "phonopy.yaml"], "--atoms"),
+    ],
+)
+def test_options_that_would_change_nothing_are_refused(cli, run, tmp_path, arguments, named):
+    words = {"RUN": run, "CELL": tmp_path / "POSCAR"}
+    result = cli("prepare", *(words.get(a, a) for a in arguments))
+    assert result.code == 2
+    assert named in result.err
+    assert result.out == ""

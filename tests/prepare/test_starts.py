@@ -88,6 +88,8 @@ def test_an_extension_starts_from_what_was_collected(cli, tmp_path):
     assert cli("collect", run).code == 0
     done = cli("prepare", "--extend", run, "--magnitude", 1)
     assert "2 of them start from what the ions did in the 3 jobs collected" in done.err
+    words = " ".join(done.out.split())
+    assert "atoms moved with the lattice in 2 jobs, ions where they are expected to go in 2 jobs" in words
     plan = load_plan(run)
     for job in plan.jobs[-2:]:
         assert first_force(plan, job) < 0.1 * first_force(plan_run(plan.crystal, [0.01]), job)

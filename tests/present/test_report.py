@@ -263,7 +263,7 @@ def test_report_needs_a_stress_table(cli, tmp_path):
     cells = [write(tmp_path, f"{name}.vasp", SILICON) for name in "ab"]
     assert cli("prepare", *cells, "--out", tmp_path / "many").code == 0
     result = cli("report", tmp_path / "many", "--json")
-    assert result.code == 4
+    assert result.code == 5
     assert all("no stress table yet" in crystal["problem"] for crystal in result.json["crystals"])
     assert "one of its run folders" in cli("report", tmp_path / "many", "--out", tmp_path / "x.html").err
 

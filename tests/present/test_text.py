@@ -11,6 +11,7 @@ from support.files import SILICON
 from support.runs import returned_run
 
 from strainkit.findings import finding
+from strainkit.present.numbers import uncertain
 from strainkit.present.text import columns, findings_text, heading, printable
 
 #: set the window title, clear the screen, an 8-bit control sequence, a change of writing direction: ECMA-48, Unicode TR 36
@@ -109,3 +110,17 @@ def test_labels_of_the_progress_bar_are_plain(monkeypatch, capsys):
     assert "[bold]" in seen
     assert "\x1b]0;" not in seen
     assert r"\x1b]0;owned" in seen
+
+
+def test_errors_in_the_last_digits():
+    """Rounding by hand; the bracket holds nothing but a number of units of the last digit."""
+    for value, error, text in (
+        (12.345, 0.42, "12.3(4)"),
+        (12.345, 0.0142, "12.345(14)"),
+        (0.27524312, 3e-9, "0.275243(0)"),
+        (0.27524312, 8e-7, "0.275243(1)"),
+        (1234.0, 56.0, "1230(60)"),
+        (1.0, 0.0, "1.0000(0)"),
+        (1.0, None, "1.00"),
+    ):
+        assert uncertain(value, error) == text

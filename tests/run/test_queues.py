@@ -74,6 +74,18 @@ def test_an_answer_that_cannot_be_used(run, tmp_path, monkeypatch, text, code):
         ask_queue(run, "slurm", "si-0a1b2c-1")
 
 
+def test_a_long_complaint_of_the_scheduler_ends_with_a_word(run, tmp_path, monkeypatch):
+    words = [f"complaint{i}" for i in range(40)]  # invented
+    script = tmp_path / "bin" / "squeue"
+    script.parent.mkdir(exist_ok=True)
+    script.write_text(f"#!/bin/sh\necho {' '.join(words)} >&2\nexit 1\n")
+    script.chmod(0o755)
+    monkeypatch.setenv("PATH", f"{script.parent}:/usr/bin:/bin")
+    with pytest.raises(InputError, match=r"complaint0 .*complaint\d+ \.\.\.\)") as caught:
+        ask_queue(run, "slurm", "si-0a1b2c-1")
+    assert set(caught.value.what.partition("(")[2].removesuffix(" ...)").split()) <= set(words)
+
+
 def test_no_scheduler_here(run, monkeypatch):
     monkeypatch.setenv("PATH", "/nowhere")
     with pytest.raises(InputError, match="bjobs cannot be asked"):

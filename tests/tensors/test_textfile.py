@@ -58,10 +58,11 @@ def test_matrix(laue, shape):
 
 def test_matrix_with_errors_and_words():
     rows = ["100 50 50 0 0 0", "50 100 50 0 0 0", "50 50 100 0 0 0", "0 0 0 30 0 0", "0 0 0 0 30 0", "0 0 0 0 0 30"]
-    text = "name: x y\nunit = kbar\ndensity 2329 kg/m3\ntemperature 298 K\naxes crystal\nsource somebody 1990\n"
+    text = "name: x y\nunit = kbar\ndensity 2329 kg/m3\ntemperature 298 K\naxes crystal\n"
+    text += "source A. Other, Letters 1, 2; table [4]\n"
     file = parse_tensor(text + "\n".join(rows) + "\nstandard errors:\n" + "\n".join(["1 1 1 1 1 1"] * 6))
     assert (file.name, file.density, file.temperature, file.axes) == ("x y", 2329.0, 298.0, "crystal")
-    assert file.source == "somebody 1990"
+    assert file.source == "A. Other, Letters 1, 2; table [4]"
     assert parse_tensor(text.replace("2329 kg/m3", "2.329 g/cm^3") + "\n".join(rows)).density == pytest.approx(
         2329.0, rel=1e-12
     )

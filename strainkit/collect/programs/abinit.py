@@ -33,7 +33,7 @@ _AFTER = "-outvars: echo values of variables after computation"
 _BLOCK = r"-? *sigma\({0} {0}\)= *#...sigma\({1}\)= *#"
 _FORMS = [_BLOCK.format(i, pair) for i, pair in ((1, "3 2"), (2, "3 1"), (3, "2 1"))]
 _FUNCTIONAL = re.compile(r"Exchange-correlation functional for the present dataset will be:\s*\n\s*(.*?)\s*$", re.M)
-_NO_FUNCTIONAL = re.compile(r"- ixc\s*=\s*(-?\d+)")
+_PSEUDO = re.compile(r"- pspini: atom type +\d+ +psp file is (\S+)")
 
 
 def recognises(head: bytes) -> bool:
@@ -178,8 +178,12 @@ def settings(text: str) -> Settings:
         result["kpoint_count"] = str(int(count[0]))
     if mesh is not None and not np.any(mesh.reshape(3, 3) - np.diag(mesh[::4])):
         result["kpoints"] = "x".join(str(int(n)) for n in mesh[::4])
-    if functional := last(_FUNCTIONAL, text) or last(_NO_FUNCTIONAL, text):
+    functional, ixc = last(_FUNCTIONAL, text), _variable(after, "ixc", 1)
+    if functional is not None:
         result["functional"] = functional[1]
+    elif ixc is not None:  # no words are printed for a negative one
+        result["functional"] = f"ixc {int(ixc[0])}"
+    result["pseudopotentials"] = ", ".join(dict.fromkeys(path.rpartition("/")[2] for path in _PSEUDO.findall(text)))
     occopt, width, spins = (_variable(after, name, 1) for name in ("occopt", "tsmear", "nsppol"))
     result["smearing"] = "none"
     if occopt is not None and 3 <= occopt[0] <= 8 and width is not None:

@@ -229,6 +229,7 @@ _SETTINGS = {
     "kpoints": re.compile(r"BRILLOUIN\| K-Point grid +(\d+ +\d+ +\d+)"),
     "spin": re.compile(r"DFT\| Spin (restricted|unrestricted)"),
 }
+_PSEUDO = re.compile(r"^ +(?:Orbital Basis Set|GTH Potential information for) +(\S+) *$", re.M)
 
 
 def settings(output: Output) -> Settings:
@@ -236,6 +237,7 @@ def settings(output: Output) -> Settings:
     result: dict[str, str | float | tuple[float, ...]] = {"smearing": "none", "dispersion": "none", **said}
     result["kpoints"] = "x".join(said["kpoints"].split()) if "kpoints" in said else "1x1x1"
     result["spin"] = "polarised" if said.get("spin") == "unrestricted" else "none"
+    result["pseudopotentials"] = ", ".join(dict.fromkeys(_PSEUDO.findall(output.text)))
     if cutoff := last_number(re.compile(rf"QS\| Density cutoff \[a\.u\.\]: +({NUMBER})\s*$", re.M), output.text):
         result["cutoff_eV"] = cutoff * Hartree
     return result

@@ -166,12 +166,17 @@ _SETTINGS = {
     "functional": re.compile(r"Exchange-correlation *= *(\S.*?) *$", re.M),
     "kpoint_count": re.compile(r"number of k points=\s+(\d+)"),
     "smearing": re.compile(r"number of k points= +\d+ +(\S.*?) *$", re.M),
-    "dispersion": re.compile(r"(DFT-D3|DFT-D|MBD|XDM|Tkatchenko-Scheffler) (?:Dispersion|dispersion|energy|correction)"),
+    "dispersion": re.compile(
+        r"(DFT-D3|DFT-D|MBD|XDM|Tkatchenko-Scheffler) (?:Dispersion|dispersion|energy|correction)"
+        r"|Dispersion \(?(Grimme-D2|T-S|MBD|XDM)\)? Correction"
+    ),
 }
+_POINT = re.compile(rf"^ +k\( *\d+\) = \( *({NUMBER}) +({NUMBER}) +({NUMBER})\), wk = +({NUMBER}) *$", re.M)
+_PSEUDO = re.compile(r"PseudoPot\. # *\d+ for +(\S+) +read from file:\s+\S+\s+MD5 check sum: +(\w+)")
 
 
 def settings(text: str) -> Settings:
-    said = {key: match[1] for key, pattern in _SETTINGS.items() if (match := pattern.search(text))}
+    said = {key: match[match.lastindex or 0] for key, pattern in _SETTINGS.items() if (match := pattern.search(text))}
     cutoff = said.pop("cutoff_Ry", None)
     result: dict[str, str | float | tuple[float, ...]] = {key: " ".join(value.split()) for key, value in said.items()}
     result.setdefault("smearing", "none")
@@ -179,7 +184,20 @@ def settings(text: str) -> Settings:
     result["spin"] = "polarised" if "Starting magnetic structure" in text else "none"
     if cutoff is not None:
         result["cutoff_eV"] = number(cutoff) * Rydberg
+    if points := _mesh_points(text):
+        result["kpoint_total"] = str(points)
+    files = (f"{kind} {md5[:8]}" for kind, md5 in _PSEUDO.findall(text))
+    result["pseudopotentials"] = ", ".join(dict.fromkeys(files))
     return result
+
+
+def _mesh_points(text: str) -> int:
+    """Points of the whole mesh: Gamma stands for itself alone. 0 where it is not in the mesh, or the list not printed."""
+    start = text.rfind("number of k points=")
+    block = text[start : text.find("\n\n", start)]
+    listed = [[number(word) for word in match.groups()] for match in _POINT.finditer(block)]
+    mine = [point[3] for point in listed if not any(point[:3])]
+    return round(sum(point[3] for point in listed) / mine[0] / len(mine)) if mine and mine[0] > 0 else 0
 
 
 def version(text: str) -> str:

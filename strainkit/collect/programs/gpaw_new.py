@@ -112,6 +112,8 @@ _SETTINGS = {
     "kpoints": re.compile(r"Monkhorst-Pack size: \[(\d+, \d+, \d+)\]"),
     "functional": re.compile(r"\nxc functional:\n +name: (\S+)"),
 }
+#: checksum and file name of a data set
+_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n)*? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
 
 
 def settings(text: str) -> Settings:
@@ -122,6 +124,7 @@ def settings(text: str) -> Settings:
     if occupations := re.search(r"\noccupation numbers:\n +(\S.*?):\n(?: +width: (\S+))?", text):
         result["smearing"] = f"{occupations[1]}: width: {occupations[2]}" if occupations[2] else "none"
     result["spin"] = "none" if "Spin-components: 1 " in text else "polarised"
+    result["pseudopotentials"] = ", ".join(f"{name} {md5[:8]}" for md5, name in _SETUP.findall(text))
     if cutoff := last_number(re.compile(rf"\nCutoff: ({NUMBER}) eV"), text):
         result["cutoff_eV"] = cutoff
     return result

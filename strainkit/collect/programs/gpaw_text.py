@@ -120,6 +120,8 @@ _SETTINGS = {
     "functional": re.compile(r"Using the (\S+) Exchange-Correlation functional"),
     "dispersion": re.compile(r"\n(vdW\S+|DFT-?D\S+)"),
 }
+#: checksum and file name of a data set
+_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n)*? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
 
 
 def settings(text: str) -> Settings:
@@ -130,6 +132,7 @@ def settings(text: str) -> Settings:
     if occupations := re.search(r"^Occupation numbers:\s*(.*(?:\n  +\S.*)*)", text, re.M):
         result["smearing"] = " ".join(occupations[1].split("#")[0].split()) or "none"
     result["spin"] = "polarised" if re.search(r"^Spin-polarized calculation", text, re.M) else "none"
+    result["pseudopotentials"] = ", ".join(f"{name} {md5[:8]}" for md5, name in _SETUP.findall(text))
     if cutoff := last_number(re.compile(rf"Cutoff energy: ({NUMBER}) eV"), text):
         result["cutoff_eV"] = cutoff
     return result

@@ -135,6 +135,7 @@ def settings(text: str) -> Settings:
         result["kpoint_count"] = count[1]
     if functional := re.search(r" GGA += +(\S+)", text):
         result["functional"] = functional[1]
+    result["pseudopotentials"] = ", ".join(" ".join(title.split()) for title in re.findall(r"TITEL += +(\S.*)", text))
     correction = re.search(r" IVDW += +(\d+)", text)
     result["dispersion"] = f"IVDW {correction[1]}" if correction and correction[1] != "0" else "none"
     return result

@@ -43,6 +43,7 @@ class Document:
     incar: dict[str, str] = field(default_factory=dict)
     version: str = ""
     symbols: list[str] = field(default_factory=list)
+    pseudopotentials: str = ""
     divisions: str = ""
     kpoint_count: int = 0
     step: ElementTree.Element | None = None
@@ -88,6 +89,8 @@ def _take(document: Document, element: ElementTree.Element) -> None:
     elif element.tag == "atominfo":
         cells = element.findall("array[@name='atoms']/set/rc/c[1]")
         document.symbols = [(cell.text or "").strip() for cell in cells]
+        kinds = element.findall("array[@name='atomtypes']/set/rc/c[5]")
+        document.pseudopotentials = ", ".join(" ".join((cell.text or "").split()) for cell in kinds)
     elif element.tag == "kpoints":
         document.divisions = "x".join((element.findtext("generation/v[@name='divisions']") or "").split())
         document.kpoint_count = len(element.findall("varray[@name='kpointlist']/v"))
@@ -185,6 +188,7 @@ def settings(document: Document) -> Settings:
     result["functional"] = parameters.get("GGA", "--") if named in ("", "--", "NONE") else named
     result["smearing"] = f"ISMEAR {parameters.get('ISMEAR', '1')}, {_parameter(document, 'SIGMA', 0.2):.4g} eV"
     result["dispersion"] = document.incar.get("IVDW", parameters.get("IVDW", "0"))
+    result["pseudopotentials"] = document.pseudopotentials
     result["spin"] = "polarised" if parameters.get("ISPIN", "1") == "2" else "none"
     if result["dispersion"] == "0":
         result["dispersion"] = "none"
