@@ -7,7 +7,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from support.blindtext import BOHR, HARTREE, HARTREE_BOHR3, Editor, like, numbers, rewrite
+from support.blindtext import BOHR, HARTREE, HARTREE_BOHR3, Editor, lengths_angles, like, numbers, rewrite
 
 _SIX = ((0, 0), (2, 1), (1, 1), (2, 0), (2, 2), (1, 0))
 
@@ -73,6 +73,11 @@ class Abinit(Editor):
             new = [*axes[k], *inverse[k]]
             self.swap(rf"( R\({k + 1}\)=)(.*)", lambda m, new=new: m[1] + rewrite(m[2], new), 0)
         self.swap(r"(ucvol=)( +\S+)", lambda m: m[1] + like(m[2], abs(np.linalg.det(axes)), True), 0)
+        lengths, angles = lengths_angles(axes)
+        self.swap(r"(Angles \(23,13,12\)=)(.*)", lambda m: m[1] + rewrite(m[2], angles), 0)
+        self.swap(r"(lattice_lengths:)(.*)", lambda m: m[1] + rewrite(m[2], lengths), 0)
+        self.swap(r"(lattice_angles:)(.*)(#)", lambda m: m[1] + rewrite(m[2], angles) + m[3], 0)
+        self.swap(r"(lattice_volume:)(.*)", lambda m: m[1] + like(m[2], float(abs(np.linalg.det(axes))), True), 0)
         self.lines_after("^lattice_vectors:", 3, lambda k, line: rewrite(line, axes[k]))
         self._rows("rprim", lambda k, x: change @ x)
         for name in ("xcart", "xangst"):

@@ -148,6 +148,13 @@ class Editor:
             self.put_matrix(old, change(old * self.unit) / self.unit)
 
 
+def lengths_angles(axes: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Lengths and angles alpha, beta, gamma (degrees) of lattice vectors (rows)."""
+    lengths = np.linalg.norm(axes, axis=1)
+    cosines = [axes[i] @ axes[j] / lengths[i] / lengths[j] for i, j in ((1, 2), (0, 2), (0, 1))]
+    return lengths, np.degrees(np.arccos(cosines))
+
+
 def numbers(text: str) -> list[float]:
     """The decimal numbers of a text."""
     return [float(re.sub("[Dd]", "E", x)) for x in NUMBER.findall(text)]

@@ -7,7 +7,7 @@ import re
 import numpy as np
 
 from strainkit.units import EV_PER_A3_IN_GPA
-from support.blindtext import HARTREE, Editor, like, numbers, rewrite
+from support.blindtext import HARTREE, Editor, lengths_angles, like, numbers, rewrite
 
 
 class Cp2k(Editor):
@@ -56,6 +56,7 @@ class Cp2k(Editor):
             return found[1] + rewrite(found[2], vector) + found[3] + like(found[4], float(np.linalg.norm(vector)), True)
 
         self.swap(r"(CELL\w*\| Vector [abc] \[angstrom\]?:?)((?: +-?\d+\.\d+){3})( +\|[abc]\| =)( +\S+)", one, 0)
+        self._shape(change)
         for name in self.names:
             if name.endswith((".restart", ".inp")):
                 lines = self.files[name].split("\n")
@@ -64,6 +65,18 @@ class Cp2k(Editor):
                         vector = change @ [float(x) for x in line.split()[1:]]
                         lines[i] = line[: line.index(line.split()[0]) + 1] + " " + " ".join(f"{x:.16E}" for x in vector)
                 self.files[name] = "\n".join(lines)
+
+    def _shape(self, change: np.ndarray) -> None:
+        """Volume and angles of the drifted cell, from the input (the reference cell has its own)."""
+        text = next(self.files[n] for n in self.names if n.endswith((".inp", ".restart")) and "&CELL" in self.files[n])
+        rows = np.array([[float(x) for x in row.split()] for row in re.findall(r"^ +[ABC] +(\S+ +\S+ +\S+)$", text, re.M)[:6]])
+        for name, axes in (("CELL(?:_TOP)?", rows[:3]), ("CELL_REF", rows[3:] if len(rows) == 6 else rows[:3])):
+            axes = axes @ change.T
+            angles = dict(zip(("alpha", "beta", "gamma"), lengths_angles(axes)[1], strict=True))
+            for word, value in angles.items():
+                self.swap(rf"( {name}\| Angle .*{word}.*:)( +\S+)", lambda m, v=value: m[1] + like(m[2], float(v), True), 0)
+            volume = float(abs(np.linalg.det(axes)))
+            self.swap(rf"( {name}\| Volume .*:)( +\S+)", lambda m, v=volume: m[1] + like(m[2], v, True), 0)
 
     def move_atom(self, step: np.ndarray, rng: np.random.Generator) -> bool:
         """Move one atom of the restart by a Cartesian step; is there such a place?"""
@@ -126,6 +139,10 @@ class Gpaw(Editor):
         def turned(found: re.Match[str]) -> str:
             return found[1] + rewrite(found[2], change @ numbers(found[2])[:3], False)
 
+        vectors = [numbers(x)[:3] for x in re.findall(r"(?:axis: +yes|\| +yes \|)(.*)", self.text)[:3]]
+        lengths, angles = lengths_angles(np.array(vectors) @ change.T)
+        self.swap(r"(\n  Lengths:)(.*)", lambda m: m[1] + rewrite(m[2], lengths, False), 0)
+        self.swap(r"(\n  Angles:)(.*)", lambda m: m[1] + rewrite(m[2], angles, False), 0)
         three = r"((?: *\|? +-?\d+\.\d+){3})"
         self.swap(r"(axis: +yes|\| +yes \|)" + three, turned, 0)
         self.swap(r"(\n +\d+ [A-Z][a-z]? +)" + three, turned, 0)
