@@ -138,7 +138,7 @@ class Editor:
         """The last stress; NaN where another fault took it away."""
         try:
             return self.matrix() * self.unit
-        except (IndexError, TypeError, ValueError):
+        except (IndexError, KeyError, TypeError, ValueError):
             return np.full((3, 3), np.nan)
 
     def change_stress(self, change: Change) -> None:
