@@ -16,8 +16,8 @@ from strainkit.design.model import LinearModel, build_model
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
 from strainkit.tensors.leastsquares import factorise
-from strainkit.tensors.sixvectors import from_mandel, stress_from_voigt, to_mandel
-from strainkit.tensors.strain import pk2_from_cauchy
+from strainkit.tensors.rotations import rotation6
+from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
 
 __all__ = ["Group", "typical_change"]
 
@@ -78,17 +78,16 @@ class Group:
 
     def misfits(self, cauchy: FloatArray) -> FloatArray:
         """Roots (k,) of the sums of squares of all that does not fit in sets (k, jobs, 6), in units of the typical stress."""
-        second = np.einsum("jab,kjb->kja", self.to_second, cauchy)
-        rows = np.concatenate([second[:, j] @ p for j, p in enumerate(self.model.projections)], axis=1)
-        allowed = (rows**2).sum(axis=1)
-        left = allowed - ((rows @ self.basis) ** 2).sum(axis=1)
-        outside = (second**2).sum(axis=(1, 2)) - allowed  # components that symmetry forbids
-        at_rest = second[:, self.rest] if self.rest is not None else second.mean(axis=1)
-        work = np.einsum("ja,kja->kj", self.directions, second - at_rest[:, None])
-        negative = (np.minimum(work, 0.0) ** 2).sum(axis=1)
-        return np.asarray(
-            np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical_change(second, self.rest)
-        )
+        second = cauchy.swapaxes(0, 1) @ self.to_second.swapaxes(1, 2)  # (jobs, k, 6)
+        rows = np.concatenate([s @ p for s, p in zip(second, self.model.projections, strict=True)], axis=1)
+        allowed = _squares(rows)
+        left = allowed - _squares(rows @ self.basis)
+        outside = np.einsum("jka,jka->k", second, second) - allowed  # components that symmetry forbids
+        at_rest = second[self.rest] if self.rest is not None else second.mean(axis=0)
+        work = ((second - at_rest) @ self.directions[:, :, None])[..., 0]
+        negative = (np.minimum(work, 0.0) ** 2).sum(axis=0)
+        typical = typical_change(second.swapaxes(0, 1), self.rest)
+        return np.asarray(np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical)
 
     def without_one(self) -> tuple[int, float]:
         """The job whose stress, left free, takes away most of the misfit, and the misfit that is left then."""
@@ -114,10 +113,13 @@ class Group:
         return np.asarray(strains / np.where(sizes > 0, sizes, 1.0))
 
 
+def _squares(rows: FloatArray) -> FloatArray:
+    return np.asarray(np.einsum("kr,kr->k", rows, rows))
+
+
 def _to_second(gradients: FloatArray) -> FloatArray:
     """Matrices (jobs, 6, 6) from Cauchy to second Piola-Kirchhoff stress, both Mandel."""
-    units = from_mandel(np.eye(6))
-    return np.array([to_mandel(pk2_from_cauchy(units, np.broadcast_to(f, (6, 3, 3)))).T for f in gradients])
+    return np.asarray(np.linalg.det(gradients)[:, None, None] * rotation6(np.linalg.inv(gradients)))
 
 
 def typical_change(second: FloatArray, rest: int | None) -> FloatArray:

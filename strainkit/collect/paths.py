@@ -11,8 +11,8 @@ from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.sixvectors import stress_from_voigt, to_mandel
-from strainkit.tensors.strain import pk2_from_cauchy
+from strainkit.tensors.sixvectors import stress_from_voigt
+from strainkit.tensors.strain import green_lagrange, pk2_from_cauchy
 from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = ["energy_jumps", "energy_ratios", "ions_elsewhere", "left_over_forces"]
@@ -33,8 +33,10 @@ def _set(done: Done) -> list[tuple[StrainJob, StressRecord]]:
     return [(job, record) for job, record in done if job.kind in ("reference", "strained")]
 
 
-def _second(job: StrainJob, record: StressRecord) -> FloatArray:
-    return to_mandel(pk2_from_cauchy(stress_from_voigt(record.stress), job.gradient))  # type: ignore[arg-type]
+def _second(pairs: Done) -> FloatArray:
+    """Second Piola-Kirchhoff stresses (n, 3, 3), GPa."""
+    stresses = stress_from_voigt(np.array([record.stress for _, record in pairs]))
+    return pk2_from_cauchy(stresses, np.array([job.gradient for job, _ in pairs]))
 
 
 def _by_energy(plan: Plan, done: Done) -> dict[str, tuple[float, float, StrainJob]]:
@@ -42,15 +44,15 @@ def _by_energy(plan: Plan, done: Done) -> dict[str, tuple[float, float, StrainJo
     rest = next(((j, r) for j, r in done if j.kind == "reference" and r.energy is not None), None)
     if rest is None or rest[1].energy is None:
         return {}
-    at_rest = _second(*rest)
-    found = {}
-    for job, record in done:
-        if job.kind == "strained" and record.energy is not None:
-            work = (
-                0.5 * plan.crystal.volume / EV_PER_A3_IN_GPA * float(to_mandel(job.strain) @ (at_rest + _second(job, record)))
-            )
-            found[job.label] = (record.energy - rest[1].energy, work, job)
-    return found
+    strained = [(job, record) for job, record in done if job.kind == "strained" and record.energy is not None]
+    second = _second([rest, *strained])
+    strains = green_lagrange(np.array([job.gradient for job, _ in (rest, *strained)]))
+    work = 0.5 * plan.crystal.volume / EV_PER_A3_IN_GPA * (strains * (second + second[0])).sum(axis=(1, 2))
+    return {
+        job.label: (record.energy - rest[1].energy, energy, job)
+        for (job, record), energy in zip(strained, work[1:].tolist(), strict=True)
+        if record.energy is not None
+    }
 
 
 def _partners(found: dict[str, tuple[float, float, StrainJob]]) -> list[tuple[str, ...]]:
@@ -156,9 +158,10 @@ def left_over_forces(plan: Plan, done: Done) -> list[Finding]:
     rates = [np.linalg.norm(r.displacements) / abs(j.magnitude) for j, r in pairs if j.shape]  # type: ignore[arg-type]
     usual = float(np.median(rates)) if rates else 0.0
     size = float(np.median([abs(j.magnitude) for j, _ in pairs if j.shape] or [0.01]))
-    rest = next((_second(j, r) for j, r in pairs if not j.shape), None)
-    changes = [float(np.linalg.norm(_second(j, r) - (0.0 if rest is None else rest))) for j, r in pairs if j.shape]
-    signal = float(np.median(changes)) if changes else 0.0
+    second, strained = _second(pairs), np.array([bool(job.shape) for job, _ in pairs])
+    rest = 0.0 if strained.all() else second[~strained][0]
+    changes = np.linalg.norm(second - rest, axis=(1, 2))[strained]
+    signal = float(np.median(changes)) if len(changes) else 0.0
     if signal == 0.0:
         return []
     findings = []

@@ -11,7 +11,7 @@ __all__ = ["polar", "rotate_matrix", "rotation6"]
 
 
 def rotation6(rotation: FloatArray) -> FloatArray:
-    """Orthogonal matrix (..., 6, 6) that turns Mandel vectors as R t R^T turns tensors, for R of shape (..., 3, 3)."""
+    """Matrix (..., 6, 6) that takes Mandel vectors to those of R t R^T, for R (..., 3, 3); orthogonal where R is."""
     rotation = np.asarray(rotation, dtype=float)[..., None, :, :]
     turned = rotation @ from_mandel(np.eye(6)) @ np.swapaxes(rotation, -1, -2)
     return np.swapaxes(to_mandel(turned), -1, -2)

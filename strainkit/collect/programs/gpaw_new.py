@@ -113,7 +113,7 @@ _SETTINGS = {
     "functional": re.compile(r"\nxc functional:\n +name: (\S+)"),
 }
 #: checksum and file name of a data set
-_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n)*? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
+_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n){0,8}? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
 
 
 def settings(text: str) -> Settings:

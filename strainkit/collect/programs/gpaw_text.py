@@ -121,7 +121,7 @@ _SETTINGS = {
     "dispersion": re.compile(r"\n(vdW\S+|DFT-?D\S+)"),
 }
 #: checksum and file name of a data set
-_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n)*? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
+_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n){0,8}? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
 
 
 def settings(text: str) -> Settings:
