@@ -2,7 +2,7 @@
 
 Faults injected by code that was written without knowledge of how `collect` judges, from the list of faults and the documented
 meaning of the finding codes. Prints one table, the false alarms on clean sets, and every missed or mislabelled case with the id
-that makes it again. `--sets` names folders of run folders of real outputs; the one in tests/data is always there.
+that makes it again. `--sets` names folders of more run folders of real outputs; those in tests/data/sets are always there.
 """
 
 from __future__ import annotations
@@ -171,7 +171,7 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("per_fault", nargs="?", type=int, default=12)
     parser.add_argument("seed", nargs="?", type=int, default=1)
-    parser.add_argument("--sets", nargs="*", type=Path, default=[DATA / "sets"])
+    parser.add_argument("--sets", nargs="*", type=Path, default=[])
     parser.add_argument("--case", help="one case by its id, such as 'sign, one #3'")
     parser.add_argument("--keep", type=Path, help="write the run folder of the case here")
     options = parser.parse_args()

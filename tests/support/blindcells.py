@@ -24,6 +24,9 @@ FOREIGN = {
     "gpaw": ("gpaw/relaxed.txt", "gpaw26/relaxed.txt"),
 }
 
+#: elements of the real sets and those below them
+HEAVIER = {"Si": "Ge", "O": "S", "N": "P"}
+
 
 def strained_output(work: StrainSet, label: str, strain: np.ndarray, rng: np.random.Generator) -> None:
     """The job computed at another strain: cell, stress and energy all of that strain."""
@@ -111,9 +114,8 @@ def foreign(work: StrainSet, rng: np.random.Generator, taken: frozenset[str]) ->
                 work.files[name] = ""
         work.files[main] = lzma.decompress((OUTPUTS / f"{source}.xz").read_bytes()).decode()
         return Injected((label,), frozenset(("cell-mismatch", "cell-drifted")), source)
-    if not re.search(r"\bSi\b", job.text):
-        return None
+    old = str(rng.choice(sorted(set(work.plan.crystal.symbols) & set(HEAVIER))))
     for name in job.names:
-        text = re.sub(r"\bSi\b", "Ge", work.files[name])
+        text = re.sub(rf"\b{old}\b", HEAVIER[old], work.files[name])
         work.files[name] = re.sub(r"(znucl +|- )14\.00000", r"\g<1>32.00000", text)
-    return Injected((label,), frozenset(("cell-mismatch",)), "Ge for Si in every place")
+    return Injected((label,), frozenset(("cell-mismatch",)), f"{HEAVIER[old]} for {old} in every place")

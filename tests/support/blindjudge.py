@@ -28,7 +28,7 @@ WEAK = {"curved", "magnitude-matters"}
 CONSEQUENCES = {
     "jobs-not-used", "lone-partner", "few-spare-degrees", "no-error-estimate", "undetermined-constants", "reference-missing",
     "reference-stress-unknown", "reference-stress-reading", "no-dispersion", "symmetry-depends-on-tolerance", "atoms-too-close",
-    "residual-stress",
+    "residual-stress", "clamped-ions", "ions-unanswered",
 }  # fmt: skip
 #: relative shift that counts where the clean set has no error estimate
 WITHOUT_ERRORS = 0.01

@@ -141,7 +141,7 @@ def real_set(folder: Path) -> StrainSet:
             name = path.name if place.is_dir() else path.name.removeprefix(f"{job.label}.")
             data = lzma.decompress(path.read_bytes()) if name.endswith(".xz") else path.read_bytes() if path.is_file() else b""
             name = name.removesuffix(".xz")
-            name = "output.out" if name == "out" else name
+            name = name if place.is_dir() else f"output.{name}"
             if data and not name.endswith((".gpw", ".traj", ".nc", ".log")):
                 files[f"{job_folder(job.label)}/{name}"] = data.decode("utf-8", "replace")
     words = {"Program PWSCF": "qe", "of ABINIT": "abinit", "CP2K|": "cp2k", "gpaw": "gpaw"}

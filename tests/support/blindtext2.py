@@ -105,7 +105,7 @@ class Gpaw(Editor):
 
     def __init__(self, files: dict[str, str], label: str) -> None:
         super().__init__(files, label)
-        self.main = max(n for n in self.names if n.endswith(".txt") and "User:" in files[n][:2000])
+        self.main = max(n for n in self.names if "User:" in files[n][:2000])
         self.xyz = next((n for n in self.names if n.endswith("returned.extxyz")), "")
 
     def matrix(self) -> np.ndarray:
