@@ -91,7 +91,16 @@ class Group:
 
     def without_one(self) -> tuple[int, float]:
         """The job whose stress, left free, takes away most of the misfit, and the misfit that is left then."""
-        second = np.einsum("jab,jb->ja", self.to_second, self.cauchy)
+        gains, whole, typical = self.gains(self.cauchy)
+        worst = int(gains.argmax())
+        return worst, float(np.sqrt(max(whole - gains[worst], 0.0)) / typical)
+
+    def gains(self, cauchy: FloatArray) -> tuple[FloatArray, float, float]:
+        """What each stress (jobs,), left free, takes away of the sum of squares of a misfit, that sum (GPa^2), typical stress.
+
+        For a set (jobs, 6); negative work is not counted.
+        """
+        second = np.einsum("jab,jb->ja", self.to_second, cauchy)
         parts = [s @ p for s, p in zip(second, self.model.projections, strict=True)]
         rows = np.concatenate(parts)
         left = rows - self.basis @ (self.basis.T @ rows)
@@ -101,9 +110,7 @@ class Group:
             mine = self.model.job_of_row == job
             own = np.eye(len(part)) - self.basis[mine] @ self.basis[mine].T
             gains[job] = left[mine] @ np.linalg.pinv(own, rcond=1e-6) @ left[mine] + outside[job]
-        worst = int(gains.argmax())
-        rest = max(float(left @ left + outside.sum() - gains[worst]), 0.0)
-        return worst, float(np.sqrt(rest) / typical_change(second, self.rest))
+        return gains, float(left @ left + outside.sum()), float(typical_change(second, self.rest))
 
     @cached_property
     def directions(self) -> FloatArray:

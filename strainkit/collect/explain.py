@@ -15,9 +15,11 @@ from strainkit.tensors.arrays import FloatArray, IntArray
 __all__ = ["MANY", "Attempt", "explain", "unchanged"]
 
 #: a change must take the misfit (root of the sum of squares) down to this part of it, and to this part of the typical stress
-PART, CLEAN = 0.35, 0.15
+PART, CLEAN = 0.35, 0.08
 #: a single stress that is changed must be so many times larger than what is left per job
 LOUD = 5.0
+#: a changed stress must agree with what the others say to this part of the typical stress and so many times the misfit of those
+AGREES, AS_OTHERS = 0.06, 3.0
 #: how often a set of mere noise may be explained by chance
 CHANCE = 0.02
 #: misfit below this part of the typical stress is not looked into; below the second not for two faults at a time
@@ -148,6 +150,10 @@ def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
     places = [place for place, _ in found.steps if place is not None]
     slight = any(np.linalg.norm(group.cauchy[place]) < SLIGHT * typical for place in places)
     if slight and start.misfit <= NOTABLE_TWICE * size:
+        return False
+    gains, whole, _ = group.gains(found.cauchy)
+    # a job with another fault would be explained better by leaving it out
+    if any(gains[p] ** 0.5 > AGREES * typical + AS_OTHERS * max(whole - gains[p], 0.0) ** 0.5 for p in places):
         return False
     return all(np.linalg.norm(found.cauchy[place]) > LOUD * found.misfit * typical / size for place in places)
 

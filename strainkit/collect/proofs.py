@@ -22,7 +22,8 @@ from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
-from strainkit.tensors.sixvectors import from_mandel, stress_to_voigt
+from strainkit.tensors.sixvectors import from_mandel, stress_to_voigt, to_mandel
+from strainkit.units import EV_PER_A3_IN_GPA
 
 __all__ = ["prove"]
 
@@ -32,6 +33,8 @@ TOO_MANY = 600
 INCONSISTENT = 0.10
 #: decades by which a factor may miss a known one, and by which single comparisons may miss the usual one
 NEAR, SCATTER = 0.06, 0.15
+#: part of the scatter of energies that may be left about a straight line
+STRAIGHT = 0.02
 
 Refused = tuple[Finding, tuple[str, ...]]
 
@@ -120,6 +123,24 @@ def _ratios(plan: Plan, group: Group, cauchy: FloatArray) -> FloatArray:
     return np.array(list(energy_ratios(plan, list(zip(group.jobs, records, strict=True))).values()))
 
 
+def _slope(plan: Plan, group: Group, cauchy: FloatArray) -> FloatArray:
+    """The same without a reference: one ratio, the slope of the energies against V0 eta:(S + S0)/2, S0 a mean; or none.
+
+    Only where a straight line holds for nearly all of the scatter of the energies.
+    """
+    known = [index for index, record in enumerate(group.records) if record.energy is not None]
+    if len(known) < 4:
+        return np.zeros(0)
+    second = np.einsum("jab,jb->ja", group.to_second, cauchy)
+    strains = to_mandel(np.array([job.strain for job in group.jobs]))
+    work = plan.crystal.volume / EV_PER_A3_IN_GPA * 0.5 * (strains * (second + second.mean(axis=0))).sum(axis=1)[known]
+    energies = np.array([group.records[index].energy for index in known], dtype=float)
+    work, energies = work - work.mean(), energies - energies.mean()
+    slope = float(work @ energies / max(float(work @ work), 1e-300))
+    off = float(((energies - slope * work) ** 2).sum())
+    return np.array([slope]) if off < STRAIGHT * float(energies @ energies) else np.zeros(0)
+
+
 def _by_their_energies(plan: Plan, group: Group, best: Attempt, rivals: list[Attempt]) -> tuple[Attempt, list[Attempt]]:
     """Of explanations that are equally good for the stresses, those that are best for the energies."""
     tries = [best, *rivals]
@@ -134,6 +155,8 @@ def _by_their_energies(plan: Plan, group: Group, best: Attempt, rivals: list[Att
 def _common_factor(plan: Plan, group: Group, cauchy: FloatArray) -> list[Refused]:
     """A factor common to all stresses (jobs, 6), Mandel, from the energies of the same jobs."""
     ratios = _ratios(plan, group, cauchy)
+    if not len(ratios) and group.rest is None:
+        ratios = _slope(plan, group, cauchy)
     values = np.array([ratio for ratio in ratios if ratio > 0])
     if len(values) < 0.75 * len(ratios) or not len(values):
         return []
@@ -149,6 +172,8 @@ def _common_factor(plan: Plan, group: Group, cauchy: FloatArray) -> list[Refused
     text = f"the stresses are {word} the energies of the same jobs ask for (comparisons: {len(values)})"
     first = group.records[0]
     text += _give(first.program == "table", unit_words(first, 10**nearest))
+    if len(values) == 1:
+        text += "; or the energy of the reference or of the strained jobs is of another minimum"
     atoms = len(plan.crystal.numbers)
     if abs(middle + np.log10(atoms)) < NEAR:
         text += f"; or the energies are those of one of the {atoms} atoms, where that of the cell belongs"

@@ -6,15 +6,17 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from support.crystals import conventional
+from support.crystals import conventional, random_rotation
 from support.faultbench import Faulty, clean_set, collected
 from support.published import mandel
 from support.returned import linear_law, write_returns
 
 from strainkit.collect.gather import collect_run
+from strainkit.collect.trust import judge_set
+from strainkit.design.strainset import Wish
 from strainkit.prepare.runfolder import plan_run, write_run
 from strainkit.run.plan import job_folder
-from strainkit.tensors.sixvectors import COMPONENTS
+from strainkit.tensors.sixvectors import COMPONENTS, stress_from_voigt, stress_to_voigt
 
 
 @pytest.fixture(scope="module")
@@ -135,3 +137,35 @@ def test_two_finished_outputs_that_differ_are_named(tmp_path, plan):
     assert codes(collect_run(run, plan)) == []
     write_returns(run, plan, linear_law(0.5 * mandel("aragonite_Liu2005")), only={plan.jobs[1].label})
     assert "outputs-disagree" in codes(collect_run(run, plan))
+
+
+@pytest.mark.parametrize("laue", ["2/m", "4/m", "m-3m"])
+def test_a_common_unit_shows_without_the_reference_too(laue):
+    clean = clean_set(laue, np.random.default_rng(2), (0.005, 0.01), 0.003, 1.0)
+    table = collected(Faulty(clean.plan, dict(clean.outputs), clean.clamped))
+    for factor, wanted in ((1.0, set()), (10.0, {"stress-unit"})):
+        records = [
+            replace(r, status="missing", stress=None, energy=None)
+            if r.label == "reference"
+            else replace(r, stress=factor * r.stress)
+            for r in table.records
+        ]
+        _, found = judge_set(clean.plan, records)
+        assert {f.code for f in found} - {"reference-missing"} == wanted
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_no_healthy_job_is_blamed_for_a_stress_in_other_axes(seed):
+    """s1 alone fixes a constant: a larger stress in its place leaves as much in GPa, and makes that look small beside itself."""
+    rng = np.random.default_rng(seed)
+    plan = plan_run(conventional("m-3m"), Wish("symmetric", (0.005,)))
+    clean = clean_set("m-3m", rng, (0.005,), 0.003, 0.0, plan=plan)
+    table = collected(Faulty(plan, dict(clean.outputs), clean.clamped))
+    turn = random_rotation(rng)
+    for label in ("s2-plus-0.5", "s2-minus-0.5"):
+        records = [
+            replace(r, stress=stress_to_voigt(turn @ stress_from_voigt(r.stress) @ turn.T)) if r.label == label else r
+            for r in table.records
+        ]
+        after, _ = judge_set(plan, records)
+        assert {r.label for r in after if r.status == "suspect"} <= {label}
