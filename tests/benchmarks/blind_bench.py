@@ -175,7 +175,7 @@ def main() -> None:
     parser.add_argument("--case", help="one case by its id, such as 'sign, one #3'")
     parser.add_argument("--keep", type=Path, help="write the run folder of the case here")
     options = parser.parse_args()
-    bench = Bench(options.sets, options.seed)
+    bench = Bench([DATA / "sets", *options.sets], options.seed)
     if options.case:
         names, _, number = options.case.rpartition(" #")
         found = bench.case(tuple(names.split(" + ")), int(number), options.keep)

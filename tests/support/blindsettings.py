@@ -96,8 +96,15 @@ def _espresso_functional(job: Espresso, rng: np.random.Generator) -> bool:
 
 
 def _espresso_dispersion(job: Espresso, rng: np.random.Generator) -> bool:
+    """DFT-D3 or Grimme-D2 (words of pw.x 6.7) where there was none; none or Grimme-D2 where there was DFT-D3."""
+    had = "Parameters for DFT-D3" in job.text
+    if had:
+        job.swap(r" +-+\n     Parameters for DFT-D3 Dispersion Correction:\n(?:.*\n)*?(?=     Subspace diagonalization)", "")
+        job.swap(r"     DFT-D3 Dispersion .*\n", "", 0)
+        if rng.random() < 0.5:
+            return True
     words, term = "Parameters for DFT-D3 Dispersion Correction:", "DFT-D3 Dispersion        "
-    if rng.random() > 0.5:  # words of pw.x 6.7
+    if had or rng.random() > 0.5:
         words, term = "Parameters for Dispersion (Grimme-D2) Correction:", "Dispersion Correction    "
     line = "     " + "-" * len(words)
     head = f"{line}\n     {words}\n{line}\n"
