@@ -1,4 +1,4 @@
-"""The fault bench in small: every fault alone in four Laue classes, clean sets of all (by injectors of others: tests/benchmarks/blind_bench.py).
+"""Every fault alone in four Laue classes, clean sets of all; a bench by another injector: tests/benchmarks/blind_bench.py.
 
 What a fault must be named follows from the injector in support.faultbench; clean sets must stay silent.
 """

@@ -156,7 +156,7 @@ def test_a_common_unit_shows_without_the_reference_too(laue):
 
 @pytest.mark.parametrize("seed", range(6))
 def test_no_healthy_job_is_blamed_for_a_stress_in_other_axes(seed):
-    """s1 alone fixes a constant: a larger stress in its place leaves as much in GPa, and makes that look small beside itself."""
+    """s1 alone fixes a constant: a larger stress in its place leaves as much in GPa, and makes it look small."""
     rng = np.random.default_rng(seed)
     plan = plan_run(conventional("m-3m"), Wish("symmetric", (0.005,)))
     clean = clean_set("m-3m", rng, (0.005,), 0.003, 0.0, plan=plan)
