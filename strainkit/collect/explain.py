@@ -16,6 +16,8 @@ __all__ = ["MANY", "Attempt", "explain", "unchanged"]
 
 #: a change must take the misfit (root of the sum of squares) down to this part of it, and to this part of the typical stress
 PART, CLEAN = 0.35, 0.08
+#: and to this part in GPa
+LESS = 0.8
 #: a single stress that is changed must be so many times larger than what is left per job
 LOUD = 5.0
 #: a changed stress must agree with what the others say to this part of the typical stress and so many times the misfit of those
@@ -144,7 +146,7 @@ def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
     before, typical = (
         float(typical_change(np.einsum("jab,jb->ja", group.to_second, a.cauchy), group.rest)) for a in (start, found)
     )
-    if found.misfit * typical > PART * start.misfit * before:
+    if found.misfit * typical > LESS * start.misfit * before:
         return False
     size = len(group.jobs) ** 0.5
     places = [place for place, _ in found.steps if place is not None]

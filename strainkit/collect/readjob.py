@@ -156,5 +156,8 @@ def _second(record: StressRecord, other: StressRecord) -> list[Finding]:
     apart = float(np.abs(record.stress - other.stress).max())
     if apart <= max(_DISAGREE * float(np.abs(record.stress).max()), _DISAGREE_GPA):
         return []
-    text = f"{other.file} is finished too and differs by {apart:.3g} GPa from {record.file}, which counts; remove the wrong one"
+    text = (
+        f"{other.file} is finished too and differs by {apart:.3g} GPa from {record.file}, which counts; remove the wrong one, "
+        "or the older one where the other goes on from it"
+    )
     return [finding("outputs-disagree", record.label, text)]

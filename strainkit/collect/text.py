@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Iterable
 from functools import lru_cache
 from math import isfinite
 
@@ -19,6 +20,7 @@ __all__ = [
     "last",
     "last_number",
     "lines_after",
+    "names",
     "needed",
     "number",
     "rows",
@@ -35,6 +37,11 @@ def number(word: str) -> float:
     if not isfinite(value):
         raise ValueError(f"{word[:20]} cannot be read as a finite number")
     return value
+
+
+def names(found: Iterable[str]) -> str:
+    """Names, each once, in an order that does not depend on that of the atoms."""
+    return ", ".join(sorted(set(found)))
 
 
 def last(pattern: re.Pattern[str], text: str, start: int = 0) -> re.Match[str] | None:

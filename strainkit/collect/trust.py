@@ -156,24 +156,29 @@ def _some(labels: Sequence[str]) -> str:
 
 
 def _identical(plan: Plan, done: list[tuple[StrainJob, StressRecord]]) -> list[tuple[Finding, tuple[str, ...]]]:
-    """Different jobs cannot give the same numbers to the last digit."""
-    groups: dict[tuple[object, ...], list[tuple[StrainJob, str]]] = defaultdict(list)
+    """Different calculations cannot give the same numbers to the last digit."""
+    groups: dict[tuple[object, ...], list[StrainJob]] = defaultdict(list)
     for job, record in done:
         if record.file_sha256 and record.file.startswith("jobs/"):
-            groups["the same file, byte for byte", record.file_sha256].append((job, record.label))
+            groups["the same file, byte for byte", record.file_sha256].append(job)
         printed = _printed(record)
         distinct = len(set(np.abs(printed[np.abs(printed) > 1e-6]).tolist()))
-        if distinct:  # one number, a pressure, may repeat by chance, but not together with the energy
-            energy = None if distinct > 1 or record.energy is None else round(record.energy, 7)
-            groups["the same stress to the last digit", energy, *printed.tolist()].append((job, record.label))
+        if (
+            distinct > 1 and job.kind != "finer"
+        ):  # one number, a pressure, may repeat by chance; finer settings may change little
+            groups["the same stress to the last digit", *printed.tolist()].append(job)
+        if distinct and record.energy is not None:
+            groups["the same stress and energy to the last digit", round(record.energy, 7), *printed.tolist()].append(job)
     found = []
     seen: set[tuple[str, ...]] = set()
-    for (what, *_), members in groups.items():
-        labels = tuple(label for _, label in members)
-        apart = any(np.abs(job.gradient - members[0][0].gradient).max() > 1e-7 for job, _ in members[1:])
-        if len(labels) > 1 and labels not in seen and (apart or members[0][0].moved):
+    for (what, *_), jobs in groups.items():
+        labels = tuple(job.label for job in jobs)
+        strained = any(np.abs(job.gradient - jobs[0].gradient).max() > 1e-7 or job.moved for job in jobs)
+        finer = tuple(job.label for job in jobs if job.kind == "finer")
+        if len(labels) > 1 and labels not in seen and (strained or 0 < len(finer) < len(labels)):
             seen.add(labels)
-            found.append((finding("identical-outputs", " and ".join(labels[:3]), f"{what}: one of them is a copy"), labels))
+            text = f"{what}: one of them is a copy"
+            found.append((finding("identical-outputs", " and ".join(labels[:3]), text), labels if strained else finer))
     return found
 
 

@@ -57,9 +57,9 @@ def close_pairs(lattice: FloatArray, positions: FloatArray, reach: FloatArray) -
     lengths = np.linalg.norm(vectors, axis=1)
     itself = (first == second) & (moved == 0).all(axis=1)
     keep = np.flatnonzero((lengths < reach[first] + reach[second]) & ~itself)
-    shifts = moved[keep] - home[second[keep]] + home[first[keep]]
-    low = shifts.min(axis=0, initial=0)
-    places = np.ravel_multi_index(tuple((shifts - low).T), tuple(shifts.max(axis=0, initial=0) - low + 1))
+    # shifts of one pair differ from its steps by a constant
+    places = np.ravel_multi_index(tuple((moved[keep] - steps[0]).T), tuple(2 * -steps[0] + 1))
     order = np.lexsort((places, first[keep] * len(positions) + second[keep]))
     keep = keep[order]
-    return Pairs(first[keep], second[keep], shifts[order], vectors[keep], lengths[keep])
+    shifts = moved[keep] - home[second[keep]] + home[first[keep]]
+    return Pairs(first[keep], second[keep], shifts, vectors[keep], lengths[keep])

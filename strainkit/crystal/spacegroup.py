@@ -149,6 +149,8 @@ def higher_symmetry_possible(crystal: Crystal, kinds: IntArray, data: Any, reach
     from scipy.spatial import cKDTree
 
     lattice = data.primitive_lattice
+    if 4.0 * reach > np.linalg.norm(lattice, axis=1).min():  # nearly every matrix would do
+        return True
     kept = np.unique(data.mapping_to_primitive, return_index=True)[1]
     to_primitive = crystal.lattice @ np.linalg.inv(lattice)
     positions, kinds = crystal.positions[kept] @ to_primitive % 1.0 % 1.0, kinds[kept]

@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from strainkit.errors import InputError
+
 if TYPE_CHECKING:
     from strainkit.design.model import Order
     from strainkit.fit.residual import ReferenceStress
@@ -44,15 +46,26 @@ class FitOptions:
 
 
 def recorded_options(saved: Mapping[str, Any], plan: Plan) -> FitOptions:
-    """Options of the fit in a stiffness.json; jobs that the plan has no more are forgotten, and so are the axes of print."""
+    """Options of the fit in a stiffness.json; jobs that the plan has no more are forgotten, and so are the axes of print.
+
+    Raises
+    ------
+    InputError
+        Where they are none.
+    """
     labels = {job.label for job in plan.jobs}
-    return FitOptions(
-        order=saved.get("order", "linear"),
-        noise=saved.get("noise_GPa") if saved.get("degrees_of_freedom") is None else None,
-        reading=saved.get("reference_stress_reading", "real"),
-        drop=tuple(label for label in saved.get("jobs_dropped") or () if label in labels),
-        force_constants=(saved.get("relaxed_ion") or {}).get("force_constants_file") or "",
-    )
+    known = "degrees_of_freedom" in saved and saved["degrees_of_freedom"] is None
+    order, reading = saved.get("order", "linear"), saved.get("reference_stress_reading", "real")
+    noise, dropped = saved.get("noise_GPa") if known else None, saved.get("jobs_dropped") or []
+    relaxed = saved.get("relaxed_ion") or {}
+    file = (relaxed.get("force_constants_file") or "") if isinstance(relaxed, dict) else None
+    sound = order in ("linear", "cubic") and reading in ("real", "offset") and isinstance(dropped, list)
+    if not sound or not isinstance(file, str) or not (noise is None or (isinstance(noise, int | float) and noise > 0)):
+        from strainkit.fit.result import FITTED
+
+        raise InputError("its options are not those of a fit", FITTED, "Fit again: strainkit fit RUN.")
+    drop = tuple(label for label in dropped if isinstance(label, str) and label in labels)
+    return FitOptions(order=order, noise=noise, reading=reading, drop=drop, force_constants=file)
 
 
 def last_options(run: Path, plan: Plan) -> FitOptions:

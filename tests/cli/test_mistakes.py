@@ -283,9 +283,12 @@ def test_what_comes_after_the_fit_follows_it(cli, tmp_path):
     assert cli("fit", run).code == 0  # a fit begins anew
     assert seen() == (False, False, False)
     assert cli("derive", run, "--json").json["stress_strain_GPa"] == plain
-    (run / "stiffness.json").write_text("{")
-    for command in ("derive", "report", "converge"):
-        result = cli(command, run)
-        assert result.code == 3
-        assert "stiffness.json" in result.err
+    saved = json.loads((run / "stiffness.json").read_text())
+    damage = [{"order": ["x"]}, {"order": "quartic"}, {"noise_GPa": -1, "degrees_of_freedom": None}, {"jobs_dropped": 3}]
+    for text in ("{", *(json.dumps(saved | change) for change in damage), json.dumps(saved | {"relaxed_ion": [1]})):
+        (run / "stiffness.json").write_text(text)
+        for command in ("derive", "report", "converge"):
+            result = cli(command, run)
+            assert result.code == 3
+            assert "stiffness.json" in result.err
     assert cli("fit", run).code == 0

@@ -13,6 +13,7 @@ from support.returned import linear_law, write_returns
 
 from strainkit.collect.gather import collect_run
 from strainkit.collect.trust import judge_set
+from strainkit.design.extend import finer_jobs
 from strainkit.design.strainset import Wish
 from strainkit.prepare.runfolder import plan_run, write_run
 from strainkit.run.plan import job_folder
@@ -169,3 +170,26 @@ def test_no_healthy_job_is_blamed_for_a_stress_in_other_axes(seed):
         ]
         after, _ = judge_set(plan, records)
         assert {r.label for r in after if r.status == "suspect"} <= {label}
+
+
+def test_one_stress_a_thousand_times_too_small_is_found_without_energies():
+    """In the class with most constants, where the model can follow most of a missing stress."""
+    plan = plan_run(conventional("-1"), (0.01,))
+    clean = clean_set("-1", np.random.default_rng(100), (0.01,), noise=0.003, energies=False, plan=plan)
+    for label in ("s2-plus-1", "s4-plus-1", "s6-minus-1"):
+        outputs = clean.outputs | {label: replace(clean.outputs[label], stress=1e-3 * clean.outputs[label].stress)}
+        table = collected(Faulty(plan, outputs, clean.clamped))
+        assert [r.label for r in table.records if r.status == "suspect"] == [label]
+
+
+def test_a_finer_job_that_is_a_copy_of_its_normal_one_is_refused():
+    plan = plan_run(conventional("mmm"), (0.01,))
+    finer = finer_jobs(plan.jobs)
+    plan = replace(plan, jobs=(*plan.jobs, *finer))
+    clean = clean_set("mmm", np.random.default_rng(3), (0.01,), plan=plan)
+    base = {job.label: next(j.label for j in plan.jobs if np.allclose(j.gradient, job.gradient)) for job in finer}
+    outputs = clean.outputs | {label: clean.outputs[other] for label, other in base.items()}
+    for copies in (base, {}):  # the file, and its numbers alone
+        table = collected(Faulty(plan, outputs, clean.clamped, copies))
+        assert {r.label for r in table.records if r.status == "suspect"} == set(base)
+        assert "identical-outputs" in codes(table)

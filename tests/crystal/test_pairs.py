@@ -54,3 +54,13 @@ def test_hydrogen_bonds_in_the_cell(crystal: Crystal, count: int):
     rng = np.random.default_rng(3)
     turned = rewritten(crystal, random_rotation(rng), random_unimodular(rng), rng.permutation(len(crystal.numbers)))
     assert count_hydrogen_bonds(turned) == count
+
+
+def test_atoms_far_outside_the_cell_have_the_same_neighbours():
+    lattice, reach = np.diag([4.0, 4.5, 5.0]), np.full(3, 1.6)
+    positions = np.array([[0.1, 0.2, 0.3], [0.5, 0.5, 0.5], [0.9, 0.8, 0.1]])
+    far = np.array([[3_000_000, 0, 0], [0, -3_000_000, 0], [0, 0, 3_000_000]])
+    here, there = close_pairs(lattice, positions, reach), close_pairs(lattice, positions + far, reach)
+    assert len(here.first) > 0
+    np.testing.assert_array_equal(there.first, here.first)
+    np.testing.assert_array_equal(there.shifts, here.shifts - far[here.second] + far[here.first])

@@ -9,7 +9,7 @@ from ase.units import Bohr, Hartree
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, found, last, number, rows
+from strainkit.collect.text import NUMBER, found, last, names, number, rows
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import STRESS_UNITS_IN_GPA
 
@@ -183,7 +183,7 @@ def settings(text: str) -> Settings:
         result["functional"] = functional[1]
     elif ixc is not None:  # no words are printed for a negative one
         result["functional"] = f"ixc {int(ixc[0])}"
-    result["pseudopotentials"] = ", ".join(dict.fromkeys(path.rpartition("/")[2] for path in _PSEUDO.findall(text)))
+    result["pseudopotentials"] = names(path.rpartition("/")[2] for path in _PSEUDO.findall(text))
     occopt, width, spins = (_variable(after, name, 1) for name in ("occopt", "tsmear", "nsppol"))
     result["smearing"] = "none"
     if occopt is not None and 3 <= occopt[0] <= 8 and width is not None:

@@ -23,6 +23,7 @@ from strainkit.collect.text import (
     last,
     last_number,
     lines_after,
+    names,
     needed,
     number,
     rows,
@@ -237,7 +238,7 @@ def settings(output: Output) -> Settings:
     result: dict[str, str | float | tuple[float, ...]] = {"smearing": "none", "dispersion": "none", **said}
     result["kpoints"] = "x".join(said["kpoints"].split()) if "kpoints" in said else "1x1x1"
     result["spin"] = "polarised" if said.get("spin") == "unrestricted" else "none"
-    result["pseudopotentials"] = ", ".join(dict.fromkeys(_PSEUDO.findall(output.text)))
+    result["pseudopotentials"] = names(_PSEUDO.findall(output.text))
     if cutoff := last_number(re.compile(rf"QS\| Density cutoff \[a\.u\.\]: +({NUMBER})\s*$", re.M), output.text):
         result["cutoff_eV"] = cutoff * Hartree
     return result

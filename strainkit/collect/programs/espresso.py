@@ -17,6 +17,7 @@ from strainkit.collect.text import (
     last,
     last_number,
     lines_after,
+    names,
     needed,
     number,
     rows,
@@ -186,8 +187,7 @@ def settings(text: str) -> Settings:
         result["cutoff_eV"] = number(cutoff) * Rydberg
     if points := _mesh_points(text):
         result["kpoint_total"] = str(points)
-    files = (f"{kind} {md5[:8]}" for kind, md5 in _PSEUDO.findall(text))
-    result["pseudopotentials"] = ", ".join(dict.fromkeys(files))
+    result["pseudopotentials"] = names(f"{kind} {md5[:8]}" for kind, md5 in _PSEUDO.findall(text))
     return result
 
 
@@ -195,9 +195,13 @@ def _mesh_points(text: str) -> int:
     """Points of the whole mesh: Gamma stands for itself alone. 0 where it is not in the mesh, or the list not printed."""
     start = text.rfind("number of k points=")
     block = text[start : text.find("\n\n", start)]
+    count = re.match(r"number of k points= *(\d+)", block)
     listed = [[number(word) for word in match.groups()] for match in _POINT.finditer(block)]
     mine = [point[3] for point in listed if not any(point[:3])]
-    return round(sum(point[3] for point in listed) / mine[0] / len(mine)) if mine and mine[0] > 0 else 0
+    if count is None or len(listed) != int(count[1]) or not mine or mine[0] <= 0:
+        return 0
+    whole = round(sum(point[3] for point in listed))  # 1 or 2, but for the digits printed
+    return round(whole / mine[0] / len(mine))
 
 
 def version(text: str) -> str:

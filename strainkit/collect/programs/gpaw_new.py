@@ -10,9 +10,10 @@ import re
 
 import numpy as np
 
+from strainkit.collect.programs.gpaw_text import SETUP
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, elements, fractional, last, last_number, number, rows, symmetric
+from strainkit.collect.text import NUMBER, elements, fractional, last, last_number, names, number, rows, symmetric
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import EV_PER_A3_IN_GPA
 
@@ -112,8 +113,6 @@ _SETTINGS = {
     "kpoints": re.compile(r"Monkhorst-Pack size: \[(\d+, \d+, \d+)\]"),
     "functional": re.compile(r"\nxc functional:\n +name: (\S+)"),
 }
-#: checksum and file name of a data set
-_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n){0,8}? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
 
 
 def settings(text: str) -> Settings:
@@ -124,7 +123,7 @@ def settings(text: str) -> Settings:
     if occupations := re.search(r"\noccupation numbers:\n +(\S.*?):\n(?: +width: (\S+))?", text):
         result["smearing"] = f"{occupations[1]}: width: {occupations[2]}" if occupations[2] else "none"
     result["spin"] = "none" if "Spin-components: 1 " in text else "polarised"
-    result["pseudopotentials"] = ", ".join(f"{name} {md5[:8]}" for md5, name in _SETUP.findall(text))
+    result["pseudopotentials"] = names(f"{name} {md5[:8]}" for md5, name in SETUP.findall(text))
     if cutoff := last_number(re.compile(rf"\nCutoff: ({NUMBER}) eV"), text):
         result["cutoff_eV"] = cutoff
     return result

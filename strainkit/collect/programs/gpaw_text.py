@@ -20,6 +20,7 @@ from strainkit.collect.text import (
     last,
     last_number,
     lines_after,
+    names,
     number,
     rows,
     symmetric,
@@ -121,7 +122,7 @@ _SETTINGS = {
     "dispersion": re.compile(r"\n(vdW\S+|DFT-?D\S+)"),
 }
 #: checksum and file name of a data set
-_SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n){0,8}? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
+SETUP = re.compile(r"^ +id: +(\w+)\n(?: .*\n){0,8}? +file: +\S*?([^/\s]+?)(?:\.gz)?$", re.M)
 
 
 def settings(text: str) -> Settings:
@@ -132,7 +133,7 @@ def settings(text: str) -> Settings:
     if occupations := re.search(r"^Occupation numbers:\s*(.*(?:\n  +\S.*)*)", text, re.M):
         result["smearing"] = " ".join(occupations[1].split("#")[0].split()) or "none"
     result["spin"] = "polarised" if re.search(r"^Spin-polarized calculation", text, re.M) else "none"
-    result["pseudopotentials"] = ", ".join(f"{name} {md5[:8]}" for md5, name in _SETUP.findall(text))
+    result["pseudopotentials"] = names(f"{name} {md5[:8]}" for md5, name in SETUP.findall(text))
     if cutoff := last_number(re.compile(rf"Cutoff energy: ({NUMBER}) eV"), text):
         result["cutoff_eV"] = cutoff
     return result

@@ -8,7 +8,7 @@ import numpy as np
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, number, rows
+from strainkit.collect.text import NUMBER, elements, found, fractional, last, last_number, names, number, rows
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import EV_PER_A3_IN_GPA
 
@@ -135,7 +135,7 @@ def settings(text: str) -> Settings:
         result["kpoint_count"] = count[1]
     if functional := re.search(r" GGA += +(\S+)", text):
         result["functional"] = functional[1]
-    result["pseudopotentials"] = ", ".join(" ".join(title.split()) for title in re.findall(r"TITEL += +(\S.*)", text))
+    result["pseudopotentials"] = names(" ".join(title.split()) for title in re.findall(r"TITEL += +(\S.*)", text))
     correction = re.search(r" IVDW += +(\d+)", text)
     result["dispersion"] = f"IVDW {correction[1]}" if correction and correction[1] != "0" else "none"
     return result

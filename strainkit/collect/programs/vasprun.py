@@ -11,7 +11,7 @@ import numpy as np
 
 from strainkit.collect.returned import Geometry, Problems, Settings, Stress
 from strainkit.collect.source import Source
-from strainkit.collect.text import elements, number, symmetric
+from strainkit.collect.text import elements, names, number, symmetric
 from strainkit.tensors.arrays import FloatArray
 from strainkit.units import EV_PER_A3_IN_GPA
 
@@ -90,7 +90,7 @@ def _take(document: Document, element: ElementTree.Element) -> None:
         cells = element.findall("array[@name='atoms']/set/rc/c[1]")
         document.symbols = [(cell.text or "").strip() for cell in cells]
         kinds = element.findall("array[@name='atomtypes']/set/rc/c[5]")
-        document.pseudopotentials = ", ".join(" ".join((cell.text or "").split()) for cell in kinds)
+        document.pseudopotentials = names(" ".join((cell.text or "").split()) for cell in kinds)
     elif element.tag == "kpoints":
         document.divisions = "x".join((element.findtext("generation/v[@name='divisions']") or "").split())
         document.kpoint_count = len(element.findall("varray[@name='kpointlist']/v"))
