@@ -36,6 +36,10 @@ __all__ = [
     "translation_denominators",
 ]
 
+#: a cell this close to its group, in tolerances, has the same group at a tenth of the tolerance
+EXACT = 0.01
+#: tolerances by which an image may miss when the operation is placed on one atom instead of in the middle of all (two; and spare)
+PLACED = 3.0
 #: Laue class -> (crystal system, point groups)
 LAUE_CLASSES: dict[str, tuple[str, tuple[str, ...]]] = {
     "-1": ("triclinic", ("1", "-1")),
@@ -197,7 +201,8 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[Symmetry, list[t
     given = np.linalg.inv(symmetry.transformation).T @ crystal.lattice
     off = max(symmetry.deviation, float(np.abs(given - symmetry.standard_lattice).max()))
     # searches that cannot find another group are left out: they take longer than all else that is known of a cell
-    same = {0.1: off < 0.01 * symprec, 1.0: True, 10.0: not higher_symmetry_possible(crystal, kinds, data, 30.0 * symprec)}
+    loosest = 10.0 * symprec
+    same = {0.1: off < EXACT * symprec, 1.0: True, 10.0: not higher_symmetry_possible(crystal, kinds, data, PLACED * loosest)}
     rungs = []
     for factor, known in same.items():
         with suppress(InputError):

@@ -56,23 +56,24 @@ def find_voids(crystal: Crystal, probe: float = PROBE) -> Voids:
     points = _points(rough_shape)
     rough = _clearance(crystal, points, probe)
     packing = float((rough < 0).mean())
+    none = Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
     # no point of the cell is farther from a grid point than half a grid cell's longest diagonal
     promising = rough + _half_diagonal(crystal, rough_shape) >= probe
     if not promising.any():
-        return Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
+        return none
     # the same with half the spacing about what is left: in most crystals nothing is
     octants = (np.stack(np.meshgrid(*[(-0.25, 0.25)] * 3, indexing="ij"), axis=-1).reshape(-1, 3)) / np.array(rough_shape)
     closer = _clearance(crystal, (points[promising][:, None] + octants).reshape(-1, 3), probe).reshape(-1, 8).max(axis=1)
     promising[promising] = closer + 0.5 * _half_diagonal(crystal, rough_shape) >= probe
     if not promising.any():
-        return Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
+        return none
     shape = _grid_shape(crystal, FINE)
     nearest = [np.round(np.arange(n) / n * m).astype(int) % m for n, m in zip(shape, rough_shape, strict=True)]
     worth = promising.reshape(rough_shape)[np.ix_(*nearest)]
     clearance = np.zeros(shape)
     clearance[worth] = _clearance(crystal, np.argwhere(worth) / np.array(shape))
     if clearance.max() < probe:
-        return Voids(packing, 0.0, 0.0, np.zeros(3), 0.0)
+        return none
     labels = _connected(_covered(crystal, clearance, probe))
     point = crystal.volume / labels.size
     counts = np.bincount(labels.ravel())[1:]
