@@ -38,7 +38,7 @@ __all__ = [
 
 #: a cell this close to its group, in tolerances, has the same group at a tenth of the tolerance
 EXACT = 0.01
-#: tolerances by which an image may miss when the operation is placed on one atom instead of in the middle of all (two; and spare)
+#: tolerances by which an image may miss when an operation is placed on one atom, not in the middle of all (two; and spare)
 PLACED = 3.0
 #: Laue class -> (crystal system, point groups)
 LAUE_CLASSES: dict[str, tuple[str, tuple[str, ...]]] = {
