@@ -89,11 +89,11 @@ class Group:
         typical = typical_change(second.swapaxes(0, 1), self.rest)
         return np.asarray(np.sqrt(np.maximum(left, 0.0) + np.maximum(outside, 0.0) + negative) / typical)
 
-    def without_one(self) -> tuple[int, float]:
-        """The job whose stress, left free, takes away most of the misfit, and the misfit that is left then."""
+    def without_one(self) -> tuple[list[int], float]:
+        """Jobs whose stress, left free, takes away most of the misfit (partners do so alike), and the misfit left then."""
         gains, whole, typical = self.gains(self.cauchy)
-        worst = int(gains.argmax())
-        return worst, float(np.sqrt(max(whole - gains[worst], 0.0)) / typical)
+        worst = np.flatnonzero(gains > 0.9 * gains.max()).tolist()
+        return worst, float(np.sqrt(max(whole - gains.max(), 0.0)) / typical)
 
     def gains(self, cauchy: FloatArray) -> tuple[FloatArray, float, float]:
         """What each stress (jobs,), left free, takes away of the sum of squares of a misfit, that sum (GPa^2), typical stress.

@@ -81,13 +81,14 @@ def _unexplained(group: Group, start: Attempt) -> list[Refused]:
     size = len(group.jobs) ** 0.5
     if start.misfit < INCONSISTENT * size:
         return []
-    worst, left = group.without_one()
     text = f"the stresses miss one stiffness by {100 * start.misfit / size:.2g} % of their typical change a job"
-    label = group.jobs[worst].label
-    if left < 0.5 * start.misfit:
-        text += f", without {label} by {100 * left / size:.2g} %: look into that one"
-        return [(finding("set-inconsistent", label, text), ())]
-    return [(finding("set-inconsistent", "strain set", text + ": large noise, or more than one fault"), ())]
+    worst, left = group.without_one()
+    labels = [group.jobs[index].label for index in worst]
+    if left < 0.5 * start.misfit and group.spare > 6 and len(labels) < len(group.jobs):
+        text += f", without {' or '.join(labels)} by {100 * left / size:.2g} %: look there"
+        return [(finding("set-inconsistent", labels[0] if len(labels) == 1 else "strain set", text), ())]
+    text += ": large noise (a low cutoff, loose tolerances), or more than one fault"
+    return [(finding("set-inconsistent", "strain set", text), ())]
 
 
 def _words(group: Group, step: tuple[int | None, Mend]) -> str:

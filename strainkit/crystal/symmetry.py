@@ -201,8 +201,8 @@ def tolerance_ladder(crystal: Crystal, symprec: float) -> tuple[Symmetry, list[t
     given = np.linalg.inv(symmetry.transformation).T @ crystal.lattice
     off = max(symmetry.deviation, float(np.abs(given - symmetry.standard_lattice).max()))
     # searches that cannot find another group are left out: they take longer than all else that is known of a cell
-    loosest = 10.0 * symprec
-    same = {0.1: off < EXACT * symprec, 1.0: True, 10.0: not higher_symmetry_possible(crystal, kinds, data, PLACED * loosest)}
+    loose = 10.0 * symprec
+    same = {0.1: off < EXACT * symprec, 1.0: True, 10.0: not higher_symmetry_possible(crystal, kinds, data, PLACED * loose)}
     rungs = []
     for factor, known in same.items():
         with suppress(InputError):
