@@ -25,11 +25,11 @@ FRAME = " 0.0 5.3 5.3 <-- h\n 5.3 0.0 5.3 <-- h\n 5.3 5.3 0.0 <-- h\n Si 1 0.0 0
 
 #: deck: (file that an attempt leaves, first input, input of the second attempt, what a whole last step looks like)
 LEFT = {
-    "qe": ("pw-1.out", "pw.in", "pw-2.in", "Program PWSCF\n\nATOMIC_POSITIONS (crystal)\nSi 0.0 0.0 0.0\nSi 0.26125 0.25 0.25125\n"),
-    "abinit": ("abinit-1.abo", "abinit.abi", "abinit-2.abi", " Reduced coordinates (xred)\n 0.0 0.0 0.0\n 0.26125 0.25 0.25125\n"),
+    "qe": ("pw-1.out", "pw.in", "pw-2.in", "ATOMIC_POSITIONS (crystal)\nSi 0.0 0.0 0.0\nSi 0.26125 0.25 0.25125\n"),
+    "abinit": ("abinit-1.abo", "abinit.abi", "abinit-2.abi", "Reduced coordinates (xred)\n 0 0 0\n 0.26125 0.25 0.25125\n"),
     "castep": ("castep-1.geom", "castep.cell", "castep-2.cell", f"{FRAME} Si 2 2.26125 2.0 2.25125 <-- R\n"),
     "vasp": ("CONTCAR", "POSCAR", "POSCAR", f"{HEAD} 0.0 0.0 0.0\n 0.26125 0.25 0.25125\n"),
-    "aims": ("geometry.in.next_step", "geometry.in", "geometry.in", f"{GEOMETRY}atom 0.0 0.0 0.0 Si\natom 1.26125 1.3 1.3125 Si\n"),
+    "aims": ("geometry.in.next_step", "geometry.in", "geometry.in", f"{GEOMETRY}atom 0 0 0 Si\natom 1.26125 1.3 1.3125 Si\n"),
     "cp2k": ("strainkit-1.restart", "cp2k.inp", "cp2k-2.inp", "&FORCE_EVAL\n Si 1.26125 1.3 1.3125\n&END FORCE_EVAL\n"),
 }  # fmt: skip
 
