@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import shutil
 from collections.abc import Callable, Sequence
 from contextlib import AbstractContextManager
@@ -15,13 +14,13 @@ from strainkit.prepare.campaign import Planned, Recipe, Spool, placed, plan_cell
 from strainkit.prepare.cells import find_cells, names_of, plain_name
 from strainkit.prepare.scripts import LOGS, arrays, job_name, kept_site, list_name, many_files, script_name, submit_command
 from strainkit.run.campaign import Campaign, Member, Refusal, at_work, is_campaign, load_campaign
-from strainkit.run.files import atomic_write, checksum
+from strainkit.run.files import atomic_write, checksum, load_json
 from strainkit.run.plan import MANIFEST
 
 __all__ = ["Estimate", "Made", "make_campaign"]
 
 Stage = Callable[[str], AbstractContextManager[Callable[[int, int, str], None]]]
-#: what may lie in a campaign folder whose manifest was lost
+#: what lies in a campaign folder whose manifest was lost before its first run folder was written
 _OURS = ("runs", LOGS, "joblist", "submit", ".")
 
 
@@ -132,9 +131,16 @@ def _existing(out: Path, digest: str, force: bool) -> Campaign | None:
         )
     if out.is_symlink() or (out.exists() and not out.is_dir()):
         raise InputError("exists already and is not a campaign", out, "Choose another --out; nothing was touched.")
-    if out.is_dir() and any(not entry.name.startswith(_OURS) for entry in out.iterdir()):
+    if out.is_dir() and not _was_campaign(out):
         raise InputError("exists already and is not a campaign", out, "Choose another --out; nothing was touched.")
     return None
+
+
+def _was_campaign(out: Path) -> bool:
+    """Run folders where a campaign has them, whatever exports, tables and notes lie beside; or nothing of others."""
+    if next(out.glob(f"runs/[0-9][0-9][0-9]*/*/{MANIFEST}"), None) is not None:
+        return True
+    return all(entry.name.startswith(_OURS) for entry in out.iterdir())
 
 
 def _compare(
@@ -266,5 +272,10 @@ def _write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
 
 def _job_folders(out: Path, member: Member) -> list[str]:
     """Job folders of a member relative to the campaign, in the order of its plan."""
-    data = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))
-    return [f"{member.run}/{job['folder']}" for job in data["jobs"]]
+    path = out / member.run / MANIFEST
+    try:
+        return [f"{member.run}/{job['folder']}" for job in load_json(path, "strainkit/strain-set")["jobs"]]
+    except (InputError, KeyError, TypeError) as error:
+        what = error.what if isinstance(error, InputError) else f"damaged manifest ({type(error).__name__}: {error})"
+        remedy = f"Restore it, or move {out / member.run} away and give the same command again."
+        raise InputError(what, path, remedy) from None
