@@ -22,11 +22,14 @@ __all__ = [
     "findings_tally",
     "made_text",
     "next_text",
+    "not_taken_text",
     "screening_files",
     "size_text",
     "tally_text",
 ]
 
+#: names in a row on a terminal
+_NAMED = 3
 #: problems shown on a terminal; the JSON has them all
 _SHOWN = 20
 
@@ -45,6 +48,15 @@ def estimate_text(estimate: Estimate) -> str:
     return (
         f"{counted(estimate.crystals, 'crystal')}, {counted(estimate.jobs, 'job')}: {counted(estimate.files, 'file')}, "
         f"about {size_text(estimate.bytes)} of disk{kept}"
+    )
+
+
+def not_taken_text(paths: Sequence[Path]) -> str:
+    """Files of a folder that no cell was sought in, on one line."""
+    rest = len(paths) - _NAMED
+    names = ", ".join(path.name for path in paths[:_NAMED]) + (f" and {rest} more" if rest > 0 else "")
+    return (
+        f"not taken for structures by their names: {counted(len(paths), 'file')} ({names}); give one by itself to have it read"
     )
 
 

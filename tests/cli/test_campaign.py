@@ -101,6 +101,25 @@ def test_bad_cells_are_listed_and_do_not_stop_the_others(cli, tmp_path):
     assert result.json["files"] == sum(p.is_file() for p in (tmp_path / "out/runs").rglob("*"))
 
 
+def test_names_that_say_structure_are_taken_from_a_folder_and_others_are_named(cli, tmp_path):
+    """POSCAR_NAME and CONTCAR-NAME are what people call such files (common practice, no source)."""
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    for name in ("POSCAR_Si", "CONTCAR-x", "POSCAR_Si~", "Si.txt", "notes"):
+        (cells / name).write_text(SILICON)
+    result = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert result.code == 0
+    assert [m.name for m in load_campaign(tmp_path / "out").members] == ["CONTCAR-x", "POSCAR_Si"]
+    assert [Path(p).name for p in result.json["files_not_taken"]] == ["POSCAR_Si~", "Si.txt", "notes"]
+    assert "3 files (POSCAR_Si~, Si.txt, notes)" in result.err
+    for name in ("POSCAR_Si", "CONTCAR-x"):
+        (cells / name).unlink()
+    nothing = cli("prepare", cells, "--out", tmp_path / "none")
+    assert nothing.code == 3
+    assert "no structure files in it" in nothing.err
+    assert "Si.txt" in nothing.err
+
+
 def test_no_usable_cell_at_all(cli, tmp_path):
     (tmp_path / "bad.cif").write_text("nothing")
     result = cli("prepare", tmp_path / "bad.cif", "--campaign", "--out", tmp_path / "out")
