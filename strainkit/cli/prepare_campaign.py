@@ -36,7 +36,7 @@ def prepare_campaign(
     """Make or complete a campaign."""
     from strainkit.prepare.assemble import make_campaign
     from strainkit.prepare.cells import find_cells, not_taken
-    from strainkit.present.campaign import estimate_text, made_text, not_taken_text
+    from strainkit.present.campaign import estimate_text, made_text, not_taken_text, who_has
 
     def agree(estimate: Estimate) -> None:
         note(estimate_text(estimate), quiet)
@@ -60,6 +60,7 @@ def prepare_campaign(
             "files": estimate.files,
             "bytes": estimate.bytes,
             "laue_classes": estimate.laue_classes,
+            "findings_in": who_has(estimate.findings),
             "files_not_taken": [str(path) for path in others],
             "refused_cells": [asdict(refusal) for refusal in made.refused],
             "submit": made.submit or None,
