@@ -6,7 +6,7 @@ import json
 import shutil
 from collections.abc import Callable, Sequence
 from contextlib import AbstractContextManager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -27,7 +27,10 @@ _OURS = ("runs", LOGS, "joblist", "submit", ".")
 
 @dataclass(frozen=True)
 class Estimate:
-    """What is about to be written: crystals, jobs, files, bytes of a disk (about), and what is kept or refused."""
+    """What is about to be written: crystals, jobs, files, bytes of a disk (about), and what is kept or refused.
+
+    `findings` holds the codes of the warnings and errors of every crystal, kept ones included, that has some.
+    """
 
     crystals: int
     jobs: int
@@ -36,6 +39,7 @@ class Estimate:
     kept: int
     refused: tuple[Refusal, ...]
     laue_classes: dict[str, int]
+    findings: dict[str, tuple[str, ...]] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)
@@ -110,6 +114,7 @@ def make_campaign(
             kept=len(kept),
             refused=tuple(refused),
             laue_classes=_counted([*kept, *(p.member for p in planned)]),
+            findings=_doubts(kept, planned, out),
         )
         if not planned and not kept:
             reasons = "; ".join(f"{r.source}: {r.reason}" for r in refused[:3])
@@ -173,6 +178,16 @@ def _checksum(path: Path) -> str:
 def _counted(members: Sequence[Member]) -> dict[str, int]:
     classes = [member.laue_class for member in members]
     return {name: classes.count(name) for name in sorted(set(classes))}
+
+
+def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None) -> dict[str, tuple[str, ...]]:
+    """Codes of warnings and errors of the crystals that have some: as planned now, or as their run folders say."""
+    found = {p.member.name: p.findings for p in planned}
+    for member in kept:
+        assert out is not None
+        said = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))["findings"]
+        found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
+    return {name: codes for name, codes in found.items() if codes}
 
 
 def _write(

@@ -27,6 +27,7 @@ from strainkit.run.campaign import load_campaign
 from strainkit.run.extxyz import extxyz_text
 from strainkit.run.plan import load_plan
 
+SAMPLE_CELLS = Path(__file__).parents[2] / "sample_cells"
 CLASSES = ("2/m", "4/mmm", "6/m", "m-3", "m-3m")
 
 
@@ -99,6 +100,51 @@ def test_bad_cells_are_listed_and_do_not_stop_the_others(cli, tmp_path):
     assert {m.name for m in campaign.members} == {"barm-3m-0".replace("barm-3m", "mbar3m"), "4_over_mmm-0", "mp-1"}
     assert [r.source for r in campaign.refused] == [r["source"] for r in result.json["refused_cells"]]
     assert result.json["files"] == sum(p.is_file() for p in (tmp_path / "out/runs").rglob("*"))
+
+
+def test_names_that_say_structure_are_taken_from_a_folder_and_others_are_named(cli, tmp_path):
+    """POSCAR_NAME and CONTCAR-NAME are what people call such files (common practice, no source)."""
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    for name in ("POSCAR_Si", "CONTCAR-x", "POSCAR_Si~", "Si.txt", "notes"):
+        (cells / name).write_text(SILICON)
+    result = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert result.code == 0
+    assert [m.name for m in load_campaign(tmp_path / "out").members] == ["CONTCAR-x", "POSCAR_Si"]
+    assert [Path(p).name for p in result.json["files_not_taken"]] == ["POSCAR_Si~", "Si.txt", "notes"]
+    assert "3 files (POSCAR_Si~, Si.txt, notes)" in result.err
+    for name in ("POSCAR_Si", "CONTCAR-x"):
+        (cells / name).unlink()
+    nothing = cli("prepare", cells, "--out", tmp_path / "none")
+    assert nothing.code == 3
+    assert "no structure files in it" in nothing.err
+    assert "Si.txt" in nothing.err
+
+
+def test_doubts_about_cells_are_told_with_the_names_of_the_crystals(cli, tmp_path):
+    """Glycine as it is shipped, and four copies that lost a hydrogen: `inspect` warns of each of these."""
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    text = (SAMPLE_CELLS / "glycine.cif").read_text()
+    (cells / "whole.cif").write_text(text)
+    hydrogen = next(line for line in text.splitlines() if line.split()[1:2] == ["H"])
+    names = [f"lost{i}" for i in range(4)]
+    for name in names:
+        (cells / f"{name}.cif").write_text(text.replace(hydrogen + "\n", ""))
+    alone = {f["code"] for f in cli("inspect", cells / "lost0.cif", "--json").json["findings"] if f["severity"] != "info"}
+    assert "odd-electrons" in alone
+    first = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert first.json["findings_in"] == dict.fromkeys(first.json["findings_in"], names)
+    assert set(first.json["findings_in"]) == alone
+    again = cli("prepare", cells, "--out", tmp_path / "out")
+    assert "warning odd-electrons: 4 crystals (lost0, lost1, lost2 and 1 more)" in again.out
+    run = tmp_path / "out" / load_campaign(tmp_path / "out").members[0].run
+    write_all_returns(tmp_path / "out", np.random.default_rng(4), noise=1e-4)
+    (run / "jobs" / "s1-plus-1" / "returned.extxyz").unlink()
+    assert cli("collect", tmp_path / "out").code == 4
+    assert f"warning jobs-not-used: 1 crystal ({run.name})" in cli("fit", tmp_path / "out").out
+    assert f"warning jobs-not-used: 1 crystal ({run.name})" in cli("derive", tmp_path / "out").out
+    assert cli("fit", tmp_path / "out", "--json").json["findings_in"]["jobs-not-used"] == [run.name]
 
 
 def test_no_usable_cell_at_all(cli, tmp_path):
