@@ -61,6 +61,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "unit-assumed": ("info", "a typed table does not name the unit of its stresses: taken to be GPa"),
     "matched-by-cell": ("info", "an output lay in another folder and was given to the job whose cell it has"),
     "outputs-disagree": ("warning", "two finished outputs of one job differ"),
+    "outputs-changed": ("warning", "outputs changed since they were collected"),
     "link-not-followed": ("warning", "a symbolic link in a job folder is not followed"),
     "reference-missing": ("warning", "there is no usable reference job"),
     "mixed-settings": ("error", "jobs of one set were computed with different settings or programs"),
