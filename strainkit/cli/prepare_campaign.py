@@ -56,6 +56,7 @@ def prepare_campaign(
             "written": made.campaign is not None,
             "crystals": estimate.crystals,
             "kept": estimate.kept,
+            "crystals_in_all": None if made.campaign is None else len(made.campaign.members),
             "jobs": estimate.jobs,
             "files": estimate.files,
             "bytes": estimate.bytes,

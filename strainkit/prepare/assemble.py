@@ -55,12 +55,15 @@ class Made:
         Of this call.
     submit : str
         What the user types inside the campaign folder; empty without a scheduler or when there is nothing new.
+    added : int
+        Crystals that are new in a campaign that was there before.
     """
 
     campaign: Campaign | None
     estimate: Estimate
     refused: tuple[Refusal, ...]
     submit: str = ""
+    added: int = 0
 
 
 def make_campaign(
@@ -225,7 +228,8 @@ def _write(
             campaign = replace(campaign, members=left, refused=(*campaign.refused, *lost))
             campaign.save(out)
         submit = _write_lists(out, campaign, recipe)
-    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit)
+    added = 0 if old is None else len(campaign.members) - len(old.members)
+    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit, added)
 
 
 def _make(out: Path, size: int) -> None:

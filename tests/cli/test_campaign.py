@@ -188,6 +188,14 @@ def test_running_it_again_keeps_what_is_there_and_adds_what_is_new(cli, made, ou
     assert (result.code, result.json["crystals"], result.json["kept"]) == (0, 1, 5)
     campaign = load_campaign(out)
     assert len(campaign.members) == 6
+    assert result.json["crystals_in_all"] == 6
+    write_cells(tmp_path / "two", np.random.default_rng(5), copies=2, classes=("m-3m",))
+    for name in ("mbar3m-0", "mbar3m-1"):
+        (tmp_path / "two" / f"{name}.extxyz").rename(tmp_path / "two" / f"late-{name}.extxyz")
+    told = cli("prepare", tmp_path / "two", *options[:-1])
+    assert "2 crystals added, 8 in all" in " ".join(told.out.split())
+    assert cli("prepare", tmp_path / "two", *options[:-1]).out.startswith("Campaign of 8 crystals in")
+    campaign = load_campaign(out)
     assert len(set((out / "joblist.txt").read_text().split())) == campaign.jobs
     assert {n: v for n, v in snapshot(out).items() if n.startswith("runs") and n in before} == {
         n: v for n, v in before.items() if n.startswith("runs")
@@ -206,6 +214,14 @@ def test_running_it_again_keeps_what_is_there_and_adds_what_is_new(cli, made, ou
     path.write_text(original)
     assert result.code == 3
     assert "changed since" in result.err
+
+
+def test_a_single_cell_is_told_how_to_get_into_a_campaign(cli, out, tmp_path):
+    (tmp_path / "POSCAR").write_text(SILICON)
+    result = cli("prepare", tmp_path / "POSCAR", "--out", out)
+    assert result.code == 3
+    assert "is a campaign" in result.err
+    assert "--campaign" in result.err
 
 
 def test_other_options_are_another_campaign(cli, made, out):
