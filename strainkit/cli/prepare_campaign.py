@@ -62,6 +62,7 @@ def prepare_campaign(
             "bytes": estimate.bytes,
             "laue_classes": estimate.laue_classes,
             "findings_in": who_has(estimate.findings),
+            "same_files": [list(names) for names in estimate.same_files],
             "files_not_taken": [str(path) for path in others],
             "refused_cells": [asdict(refusal) for refusal in made.refused],
             "submit": made.submit or None,

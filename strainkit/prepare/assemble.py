@@ -29,7 +29,8 @@ _OURS = ("runs", LOGS, "joblist", "submit", ".")
 class Estimate:
     """What is about to be written: crystals, jobs, files, bytes of a disk (about), and what is kept or refused.
 
-    `findings` holds the codes of the warnings and errors of every crystal, kept ones included, that has some.
+    `findings` holds the codes of the warnings and errors of every crystal, kept ones included, that has some; `same_files` the
+    names of crystals, of the whole campaign, whose files have the same content.
     """
 
     crystals: int
@@ -40,6 +41,7 @@ class Estimate:
     refused: tuple[Refusal, ...]
     laue_classes: dict[str, int]
     findings: dict[str, tuple[str, ...]] = field(default_factory=dict)
+    same_files: tuple[tuple[str, ...], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -118,6 +120,7 @@ def make_campaign(
             refused=tuple(refused),
             laue_classes=_counted([*kept, *(p.member for p in planned)]),
             findings=_doubts(kept, planned, out),
+            same_files=_same_files([*(old.members if old else ()), *(p.member for p in planned)]),
         )
         if not planned and not kept:
             reasons = "; ".join(f"{r.source}: {r.reason}" for r in refused[:3])
@@ -191,6 +194,14 @@ def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None
         said = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))["findings"]
         found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
     return {name: codes for name, codes in found.items() if codes}
+
+
+def _same_files(members: Sequence[Member]) -> tuple[tuple[str, ...], ...]:
+    """Names of members whose cells come from files of the same content."""
+    names: dict[str, dict[str, None]] = {}
+    for member in members:
+        names.setdefault(member.source_sha256, {})[member.name] = None
+    return tuple(tuple(group) for group in names.values() if len(group) > 1)
 
 
 def _write(

@@ -74,6 +74,9 @@ def made_text(made: Made, out: Path | None) -> str:
     lines = [heading(title), f"  {estimate_text(estimate)}"]
     lines.append("  Laue classes: " + ", ".join(f"{count} x {name}" for name, count in estimate.laue_classes.items()))
     lines += doubts_lines(who_has(estimate.findings))
+    if estimate.same_files:
+        groups = few([" = ".join(group) for group in estimate.same_files])
+        lines.append(paragraph(f"files of the same content, computed more than once: {groups}", "  "))
     if made.submit and out is not None:
         lines += ["  submit it yourself:", f"    cd {shlex.quote(str(out))} && {made.submit}"]
     return "\n".join([*lines, *_refused_lines(made.refused)])

@@ -147,6 +147,20 @@ def test_doubts_about_cells_are_told_with_the_names_of_the_crystals(cli, tmp_pat
     assert cli("fit", tmp_path / "out", "--json").json["findings_in"]["jobs-not-used"] == [run.name]
 
 
+def test_files_of_the_same_content_are_told(cli, tmp_path):
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    other = SILICON.replace("0.25", "0.2501")
+    for name, text in (("a", SILICON), ("b", other), ("copy of a", SILICON)):
+        (cells / f"{name}.vasp").write_text(text)
+    first = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert first.code == 0
+    assert first.json["same_files"] == [["a", "copy_of_a"]]
+    (tmp_path / "again.vasp").write_text(other)
+    added = cli("prepare", tmp_path / "again.vasp", "--campaign", "--out", tmp_path / "out")
+    assert "files of the same content, computed more than once: a = copy_of_a, b = again" in " ".join(added.out.split())
+
+
 def test_no_usable_cell_at_all(cli, tmp_path):
     (tmp_path / "bad.cif").write_text("nothing")
     result = cli("prepare", tmp_path / "bad.cif", "--campaign", "--out", tmp_path / "out")
