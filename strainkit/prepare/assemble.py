@@ -29,7 +29,8 @@ _OURS = ("runs", LOGS, "joblist", "submit", ".")
 class Estimate:
     """What is about to be written: crystals, jobs, files, bytes of a disk (about), and what is kept or refused.
 
-    `findings` holds the codes of the warnings and errors of every crystal, kept ones included, that has some.
+    `findings` holds the codes of the warnings and errors of every crystal, kept ones included, that has some; `same_files` the
+    names of crystals, of the whole campaign, whose files have the same content.
     """
 
     crystals: int
@@ -40,6 +41,7 @@ class Estimate:
     refused: tuple[Refusal, ...]
     laue_classes: dict[str, int]
     findings: dict[str, tuple[str, ...]] = field(default_factory=dict)
+    same_files: tuple[tuple[str, ...], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -55,12 +57,15 @@ class Made:
         Of this call.
     submit : str
         What the user types inside the campaign folder; empty without a scheduler or when there is nothing new.
+    added : int
+        Crystals that are new in a campaign that was there before.
     """
 
     campaign: Campaign | None
     estimate: Estimate
     refused: tuple[Refusal, ...]
     submit: str = ""
+    added: int = 0
 
 
 def make_campaign(
@@ -115,6 +120,7 @@ def make_campaign(
             refused=tuple(refused),
             laue_classes=_counted([*kept, *(p.member for p in planned)]),
             findings=_doubts(kept, planned, out),
+            same_files=_same_files([*(old.members if old else ()), *(p.member for p in planned)]),
         )
         if not planned and not kept:
             reasons = "; ".join(f"{r.source}: {r.reason}" for r in refused[:3])
@@ -190,6 +196,14 @@ def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None
     return {name: codes for name, codes in found.items() if codes}
 
 
+def _same_files(members: Sequence[Member]) -> tuple[tuple[str, ...], ...]:
+    """Names of members whose cells come from files of the same content."""
+    names: dict[str, dict[str, None]] = {}
+    for member in members:
+        names.setdefault(member.source_sha256, {})[member.name] = None
+    return tuple(tuple(group) for group in names.values() if len(group) > 1)
+
+
 def _write(
     out: Path,
     old: Campaign | None,
@@ -225,7 +239,8 @@ def _write(
             campaign = replace(campaign, members=left, refused=(*campaign.refused, *lost))
             campaign.save(out)
         submit = _write_lists(out, campaign, recipe)
-    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit)
+    added = 0 if old is None else len(campaign.members) - len(old.members)
+    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit, added)
 
 
 def _make(out: Path, size: int) -> None:

@@ -66,12 +66,17 @@ def made_text(made: Made, out: Path | None) -> str:
     """The campaign, its classes, the refused cells with reasons, and how its jobs are submitted."""
     estimate = made.estimate
     place = "" if out is None else f" in {out}"
-    lines = [
-        heading(f"Campaign of {counted(estimate.crystals + estimate.kept, 'crystal')}{place}"),
-        f"  {estimate_text(estimate)}",
-    ]
+    count = estimate.crystals + estimate.kept if made.campaign is None else len(made.campaign.members)
+    if made.added:
+        title = f"Campaign{place}: {counted(made.added, 'crystal')} added, {count} in all"
+    else:
+        title = f"Campaign of {counted(count, 'crystal')}{place}"
+    lines = [heading(title), f"  {estimate_text(estimate)}"]
     lines.append("  Laue classes: " + ", ".join(f"{count} x {name}" for name, count in estimate.laue_classes.items()))
     lines += doubts_lines(who_has(estimate.findings))
+    if estimate.same_files:
+        groups = few([" = ".join(group) for group in estimate.same_files])
+        lines.append(paragraph(f"files of the same content, computed more than once: {groups}", "  "))
     if made.submit and out is not None:
         lines += ["  submit it yourself:", f"    cd {shlex.quote(str(out))} && {made.submit}"]
     return "\n".join([*lines, *_refused_lines(made.refused)])

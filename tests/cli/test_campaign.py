@@ -147,6 +147,20 @@ def test_doubts_about_cells_are_told_with_the_names_of_the_crystals(cli, tmp_pat
     assert cli("fit", tmp_path / "out", "--json").json["findings_in"]["jobs-not-used"] == [run.name]
 
 
+def test_files_of_the_same_content_are_told(cli, tmp_path):
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    other = SILICON.replace("0.25", "0.2501")
+    for name, text in (("a", SILICON), ("b", other), ("copy of a", SILICON)):
+        (cells / f"{name}.vasp").write_text(text)
+    first = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert first.code == 0
+    assert first.json["same_files"] == [["a", "copy_of_a"]]
+    (tmp_path / "again.vasp").write_text(other)
+    added = cli("prepare", tmp_path / "again.vasp", "--campaign", "--out", tmp_path / "out")
+    assert "files of the same content, computed more than once: a = copy_of_a, b = again" in " ".join(added.out.split())
+
+
 def test_no_usable_cell_at_all(cli, tmp_path):
     (tmp_path / "bad.cif").write_text("nothing")
     result = cli("prepare", tmp_path / "bad.cif", "--campaign", "--out", tmp_path / "out")
@@ -188,6 +202,14 @@ def test_running_it_again_keeps_what_is_there_and_adds_what_is_new(cli, made, ou
     assert (result.code, result.json["crystals"], result.json["kept"]) == (0, 1, 5)
     campaign = load_campaign(out)
     assert len(campaign.members) == 6
+    assert result.json["crystals_in_all"] == 6
+    write_cells(tmp_path / "two", np.random.default_rng(5), copies=2, classes=("m-3m",))
+    for name in ("mbar3m-0", "mbar3m-1"):
+        (tmp_path / "two" / f"{name}.extxyz").rename(tmp_path / "two" / f"late-{name}.extxyz")
+    told = cli("prepare", tmp_path / "two", *options[:-1])
+    assert "2 crystals added, 8 in all" in " ".join(told.out.split())
+    assert cli("prepare", tmp_path / "two", *options[:-1]).out.startswith("Campaign of 8 crystals in")
+    campaign = load_campaign(out)
     assert len(set((out / "joblist.txt").read_text().split())) == campaign.jobs
     assert {n: v for n, v in snapshot(out).items() if n.startswith("runs") and n in before} == {
         n: v for n, v in before.items() if n.startswith("runs")
@@ -206,6 +228,14 @@ def test_running_it_again_keeps_what_is_there_and_adds_what_is_new(cli, made, ou
     path.write_text(original)
     assert result.code == 3
     assert "changed since" in result.err
+
+
+def test_a_single_cell_is_told_how_to_get_into_a_campaign(cli, out, tmp_path):
+    (tmp_path / "POSCAR").write_text(SILICON)
+    result = cli("prepare", tmp_path / "POSCAR", "--out", out)
+    assert result.code == 3
+    assert "is a campaign" in result.err
+    assert "--campaign" in result.err
 
 
 def test_other_options_are_another_campaign(cli, made, out):
