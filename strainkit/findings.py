@@ -71,6 +71,7 @@ CODES: dict[str, tuple[Severity, str]] = {
     "stress-unit": ("error", "the data prove that a stress is in another unit"),
     "stress-order": ("error", "the data prove that the components of a stress are in another order"),
     "stress-frame": ("error", "the data prove that a stress is in other axes than its cell"),
+    "stress-exchanged": ("error", "the data prove that two lines of a table are in each other's place"),
     "set-inconsistent": ("warning", "the stresses of a set do not follow one stiffness, and no known change mends them"),
     "energy-jump": ("warning", "the energy of a job is not the one that the stresses lead to"),
     "ions-elsewhere": ("warning", "the ions of a job left the line of its shape"),

@@ -44,6 +44,13 @@ def _anew(found: dict[str, dict[str, Any]]) -> int:
     return sum(summary.get("kept") is False for summary in found.values())
 
 
+def _doubts(found: dict[str, dict[str, Any]]) -> dict[str, list[str]]:
+    """Codes of warnings and errors, with the crystals that have them."""
+    from strainkit.present.campaign import who_has
+
+    return who_has({name: summary.get("findings", ()) for name, summary in found.items()})
+
+
 def _end(problems: dict[str, str], results: int) -> None:
     """Exit code 4 where some crystals have no full result, 5 where none has any."""
     if problems:
@@ -76,6 +83,7 @@ def collect_campaign(folder: Path, export: Path | None, again: bool, workers: in
             "usable": usable,
             "expected": campaign.jobs,
             "statuses": dict(statuses),
+            "findings_in": _doubts(found),
             "kept": _kept(found),
             "crystals": _crystals(campaign, found),
         },
@@ -83,6 +91,7 @@ def collect_campaign(folder: Path, export: Path | None, again: bool, workers: in
             f"{usable} of {campaign.jobs} jobs of {counted(len(found), 'crystal')} usable",
             {status: (statuses[status], meaning) for status, meaning in STATUSES.items() if statuses[status]},
             problems,
+            doubts=_doubts(found),
         ),
         json,
     )
@@ -101,7 +110,7 @@ def _export(runs: list[Path], export: Path, quiet: bool) -> None:
 
 def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | None, json: bool, quiet: bool) -> None:
     """Stiffness of all runs."""
-    from strainkit.present.campaign import findings_tally, tally_text
+    from strainkit.present.campaign import tally_text
 
     campaign, found = loop(folder, "fit", partial(fit_one, options, again), workers, quiet)
     problems = _problems(found)
@@ -111,7 +120,7 @@ def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | 
         for name, summary in found.items()
         if summary.get("undetermined")
     }
-    codes = Counter(code for summary in found.values() for code in summary.get("findings", ()))
+    doubts = _doubts(found)
     note(f"{counted(_anew(found), 'crystal')} fitted, {_kept(found)} unchanged since they were fitted last", quiet)
     deliver(
         lambda: {
@@ -119,14 +128,15 @@ def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | 
             "fitted": fitted,
             "complete": len(found) - len(problems),
             "kept": _kept(found),
-            "findings": dict(codes),
+            "findings": {code: len(names) for code, names in doubts.items()},
+            "findings_in": doubts,
             "crystals": _crystals(campaign, found),
         },
         lambda: tally_text(
             f"{len(found) - len(problems)} of {len(found)} crystals have all their constants",
             {},
             problems,
-            [f"warnings and errors, by crystals: {findings_tally(codes)}"] if codes else [],
+            doubts=doubts,
         ),
         json,
     )
@@ -214,7 +224,10 @@ def derive_campaign(folder: Path, options: dict[str, Any], workers: int | None, 
     deliver(
         lambda: {"schema": "strainkit/screening/1", "columns": list(COLUMNS), "rows": rows},
         lambda: tally_text(
-            f"Screening table of {counted(len(rows), 'crystal')}, {len(rows) - len(problems)} with moduli", {}, problems
+            f"Screening table of {counted(len(rows), 'crystal')}, {len(rows) - len(problems)} with moduli",
+            {},
+            problems,
+            doubts=_doubts(found),
         ),
         json,
     )

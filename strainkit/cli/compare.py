@@ -17,9 +17,10 @@ Crystals = Annotated[
     typer.Argument(metavar="RUN...", help="Run or campaign folders, and typed tensors: FILE, or FILE:CELL with its structure."),
 ]
 By = Annotated[
-    str,
+    str | None,
     typer.Option(
-        help="Rank by young, shear, bulk, poisson, pugh, anisotropy, young-least, young-most, shear-least, or a constant."
+        help="Rank by young, shear, bulk, poisson, pugh, anisotropy, young-least, young-most, shear-least, or a constant. "
+        "[default: young]"
     ),
 ]
 Baseline = Annotated[str | None, typer.Option(help="Hold the others against this one: its name, folder or file.")]
@@ -29,7 +30,7 @@ Html = Annotated[Path | None, typer.Option(help="Write one self-contained page t
 
 def compare(
     crystals: Crystals = None,
-    by: By = "young",
+    by: By = None,
     baseline: Baseline = None,
     csv: Csv = None,
     html: Html = None,

@@ -6,7 +6,7 @@ A summary is a small dictionary; "problem" says why a crystal has no result, "di
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from functools import wraps
 from pathlib import Path
@@ -56,13 +56,14 @@ def collect_one(again: bool, run: Path) -> Summary:
 
     signature = output_signature(run)
     before = None if again else collected_before(run, signature, run / TABLE)
-    if before is not None:
+    if before is not None and "findings" in before:
         return before | {"kept": True}
     table = collect_run(run, load_plan(run))
     with in_a_hurry():
         table.save(run)
     counts = Counter(record.status for record in table.records)
-    summary = {"statuses": dict(counts), "usable": len(table.usable), "expected": len(table.records)}
+    codes = _codes([*table.findings, *(f for record in table.records for f in record.findings)])
+    summary = {"statuses": dict(counts), "usable": len(table.usable), "expected": len(table.records), "findings": codes}
     mark_collected(run, signature, run / TABLE, summary)
     return summary | {"kept": False}
 
@@ -92,6 +93,11 @@ def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
     with in_a_hurry():  # half a file would not be JSON, and is made again
         atomic_write(path, dump_json(data))
     return _fitted(data, run) | {"kept": False}
+
+
+def _codes(findings: Sequence[Finding]) -> list[str]:
+    """Codes of warnings and errors, each once."""
+    return sorted({f.code for f in findings if f.severity != "info"})
 
 
 def _inputs(run: Path) -> bytes:
@@ -162,7 +168,7 @@ def derive_one(options: dict[str, Any], run: Path) -> Summary:
     except (InputError, NoTensorError) as error:
         return {"row": screening_row(plan, None, error.what), "problem": error.what, "exit": error.exit_code}
     row = screening_row(plan, fit)
-    return {"row": row, "problem": row["problem"]}
+    return {"row": row, "problem": row["problem"], "findings": _codes(fit.findings)}
 
 
 @_guarded

@@ -35,8 +35,8 @@ def prepare_campaign(
 ) -> None:
     """Make or complete a campaign."""
     from strainkit.prepare.assemble import make_campaign
-    from strainkit.prepare.cells import find_cells
-    from strainkit.present.campaign import estimate_text, made_text
+    from strainkit.prepare.cells import find_cells, not_taken
+    from strainkit.present.campaign import estimate_text, made_text, not_taken_text, who_has
 
     def agree(estimate: Estimate) -> None:
         note(estimate_text(estimate), quiet)
@@ -44,6 +44,9 @@ def prepare_campaign(
             _confirm(estimate_text(estimate))
 
     count = processes(workers, len(find_cells(cells)[0]))
+    others = not_taken(cells)
+    if others:
+        note(not_taken_text(others), quiet)
     place = None if dry_run else out
     made = make_campaign(cells, place, recipe, count, agree, lambda title: progress(title, quiet), force)
     estimate = made.estimate
@@ -53,10 +56,14 @@ def prepare_campaign(
             "written": made.campaign is not None,
             "crystals": estimate.crystals,
             "kept": estimate.kept,
+            "crystals_in_all": None if made.campaign is None else len(made.campaign.members),
             "jobs": estimate.jobs,
             "files": estimate.files,
             "bytes": estimate.bytes,
             "laue_classes": estimate.laue_classes,
+            "findings_in": who_has(estimate.findings),
+            "same_files": [list(names) for names in estimate.same_files],
+            "files_not_taken": [str(path) for path in others],
             "refused_cells": [asdict(refusal) for refusal in made.refused],
             "submit": made.submit or None,
         },

@@ -20,7 +20,10 @@ _UNKNOWN = ("", ".", "?")
 
 
 def refuse_unusable(structure: gemmi.SmallStructure, block: gemmi.cif.Block, path: Path) -> None:
-    """Refuse sites that are partly occupied, dummies, or without an element."""
+    """Refuse sites that are partly occupied or more than full, dummies, or without an element.
+
+    An occupancy that is not given, or given as ? or ., is 1: the default of the core CIF dictionary (from memory).
+    """
     partial = [f"{s.label} ({s.occ:g})" for s in structure.sites if s.occ < 1.0]
     if partial:
         raise InputError(
@@ -28,6 +31,9 @@ def refuse_unusable(structure: gemmi.SmallStructure, block: gemmi.cif.Block, pat
             path,
             "A periodic calculation needs an ordered cell: keep one component, or build a supercell with every site full.",
         )
+    beyond = [f"{s.label} ({s.occ:g})" for s in structure.sites if s.occ > 1.0]
+    if beyond:
+        raise InputError(f"occupancies above 1: {', '.join(beyond)}", path, "A site holds one atom at most: correct the file.")
     dummies = [label for label, flag in _column(block, structure, "calc_flag").items() if flag.lower() == "dum"]
     if dummies:
         raise InputError(f"dummy sites that are no atoms: {', '.join(dummies)}", path, "Delete them, or give them positions.")

@@ -18,10 +18,10 @@ from strainkit.crystal.outputs import OUTPUTS, OWN, Output, recognise_output, re
 from strainkit.errors import InputError, StrainkitError
 from strainkit.findings import Finding, finding
 
-__all__ = ["ENDINGS", "crystal_name", "is_always_called", "read_crystal"]
+__all__ = ["crystal_name", "is_always_called", "is_called_a_cell", "read_crystal"]
 
 #: file-name endings whose meaning is beyond doubt -> ASE format
-ENDINGS = {
+_ENDINGS = {
     ".vasp": "vasp",
     ".poscar": "vasp",
     ".extxyz": "extxyz",
@@ -106,8 +106,8 @@ def _guess(path: Path, text: str) -> str:
             return format
     if path.suffix.lower() == ".cif":
         return "cif"
-    if path.suffix.lower() in ENDINGS:
-        return ENDINGS[path.suffix.lower()]
+    if path.suffix.lower() in _ENDINGS:
+        return _ENDINGS[path.suffix.lower()]
     raise InputError(
         "cannot tell what kind of file this is", path, "Name its format with --read-as (cif, poscar, extxyz, any ASE one)."
     )
@@ -155,3 +155,10 @@ def crystal_name(path: Path) -> str:
 def is_always_called(path: Path) -> bool:
     """Is this a file of a kind that is called the same for every crystal (POSCAR, pw-1.out), so that its folder names it?"""
     return path.name.upper() in _NAMES or _JOB_OUTPUT.fullmatch(path.name) is not None
+
+
+def is_called_a_cell(path: Path) -> bool:
+    """Does the name alone say that this is a structure file (cell.cif, POSCAR_AlN, pw-1.out), and no editor's old copy?"""
+    name = path.name.upper()
+    known = name.startswith(tuple(_NAMES)) or path.suffix.lower() in (".cif", *_ENDINGS) or is_always_called(path)
+    return known and not name.endswith("~")

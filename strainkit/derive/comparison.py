@@ -105,7 +105,7 @@ def _softest(member: Member) -> dict[str, Any] | None:
 
 def compare_crystals(
     crystals: Sequence[Member | Fit],
-    by: str = "young",
+    by: str | None = None,
     baseline: str | None = None,
     left_out: Mapping[str, str] | None = None,
 ) -> Comparison:
@@ -116,8 +116,9 @@ def compare_crystals(
     crystals : sequence of Member or Fit
         Members come from `member_of_fit` and `member_of_file`, and know energies and settings; a fit alone has none. Labels
         are made different.
-    by : str
-        What to rank by: a key of `QUANTITIES`, or a constant such as "C11" that all members share.
+    by : str, optional
+        What to rank by: a key of `QUANTITIES`, or a constant such as "C11"; "young" when left out. Members that do not have it
+        are left out of the ranking with their reasons.
     baseline : str, optional
         Label, or folder or file as given, of the member that the others are held against; all pairs when left out.
     left_out : mapping, optional
@@ -126,7 +127,7 @@ def compare_crystals(
     Raises
     ------
     UsageError
-        Fewer than two members, one of them twice, an unknown quantity or baseline.
+        Fewer than two members, one of them twice, an unknown quantity or baseline, a quantity that no two members have.
     """
     if len(crystals) < 2:
         raise UsageError("a comparison needs at least two crystals", "compare", "Give two or more run folders or files.")
@@ -150,7 +151,7 @@ def compare_crystals(
         apart=apart,
         differences=tuple(differences),
         baseline=base,
-        ranking=ranked(_wanted(every, by)),
+        ranking=_ranking(members, every, by, apart),
         compositions=tuple(compositions),
         reactions=tuple(reactions),
         findings=(*absent, *doubts_about(members, moduli), *doubts),
@@ -164,13 +165,30 @@ def _found(members: Sequence[Member], baseline: str) -> int:
     raise UsageError(f"no crystal {baseline!r} here", "--baseline", f"Use one of {', '.join(m.label for m in members)}.")
 
 
-def _wanted(columns: Sequence[Column], by: str) -> Column:
-    for column in columns:
-        if by in (column.quantity.key, column.quantity.name) and None not in column.values:
-            return column
-    known = list(dict.fromkeys(c.quantity.key for c in columns if None not in c.values))
-    remedy = f"Use one of {', '.join(known)}." if known else "An unstable crystal has no moduli."
-    raise UsageError(f"not all crystals can be ranked by {by!r}", "--by", remedy)
+def _ranking(members: Sequence[Member], columns: Sequence[Column], by: str | None, apart: Mapping[int, str]) -> Ranking:
+    """The order of the members that have a quantity; of a constant, the largest group in which it means the same."""
+    wanted = [column for column in columns if (by or "young") in (column.quantity.key, column.quantity.name)]
+    column = max(wanted, key=_known, default=None)
+    lacking = dict(apart)
+    if column is not None:
+        lacking = {i: _lack(members[i], column, apart.get(i)) for i, value in enumerate(column.values) if value is None}
+        if by is None or _known(column) > 1:
+            return ranked(column, lacking)
+    keys = list(dict.fromkeys(c.quantity.key for c in columns if _known(c) > 1))
+    remedy = f"Use one of {', '.join(keys)}." if keys else "No two of these crystals share a quantity."
+    why = "; ".join(f"{members[i].label}: {reason}" for i, reason in lacking.items())
+    raise UsageError(f"no two crystals can be ranked by {by!r}" + (f" ({why})" if why else ""), "--by", remedy)
+
+
+def _known(column: Column) -> int:
+    return sum(value is not None for value in column.values)
+
+
+def _lack(member: Member, column: Column, apart: str | None) -> str:
+    """Why a member has no value of a quantity."""
+    if column.quantity in QUANTITIES:
+        return f"no moduli: not stable, smallest eigenvalue {member.elastic.moduli.eigenvalues[0]:.3g} GPa"
+    return apart or f"its {column.quantity.words} is not that of the others"
 
 
 def _moduli_columns(members: Sequence[Member]) -> list[Column]:

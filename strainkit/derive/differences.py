@@ -130,16 +130,20 @@ class Ranking:
     ----------
     quantity : Quantity
     order : tuple of int
+        Those that have it.
     above_next : tuple of float or None
         Probability that each but the last is truly larger than the next; None where one of the two has no error.
     probability : float or None
         That the whole order is right.
+    left_out : dict
+        Member -> why it has no place in the order.
     """
 
     quantity: Quantity
     order: tuple[int, ...]
     above_next: tuple[float | None, ...]
     probability: float | None
+    left_out: dict[int, str] = field(default_factory=dict)
 
     def to_dict(self, labels: Sequence[str]) -> dict[str, Any]:
         """JSON-ready."""
@@ -148,6 +152,7 @@ class Ranking:
             "order": [labels[i] for i in self.order],
             "probability_above_next": list(self.above_next),
             "probability": self.probability,
+            "left_out": [{"crystal": labels[i], "reason": reason} for i, reason in self.left_out.items()],
         }
 
 
@@ -194,17 +199,17 @@ def lettered(column: Column, differences: Sequence[Difference]) -> Column:
     return replace(column, letters=letters(order, [(d.first, d.second) for d in own if d.distinguishable]))
 
 
-def ranked(column: Column) -> Ranking:
-    """The order of all members by one column."""
-    order = sorted(range(len(column.values)), key=lambda i: -column.value(i))
+def ranked(column: Column, left_out: dict[int, str]) -> Ranking:
+    """The order by one column of the members that have it; `left_out` says why the others do not."""
+    order = sorted((i for i, value in enumerate(column.values) if value is not None), key=lambda i: -column.value(i))
     above: list[float | None] = []
     for i, j in pairwise(order):
         pair = column.pair(i, j)
         above.append(None if pair is None else float(probability_larger(column.gap(i, j), *pair)))
     errors = [e for i in order if (e := column.error(i)) is not None]
     whole = None
-    if len(errors) == len(order):
+    if len(errors) == len(order) > 1:
         gaps = [column.gap(i, j) for i, j in pairwise(order)]
         places = [-sum(gaps[:k]) for k in range(len(order))]
         whole = probability_of_order(places, errors, [column.freedom[i] for i in order])
-    return Ranking(column.quantity, tuple(order), tuple(above), whole)
+    return Ranking(column.quantity, tuple(order), tuple(above), whole, left_out)

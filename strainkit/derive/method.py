@@ -95,23 +95,27 @@ class Method:
         return self.engine is not None and re.match(r"gfn\d-xtb\b", self.engine) is not None
 
     def differences(self, other: Method) -> list[str]:
-        """What differs, in words, of what both record; elements that only one of them holds do not count."""
+        """What differs, in words, of what both record; elements that only one of them holds do not count.
+
+        A program or engine differs from an unknown one: nothing says that they are the same.
+        """
         words = []
-        for what, mine, theirs in (
-            ("program", self.program, other.program),
-            ("engine", self.engine, other.engine),
-            ("k-point spacing", self.kspacing, other.kspacing),
-        ):
-            if mine is not None and theirs is not None and mine != theirs:
-                words.append(f"{what} {_text(mine)} and {_text(theirs)}")
-        if self.program is None and other.program is None and (self.engine is None) != (other.engine is None):
-            words.append(f"engine {self.engine or other.engine} and an unknown one")
-        if self.settings and other.settings:
+        if (self.program, self.engine) != (other.program, other.engine):
+            words.append(f"{self._made_by(other)} and {other._made_by(self)}")
+        if self.kspacing is not None and other.kspacing is not None and self.kspacing != other.kspacing:
+            words.append(f"k-point spacing {_text(self.kspacing)} and {_text(other.kspacing)}")
+        if self.settings and other.settings and self.program == other.program:  # every program has names of its own
             words += _unlike(self.settings, other.settings)
         one, another = ({key: m.printed[key] for key in _PRINTED if key in m.printed} for m in (self, other))
         words += _unlike(one, another, shared=True)
         words += _unlike(self.pseudopotentials, other.pseudopotentials, "pseudopotential of ", shared=True)
         return words
+
+    def _made_by(self, other: Method) -> str:
+        """Engine or program, as it differs from that of another."""
+        if self.engine is not None and self.engine != other.engine:
+            return f"engine {self.engine}"
+        return "an unknown program" if self.program is None else f"program {self.program}"
 
     def doubts(self, other: Method) -> list[str]:
         """What may differ, in words: settings or sampling that the folders do not let us compare."""

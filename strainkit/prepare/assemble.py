@@ -5,7 +5,7 @@ from __future__ import annotations
 import shutil
 from collections.abc import Callable, Sequence
 from contextlib import AbstractContextManager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -26,7 +26,11 @@ _OURS = ("runs", LOGS, "joblist", "submit", ".")
 
 @dataclass(frozen=True)
 class Estimate:
-    """What is about to be written: crystals, jobs, files, bytes of a disk (about), and what is kept or refused."""
+    """What is about to be written: crystals, jobs, files, bytes of a disk (about), and what is kept or refused.
+
+    `findings` holds the codes of the warnings and errors of every crystal, kept ones included, that has some; `same_files` the
+    names of crystals, of the whole campaign, whose files have the same content.
+    """
 
     crystals: int
     jobs: int
@@ -35,6 +39,8 @@ class Estimate:
     kept: int
     refused: tuple[Refusal, ...]
     laue_classes: dict[str, int]
+    findings: dict[str, tuple[str, ...]] = field(default_factory=dict)
+    same_files: tuple[tuple[str, ...], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -50,12 +56,15 @@ class Made:
         Of this call.
     submit : str
         What the user types inside the campaign folder; empty without a scheduler or when there is nothing new.
+    added : int
+        Crystals that are new in a campaign that was there before.
     """
 
     campaign: Campaign | None
     estimate: Estimate
     refused: tuple[Refusal, ...]
     submit: str = ""
+    added: int = 0
 
 
 def make_campaign(
@@ -109,6 +118,8 @@ def make_campaign(
             kept=len(kept),
             refused=tuple(refused),
             laue_classes=_counted([*kept, *(p.member for p in planned)]),
+            findings=_doubts(kept, planned, out),
+            same_files=_same_files([*(old.members if old else ()), *(p.member for p in planned)]),
         )
         if not planned and not kept:
             reasons = "; ".join(f"{r.source}: {r.reason}" for r in refused[:3])
@@ -181,6 +192,24 @@ def _counted(members: Sequence[Member]) -> dict[str, int]:
     return {name: classes.count(name) for name in sorted(set(classes))}
 
 
+def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None) -> dict[str, tuple[str, ...]]:
+    """Codes of warnings and errors of the crystals that have some: as planned now, or as their run folders say."""
+    found = {p.member.name: p.findings for p in planned}
+    for member in kept:
+        assert out is not None
+        said = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))["findings"]
+        found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
+    return {name: codes for name, codes in found.items() if codes}
+
+
+def _same_files(members: Sequence[Member]) -> tuple[tuple[str, ...], ...]:
+    """Names of members whose cells come from files of the same content."""
+    names: dict[str, dict[str, None]] = {}
+    for member in members:
+        names.setdefault(member.source_sha256, {})[member.name] = None
+    return tuple(tuple(group) for group in names.values() if len(group) > 1)
+
+
 def _write(
     out: Path,
     old: Campaign | None,
@@ -216,7 +245,8 @@ def _write(
             campaign = replace(campaign, members=left, refused=(*campaign.refused, *lost))
             campaign.save(out)
         submit = _write_lists(out, campaign, recipe)
-    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit)
+    added = 0 if old is None else len(campaign.members) - len(old.members)
+    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit, added)
 
 
 def _make(out: Path, size: int) -> None:

@@ -77,12 +77,15 @@ class Planned:
     labels : tuple of str
     where : (int, int)
         Place of the pickled plan in the spool.
+    findings : tuple of str
+        Codes of its warnings and errors.
     """
 
     member: Member
     files: int
     bytes: int
     where: tuple[int, int]
+    findings: tuple[str, ...] = ()
 
 
 class Spool:
@@ -123,15 +126,15 @@ def plan_cells(
     planned, refused
         In the order of the cells.
     """
-    found: dict[Path, tuple[Member, int, int, tuple[int, int]] | str] = {}
+    found: dict[Path, Planned | str] = {}
     for (path, _), result in over_processes(partial(_plan, recipe), cells, workers):
         if isinstance(result, Died):
             found[path] = "the process that read it ended unexpectedly"
         elif isinstance(result, str):
             found[path] = result
         else:
-            member, files, size, data = result
-            found[path] = member, files, size, spool.keep(data)
+            member, files, size, codes, data = result
+            found[path] = Planned(member, files, size, spool.keep(data), codes)
         report(len(found), len(cells), path.name)
     planned, refused = [], []
     for path, _ in cells:
@@ -139,12 +142,12 @@ def plan_cells(
         if isinstance(outcome, str):
             refused.append(Refusal(str(path), outcome))
         else:
-            planned.append(Planned(*outcome))
+            planned.append(outcome)
     return planned, refused
 
 
-def _plan(recipe: Recipe, cell: tuple[Path, str]) -> tuple[Member, int, int, bytes] | str:
-    """One cell, in a worker: its member, files, bytes and pickled plan; or why not."""
+def _plan(recipe: Recipe, cell: tuple[Path, str]) -> tuple[Member, int, int, tuple[str, ...], bytes] | str:
+    """One cell, in a worker: its member, files, bytes, finding codes and pickled plan; or why not."""
     path, name = cell
     try:
         crystal = read_crystal(path, recipe.read_as)
@@ -163,7 +166,9 @@ def _plan(recipe: Recipe, cell: tuple[Path, str]) -> tuple[Member, int, int, byt
     a_job = _BLOCK + sum(_on_disk(text) for text in one.values())
     size = len(plan.jobs) * a_job + _on_disk(dump_json(plan.to_dict())) + (6 if recipe.scheduler else 3) * _BLOCK
     files = len(plan.jobs) * len(one) + (3 if recipe.scheduler else 1)
-    return member, files, size, pickle.dumps((plan, calculation))
+    doubts = (*plan.findings, *(calculation.findings() if calculation is not None else ()))
+    codes = tuple(dict.fromkeys(f.code for f in doubts if f.severity != "info"))
+    return member, files, size, codes, pickle.dumps((plan, calculation))
 
 
 def _on_disk(text: str) -> int:

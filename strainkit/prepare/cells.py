@@ -7,14 +7,12 @@ from collections.abc import Iterable, Sequence
 from glob import glob, has_magic
 from pathlib import Path
 
-from strainkit.crystal.read import ENDINGS, crystal_name, is_always_called
+from strainkit.crystal.read import crystal_name, is_always_called, is_called_a_cell
 from strainkit.errors import InputError
 from strainkit.run.campaign import CAMPAIGN, Refusal
 from strainkit.run.plan import MANIFEST
 
-__all__ = ["find_cells", "is_one_cell", "names_of", "natural"]
-
-_ENDINGS = {".cif", *ENDINGS}
+__all__ = ["find_cells", "is_one_cell", "names_of", "natural", "not_taken"]
 
 
 def is_one_cell(arguments: Sequence[str]) -> bool:
@@ -65,8 +63,7 @@ def _expand(argument: str) -> list[Path]:
     if argument.startswith("@"):
         return [cell for line in _lines(Path(argument[1:])) for cell in (_expand(line) or [Path(line)])]
     if path.is_dir():
-        inside = (p for p in path.rglob("*") if p.suffix.lower() in _ENDINGS or is_always_called(p))
-        return sorted((p for p in inside if p.is_file() and not _hidden(p, path)), key=natural)
+        return sorted(filter(is_called_a_cell, _files(path)), key=natural)
     if path.exists():
         return [path]
     if has_magic(argument):
@@ -74,8 +71,20 @@ def _expand(argument: str) -> list[Path]:
     return []
 
 
-def _hidden(path: Path, below: Path) -> bool:
-    return any(part.startswith(".") for part in path.relative_to(below).parts)
+def _files(folder: Path) -> list[Path]:
+    """Everything in a folder and its sub-folders that is not hidden."""
+    inside = (p for p in folder.rglob("*") if not any(part.startswith(".") for part in p.relative_to(folder).parts))
+    return [p for p in inside if p.is_file()]
+
+
+def not_taken(arguments: Iterable[str]) -> list[Path]:
+    """Files of the folders among the arguments that their names do not show to be structures; see `find_cells`."""
+    found: dict[Path, None] = {}
+    for argument in arguments:
+        for place in _lines(Path(argument[1:])) if argument.startswith("@") else [argument]:
+            if Path(place).is_dir():
+                found |= dict.fromkeys(sorted((p for p in _files(Path(place)) if not is_called_a_cell(p)), key=natural))
+    return list(found)
 
 
 def _lines(path: Path) -> list[str]:

@@ -23,6 +23,7 @@ from strainkit.prepare.displaced import cost_finding, displaced_jobs
 from strainkit.prepare.folders import write_folder
 from strainkit.prepare.scripts import LOGS, first_submission
 from strainkit.prepare.writers import FORMATS, cell_formats, default_formats, format_findings, write_cell
+from strainkit.run.campaign import is_campaign
 from strainkit.run.files import checksum, dump_json
 from strainkit.run.plan import MANIFEST, AtomMoves, Ions, Plan, job_folder, load_plan
 from strainkit.tensors.constants import basis_of_group
@@ -178,6 +179,9 @@ def _existing(plan: Plan, out: Path) -> tuple[Plan | None, str]:
     if not out.is_dir() or not (out / MANIFEST).is_file():
         if out.is_dir() and not any(out.iterdir()):
             raise InputError("exists already (an empty folder)", out, "Remove it or choose another --out.")
+        if is_campaign(out):
+            remedy = "Choose another --out, or add the cell with --campaign and the options of the campaign."
+            raise InputError("exists already and is a campaign, not a run folder", out, remedy)
         raise InputError("exists already and is not a run folder", out, "Choose another --out; nothing was touched.")
     old = load_plan(out)
     if not old.same_set(plan):

@@ -17,6 +17,7 @@ from strainkit.present.comparison_words import (
     probability_text,
     reaction_text,
     softest_text,
+    unranked_texts,
     value_cell,
 )
 from strainkit.present.text import WIDTH, columns, findings_text, heading, paragraph
@@ -94,7 +95,9 @@ def _planes(c: Comparison) -> list[str]:
     """Plane and direction of the smallest shear modulus."""
     lines = []
     for i, m in enumerate(c.members):
-        if m.moduli is not None:
+        if m.moduli is None:
+            lines.append(f"  {i + 1} has no moduli: it is not stable")
+        else:
             lines.append(paragraph(f"{i + 1} shears most easily {softest_text(m)}", "  "))
     return lines
 
@@ -131,8 +134,11 @@ def _ranked(c: Comparison) -> list[str]:
     for place, i in enumerate(r.order):
         above = f"above the next: {probability_text(r.above_next[place])}" if place < len(r.above_next) else ""
         rows.append([f"{place + 1}. {_short(c, i, 24)}", value_cell(column, i), above])
-    width = max(len(row[2]) for row in rows)
-    lines = [heading(f"Ranked by {r.quantity.title}"), columns([[a, b, note.ljust(width)] for a, b, note in rows])]
+    width = max((len(row[2]) for row in rows), default=0)
+    lines = [heading(f"Ranked by {r.quantity.title}")]
+    if rows:
+        lines.append(columns([[a, b, note.ljust(width)] for a, b, note in rows]))
+    lines += [paragraph(clean(text), "  ") for text in unranked_texts(c)]
     if len(r.order) > 2 and r.probability is not None:
         lines.append(f"  {order_text(r)}")
     return lines

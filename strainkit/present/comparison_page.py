@@ -18,6 +18,7 @@ from strainkit.present.comparison_words import (
     probability_text,
     reaction_text,
     softest_text,
+    unranked_texts,
     value_cell,
 )
 from strainkit.present.figures_comparison import beside, marks_of
@@ -58,9 +59,11 @@ def _tone(c: Comparison) -> Tone:
 
 def _verdict(c: Comparison, names: list[str]) -> tuple[str, ...]:
     r = c.ranking
-    first, second = names[r.order[0]], names[r.order[1]]
-    chance = f"{second} comes next; probability that this order is right: {probability_text(r.above_next[0])}."
-    sentences = [f"{first} has the largest {r.quantity.words}, {chance}"]
+    sentences = [f"{names[i]} is not ranked: {clean(reason)}." for i, reason in r.left_out.items()]
+    if len(r.order) > 1:
+        first, second = names[r.order[0]], names[r.order[1]]
+        chance = f"{second} comes next; probability that this order is right: {probability_text(r.above_next[0])}."
+        sentences.insert(0, f"{first} has the largest {r.quantity.words}, {chance}")
     if len(r.order) > 2 and r.probability is not None:
         sentences.append(f"{order_text(r).capitalize()}.")
     if c.tests:
@@ -135,9 +138,12 @@ def _ranking(c: Comparison, names: list[str]) -> Section:
         chance = Cell("" if place == len(r.above_next) else probability_text(above), above)
         rows.append([names[i], Cell(value_cell(column, i), column.value(i)), chance])
     title = r.quantity.title
-    table = Table.of("ranking", "From the largest down", ["", title, "probability that it is larger than the next"], rows)
-    figure = beside("ranking", r.quantity.words, title, marks_of(column, names, r.order))
-    blocks: list[Block] = [Figures((figure,)), table]
+    blocks: list[Block] = []
+    if rows:
+        figure = beside("ranking", r.quantity.words, title, marks_of(column, names, r.order))
+        heads = ["", title, "probability that it is larger than the next"]
+        blocks = [Figures((figure,)), Table.of("ranking", "From the largest down", heads, rows)]
+    blocks += [Paragraph(f"{clean(text[0].upper() + text[1:])}.") for text in unranked_texts(c)]
     if len(r.order) > 2 and r.probability is not None:
         blocks.append(Paragraph(f"{order_text(r).capitalize()}."))
     return Section("ranking", f"Ranked by {r.quantity.words}", tuple(blocks))

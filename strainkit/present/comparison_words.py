@@ -26,6 +26,7 @@ __all__ = [
     "reaction_text",
     "share_text",
     "softest_text",
+    "unranked_texts",
     "value_cell",
 ]
 
@@ -111,6 +112,11 @@ def order_text(ranking: Ranking) -> str:
     """Is the whole ranking right?"""
     chance = probability_text(ranking.probability)
     return f"the whole order is right with a probability {chance if chance.startswith('above') else f'of {chance}'}"
+
+
+def unranked_texts(c: Comparison) -> list[str]:
+    """Members that the ranking leaves out, each with its reason."""
+    return [f"not ranked: {c.members[i].label}, {reason}" for i, reason in c.ranking.left_out.items()]
 
 
 def reaction_text(c: Comparison, reaction: Reaction) -> str:

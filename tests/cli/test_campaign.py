@@ -27,6 +27,7 @@ from strainkit.run.campaign import load_campaign
 from strainkit.run.extxyz import extxyz_text
 from strainkit.run.plan import load_plan
 
+SAMPLE_CELLS = Path(__file__).parents[2] / "sample_cells"
 CLASSES = ("2/m", "4/mmm", "6/m", "m-3", "m-3m")
 
 
@@ -101,6 +102,65 @@ def test_bad_cells_are_listed_and_do_not_stop_the_others(cli, tmp_path):
     assert result.json["files"] == sum(p.is_file() for p in (tmp_path / "out/runs").rglob("*"))
 
 
+def test_names_that_say_structure_are_taken_from_a_folder_and_others_are_named(cli, tmp_path):
+    """POSCAR_NAME and CONTCAR-NAME are what people call such files (common practice, no source)."""
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    for name in ("POSCAR_Si", "CONTCAR-x", "POSCAR_Si~", "Si.txt", "notes"):
+        (cells / name).write_text(SILICON)
+    result = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert result.code == 0
+    assert [m.name for m in load_campaign(tmp_path / "out").members] == ["CONTCAR-x", "POSCAR_Si"]
+    assert [Path(p).name for p in result.json["files_not_taken"]] == ["POSCAR_Si~", "Si.txt", "notes"]
+    assert "3 files (POSCAR_Si~, Si.txt, notes)" in result.err
+    for name in ("POSCAR_Si", "CONTCAR-x"):
+        (cells / name).unlink()
+    nothing = cli("prepare", cells, "--out", tmp_path / "none")
+    assert nothing.code == 3
+    assert "no structure files in it" in nothing.err
+    assert "Si.txt" in nothing.err
+
+
+def test_doubts_about_cells_are_told_with_the_names_of_the_crystals(cli, tmp_path):
+    """Glycine as it is shipped, and four copies that lost a hydrogen: `inspect` warns of each of these."""
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    text = (SAMPLE_CELLS / "glycine.cif").read_text()
+    (cells / "whole.cif").write_text(text)
+    hydrogen = next(line for line in text.splitlines() if line.split()[1:2] == ["H"])
+    names = [f"lost{i}" for i in range(4)]
+    for name in names:
+        (cells / f"{name}.cif").write_text(text.replace(hydrogen + "\n", ""))
+    alone = {f["code"] for f in cli("inspect", cells / "lost0.cif", "--json").json["findings"] if f["severity"] != "info"}
+    assert "odd-electrons" in alone
+    first = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert first.json["findings_in"] == dict.fromkeys(first.json["findings_in"], names)
+    assert set(first.json["findings_in"]) == alone
+    again = cli("prepare", cells, "--out", tmp_path / "out")
+    assert "warning odd-electrons: 4 crystals (lost0, lost1, lost2 and 1 more)" in again.out
+    run = tmp_path / "out" / load_campaign(tmp_path / "out").members[0].run
+    write_all_returns(tmp_path / "out", np.random.default_rng(4), noise=1e-4)
+    (run / "jobs" / "s1-plus-1" / "returned.extxyz").unlink()
+    assert cli("collect", tmp_path / "out").code == 4
+    assert f"warning jobs-not-used: 1 crystal ({run.name})" in cli("fit", tmp_path / "out").out
+    assert f"warning jobs-not-used: 1 crystal ({run.name})" in cli("derive", tmp_path / "out").out
+    assert cli("fit", tmp_path / "out", "--json").json["findings_in"]["jobs-not-used"] == [run.name]
+
+
+def test_files_of_the_same_content_are_told(cli, tmp_path):
+    cells = tmp_path / "cells"
+    cells.mkdir()
+    other = SILICON.replace("0.25", "0.2501")
+    for name, text in (("a", SILICON), ("b", other), ("copy of a", SILICON)):
+        (cells / f"{name}.vasp").write_text(text)
+    first = cli("prepare", cells, "--out", tmp_path / "out", "--json")
+    assert first.code == 0
+    assert first.json["same_files"] == [["a", "copy_of_a"]]
+    (tmp_path / "again.vasp").write_text(other)
+    added = cli("prepare", tmp_path / "again.vasp", "--campaign", "--out", tmp_path / "out")
+    assert "files of the same content, computed more than once: a = copy_of_a, b = again" in " ".join(added.out.split())
+
+
 def test_no_usable_cell_at_all(cli, tmp_path):
     (tmp_path / "bad.cif").write_text("nothing")
     result = cli("prepare", tmp_path / "bad.cif", "--campaign", "--out", tmp_path / "out")
@@ -142,6 +202,14 @@ def test_running_it_again_keeps_what_is_there_and_adds_what_is_new(cli, made, ou
     assert (result.code, result.json["crystals"], result.json["kept"]) == (0, 1, 5)
     campaign = load_campaign(out)
     assert len(campaign.members) == 6
+    assert result.json["crystals_in_all"] == 6
+    write_cells(tmp_path / "two", np.random.default_rng(5), copies=2, classes=("m-3m",))
+    for name in ("mbar3m-0", "mbar3m-1"):
+        (tmp_path / "two" / f"{name}.extxyz").rename(tmp_path / "two" / f"late-{name}.extxyz")
+    told = cli("prepare", tmp_path / "two", *options[:-1])
+    assert "2 crystals added, 8 in all" in " ".join(told.out.split())
+    assert cli("prepare", tmp_path / "two", *options[:-1]).out.startswith("Campaign of 8 crystals in")
+    campaign = load_campaign(out)
     assert len(set((out / "joblist.txt").read_text().split())) == campaign.jobs
     assert {n: v for n, v in snapshot(out).items() if n.startswith("runs") and n in before} == {
         n: v for n, v in before.items() if n.startswith("runs")
@@ -160,6 +228,14 @@ def test_running_it_again_keeps_what_is_there_and_adds_what_is_new(cli, made, ou
     path.write_text(original)
     assert result.code == 3
     assert "changed since" in result.err
+
+
+def test_a_single_cell_is_told_how_to_get_into_a_campaign(cli, out, tmp_path):
+    (tmp_path / "POSCAR").write_text(SILICON)
+    result = cli("prepare", tmp_path / "POSCAR", "--out", out)
+    assert result.code == 3
+    assert "is a campaign" in result.err
+    assert "--campaign" in result.err
 
 
 def test_other_options_are_another_campaign(cli, made, out):

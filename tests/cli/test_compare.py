@@ -238,12 +238,36 @@ def test_mistakes(cli, tmp_path, arguments, code, message):
     assert not result.out
 
 
-def test_an_unstable_crystal(cli, tmp_path):
+def test_an_unstable_crystal_stops_neither_table_nor_the_ranking_of_the_others(cli, tmp_path):
+    """Invented tensors; C11 < C12 is unstable (M. Born & K. Huang 1954): a shear modulus of (10 - 11)/2, eigenvalue -1."""
     soft = write(tmp_path, "soft.txt", "name soft\nlaue m-3m\nC11 10(1)\nC12 11(1)\nC44 3(1)\n")
-    page = cli("compare", soft, write(tmp_path, "measured.txt", MEASURED), "--by", "C11")
+    measured = write(tmp_path, "measured.txt", MEASURED)
+    other = write(tmp_path, "other.txt", MEASURED.replace("measured", "other").replace("165.8", "170.0"))
+    page = cli("compare", soft, measured, other, "--html", tmp_path / "c.html", "--csv", tmp_path / "c.csv")
     assert page.code == 5
-    assert "C11, GPa" in page.out
-    assert cli("compare", soft, tmp_path / "measured.txt").code == 2  # no modulus to rank by
+    assert narrow(page.out)
+    assert "not ranked: soft, no moduli: not stable, smallest eigenvalue -1 GPa" in " ".join(page.out.split())
+    assert "soft is not ranked" in (tmp_path / "c.html").read_text()
+    data = cli("compare", soft, measured, other, "--json").json
+    assert data["ranking"]["order"] == ["other", "measured"]
+    assert data["ranking"]["left_out"][0]["crystal"] == "soft"
+    assert [q["values"][0]["value"] for q in data["moduli"]] == [None] * len(data["moduli"])
+    assert [q["values"][0]["value"] for q in data["constants"][0]["constants"]] == [10, 11, 3]
+    assert cli("compare", soft, measured, other, "--by", "C11", "--json").json["ranking"]["order"] == [
+        "other",
+        "measured",
+        "soft",
+    ]
+    with_one = cli("compare", soft, measured, "--html", tmp_path / "c.html")
+    assert with_one.code == 5
+    assert "1. 2 measured" in with_one.out
+    refused = cli("compare", soft, measured, "--by", "young")
+    assert refused.code == 2
+    assert "soft: no moduli" in refused.err
+    softer = write(tmp_path, "softer.txt", "name softer\nlaue m-3m\nC11 9(1)\nC12 11(1)\nC44 3(1)\n")
+    neither = cli("compare", soft, softer, "--html", tmp_path / "c.html", "--baseline", "soft")
+    assert neither.code == 5
+    assert "not ranked: softer" in neither.out
 
 
 def test_a_campaign_is_its_crystals(cli, tmp_path):

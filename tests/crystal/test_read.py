@@ -55,6 +55,7 @@ def test_rounded_special_positions_are_moved_onto_them(tmp_path):
     ("change", "message"),
     [
         (("0.1185 0.1185 0.1185 1", "0.1185 0.1185 0.1185 0.97"), r"partly occupied sites: O1 \(0.97\)"),
+        (("0.1185 0.1185 0.1185 1", "0.1185 0.1185 0.1185 1.3"), r"occupancies above 1: O1 \(1.3\)"),
         (("O1 O", "Q1 Xx"), "sites without a known element: Q1"),
         (("0.1185 0.1185 0.1185 1", "? ? ? 1"), "sites without coordinates: O1"),
         (("P a -3", "P nonsense"), "unknown space group"),
@@ -69,6 +70,14 @@ def test_bad_cif_names_the_place(tmp_path, change, message):
         read_crystal(path)
     assert caught.value.where == str(path)
     assert caught.value.exit_code == 3
+
+
+@pytest.mark.parametrize("occupancy", ["?", ".", "1.0(2)"])
+def test_an_occupancy_that_is_not_given_is_one(tmp_path, occupancy):
+    """The default of the core CIF dictionary (from memory), and common practice."""
+    crystal = read_crystal(write(tmp_path, "cell.cif", DRY_ICE.replace("0.1185 1", f"0.1185 {occupancy}")))
+    assert len(crystal.numbers) == 12
+    assert not crystal.remarks
 
 
 def test_two_structures_in_one_cif_are_refused(tmp_path):

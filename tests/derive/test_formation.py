@@ -11,6 +11,7 @@ from support.molecular import dry_ice, side_by_side, urea
 
 from strainkit.crystal.crystal import Crystal
 from strainkit.crystal.frames import chosen_frame
+from strainkit.derive.doubts import doubts_about
 from strainkit.derive.elastic import ElasticCrystal
 from strainkit.derive.formation import composition_of, energies_of, solve_exactly
 from strainkit.derive.member import Member
@@ -133,3 +134,25 @@ def test_what_the_folders_do_not_say_is_a_finding():
         assert reactions[0].energy is not None
         assert [d.code for d in doubts] == ["settings-unverified"]
         assert word in doubts[0].message
+
+
+@pytest.mark.parametrize(
+    ("one", "other", "words"),
+    [
+        (QE, Method(engine="tersoff"), "program Quantum ESPRESSO and engine tersoff"),
+        (QE, Method(), "program Quantum ESPRESSO and an unknown program"),
+        (Method(engine="tersoff"), Method(engine="emt"), "engine tersoff and engine emt"),
+        (Method(engine="tersoff"), Method(), "engine tersoff and an unknown program"),
+    ],
+)
+def test_energies_of_different_programs_are_never_subtracted(one, other, words):
+    """Their zeros differ by thousands of eV; what made them must be known of both, or of neither."""
+    ice, both = member("ice", WATER, -20.4, one), member("both", CARBONIC, -30.0, one)
+    reason = refused(ice, member("dry", dry_ice(), -39.0, other), both)
+    assert reason == f"computed differently from dry: {words}"
+    pair = [member("a", dry_ice(), -39.0, one), member("b", dry_ice(), -4000.0, other)]
+    _, (reaction,), _ = energies_of(pair)
+    assert reaction.energy is None
+    (doubt,) = [f for f in doubts_about(pair, []) if f.code == "methods-differ"]
+    assert doubt.where == "b"
+    assert words in doubt.message
