@@ -12,16 +12,15 @@ from typing import Any
 from strainkit.errors import DiskError, InputError
 from strainkit.prepare.campaign import Planned, Recipe, Spool, placed, plan_cells, write_members
 from strainkit.prepare.cells import find_cells, names_of, plain_name
+from strainkit.prepare.kept import job_folders, plan_doubts, was_campaign
 from strainkit.prepare.scripts import LOGS, arrays, job_name, kept_site, list_name, many_files, script_name, submit_command
 from strainkit.run.campaign import Campaign, Member, Refusal, at_work, is_campaign, load_campaign
-from strainkit.run.files import atomic_write, checksum, load_json
+from strainkit.run.files import atomic_write, checksum
 from strainkit.run.plan import MANIFEST
 
 __all__ = ["Estimate", "Made", "make_campaign"]
 
 Stage = Callable[[str], AbstractContextManager[Callable[[int, int, str], None]]]
-#: what lies in a campaign folder whose manifest was lost before its first run folder was written
-_OURS = ("runs", LOGS, "joblist", "submit", ".")
 
 
 @dataclass(frozen=True)
@@ -142,16 +141,9 @@ def _existing(out: Path, digest: str, force: bool) -> Campaign | None:
         )
     if out.is_symlink() or (out.exists() and not out.is_dir()):
         raise InputError("exists already and is not a campaign", out, "Choose another --out; nothing was touched.")
-    if out.is_dir() and not _was_campaign(out):
+    if out.is_dir() and not was_campaign(out):
         raise InputError("exists already and is not a campaign", out, "Choose another --out; nothing was touched.")
     return None
-
-
-def _was_campaign(out: Path) -> bool:
-    """Run folders where a campaign has them, whatever exports, tables and notes lie beside; or nothing of others."""
-    if next(out.glob(f"runs/[0-9][0-9][0-9]*/*/{MANIFEST}"), None) is not None:
-        return True
-    return all(entry.name.startswith(_OURS) for entry in out.iterdir())
 
 
 def _compare(
@@ -197,8 +189,7 @@ def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None
     found = {p.member.name: p.findings for p in planned}
     for member in kept:
         assert out is not None
-        said = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))["findings"]
-        found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
+        found[member.name] = plan_doubts(out, member)
     return {name: codes for name, codes in found.items() if codes}
 
 
@@ -280,7 +271,7 @@ def _write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
     while (out / script_name(count)).exists():  # a list without its script was never submitted
         listed |= set((out / list_name(count)).read_text(encoding="utf-8").split())
         count += 1
-    every = [folder for member in campaign.members for folder in _job_folders(out, member)]
+    every = [folder for member in campaign.members for folder in job_folders(out, member)]
     fresh = [folder for folder in every if folder not in listed]
     if not fresh:
         return ""
@@ -298,14 +289,3 @@ def _write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
         for name, text in many_files(recipe.scheduler, site, title, part, f"{stem}-{number}", number).items():
             atomic_write(out / name, text)
     return submit_command(recipe.scheduler, count, len(parts))
-
-
-def _job_folders(out: Path, member: Member) -> list[str]:
-    """Job folders of a member relative to the campaign, in the order of its plan."""
-    path = out / member.run / MANIFEST
-    try:
-        return [f"{member.run}/{job['folder']}" for job in load_json(path, "strainkit/strain-set")["jobs"]]
-    except (InputError, KeyError, TypeError) as error:
-        what = error.what if isinstance(error, InputError) else f"damaged manifest ({type(error).__name__}: {error})"
-        remedy = f"Restore it, or move {out / member.run} away and give the same command again."
-        raise InputError(what, path, remedy) from None
