@@ -75,5 +75,6 @@ def test_a_campaign_tallies_them(cli, tmp_path):
     returned = run / "jobs/s1-plus-1/returned.extxyz"
     returned.write_text(returned.read_text().replace("energy=-", "energy=-1"))
     assert cli("fit", out, "--json").json["findings"]["outputs-changed"] == 1  # the fit itself is kept
+    assert "outputs-changed" in cli("derive", out, "--json").json["rows"][0]["findings"]
     assert cli("collect", out).code in (0, 4)
     assert cli("fit", out, "--json").json["findings"].get("outputs-changed") is None
