@@ -46,6 +46,10 @@ def collect(
         raise UsageError(
             "unit, sign and order go with --table", "--table", "Programs' own outputs are read in their documented units."
         )
+    if export is not None:
+        from strainkit.present.structures import check_export, export_structures
+
+        check_export(export)
     if is_campaign(run):
         from strainkit.cli.campaign import collect_campaign
 
@@ -59,8 +63,6 @@ def collect(
     found.save(run)
     note(f"wrote {run / TABLE} and stresses.csv", quiet)
     if export is not None:
-        from strainkit.present.structures import export_structures
-
         note(f"wrote {counted(export_structures([run], export), 'structure')} to {export}", quiet)
     deliver(found.to_dict, lambda: table_text(found, every=True), json)
     if len(found.usable) < len(found.records):

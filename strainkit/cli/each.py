@@ -85,14 +85,14 @@ def fit_one(options: FitOptions, again: bool, run: Path) -> Summary:
     path = run / FITTED
     saved = _saved(run)
     if not again and saved.get(INPUTS) == digest:
-        return _fitted(saved) | {"kept": True}
+        return _fitted(saved, run) | {"kept": True}
     plan = load_plan(run)
     own = recorded_options(saved, plan)
     result = fit_with(plan, run, replace(options, drop=own.drop, force_constants=own.force_constants))
     data = result.to_dict(options.frame) | {INPUTS: digest}
     with in_a_hurry():  # half a file would not be JSON, and is made again
         atomic_write(path, dump_json(data))
-    return _fitted(data) | {"kept": False}
+    return _fitted(data, run) | {"kept": False}
 
 
 def _codes(findings: Sequence[Finding]) -> list[str]:
@@ -119,9 +119,22 @@ def _saved(run: Path) -> dict[str, Any]:
         return {}
 
 
-def _fitted(data: dict[str, Any]) -> Summary:
-    codes = sorted({f["code"] for f in data["findings"] if f["severity"] != "info"})
+def _fitted(data: dict[str, Any], run: Path) -> Summary:
+    changed = {f.code for f in _changed(run)}
+    codes = sorted(changed.union(f["code"] for f in data["findings"] if f["severity"] != "info"))
     return {"undetermined": data["undetermined"], "findings": codes, "jobs_used": len(data["jobs_used"])}
+
+
+def _changed(run: Path) -> list[Finding]:
+    """A finding when outputs changed since they were collected; plan and table are loaded only where times say so."""
+    from strainkit.collect.stale import outputs_changed
+    from strainkit.collect.table import TABLE, load_table
+    from strainkit.run.plan import load_plan
+    from strainkit.run.state import collected_before, output_signature
+
+    if collected_before(run, output_signature(run), run / TABLE) is not None:
+        return []
+    return outputs_changed(run, load_plan(run), load_table(run))
 
 
 @_guarded
@@ -178,5 +191,7 @@ def report_one(options: dict[str, Any], frame: str, force: bool, again: bool, ru
         fit = fit_with(plan, run, replace(last_options(run, plan), **options))
     except NoTensorError as error:
         why = error.what
-    report_run(plan, load_table(run), fit, frame, run=run, why=why).save(path, force)
+    table = load_table(run)
+    table = replace(table, findings=(*_changed(run), *table.findings))
+    report_run(plan, table, fit, frame, run=run, why=why).save(path, force)
     return {"kept": False} | ({"problem": why} if why else {})

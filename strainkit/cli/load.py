@@ -6,11 +6,12 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from strainkit.errors import UsageError
+from strainkit.errors import NoTensorError, UsageError
 
 if TYPE_CHECKING:
     from strainkit.design.jobs import StrainJob
     from strainkit.design.model import Order
+    from strainkit.findings import Finding
     from strainkit.fit.residual import ReferenceStress
     from strainkit.fit.result import Fit
     from strainkit.run.plan import Plan
@@ -45,6 +46,8 @@ def one_run_drops(options: dict[str, Any]) -> None:
 
 def fitted(run: Path, options: dict[str, Any], constants: Path | None = None, anew: bool = False) -> Fit:
     """Fit a run from its stress table as the last `strainkit fit` did, but for the options given; `anew`: with these alone."""
+    from strainkit.collect.stale import outputs_changed
+    from strainkit.collect.table import load_table
     from strainkit.fit.options import FitOptions, fit_with, last_options
     from strainkit.run.plan import load_plan
 
@@ -53,11 +56,19 @@ def fitted(run: Path, options: dict[str, Any], constants: Path | None = None, an
     _check_labels(plan, chosen.drop)
     if constants is not None:
         chosen = replace(chosen, force_constants=str(constants.resolve()))
-    return fit_with(plan, run, chosen)
+    changed = outputs_changed(run, plan, load_table(run))
+    try:
+        fit = fit_with(plan, run, chosen)
+    except NoTensorError as error:
+        if changed:
+            raise NoTensorError(error.what, error.where, changed[0].message) from None
+        raise
+    return replace(fit, findings=(*changed, *fit.findings))
 
 
-def usable(run: Path, options: dict[str, Any]) -> tuple[Plan, list[StrainJob], FloatArray, float | None]:
-    """Plan, usable jobs, their Cauchy stresses (jobs, 6), GPa, and known noise of a run, with options as for `fitted`."""
+def usable(run: Path, options: dict[str, Any]) -> tuple[Plan, list[StrainJob], FloatArray, float | None, list[Finding]]:
+    """Plan, usable jobs, their Cauchy stresses (jobs, 6), GPa, known noise and age of the table; options as for `fitted`."""
+    from strainkit.collect.stale import outputs_changed
     from strainkit.collect.table import load_table
     from strainkit.fit.options import last_options
     from strainkit.fit.result import usable_jobs
@@ -66,8 +77,9 @@ def usable(run: Path, options: dict[str, Any]) -> tuple[Plan, list[StrainJob], F
     plan = load_plan(run)
     chosen = replace(last_options(run, plan), **options)
     _check_labels(plan, chosen.drop)
-    jobs, stresses = usable_jobs(plan, load_table(run), chosen.drop)
-    return plan, jobs, stresses, chosen.noise
+    table = load_table(run)
+    jobs, stresses = usable_jobs(plan, table, chosen.drop)
+    return plan, jobs, stresses, chosen.noise, outputs_changed(run, plan, table)
 
 
 def _check_labels(plan: Plan, drop: tuple[str, ...]) -> None:

@@ -101,20 +101,20 @@ def relax_here(
 ) -> None:
     """Relax a cell with a local engine and write it."""
     from strainkit.crystal.read import read_crystal
-    from strainkit.errors import InputError, UsageError, counted
+    from strainkit.errors import UsageError, counted
     from strainkit.evaluate.engines import Engine, parse_settings
     from strainkit.evaluate.reference import relax_reference
     from strainkit.prepare.writers import write_cell
     from strainkit.present.numbers import plain
     from strainkit.present.text import findings_text
     from strainkit.run.files import atomic_write
+    from strainkit.run.outputs import check_output
     from strainkit.tensors.sixvectors import strain_to_voigt
 
     format = {".extxyz": "extxyz", ".xyz": "extxyz", ".vasp": "poscar", ".cif": "cif"}.get(out.suffix.lower())
     if format is None:
         raise UsageError(f"cannot tell the format from {out.name!r}", "--out", "Use .extxyz, .vasp or .cif.")
-    if out.exists() and not force:
-        raise InputError("exists already; nothing was written", out, "Choose another --out, or --force to replace it.")
+    check_output(out, None, "a cell", force)
     crystal = read_crystal(cell, read_as)
     found = relax_reference(crystal, Engine(engine, parse_settings(settings or [])), fmax, symprec)
     atomic_write(out, write_cell(format, found.crystal, f"{crystal.name} relaxed with {engine}"))

@@ -37,7 +37,10 @@ def report(
     quiet: Quiet = False,
 ) -> None:
     """One self-contained HTML file a crystal: verdict, tensor, figures, moduli, provenance (report.html)."""
+    from dataclasses import replace
+
     from strainkit.cli.load import fitted, given_options, one_run_drops
+    from strainkit.collect.stale import outputs_changed
     from strainkit.collect.table import load_table
     from strainkit.crystal.lattice import index_axes, parse_indices
     from strainkit.errors import NoTensorError, UsageError, counted
@@ -61,17 +64,18 @@ def report(
     directions = [parse_indices(text, "--direction", False, axes) for text in direction or []]
     path = out or run / REPORT
     refuse_foreign(path, force)
-    fit, why = None, ""
+    fit, why, table = None, "", load_table(run)
     try:
         fit = fitted(run, options, force_constants)
     except NoTensorError as error:
         why = error.what
+        table = replace(table, findings=(*outputs_changed(run, plan, table), *table.findings))
     study = None
     if force_constants is not None:
         from strainkit.dynamics.phonons import load_phonopy
 
         study = load_phonopy(force_constants)
-    made = report_run(plan, load_table(run), fit, frame, planes, directions, indices == "given", study, run, why)
+    made = report_run(plan, table, fit, frame, planes, directions, indices == "given", study, run, why)
     made.save(path, force)
     note(f"wrote {path}", quiet)
     files = [] if figures is None else write_figures(made.figures.values(), figures, figure_format, force)

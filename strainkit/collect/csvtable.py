@@ -202,11 +202,7 @@ def _columns(path: Path, line: int, head: Sequence[str], convention: Convention)
         stress = dict(zip(convention.order, numbered, strict=True))
         units = dict.fromkeys(stress, convention.unit or "GPa")
     elif convention.order is not None and len(stress) == 6:
-        if tuple(stress) != convention.order and tuple(stress) != COMPONENTS:
-            raise InputError(
-                f"line {line}: the header says {' '.join(stress)}", path, "Leave out --stress-order, or mend the header."
-            )
-        # a header in the usual order may be wrong; the option was given to say so
+        # the option is given where the header is wrong
         stress = dict(zip(convention.order, stress.values(), strict=True))
         units = {c: list(units.values())[i] for i, c in enumerate(stress)}
     missing = [c for c in COMPONENTS if c not in stress]

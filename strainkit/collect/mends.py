@@ -13,7 +13,7 @@ from strainkit.tensors.rotations import rotation6
 from strainkit.tensors.sixvectors import COMPONENTS
 from strainkit.units import EV_PER_A3_IN_GPA, STRESS_UNITS_IN_GPA
 
-__all__ = ["FACTORS", "Mend", "mends", "order_words", "unit_words"]
+__all__ = ["EXCHANGED", "FACTORS", "Mend", "mends", "order_words", "unit_words"]
 
 #: ratios of the units that stresses come in (GPa, kbar, bar, MPa, eV/A^3, Ha/bohr^3, Ry/bohr^3), and of none of them
 FACTORS = tuple(
@@ -25,6 +25,7 @@ FACTORS = tuple(
 #: orders in which programs and people write six components; the first is strainkit's own
 ORDERS = (
     *((*COMPONENTS[:3], *shear) for shear in permutations(COMPONENTS[3:])),
+    *((*normal, *COMPONENTS[3:]) for normal in list(permutations(COMPONENTS[:3]))[1:]),
     ("xx", "xy", "xz", "yy", "yz", "zz"),
     ("xx", "xy", "yy", "xz", "yz", "zz"),
 )
@@ -54,6 +55,10 @@ class Mend:
     matrices: FloatArray
     order: tuple[str, ...] = ()
     factor: float = 1.0
+
+
+#: two lines of a table in each other's place; files carry their cells, so that theirs cannot be exchanged unseen
+EXCHANGED = Mend("stress-exchanged", "the stresses are in each other's place", np.zeros((0, 6, 6)))
 
 
 def mends(records: list[StressRecord], lattices: FloatArray) -> list[Mend]:

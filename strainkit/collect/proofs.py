@@ -69,9 +69,11 @@ def _report(group: Group, start: Attempt, best: Attempt, rivals: list[Attempt]) 
         )
         if same:
             text += f"; as good: {'; '.join(same)}"
-        refused = labels if place is None else (labels[place],)
-        refused += tuple(labels[r.steps[index][0]] for r in rivals if r.steps[index][0] is not None)  # type: ignore[index]
-        where = "strain set" if place is None else labels[place]
+        refused = labels if place is None else tuple(labels[job] for job in place)
+        refused += tuple(labels[job] for r in rivals if len(r.steps) > index for job in r.steps[index][0] or ())
+        where = labels[place[0]] if place is not None and len(place) == 1 else "strain set"
+        if place is not None and len(place) > 1:
+            text = f"{_names(group, place)}: {text}"
         found.append((finding(mend.code, where, text + _remedy(group, place, mend)), tuple(dict.fromkeys(refused))))
     return found
 
@@ -91,14 +93,21 @@ def _unexplained(group: Group, start: Attempt) -> list[Refused]:
     return [(finding("set-inconsistent", "strain set", text), ())]
 
 
-def _words(group: Group, step: tuple[int | None, Mend]) -> str:
+def _names(group: Group, place: tuple[int, ...] | None) -> str:
+    labels = ["all"] if place is None else [group.jobs[job].label for job in place]
+    return ", ".join(labels[:4]) + (f" and {len(labels) - 4} more" if len(labels) > 4 else "")
+
+
+def _words(group: Group, step: tuple[tuple[int, ...] | None, Mend]) -> str:
     place, mend = step
-    return f"{'all' if place is None else group.jobs[place].label}: {mend.name}"
+    return f"{_names(group, place)}: {mend.name}"
 
 
-def _remedy(group: Group, place: int | None, mend: Mend) -> str:
-    record = group.records[0 if place is None else place]
+def _remedy(group: Group, place: tuple[int, ...] | None, mend: Mend) -> str:
+    record = group.records[0 if place is None else place[0]]
     typed = record.program == "table"
+    if place is not None and len(place) > 1:
+        return f"; mend {'these lines of the table' if typed else 'these outputs'}, not the others"
     if place is not None:
         return f"; mend {'this line of the table' if typed else record.file}, not the others"
     if mend.code == "stress-sign":

@@ -11,7 +11,7 @@ import numpy as np
 from strainkit.collect.paths import energy_jumps, ions_elsewhere, left_over_forces
 from strainkit.collect.proofs import prove
 from strainkit.collect.table import StressRecord
-from strainkit.design.jobs import StrainJob
+from strainkit.design.jobs import REFERENCE, StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import FloatArray
@@ -42,6 +42,7 @@ SET_CODES = frozenset(
         "stress-unit",
         "stress-order",
         "stress-frame",
+        "stress-exchanged",
         "set-inconsistent",
         "energy-jump",
         "ions-elsewhere",
@@ -136,7 +137,7 @@ def _plain(value: object) -> str:
 
 
 def _mixed(code: str, word: str, values: dict[str, str]) -> list[tuple[Finding, tuple[str, ...]]]:
-    """Jobs whose value is not that of most; without a clear majority one finding about them all."""
+    """Jobs whose value is not that of most; without a clear majority one finding, refusing what the reference has not."""
     counts = Counter(values.values()).most_common()
     if len(counts) < 2:
         return []
@@ -148,7 +149,11 @@ def _mixed(code: str, word: str, values: dict[str, str]) -> list[tuple[Finding, 
             for label in odd
         ]
     text = "; ".join(f"{value} in {_some([k for k, v in values.items() if v == value])}" for value, _ in counts[:4])
-    return [(finding(code, "strain set", f"{word}: {text}"), ())]
+    if REFERENCE not in values:
+        return [(finding(code, "strain set", f"{word}: {text}"), ())]
+    others = tuple(label for label, value in values.items() if value != values[REFERENCE])
+    text += "; what the reference has counts, the others are to be run again, or fitted in a run of their own"
+    return [(finding(code, "strain set", f"{word}: {text}"), others)]
 
 
 def _some(labels: Sequence[str]) -> str:

@@ -23,6 +23,7 @@ from strainkit.present.report_page import Page, Paragraph, Section, Table, rende
 from strainkit.present.report_provenance import cautions_section, provenance_section
 from strainkit.present.report_verdict import Verdict, verdict
 from strainkit.run.files import atomic_write
+from strainkit.run.outputs import check_output
 from strainkit.run.plan import Plan
 
 if TYPE_CHECKING:
@@ -101,7 +102,7 @@ class Report:
         }
 
     def save(self, path: Path | str, force: bool = False) -> None:
-        """Write the page; a file that strainkit did not make is replaced only with `force`."""
+        """Write the page; a file that is no page of strainkit's is replaced only with `force`, those of runs never."""
         save_own(Path(path), self.html.encode(), force)
 
     def _repr_html_(self) -> str:
@@ -189,32 +190,34 @@ def _findings(
 
 
 def write_figures(drawings: Iterable[Drawing], folder: Path, format: str, force: bool = False) -> list[Path]:
-    """Write figures as folder/NAME.format; files that strainkit did not make are replaced only with `force`."""
+    """Write figures as folder/NAME.format; other files are replaced only with `force`, those of runs never."""
     if format not in FORMATS:
         raise InputError(f"figures are not written as {format!r}", folder, f"Use one of {', '.join(FORMATS)}.")
     written = []
     for drawing in drawings:
         path = folder / f"{drawing.name}.{format}"
-        save_own(path, drawing.to_bytes(format), force)
+        check_output(path, _is_figure, "a figure", force)
+        atomic_write(path, drawing.to_bytes(format))
         written.append(path)
     return written
 
 
 def save_own(path: Path, content: bytes, force: bool) -> None:
-    """Write a file, but never over one that does not bear strainkit's name.
-
-    Raises
-    ------
-    InputError
-        A foreign file is there, and `force` is not given.
-    """
+    """Write a page where `refuse_foreign` lets it."""
     refuse_foreign(path, force)
     atomic_write(path, content)
 
 
 def refuse_foreign(path: Path, force: bool) -> None:
-    """Raise InputError where a folder, or without `force` a file that does not bear strainkit's name, is in the way."""
-    if path.is_dir():
-        raise InputError("is a folder", path, "Name a file.")
-    if not force and path.exists() and b"strainkit" not in path.read_bytes():
-        raise InputError("exists and was not written by strainkit; left as it is", path, "Choose another place, or --force.")
+    """Raise InputError where a page must not be written: see `check_output`."""
+    check_output(path, _is_page, "a page", force)
+
+
+def _is_page(path: Path) -> bool:
+    return b'<meta name="generator" content="strainkit' in path.read_bytes()[:2000]
+
+
+def _is_figure(path: Path) -> bool:
+    """Does the file bear strainkit's name in the form of one of `FORMATS`, and is no page?"""
+    content = path.read_bytes()
+    return b"strainkit" in content and content.startswith((b"<?xml", b"<svg", b"\x89PNG", b"%PDF"))

@@ -13,11 +13,12 @@ import numpy as np
 from strainkit.collect.table import load_table
 from strainkit.errors import DiskError
 from strainkit.run.extxyz import extxyz_text
+from strainkit.run.outputs import check_output
 from strainkit.run.plan import load_plan
 from strainkit.tensors.sixvectors import stress_from_voigt
 from strainkit.units import EV_PER_A3_IN_GPA
 
-__all__ = ["export_structures", "frames_of"]
+__all__ = ["check_export", "export_structures", "frames_of"]
 
 
 def frames_of(run: Path) -> Iterator[str]:
@@ -44,6 +45,19 @@ def frames_of(run: Path) -> Iterator[str]:
         yield extxyz_text(replace(planned, positions=positions), info, record.forces)
 
 
+def check_export(path: Path) -> None:
+    """Raise InputError where an export must not be written: only another export is replaced."""
+    check_output(path, _is_export, "an export")
+
+
+def _is_export(path: Path) -> bool:
+    """Does its first frame name a job of a set? An export without frames is empty."""
+    with path.open(encoding="utf-8", errors="replace") as file:
+        count, head = file.readline(200), file.readline(20_000)
+    named = all(f' {key}="' in head for key in ("name", "job", "kind", "program"))
+    return not (count + head) or (head.startswith("Lattice=") and named)
+
+
 def export_structures(runs: Iterable[Path], path: Path, finished: Callable[[Path], None] = lambda run: None) -> int:
     """Write the frames of many runs to one file, whole or not at all; their number.
 
@@ -52,8 +66,9 @@ def export_structures(runs: Iterable[Path], path: Path, finished: Callable[[Path
     DiskError
         When the file cannot be written.
     InputError
-        A run that has not been collected.
+        A run that has not been collected, or a place that `check_export` refuses.
     """
+    check_export(path)
     count, temporary = 0, ""
     try:
         handle, temporary = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)

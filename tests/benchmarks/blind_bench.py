@@ -21,12 +21,12 @@ os.environ.setdefault("OMP_NUM_THREADS", "1")
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
 import numpy as np
-import support.blindcells
-import support.blindfiles  # noqa: F401  (registers its faults)
-from support.blindclean import DISGUISES, disguised
-from support.blindfaults import NUMBERS
-from support.blindjudge import CONSEQUENCES, Seen, Verdict, inject, judge, look, mends, moved
-from support.blindsets import MANIFEST, StrainSet, real_set, synthetic_set
+import support.blind.cells
+import support.blind.files  # noqa: F401  (registers its faults)
+from support.blind.clean import DISGUISES, disguised
+from support.blind.faults import NUMBERS
+from support.blind.judge import CONSEQUENCES, Seen, Verdict, inject, judge, look, mends, moved
+from support.blind.sets import MANIFEST, StrainSet, real_set, synthetic_set
 from support.groups import LAUE_CLASSES
 
 DATA = Path(__file__).parents[1] / "data"

@@ -10,10 +10,10 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-import support.blindcells
-import support.blindfiles  # noqa: F401  (both register their faults)
-from support.blindjudge import CONSEQUENCES, Seen, inject, judge, look
-from support.blindsets import StrainSet, real_set, synthetic_set
+import support.blind.cells
+import support.blind.files  # noqa: F401  (both register their faults)
+from support.blind.judge import CONSEQUENCES, Seen, inject, judge, look
+from support.blind.sets import StrainSet, real_set, synthetic_set
 
 SILICON = Path(__file__).parent.parent / "data" / "sets" / "silicon_qe"
 

@@ -176,9 +176,9 @@ def test_cp2k_restart_of_another_moment_is_not_used(edit, tmp_path):
         ("qe/grimme-d2.out", {"dispersion": "Grimme-D2", "kpoint_total": "1", "pseudopotentials": "Si d7f89eb6"}, "6.7MaX"),
         ("qe/ts-vdw.out", {"dispersion": "T-S"}, "6.7MaX"),
         ("qe/xdm.out", {"dispersion": "XDM"}, "6.7MaX"),
-        ("qe/two-species.out", {"pseudopotentials": "Si a974d1b8, C 53020fac", "kpoint_total": "8"}, "6.7MaX"),
-        ("abinit/two-species.abo", {"pseudopotentials": "14si.pspgth, 06c.pspgth"}, "9.6.2"),
-        ("cp2k/relaxed.out", {"pseudopotentials": "SZV-MOLOPT-SR-GTH, GTH-PBE-q4"}, "2023.1"),
+        ("qe/two-species.out", {"pseudopotentials": "C 53020fac, Si a974d1b8", "kpoint_total": "8"}, "6.7MaX"),
+        ("abinit/two-species.abo", {"pseudopotentials": "06c.pspgth, 14si.pspgth"}, "9.6.2"),
+        ("cp2k/relaxed.out", {"pseudopotentials": "GTH-PBE-q4, SZV-MOLOPT-SR-GTH"}, "2023.1"),
         ("gpaw26/relaxed.txt", {"pseudopotentials": "Si.PBE ee77bee4"}, "26.7.0"),
         (
             "qe/single.out",

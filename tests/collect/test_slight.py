@@ -10,7 +10,6 @@ import pytest
 from ase.build import bulk
 from support.returned import write_return
 
-from strainkit.collect import explain
 from strainkit.collect.gather import collect_run
 from strainkit.crystal.crystal import Crystal
 from strainkit.prepare.runfolder import plan_run, write_run
@@ -40,8 +39,3 @@ def test_no_alarm(run):
     table = collect_run(*run)
     assert [r.status for r in table.records] == ["done"] * 3
     assert not [f for r in table.records for f in r.findings]
-
-
-def test_the_rule_is_what_prevents_it(run, monkeypatch):
-    monkeypatch.setattr(explain, "SLIGHT", 0.0)
-    assert "suspect" in [r.status for r in collect_run(*run).records]

@@ -48,10 +48,11 @@ def test_formats_of_any_program_say_nothing_about_the_program(plan):
     assert codes(judged(plan, lambda i, v: replace(v, program="extended XYZ" if i % 2 else "GPAW gpw"))) == []
 
 
-def test_without_a_majority_all_are_named_and_none_is_refused(plan):
-    table = judged(plan, lambda i, v: replace(v, settings={**v.settings, "cutoff_eV": 500.0 + 10 * i}))
-    assert [f.code for f in table.findings] == ["mixed-settings"]
-    assert len(table.usable) == len(plan.jobs)
+def test_without_a_majority_what_the_reference_has_counts(plan):
+    table = judged(plan, lambda i, v: replace(v, settings={**v.settings, "cutoff_eV": 500.0 + 10 * (i % 2)}))
+    (found,) = [f for f in table.findings if f.code == "mixed-settings"]
+    assert "run again" in found.message
+    assert [r.label for r in table.usable] == [job.label for job in plan.jobs[::2]]
 
 
 def test_the_number_of_kpoints_is_compared_within_a_shape_only(plan):
@@ -193,3 +194,31 @@ def test_a_finer_job_that_is_a_copy_of_its_normal_one_is_refused():
         table = collected(Faulty(plan, outputs, clean.clamped, copies))
         assert {r.label for r in table.records if r.status == "suspect"} == set(base)
         assert "identical-outputs" in codes(table)
+
+
+@pytest.mark.parametrize("energies", [True, False])
+@pytest.mark.parametrize("change", [lambda s: 10.0 * s, lambda s: -s], ids=["unit", "sign"])
+@pytest.mark.parametrize("laue", ["m-3m", "4/mmm", "-1"])
+def test_both_jobs_of_one_size_are_named_together(laue, change, energies):
+    """Who evaluated the jobs of 1 % read them in another unit: one change explains both, and no partner is accused."""
+    plan = plan_run(conventional(laue), (0.005, 0.01))
+    clean = clean_set(laue, np.random.default_rng(1), (0.005, 0.01), 0.003, 1.0, energies=energies, plan=plan)
+    table = collected(Faulty(plan, dict(clean.outputs), clean.clamped))
+    wrong = {"s1-plus-1", "s1-minus-1"}
+    records = [replace(r, stress=change(r.stress)) if r.label in wrong else r for r in table.records]
+    after, found = judge_set(plan, records)
+    assert {r.label for r in after if r.status == "suspect"} == wrong
+    assert all(label in found[0].message for label in wrong)
+
+
+@pytest.mark.parametrize("laue", ["m-3m", "2/m", "-3"])
+def test_exchanged_lines_of_a_table_are_named(laue):
+    plan = plan_run(conventional(laue), (0.005, 0.01))
+    clean = clean_set(laue, np.random.default_rng(1), (0.005, 0.01), 0.003, 1.0, energies=False, plan=plan)
+    table = collected(Faulty(plan, dict(clean.outputs), clean.clamped))
+    records = {r.label: replace(r, program="table", file="t.csv", rotation=None, forces=None) for r in table.records}
+    one, other = records["s1-plus-0.5"], records["s1-plus-1"]
+    records |= {"s1-plus-0.5": replace(one, stress=other.stress), "s1-plus-1": replace(other, stress=one.stress)}
+    after, found = judge_set(plan, list(records.values()))
+    assert "stress-exchanged" in {f.code for f in found}
+    assert {r.label for r in after if r.status == "suspect"} == {"s1-plus-0.5", "s1-plus-1"}

@@ -6,9 +6,10 @@ import numpy as np
 import pytest
 from support.crystals import conventional
 from support.published import mandel
-from support.returned import write_return
+from support.returned import linear_law, write_return
 
 from strainkit.collect.gather import collect_run
+from strainkit.collect.table import StressRecord, StressTable
 from strainkit.fit.magnitude import converge
 from strainkit.fit.result import fit_run, usable_jobs
 from strainkit.prepare.runfolder import plan_run, write_run
@@ -297,3 +298,20 @@ def test_one_magnitude_asks_for_another(tmp_path):
     assert [f.code for f in found.findings] == ["one-magnitude"]
     assert found.best is None
     assert "--magnitude 0.5" in found.findings[0].message
+
+
+def test_noise_of_the_stresses_is_no_mismatch_of_the_slope():
+    """Exact energies, no stress at rest, and noise of a twelfth of the stress: soft crystals computed as usual."""
+    plan = plan_run(conventional("-1"))
+    soft = np.diag([6.0, 6.0, 6.0, 8.0, 8.0, 8.0])
+    soft[:3, :3] += 6.0
+    law = linear_law(soft)
+    for seed in range(5):
+        rng = np.random.default_rng(seed)
+        records = []
+        for job in plan.jobs:
+            error = rng.normal(scale=0.01, size=(3, 3))
+            stress = cauchy_from_pk2(law(job.strain) + (error + error.T) / 2**0.5, job.gradient)
+            energy = 0.5 * plan.crystal.volume / EV_PER_A3_IN_GPA * float((law(job.strain) * job.strain).sum())
+            records.append(StressRecord(job.label, "done", stress=stress_to_voigt(stress), energy=energy))
+        assert "energy-slope-mismatch" not in codes(fit_run(plan, StressTable(tuple(records))))

@@ -1,18 +1,23 @@
+# the lines of an output, without one that was cut short
+whole_lines() {
+  if [ -n "$(tail -c 1 "$1")" ]; then sed '$d' "$1"; else cat "$1"; fi
+}
+
 # an attempt begins with the ions (and, in a variable-cell run, the cell) where the last one stopped
 make_inputs() {
   local k
   cp abinit.abi "abinit-$n.abi"
   for ((k = n - 1; k > 0; k--)); do
-    [ -f "abinit-$k.abo" ] || continue
+    [ -s "abinit-$k.abo" ] || continue
     awk -v atoms={{ atoms | length }} '
-      NR == FNR {
+      FILENAME == ARGV[1] {
 {% if task == "cell" %}
         if (/\(rprimd\)/) { block = "cell"; left = 4; part = "" }
 {% endif %}
         if (/Reduced coordinates \(xred\)/) { block = "ions"; left = atoms + 1; part = "" }
         if (left > 0) {
-          if (!/\(rprimd\)|\(xred\)/) part = part $1 " " $2 " " $3 "\n"
-          if (--left == 0) whole[block] = part
+          if (!/\(rprimd\)|\(xred\)/) { part = part $1 " " $2 " " $3 "\n"; if (NF < 3) left = 0 }
+          if (left > 0 && --left == 0) whole[block] = part
         }
         next
       }
@@ -22,7 +27,7 @@ make_inputs() {
       skip > 0 { skip--; next }
       { print }
       END { exit !("ions" in whole) }
-    ' "abinit-$k.abo" abinit.abi >"abinit-$n.abi" && return
+    ' <(whole_lines "abinit-$k.abo") abinit.abi >"abinit-$n.abi" && return
     cp abinit.abi "abinit-$n.abi"
   done
 }

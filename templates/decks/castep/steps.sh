@@ -7,9 +7,9 @@ make_inputs() {
   cp castep.cell "castep-$n.cell"
 {% if not magnetic %}
   for ((k = n - 1; k > 0; k--)); do
-    [ -f "castep-$k.geom" ] || continue
+    [ -s "castep-$k.geom" ] || continue
     awk -v atoms={{ atoms | length }} '
-      NR == FNR {
+      FILENAME == ARGV[1] {
         if (/<-- h$/) { if (rows == 3) { rows = 0; lattice = ""; positions = ""; count = 0 } lattice = lattice $1 " " $2 " " $3 "\n"; rows++ }
         if (/<-- R$/) { positions = positions $1 " " $3 " " $4 " " $5 "\n"; if (++count == atoms) { cell = lattice; ions = positions } }
         next

@@ -1,14 +1,19 @@
+# the lines of an output, without one that was cut short
+whole_lines() {
+  if [ -n "$(tail -c 1 "$1")" ]; then sed '$d' "$1"; else cat "$1"; fi
+}
+
 # an attempt begins with the ions (and, in a variable-cell run, the cell) where the last one stopped
 make_inputs() {
   local k
   cp pw.in "pw-$n.in"
   for ((k = n - 1; k > 0; k--)); do
-    [ -f "pw-$k.out" ] || continue
+    [ -s "pw-$k.out" ] || continue
     awk -v atoms={{ atoms | length }} '
-      NR == FNR {
-        if (/^CELL_PARAMETERS/) { block = "cell"; left = 4 }
-        if (/^ATOMIC_POSITIONS/) { block = "ions"; left = atoms + 1 }
-        if (left > 0) { part = part $0 "\n"; if (--left == 0) { whole[block] = part; part = "" } }
+      FILENAME == ARGV[1] {
+        if (/^CELL_PARAMETERS/) { block = "cell"; left = 3; fields = 3; part = $0 "\n"; next }
+        if (/^ATOMIC_POSITIONS/) { block = "ions"; left = atoms; fields = 4; part = $0 "\n"; next }
+        if (left > 0) { part = part $0 "\n"; if (NF < fields) left = 0; else if (--left == 0) whole[block] = part }
         next
       }
       /^CELL_PARAMETERS/ && "cell" in whole { printf "%s", whole["cell"]; skip = 4 }
@@ -16,7 +21,7 @@ make_inputs() {
       skip > 0 { skip--; next }
       { print }
       END { exit !("ions" in whole) }
-    ' "pw-$k.out" pw.in >"pw-$n.in" && return
+    ' <(whole_lines "pw-$k.out") pw.in >"pw-$n.in" && return
     cp pw.in "pw-$n.in"
   done
 }

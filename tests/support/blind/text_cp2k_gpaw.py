@@ -1,4 +1,4 @@
-"""Blind fault injector, part two continued: editors of CP2K's and GPAW's text (and of what GPAW's job script returns)."""
+"""Blind fault injector: editors of CP2K's and GPAW's text (and of what GPAW's job script returns)."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ import re
 import numpy as np
 
 from strainkit.units import EV_PER_A3_IN_GPA
-from support.blindtext import HARTREE, Editor, lengths_angles, like, numbers, rewrite
+from support.blind.text import HARTREE, Editor, lengths_angles, like, numbers, rewrite
 
 
 class Cp2k(Editor):

@@ -1,4 +1,4 @@
-"""Blind fault injector, part three continued: settings in the text of CP2K and GPAW (see blindsettings)."""
+"""Blind fault injector: settings in the text of CP2K and GPAW (see settings)."""
 
 from __future__ import annotations
 
@@ -6,9 +6,9 @@ import re
 
 import numpy as np
 
-from support.blindsettings import another_mesh
-from support.blindtext import like
-from support.blindtext2 import Cp2k, Gpaw
+from support.blind.settings import another_mesh
+from support.blind.text import like
+from support.blind.text_cp2k_gpaw import Cp2k, Gpaw
 
 
 # CP2K

@@ -12,8 +12,8 @@ import numpy as np
 from strainkit.tensors.sixvectors import to_mandel
 from strainkit.tensors.strain import pk2_from_cauchy
 from strainkit.units import EV_PER_A3_IN_GPA
-from support.blindsets import StrainSet
-from support.blindtext import editor
+from support.blind.sets import StrainSet
+from support.blind.text import editor
 
 #: misfit, as a part of the typical stress change, above which the numbers are said to show something
 PART = 0.05

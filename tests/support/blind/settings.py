@@ -1,4 +1,4 @@
-"""Blind fault injector, part three: another k-mesh, cutoff, functional and so on in a program's text.
+"""Blind fault injector: another k-mesh, cutoff, functional and so on in a program's text.
 
 Each edit is what the program prints under that other setting (forms: tests/data/outputs; versions and names of functionals:
 from memory of the programs). False when the edit does not apply.
@@ -14,8 +14,8 @@ import numpy as np
 import spglib
 
 from strainkit.crystal.spacegroup import spglib_raises
-from support.blindabinit import Abinit
-from support.blindtext import Editor, Espresso, like, numbers
+from support.blind.abinit import Abinit
+from support.blind.text import Editor, Espresso, like, numbers
 
 #: row of the table -> code whose documented meaning it is
 SETTINGS = {
@@ -34,7 +34,7 @@ def choice(name: str, editor: Editor, rng: np.random.Generator) -> Callable[[Edi
     """The new value of a setting, drawn once, as an edit for every job that shall have it."""
     seed = int(rng.integers(2**31))
     kind, word = type(editor).__name__.lower(), name.split()[0].replace("-", "_")
-    place = globals() if kind in ("espresso", "abinit") else vars(import_module("support.blindsettings2"))
+    place = globals() if kind in ("espresso", "abinit") else vars(import_module("support.blind.settings_cp2k_gpaw"))
     function = place[f"_{kind}_{word}"]
     return lambda job: bool(function(job, np.random.default_rng(seed)))
 

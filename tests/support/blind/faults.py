@@ -1,4 +1,4 @@
-"""Blind fault injector, part one: faults that live in the numbers, for synthetic and for real sets alike.
+"""Blind fault injector: faults that live in the numbers, for synthetic and for real sets alike.
 
 Written from the list of faults and from the documented meaning of the finding codes alone, without knowledge of how `collect`
 judges. Sizes and choices are "common practice, no source". A fault changes a set in place and says which jobs it touched and
@@ -14,8 +14,8 @@ import numpy as np
 from scipy.spatial.transform import Rotation
 
 from strainkit.run.plan import job_folder
-from support.blindsets import StrainSet
-from support.blindtext import editor
+from support.blind.sets import StrainSet
+from support.blind.text import editor
 from support.crystals import random_rotation
 
 

@@ -14,9 +14,9 @@ from pathlib import Path
 import numpy as np
 
 from strainkit.cli.main import main
-from support.blindfaults import NUMBERS, Injected
-from support.blindsets import StrainSet
-from support.blindtrace import trace
+from support.blind.faults import NUMBERS, Injected
+from support.blind.sets import StrainSet
+from support.blind.trace import trace
 
 #: codes that only say that something does not fit
 DOES_NOT_FIT = {

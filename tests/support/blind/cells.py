@@ -1,4 +1,4 @@
-"""Blind fault injector: cells of another strain, that drifted, or of another crystal (see blindfaults)."""
+"""Blind fault injector: cells of another strain, that drifted, or of another crystal (see faults)."""
 
 from __future__ import annotations
 
@@ -10,9 +10,9 @@ from pathlib import Path
 import numpy as np
 
 from strainkit.tensors.strain import cauchy_from_pk2, gradient_from_strain
-from support.blindfaults import CELLS, SYNTHETIC, Injected, fault, pick
-from support.blindsets import Output, StrainSet, synthetic_set
-from support.blindtext import editor
+from support.blind.faults import CELLS, SYNTHETIC, Injected, fault, pick
+from support.blind.sets import Output, StrainSet, synthetic_set
+from support.blind.text import editor
 from support.crystals import SPACE_GROUPS, random_rotation
 
 OUTPUTS = Path(__file__).parent.parent / "data" / "outputs"

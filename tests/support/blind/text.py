@@ -1,4 +1,4 @@
-"""Blind fault injector, part two: editing a program's own text as that program would have printed it.
+"""Blind fault injector: editing a program's own text as that program would have printed it.
 
 One editor a program. Numbers are rewritten in the format and width in which they stand; a stress is changed in every place that
 prints it, an energy wherever its value stands. The forms are those of the outputs in tests/data/outputs.
@@ -216,8 +216,8 @@ class Espresso(Editor):
 
 def editor(work: object, label: str) -> Editor:
     """The editor of a job of a real set (its kind is the program's name)."""
-    from support.blindabinit import Abinit
-    from support.blindtext2 import Cp2k, Gpaw
+    from support.blind.abinit import Abinit
+    from support.blind.text_cp2k_gpaw import Cp2k, Gpaw
 
     classes = {"qe": Espresso, "abinit": Abinit, "cp2k": Cp2k, "gpaw": Gpaw}
     return classes[work.kind](work.files, label)

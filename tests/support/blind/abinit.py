@@ -1,4 +1,4 @@
-"""Blind fault injector, part two continued: the editor of ABINIT's main output."""
+"""Blind fault injector: the editor of ABINIT's main output."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from support.blindtext import BOHR, HARTREE, HARTREE_BOHR3, Editor, lengths_angles, like, numbers, rewrite
+from support.blind.text import BOHR, HARTREE, HARTREE_BOHR3, Editor, lengths_angles, like, numbers, rewrite
 
 _SIX = ((0, 0), (2, 1), (1, 1), (2, 0), (2, 2), (1, 0))
 

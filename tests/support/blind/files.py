@@ -1,4 +1,4 @@
-"""Blind fault injector, part four: faults of files and of a program's words (see blindfaults for how faults are written)."""
+"""Blind fault injector: faults of files and of a program's words (see faults for how faults are written)."""
 
 from __future__ import annotations
 
@@ -8,11 +8,11 @@ import numpy as np
 
 from strainkit.run.extxyz import RETURNED
 from strainkit.run.plan import job_folder
-from support.blindfaults import CELLS, Injected, change_stress, fault, pick, stress_of
-from support.blindsets import StrainSet
-from support.blindsettings import SETTINGS, choice
-from support.blindtext import editor, rewrite
-from support.blindtext2 import Gpaw
+from support.blind.faults import CELLS, Injected, change_stress, fault, pick, stress_of
+from support.blind.sets import StrainSet
+from support.blind.settings import SETTINGS, choice
+from support.blind.text import editor, rewrite
+from support.blind.text_cp2k_gpaw import Gpaw
 
 REAL = frozenset(("real",))
 

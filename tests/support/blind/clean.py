@@ -10,8 +10,8 @@ from collections.abc import Callable
 
 import numpy as np
 
-from support.blindsets import StrainSet
-from support.blindtext import editor
+from support.blind.sets import StrainSet
+from support.blind.text import editor
 
 
 def _packed(work: StrainSet, rng: np.random.Generator) -> None:
