@@ -10,7 +10,7 @@ import numpy as np
 from strainkit.collect.match import Match, MismatchError, match
 from strainkit.collect.readers import READERS, Reader, Returned, read_returned, recognise
 from strainkit.collect.scan import Folder, natural
-from strainkit.collect.source import LARGEST
+from strainkit.collect.source import LARGEST, damaged_packing
 from strainkit.collect.table import StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.errors import InputError, printable
@@ -58,6 +58,9 @@ def read_outputs(run: Path, folder: Folder) -> list[Output]:
         outputs.append(_read(run, f"{folder.name}/{name}", reader))
         if sum(output.finished for output in outputs) == 2:
             break
+    if not outputs:
+        torn = ((name, damaged_packing(run / folder.name / name)) for name in folder.named_outputs)
+        outputs = [Output(f"{folder.name}/{name}", "", "", None, why) for name, why in torn if why][:1]
     return sorted(outputs, key=lambda output: not output.finished)
 
 
@@ -83,6 +86,9 @@ def record_of(plan: Plan, job: StrainJob, folder: Folder, outputs: list[Output],
         for name in folder.named_outputs[:1]:
             text = f"{folder.name}/{name}: not recognised as the output of a program that strainkit reads"
             doubts.append(finding("unreadable-output", job.label, text))
+        for name in () if folder.named_outputs else folder.empty_outputs[:1]:
+            text = f"{folder.name}/{name}: is empty; the program wrote nothing, or the copy failed"
+            doubts.append(finding("job-unfinished", job.label, text))
         return StressRecord(job.label, "missing", findings=tuple(doubts), seen=seen)
     record = _record(plan, job, outputs[0], seen)
     if len(outputs) > 1 and outputs[1].finished and record.status == "done":

@@ -43,8 +43,8 @@ class Folder:
         Fingerprint of names, sizes and times of the files.
     settled : bool
         False when a file is so young that it may have changed without a change of its time.
-    named_outputs : tuple of str
-        Those of the files that are not empty and are called what programs call their outputs.
+    named_outputs, empty_outputs : tuple of str
+        Those of the files that are called what programs call their outputs, and hold something or nothing.
     """
 
     name: str
@@ -53,6 +53,7 @@ class Folder:
     state: str
     settled: bool
     named_outputs: tuple[str, ...] = ()
+    empty_outputs: tuple[str, ...] = ()
 
 
 def natural(name: str) -> list[tuple[int, str]]:
@@ -89,6 +90,7 @@ def scan(run: Path, name: str, written: Container[str] = ()) -> Folder:
         state=checksum(repr(found).encode("utf-8", "surrogatepass"))[:32],
         settled=newest < time.time_ns() - _SETTLED * 1e9,
         named_outputs=tuple(file for file, size, _ in found if size and _OUTPUT_NAME.fullmatch(file)),
+        empty_outputs=tuple(file for file, size, _ in found if not size and _OUTPUT_NAME.fullmatch(file)),
     )
 
 

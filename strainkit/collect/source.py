@@ -10,13 +10,13 @@ import stat
 import zlib
 from dataclasses import dataclass
 from functools import cached_property
-from io import BytesIO
+from io import BufferedIOBase, BytesIO
 from pathlib import Path
 from typing import IO, cast
 
 from strainkit.errors import InputError
 
-__all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "file_head", "read_source"]
+__all__ = ["HEAD", "LARGEST", "LONGEST_LINE", "Source", "damaged_packing", "file_head", "read_source"]
 
 #: bytes looked at to tell what a file is
 HEAD = 16384
@@ -26,6 +26,7 @@ LARGEST = 512 * 1024**2
 LONGEST_LINE = 20_000
 
 _PACKED = ((b"\x1f\x8b", gzip.open), (b"\xfd7zXZ\0", lzma.open), (b"BZh", bz2.open))
+_DAMAGED = "a damaged packed file, cut short or changed on its way; copy it again"
 _UNPACKING_ERRORS = (OSError, EOFError, lzma.LZMAError, zlib.error, ValueError)
 
 
@@ -80,12 +81,32 @@ def _unpacked(file: IO[bytes]) -> IO[bytes]:
 
 
 def file_head(path: Path) -> bytes:
-    """The first bytes of a file, unpacked; empty when it cannot be read."""
+    """The first bytes of a file, unpacked, as far as a damaged one gives them; empty when it cannot be read."""
+    collected = b""
     try:
         with _open(path) as file, _unpacked(file) as unpacked:
-            return unpacked.read(HEAD)
+            if unpacked is file:
+                return file.read(HEAD)
+            while len(collected) < HEAD and (piece := cast(BufferedIOBase, unpacked).read1(HEAD - len(collected))):
+                collected += piece
     except _UNPACKING_ERRORS:
-        return b""
+        pass
+    return collected
+
+
+def damaged_packing(path: Path) -> str:
+    """What to say of a packed file that cannot be unpacked to its end; empty for any other file."""
+    try:
+        with _open(path) as file, _unpacked(file) as unpacked:
+            if unpacked is file:
+                return ""
+    except _UNPACKING_ERRORS:
+        return ""
+    try:
+        read_source(path)
+    except InputError as error:
+        return error.what if error.what.startswith(_DAMAGED) else ""
+    return ""
 
 
 def read_source(path: Path, within: Path | None = None) -> Source:
@@ -106,15 +127,17 @@ def read_source(path: Path, within: Path | None = None) -> Source:
     where = path
     if within is not None and not path.resolve().is_relative_to(within.resolve()):
         raise InputError("a symbolic link leads out of the run folder", where)
+    packed = False
     try:
         with _open(path) as file, _unpacked(file) as unpacked:
-            if unpacked is file and os.fstat(file.fileno()).st_size > LARGEST:
+            packed = unpacked is not file
+            if not packed and os.fstat(file.fileno()).st_size > LARGEST:
                 raise InputError(f"larger than {LARGEST // 1024**2} MiB", where)
             content = _bounded(unpacked)
     except _UNPACKING_ERRORS as error:
         if isinstance(error, InputError):
             raise
-        raise InputError(f"cannot be read: {error}", where) from None
+        raise InputError(f"{_DAMAGED} ({error})" if packed else f"cannot be read: {error}", where) from None
     if len(content) > LARGEST:
         raise InputError(f"unpacks to more than {LARGEST // 1024**2} MiB", where)
     return Source(path, content)

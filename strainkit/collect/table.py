@@ -35,6 +35,7 @@ STATUSES = {
     "mismatch": "the output is of another cell or crystal than planned",
     "suspect": "finished, but a check of the whole set refuses its numbers",
 }
+_AGAIN = "Make it again with: strainkit collect RUN"
 #: "program" of a record that was typed into a table, and what its being done means
 TABLE_PROGRAM = "table"
 _TYPED = "from a table: its end, convergence and cell were not seen"
@@ -168,13 +169,23 @@ def load_table(run: Path, ions: bool = False) -> StressTable:
     path = run / TABLE
     if not path.is_file():
         raise InputError("no stress table yet", path, f"Make it with: strainkit collect {run}")
-    data = load_json(path, _KIND)
+    data = _load(path, _KIND)
     try:
         doubts = tuple(Finding(**f) for f in data.get("findings", ()))
         table = StressTable(tuple(_record(item) for item in data["records"]), doubts)
         return _with_ions(run, table) if ions else table
-    except (KeyError, TypeError, ValueError) as error:
-        raise InputError(f"damaged ({type(error).__name__}: {error})", path, "Run strainkit collect again.") from None
+    except InputError:
+        raise
+    except (KeyError, TypeError, ValueError, AttributeError) as error:
+        raise InputError(f"damaged ({type(error).__name__}: {error})", path, _AGAIN) from None
+
+
+def _load(path: Path, kind: str) -> dict[str, Any]:
+    """As `load_json`; whatever is wrong with what collect wrote, collect makes it anew."""
+    try:
+        return load_json(path, kind)
+    except InputError as error:
+        raise InputError(error.what, path, error.remedy if "newer" in error.what else _AGAIN) from None
 
 
 def _with_ions(run: Path, table: StressTable) -> StressTable:
@@ -182,7 +193,7 @@ def _with_ions(run: Path, table: StressTable) -> StressTable:
     path = run / IONS
     if not path.is_file():
         return table
-    jobs = load_json(path, _IONS_KIND)["jobs"]
+    jobs = _load(path, _IONS_KIND)["jobs"]
     return replace(table, records=tuple(_with_own_ions(record, jobs.get(record.label)) for record in table.records))
 
 
@@ -196,12 +207,17 @@ def _with_own_ions(record: StressRecord, item: dict[str, Any] | None) -> StressR
 
 
 def _record(item: dict[str, Any]) -> StressRecord:
-    stress = item["stress_GPa"]
+    stress, energy = item["stress_GPa"], item["energy_eV"]
+    if item["status"] not in STATUSES:
+        raise ValueError(f"status {item['status']!r} of {item['label']}")
+    numbers = [x for x in (stress, energy) if x is not None]
+    if item["status"] == "done" and not all(np.isfinite(np.array(x, dtype=float)).all() for x in numbers):
+        raise ValueError(f"numbers of {item['label']} that are not finite")
     return StressRecord(
         label=item["label"],
         status=item["status"],
         stress=None if stress is None else np.array(stress, dtype=float).reshape(6),
-        energy=item["energy_eV"],
+        energy=energy,
         max_force=item["max_force_eV_per_A"],
         program=item["program"],
         file=item["file"],

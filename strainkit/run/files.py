@@ -111,6 +111,10 @@ def _finite(text: str) -> str:
     return re.sub("-?Infinity|NaN", "null", text) if "N" in text or "I" in text else text
 
 
+def _refuse_constant(name: str) -> float:
+    raise ValueError(f"{name} is no number")
+
+
 def load_json(path: Path, kind: str) -> dict[str, Any]:
     """The object in a JSON file of strainkit's, `kind` being the part of its schema before the version.
 
@@ -120,10 +124,10 @@ def load_json(path: Path, kind: str) -> dict[str, Any]:
         Missing, not JSON, another kind, or written by a newer version.
     """
     try:
-        value = json.loads(path.read_text(encoding="utf-8"))
+        value = json.loads(path.read_text(encoding="utf-8"), parse_constant=_refuse_constant)
     except OSError as error:
         raise InputError(error.strerror or "cannot be read", path) from None
-    except ValueError as error:
+    except (ValueError, RecursionError) as error:
         raise InputError(f"not valid JSON ({error})", path, "Restore the file or make it again.") from None
     schema = str(value.get("schema", "")) if isinstance(value, dict) else ""
     if not schema.startswith(f"{kind}/"):

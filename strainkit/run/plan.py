@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections import Counter
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
@@ -199,7 +200,7 @@ def load_plan(run: Path) -> Plan:
     data = load_json(path, _KIND)
     try:
         return _plan_from(data)
-    except (KeyError, TypeError, ValueError, IndexError) as error:
+    except (KeyError, TypeError, ValueError, IndexError, AttributeError) as error:
         raise InputError(
             f"damaged manifest ({type(error).__name__}: {error})", path, "Restore it, or prepare the run again elsewhere."
         ) from None
@@ -211,13 +212,27 @@ def _job_from(data: dict[str, Any]) -> StrainJob:
         label=_safe(data["label"]),
         shape=int(data["shape"]),
         magnitude=data["magnitude_percent"] / 100.0,
-        gradient=np.array(data["deformation_gradient"], dtype=float),
+        gradient=_finite(data["deformation_gradient"], (3, 3)),
         kind=data.get("kind", "strained" if data["shape"] else "reference"),
-        moved=None if moved is None else (int(moved["atom"]), np.array(moved["displacement_A"])),
+        moved=None if moved is None else (int(moved["atom"]), _finite(moved["displacement_A"], (3,))),
     )
 
 
+def _finite(values: Any, shape: tuple[int, ...]) -> FloatArray:
+    array = np.array(values, dtype=float)
+    if array.shape != shape or not np.isfinite(array).all():
+        raise ValueError(f"{'x'.join(map(str, shape))} finite numbers are needed in place of {values!r}")
+    return array
+
+
 def _plan_from(data: dict[str, Any]) -> Plan:
+    if not isinstance(data["name"], str):
+        raise ValueError(f"the name {data['name']!r} is not text")
+    labels = Counter(job["label"] for job in data["jobs"])
+    if twice := [label for label, count in labels.items() if count > 1]:
+        raise ValueError(f"more than one job is called {twice[0]!r}")
+    if data["ions"] not in get_args(Ions):
+        raise ValueError(f"ions {data['ions']!r}")
     return Plan(
         crystal=Crystal.from_dict(data["reference_cell"], data["name"]),
         symmetry=Symmetry.from_dict(data["symmetry"], data["space_group"], data["laue_class"]),

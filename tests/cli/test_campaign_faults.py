@@ -199,3 +199,43 @@ def test_two_collects_at_once_leave_whole_tables(out):
         table = json.loads((out / member.run / "stresses.json").read_text())
         assert table["usable"] == table["expected"] == member.jobs
     assert not Path(out / ".collect-at-work").exists()
+
+
+def test_a_broken_plan_of_a_crystal_is_named_and_can_be_made_again(cli, cells, out):
+    run = out / load_campaign(out).members[0].run
+    for broken in ("{broken", "{}", '{"schema": "strainkit/strain-set/1", "jobs": 5}'):
+        (run / "strain-set.json").write_text(broken)
+        result = cli("prepare", cells, "--out", out)
+        assert result.code == 3
+        assert str(run / "strain-set.json") in result.err
+        assert "move" in result.err
+    run.rename(out.parent / "aside")
+    assert cli("prepare", cells, "--out", out).code == 0
+    assert (run / "strain-set.json").is_file()
+
+
+def test_a_broken_campaign_is_made_again_beside_what_later_commands_wrote(cli, cells, out):
+    cli("collect", out, "--export", out / "all.extxyz")
+    cli("fit", out)
+    assert cli("derive", out).code == 0
+    kept = {path: path.read_bytes() for path in out.glob("*.*") if path.name != "campaign.json"}
+    assert {path.name for path in kept} >= {"screening.csv", "screening.jsonl", "all.extxyz"}
+    (out / "campaign.json").write_text("{broken")
+    refused = cli("prepare", cells, "--out", out)
+    assert refused.code == 3
+    assert "move campaign.json away" in refused.err
+    (out / "campaign.json").rename(out / "campaign.json.bad")
+    assert cli("prepare", cells, "--out", out).code == 0
+    assert len(load_campaign(out).members) == 4
+    assert all(path.read_bytes() == content for path, content in kept.items() if path.name != "joblist.txt")
+    assert cli("derive", out).code == 0
+
+
+def test_a_folder_of_others_is_no_campaign(cli, cells, tmp_path):
+    mine = tmp_path / "mine"
+    mine.mkdir()
+    (mine / "thesis.txt").write_text("mine")
+    result = cli("prepare", cells, "--out", mine)
+    assert result.code == 3
+    assert "is not a campaign" in result.err
+    assert [p.name for p in mine.iterdir()] == ["thesis.txt"]

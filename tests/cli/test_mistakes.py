@@ -292,3 +292,48 @@ def test_what_comes_after_the_fit_follows_it(cli, tmp_path):
             assert result.code == 3
             assert "stiffness.json" in result.err
     assert cli("fit", run).code == 0
+
+
+def _label_twice(plan):
+    plan["jobs"].append(plan["jobs"][1])
+
+
+@pytest.mark.parametrize(
+    ("damage", "message"),
+    [
+        (_label_twice, "more than one job is called 's1-plus-1'"),
+        (lambda plan: plan.update(name=5), "the name 5 is not text"),
+        (lambda plan: plan.update(jobs=[1]), "damaged manifest"),
+        (lambda plan: plan.update(findings=5), "damaged manifest"),
+        (lambda plan: plan.update(ions="frozen"), "damaged manifest"),
+        (lambda plan: plan.update(molecules=[1]), "damaged manifest"),
+        (lambda plan: plan["jobs"][1]["deformation_gradient"].pop(), "3x3 finite numbers"),
+    ],
+)
+def test_damaged_plan(cli, run, damage, message):
+    path = run / "strain-set.json"
+    plan = json.loads(path.read_text())
+    damage(plan)
+    path.write_text(json.dumps(plan))
+    result = cli("collect", run)
+    assert result.code == 3
+    assert message in result.err
+    assert str(path) in result.err
+    assert "Restore it" in result.err
+
+
+@pytest.mark.parametrize("damage", [{"stress_GPa": [float("nan")] + [0.0] * 5}, {"stress_GPa": [None] * 6}, {"status": "x"}])
+def test_damaged_stress_table(cli, tmp_path, damage):
+    run = tmp_path / "run"
+    returned_run(run)
+    cli("collect", run)
+    path = run / "stresses.json"
+    table = json.loads(path.read_text())
+    table["records"][1] |= damage
+    path.write_text(json.dumps(table))
+    result = cli("fit", run)
+    assert result.code == 3
+    assert str(path) in result.err
+    assert "strainkit collect" in result.err
+    assert cli("collect", run).code == 0
+    assert cli("fit", run).code == 0

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import bz2
+import gzip
 import json
+import lzma
 import os
 import re
 import shutil
@@ -181,6 +184,34 @@ def test_a_linked_folder_is_not_followed_and_said(made, tmp_path):
     record = collect_run(run, plan).records[1]
     assert record.status == "missing"
     assert [f.code for f in record.findings] == ["link-not-followed"]
+
+
+@pytest.mark.parametrize("left", [10, 60, 0.5, -1])
+@pytest.mark.parametrize("packer", [gzip, lzma, bz2])
+def test_a_packed_output_that_was_cut_is_to_be_copied_again(made, packer, left):
+    run, plan = made
+    folder = run / job_folder(plan.jobs[1].label)
+    packed = packer.compress((folder / "returned.extxyz").read_bytes())
+    (folder / "returned.extxyz").unlink()
+    (folder / "returned.extxyz.xz").write_bytes(packed[: int(left * len(packed)) if isinstance(left, float) else left])
+    record = collect_run(run, plan).records[1]
+    assert record.status == "broken"
+    assert [f.code for f in record.findings] == ["unreadable-output"]
+    assert "copy it again" in record.findings[0].message
+    (folder / "returned.extxyz.xz").write_bytes(packed)
+    assert collect_run(run, plan).records[1].status == "done"
+
+
+def test_an_empty_output_is_spoken_of(made):
+    run, plan = made
+    folder = run / job_folder(plan.jobs[1].label)
+    (folder / "pw-2.out").touch()
+    assert not collect_run(run, plan).records[1].findings  # beside one that counts
+    (folder / "returned.extxyz").unlink()
+    record = collect_run(run, plan).records[1]
+    assert record.status == "missing"
+    assert [f.code for f in record.findings] == ["job-unfinished"]
+    assert "pw-2.out: is empty" in record.findings[0].message
 
 
 def test_a_dead_worker_is_survived(made, monkeypatch):

@@ -150,7 +150,6 @@ def test_what_is_no_output_raises_no_doubt(made):
     folder = run / job_folder(plan.jobs[1].label)
     for name in ("pw.in", "INCAR", "KPOINTS", "README", "slurm-1234.out", "job.o1234", "geometry.in", "notes.txt", "run.log"):
         (folder / name).write_text("invented\n")
-    (folder / "pw-1.out").write_text("")
     finish(run, plan, 2)
     (run / job_folder(plan.jobs[2].label) / "other.out").write_text("invented\n")
     log(run, plan, 3, 100)
