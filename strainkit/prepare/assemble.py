@@ -2,13 +2,8 @@
 
 from __future__ import annotations
 
-<<<<<<< HEAD
-import json
-=======
-import shutil
->>>>>>> mend1-ready
 from collections.abc import Callable, Sequence
-from contextlib import AbstractContextManager
+from contextlib import AbstractContextManager, suppress
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -19,11 +14,7 @@ from strainkit.prepare.folders import make_folder
 from strainkit.prepare.lists import calculation_record, write_lists
 from strainkit.prepare.scripts import LOGS
 from strainkit.run.campaign import Campaign, Member, Refusal, at_work, is_campaign, load_campaign
-<<<<<<< HEAD
-from strainkit.run.files import checksum
-=======
-from strainkit.run.files import atomic_write, checksum, load_json
->>>>>>> mend1-ready
+from strainkit.run.files import checksum, load_json
 from strainkit.run.plan import MANIFEST
 
 __all__ = ["Estimate", "Made", "make_campaign"]
@@ -206,8 +197,9 @@ def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None
     found = {p.member.name: p.findings for p in planned}
     for member in kept:
         assert out is not None
-        said = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))["findings"]
-        found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
+        with suppress(InputError, KeyError, TypeError):  # a damaged manifest is told about when the lists are made
+            said = load_json(out / member.run / MANIFEST, "strainkit/strain-set")["findings"]
+            found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
     return {name: codes for name, codes in found.items() if codes}
 
 
@@ -253,73 +245,6 @@ def _write(
             left = tuple(m for m in members if m.name not in problems)
             campaign = replace(campaign, members=left, refused=(*campaign.refused, *lost))
             campaign.save(out)
-<<<<<<< HEAD
         submit = write_lists(out, campaign, recipe)
     added = 0 if old is None else len(campaign.members) - len(old.members)
     return Made(campaign, estimate, campaign.refused[len(earlier) :], submit, added)
-=======
-        submit = _write_lists(out, campaign, recipe)
-    return Made(campaign, estimate, campaign.refused[len(earlier) :], submit)
-
-
-def _make(out: Path, size: int) -> None:
-    """Make the folder, where there is room for what is to come."""
-    try:
-        out.mkdir(parents=True, exist_ok=True)
-        free = shutil.disk_usage(out).free
-    except OSError as error:
-        raise DiskError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None
-    if size > free:
-        raise DiskError(f"needs about {size / 1e6:.0f} MB, and {free / 1e6:.0f} MB are free", out, "Make room first.")
-
-
-def _record(out: Path, recipe: Recipe, members: Sequence[Member], old: Campaign | None) -> dict[str, Any]:
-    if old is not None:
-        return old.calculation
-    if recipe.scheduler is None:
-        return {}
-    tag = checksum("".join(m.source_sha256 for m in members).encode())[:6]
-    return {
-        "scheduler": recipe.scheduler,
-        "site": kept_site(recipe.settings.site),
-        "job_name": job_name(out.resolve().name, tag, 1),
-    }
-
-
-def _write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
-    """Lists, and scripts where there is a scheduler, for the jobs that are on no list yet; what to type, or nothing."""
-    listed: set[str] = set()
-    count = 1
-    while (out / script_name(count)).exists():  # a list without its script was never submitted
-        listed |= set((out / list_name(count)).read_text(encoding="utf-8").split())
-        count += 1
-    every = [folder for member in campaign.members for folder in _job_folders(out, member)]
-    fresh = [folder for folder in every if folder not in listed]
-    if not fresh:
-        return ""
-    if recipe.scheduler is None:
-        path, text = out / list_name(1), "".join(f"{folder}\n" for folder in every)
-        if not path.is_file() or path.read_text(encoding="utf-8") != text:
-            atomic_write(path, text)
-        return ""
-    site = recipe.settings.site
-    parts = arrays(fresh, recipe.scheduler, site)
-    stem = str(campaign.calculation["job_name"]).rpartition("-")[0]
-    for number, part in enumerate(parts, count):
-        (out / LOGS / str(number)).mkdir(parents=True, exist_ok=True)
-        title = f"campaign of {len(campaign.members)} crystals"
-        for name, text in many_files(recipe.scheduler, site, title, part, f"{stem}-{number}", number).items():
-            atomic_write(out / name, text)
-    return submit_command(recipe.scheduler, count, len(parts))
-
-
-def _job_folders(out: Path, member: Member) -> list[str]:
-    """Job folders of a member relative to the campaign, in the order of its plan."""
-    path = out / member.run / MANIFEST
-    try:
-        return [f"{member.run}/{job['folder']}" for job in load_json(path, "strainkit/strain-set")["jobs"]]
-    except (InputError, KeyError, TypeError) as error:
-        what = error.what if isinstance(error, InputError) else f"damaged manifest ({type(error).__name__}: {error})"
-        remedy = f"Restore it, or move {out / member.run} away and give the same command again."
-        raise InputError(what, path, remedy) from None
->>>>>>> mend1-ready

@@ -2,15 +2,15 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
+from strainkit.errors import InputError
 from strainkit.prepare.campaign import Recipe
 from strainkit.prepare.scripts import LOGS, arrays, job_name, kept_site, list_name, many_files, script_name, submit_command
 from strainkit.run.campaign import Campaign, Member
-from strainkit.run.files import atomic_write, checksum
+from strainkit.run.files import atomic_write, checksum, load_json
 from strainkit.run.plan import MANIFEST
 
 __all__ = ["calculation_record", "write_lists"]
@@ -59,5 +59,10 @@ def write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
 
 def _job_folders(out: Path, member: Member) -> list[str]:
     """Job folders of a member relative to the campaign, in the order of its plan."""
-    data = json.loads((out / member.run / MANIFEST).read_text(encoding="utf-8"))
-    return [f"{member.run}/{job['folder']}" for job in data["jobs"]]
+    path = out / member.run / MANIFEST
+    try:
+        return [f"{member.run}/{job['folder']}" for job in load_json(path, "strainkit/strain-set")["jobs"]]
+    except (InputError, KeyError, TypeError) as error:
+        what = error.what if isinstance(error, InputError) else f"damaged manifest ({type(error).__name__}: {error})"
+        remedy = f"Restore it, or move {out / member.run} away and give the same command again."
+        raise InputError(what, path, remedy) from None
