@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections import Counter
 from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,53 +11,13 @@ import typer
 from strainkit.cli.each import collect_one, derive_one, fit_one, progress_one, report_one
 from strainkit.cli.loop import loop
 from strainkit.cli.options import deliver, note, progress
+from strainkit.cli.summaries import anew_of, crystals_of, doubts_of, end, kept_of, problems_of, sum_of
 from strainkit.errors import counted
 
 if TYPE_CHECKING:
     from strainkit.fit.options import FitOptions
-    from strainkit.run.campaign import Campaign
 
 __all__ = ["collect_campaign", "derive_campaign", "fit_campaign", "progress_campaign", "report_campaign"]
-
-
-def _problems(found: dict[str, dict[str, Any]]) -> dict[str, str]:
-    return {name: str(summary["problem"]) for name, summary in found.items() if summary.get("problem")}
-
-
-def _crystals(campaign: Campaign, found: dict[str, dict[str, Any]]) -> list[dict[str, Any]]:
-    hidden = ("exit", "row")
-    return [
-        {"name": m.name, "run": m.run, **{k: v for k, v in found[m.name].items() if k not in hidden}} for m in campaign.members
-    ]
-
-
-def _sum(found: dict[str, dict[str, Any]], key: str) -> Counter[str]:
-    total: Counter[str] = Counter()
-    for summary in found.values():
-        total.update(summary.get(key, {}))
-    return total
-
-
-def _anew(found: dict[str, dict[str, Any]]) -> int:
-    """Crystals on which the work was done now, and with a result."""
-    return sum(summary.get("kept") is False for summary in found.values())
-
-
-def _doubts(found: dict[str, dict[str, Any]]) -> dict[str, list[str]]:
-    """Codes of warnings and errors, with the crystals that have them."""
-    from strainkit.present.campaign import who_has
-
-    return who_has({name: summary.get("findings", ()) for name, summary in found.items()})
-
-
-def _end(problems: dict[str, str], results: int) -> None:
-    """Exit code 4 where some crystals have no full result, 5 where none has any."""
-    if problems:
-        raise typer.Exit(4 if results else 5)
-
-
-def _kept(found: dict[str, dict[str, Any]]) -> int:
-    return sum(bool(summary.get("kept")) for summary in found.values())
 
 
 def collect_campaign(folder: Path, export: Path | None, again: bool, workers: int | None, json: bool, quiet: bool) -> None:
@@ -67,14 +26,14 @@ def collect_campaign(folder: Path, export: Path | None, again: bool, workers: in
     from strainkit.present.campaign import tally_text
 
     campaign, found = loop(folder, "collect", partial(collect_one, again), workers, quiet)
-    statuses = _sum(found, "statuses")
+    statuses = sum_of(found, "statuses")
     usable = sum(summary.get("usable", 0) for summary in found.values())
-    problems = _problems(found)
+    problems = problems_of(found)
     for name, summary in found.items():
         if name not in problems and summary["usable"] < summary["expected"]:
             bad = ", ".join(f"{n} {s}" for s, n in summary["statuses"].items() if s != "done")
             problems[name] = f"{summary['usable']} of {summary['expected']} jobs usable ({bad})"
-    note(f"{counted(_anew(found), 'crystal')} read, {_kept(found)} unchanged since they were read last", quiet)
+    note(f"{counted(anew_of(found), 'crystal')} read, {kept_of(found)} unchanged since they were read last", quiet)
     if export is not None:
         _export([folder / m.run for m in campaign.members if "usable" in found[m.name]], export, quiet)
     deliver(
@@ -83,15 +42,15 @@ def collect_campaign(folder: Path, export: Path | None, again: bool, workers: in
             "usable": usable,
             "expected": campaign.jobs,
             "statuses": dict(statuses),
-            "findings_in": _doubts(found),
-            "kept": _kept(found),
-            "crystals": _crystals(campaign, found),
+            "findings_in": doubts_of(found),
+            "kept": kept_of(found),
+            "crystals": crystals_of(campaign, found),
         },
         lambda: tally_text(
             f"{usable} of {campaign.jobs} jobs of {counted(len(found), 'crystal')} usable",
             {status: (statuses[status], meaning) for status, meaning in STATUSES.items() if statuses[status]},
             problems,
-            doubts=_doubts(found),
+            doubts=doubts_of(found),
         ),
         json,
     )
@@ -113,24 +72,24 @@ def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | 
     from strainkit.present.campaign import tally_text
 
     campaign, found = loop(folder, "fit", partial(fit_one, options, again), workers, quiet)
-    problems = _problems(found)
+    problems = problems_of(found)
     fitted = len(found) - len(problems)
     problems |= {
         name: f"undetermined: {', '.join(summary['undetermined'])}"
         for name, summary in found.items()
         if summary.get("undetermined")
     }
-    doubts = _doubts(found)
-    note(f"{counted(_anew(found), 'crystal')} fitted, {_kept(found)} unchanged since they were fitted last", quiet)
+    doubts = doubts_of(found)
+    note(f"{counted(anew_of(found), 'crystal')} fitted, {kept_of(found)} unchanged since they were fitted last", quiet)
     deliver(
         lambda: {
             "schema": "strainkit/campaign-fit/1",
             "fitted": fitted,
             "complete": len(found) - len(problems),
-            "kept": _kept(found),
+            "kept": kept_of(found),
             "findings": {code: len(names) for code, names in doubts.items()},
             "findings_in": doubts,
-            "crystals": _crystals(campaign, found),
+            "crystals": crystals_of(campaign, found),
         },
         lambda: tally_text(
             f"{len(found) - len(problems)} of {len(found)} crystals have all their constants",
@@ -140,7 +99,7 @@ def fit_campaign(folder: Path, options: FitOptions, again: bool, workers: int | 
         ),
         json,
     )
-    _end(problems, fitted)
+    end(problems, fitted)
 
 
 def progress_campaign(folder: Path, queue: bool, resubmit: bool, workers: int | None, json: bool, quiet: bool) -> None:
@@ -153,7 +112,7 @@ def progress_campaign(folder: Path, queue: bool, resubmit: bool, workers: int | 
     record = load_campaign(folder).calculation
     queued = _queued(folder, record) if queue else None
     campaign, found = loop(folder, "progress", partial(progress_one, queued), workers, quiet, alone=False)
-    states, problems = _sum(found, "states"), _problems(found)
+    states, problems = sum_of(found, "states"), problems_of(found)
     again = [f"{m.run}/{job}" for m in campaign.members for job in found[m.name].get("resubmit", ())]
     written = None
     if resubmit and again:
@@ -172,7 +131,7 @@ def progress_campaign(folder: Path, queue: bool, resubmit: bool, workers: int | 
             "scheduler_asked": queue,
             "core_hours_used": sum(used) if used else None,
             "core_hours_left": sum(left) if left else None,
-            "crystals": _crystals(campaign, found),
+            "crystals": crystals_of(campaign, found),
         },
         lambda: "\n".join(
             [
@@ -220,18 +179,18 @@ def derive_campaign(folder: Path, options: dict[str, Any], workers: int | None, 
     for name, text in screening_files(rows, COLUMNS).items():
         atomic_write(folder / name, text)
         note(f"wrote {folder / name}", quiet)
-    problems = _problems(found)
+    problems = problems_of(found)
     deliver(
         lambda: {"schema": "strainkit/screening/1", "columns": list(COLUMNS), "rows": rows},
         lambda: tally_text(
             f"Screening table of {counted(len(rows), 'crystal')}, {len(rows) - len(problems)} with moduli",
             {},
             problems,
-            doubts=_doubts(found),
+            doubts=doubts_of(found),
         ),
         json,
     )
-    _end(problems, len(found) - len(problems))
+    end(problems, len(found) - len(problems))
 
 
 def report_campaign(
@@ -248,18 +207,18 @@ def report_campaign(
     from strainkit.present.campaign import tally_text
 
     campaign, found = loop(folder, "report", partial(report_one, options, frame, force, again), workers, quiet)
-    problems = _problems(found)
-    written = _anew(found)
+    problems = problems_of(found)
+    written = anew_of(found)
     deliver(
         lambda: {
             "schema": "strainkit/campaign-reports/1",
             "written": written,
-            "kept": _kept(found),
-            "crystals": _crystals(campaign, found),
+            "kept": kept_of(found),
+            "crystals": crystals_of(campaign, found),
         },
         lambda: tally_text(
-            f"{counted(written, 'report')} written, {_kept(found)} unchanged: report.html of each run", {}, problems
+            f"{counted(written, 'report')} written, {kept_of(found)} unchanged: report.html of each run", {}, problems
         ),
         json,
     )
-    _end(problems, len(found) - len(problems))
+    end(problems, len(found) - len(problems))

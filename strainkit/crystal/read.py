@@ -149,7 +149,14 @@ def _ase_atoms(source: Path | StringIO, format: str) -> Any:
 
 def crystal_name(path: Path) -> str:
     """Name of a crystal after its file, or after the folder of a file that is always called the same."""
-    return (path.parent.name if is_always_called(path) else path.name.split(".")[0]) or "crystal"
+    if is_always_called(path):
+        return path.parent.name or "crystal"
+    # what follows the dot of POSCAR.AlN tells it from others, and is no ending
+    whole = path.name.upper().startswith(tuple(f"{name}." for name in _NAMES)) and path.suffix.lower() not in (
+        ".cif",
+        *_ENDINGS,
+    )
+    return (path.name if whole else path.name.split(".")[0]) or "crystal"
 
 
 def is_always_called(path: Path) -> bool:

@@ -16,6 +16,7 @@ from strainkit.derive.significance import LEVEL
 from strainkit.derive.spread import WithError
 from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
+from strainkit.fit.judge import instability
 from strainkit.fit.result import Fit
 
 __all__ = ["MOST", "Comparison", "compare_crystals"]
@@ -187,7 +188,7 @@ def _known(column: Column) -> int:
 def _lack(member: Member, column: Column, apart: str | None) -> str:
     """Why a member has no value of a quantity."""
     if column.quantity in QUANTITIES:
-        return f"no moduli: not stable, smallest eigenvalue {member.elastic.moduli.eigenvalues[0]:.3g} GPa"
+        return f"no moduli, {instability(member.elastic.moduli)}"
     return apart or f"its {column.quantity.words} is not that of the others"
 
 

@@ -19,6 +19,7 @@ from strainkit.derive.spread import WithError
 from strainkit.derive.stability import Stability, stability
 from strainkit.errors import UsageError
 from strainkit.findings import Finding, finding
+from strainkit.fit.judge import instability
 from strainkit.fit.result import Fit
 from strainkit.tensors.averages import AVERAGES
 from strainkit.tensors.rotations import rotate_matrix
@@ -189,8 +190,7 @@ def derive_properties(
 def _doubts(verdict: Stability, elastic: ElasticCrystal) -> list[Finding]:
     known = {f.code for f in elastic.findings}
     if not verdict.stable and "not-positive-definite" not in known:
-        text = f"smallest eigenvalue {verdict.eigenvalues[0]:.3g} GPa: the crystal is not stable"
-        return [finding("not-positive-definite", "stiffness", text)]
+        return [finding("not-positive-definite", "stiffness", instability(elastic.moduli))]
     if verdict.stable and verdict.probability is not None and verdict.probability < _SURE:
         text = f"stable with a probability of {100 * verdict.probability:.1f} % under the error bars"
         return [finding("stability-uncertain", "stiffness", text)]

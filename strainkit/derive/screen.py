@@ -16,6 +16,7 @@ from strainkit.crystal.voids import find_voids
 from strainkit.derive.averages import averages
 from strainkit.derive.layers import bonds_and_molecules, easiest_cut
 from strainkit.errors import NoTensorError
+from strainkit.fit.judge import instability
 from strainkit.fit.result import Fit
 from strainkit.run.plan import Plan
 from strainkit.tensors.averages import SCHEMES
@@ -139,7 +140,7 @@ def screening_row(plan: Plan, fit: Fit | None, problem: str = "") -> dict[str, A
     try:
         means = averages(fit.effective).to_dict()
     except NoTensorError:
-        return row | {"problem": "the crystal is not stable"}
+        return row | {"problem": instability(fit.effective)}
     for name, word in _AVERAGED.items():
         for scheme in SCHEMES:
             row[f"{word}_{scheme}_GPa"] = means[name][scheme]

@@ -15,8 +15,9 @@ from strainkit.run.plan import Plan
 from strainkit.tensors.arrays import known
 from strainkit.tensors.prestress import stress_strain_coefficients
 from strainkit.tensors.sixvectors import from_mandel, stiffness_to_voigt
+from strainkit.tensors.stiffness import Stiffness
 
-__all__ = ["judge", "what_determines"]
+__all__ = ["instability", "judge", "undecided", "what_determines"]
 
 #: residual stress above this part of the smallest diagonal constant is a warning
 NOTABLE_STRESS = 0.05
@@ -37,6 +38,25 @@ def what_determines(plan: Plan, jobs: Sequence[StrainJob], order: Order) -> str:
     if wanted:
         words.insert(0, f"with {' '.join(job.label for job in wanted)} they would")
     return "; ".join(words) or "no planned job fixes these; more jobs may: strainkit prepare --extend RUN --more N"
+
+
+def _smallest(moduli: Stiffness) -> tuple[float, float | None]:
+    error = moduli.standard_error_of(lambda c: np.linalg.eigvalsh(c)[:, 0])
+    return float(moduli.eigenvalues[0]), None if error is None else float(error)
+
+
+def undecided(moduli: Stiffness) -> bool:
+    """Is the smallest eigenvalue not positive, but within two standard errors of zero?"""
+    smallest, error = _smallest(moduli)
+    return smallest <= 0 and error is not None and smallest >= -2.0 * error
+
+
+def instability(moduli: Stiffness) -> str:
+    """What a smallest eigenvalue that is not positive says about stability, in words."""
+    smallest, error = _smallest(moduli)
+    if error is None or not undecided(moduli):
+        return f"smallest eigenvalue {smallest:.3g} GPa: the crystal is not stable"
+    return f"smallest eigenvalue {smallest:.2g} +- {error:.2g} GPa: stability undecided, within two standard errors of zero"
 
 
 def judge(plan: Plan, regression: Regression, jobs: Sequence[StrainJob], order: Order) -> list[Finding]:
@@ -74,11 +94,11 @@ def _mechanical(plan: Plan, regression: Regression) -> list[Finding]:
     stiffness = plan.basis.stiffness(regression.values)
     stress = from_mandel(known(regression.reference_stress))
     b = stress_strain_coefficients(stiffness, stress)
-    smallest = float(np.linalg.eigvalsh(0.5 * (b + b.T))[0])
-    if smallest <= 0:
-        findings.append(
-            finding("not-positive-definite", "stiffness", f"smallest eigenvalue {smallest:.3g} GPa: the crystal is not stable")
-        )
+    spread = plan.basis.matrices.reshape(len(plan.basis.names), 36)
+    errors = None if regression.covariance is None else spread.T @ regression.covariance @ spread
+    moduli = Stiffness(0.5 * (b + b.T), errors)
+    if moduli.eigenvalues[0] <= 0:
+        findings.append(finding("not-positive-definite", "stiffness", instability(moduli)))
     if np.isnan(regression.reference_stress).any():
         findings.append(
             finding("reference-stress-unknown", "reference", "the reference job is missing: residual stress unknown")

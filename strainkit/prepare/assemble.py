@@ -2,25 +2,26 @@
 
 from __future__ import annotations
 
-import shutil
 from collections.abc import Callable, Sequence
-from contextlib import AbstractContextManager
+from contextlib import AbstractContextManager, suppress
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
 
-from strainkit.errors import DiskError, InputError
+from strainkit.errors import InputError
 from strainkit.prepare.campaign import Planned, Recipe, Spool, placed, plan_cells, write_members
 from strainkit.prepare.cells import find_cells, names_of, plain_name
-from strainkit.prepare.kept import job_folders, plan_doubts, was_campaign
-from strainkit.prepare.scripts import LOGS, arrays, job_name, kept_site, list_name, many_files, script_name, submit_command
+from strainkit.prepare.folders import make_folder
+from strainkit.prepare.lists import calculation_record, write_lists
+from strainkit.prepare.scripts import LOGS
 from strainkit.run.campaign import Campaign, Member, Refusal, at_work, is_campaign, load_campaign
-from strainkit.run.files import atomic_write, checksum
+from strainkit.run.files import checksum, load_json
 from strainkit.run.plan import MANIFEST
 
 __all__ = ["Estimate", "Made", "make_campaign"]
 
 Stage = Callable[[str], AbstractContextManager[Callable[[int, int, str], None]]]
+#: what lies in a campaign folder whose manifest was lost before its first run folder was written
+_OURS = ("runs", LOGS, "joblist", "submit", ".")
 
 
 @dataclass(frozen=True)
@@ -141,9 +142,16 @@ def _existing(out: Path, digest: str, force: bool) -> Campaign | None:
         )
     if out.is_symlink() or (out.exists() and not out.is_dir()):
         raise InputError("exists already and is not a campaign", out, "Choose another --out; nothing was touched.")
-    if out.is_dir() and not was_campaign(out):
+    if out.is_dir() and not _was_campaign(out):
         raise InputError("exists already and is not a campaign", out, "Choose another --out; nothing was touched.")
     return None
+
+
+def _was_campaign(out: Path) -> bool:
+    """Run folders where a campaign has them, whatever exports, tables and notes lie beside; or nothing of others."""
+    if next(out.glob(f"runs/[0-9][0-9][0-9]*/*/{MANIFEST}"), None) is not None:
+        return True
+    return all(entry.name.startswith(_OURS) for entry in out.iterdir())
 
 
 def _compare(
@@ -189,7 +197,9 @@ def _doubts(kept: Sequence[Member], planned: Sequence[Planned], out: Path | None
     found = {p.member.name: p.findings for p in planned}
     for member in kept:
         assert out is not None
-        found[member.name] = plan_doubts(out, member)
+        with suppress(InputError, KeyError, TypeError):  # a damaged manifest is told about when the lists are made
+            said = load_json(out / member.run / MANIFEST, "strainkit/strain-set")["findings"]
+            found[member.name] = tuple(dict.fromkeys(f["code"] for f in said if f["severity"] != "info"))
     return {name: codes for name, codes in found.items() if codes}
 
 
@@ -218,14 +228,14 @@ def _write(
         while (aside := out.with_name(f"{out.name}.old-{number}")).exists():
             number += 1
         out.rename(aside)
-    _make(out, estimate.bytes)
+    make_folder(out, estimate.bytes)
     known = {member.name: member for member in old.members} if old else {}
     todo = [(known[p.member.name], p.where) for p in planned if p.member.name in known]
     todo += placed(old, [p for p in planned if p.member.name not in known])
     members = [*known.values(), *(member for member, _ in todo if member.name not in known)]
     sources = {member.source for member in members} | {refusal.source for refusal in estimate.refused}
     earlier = [r for r in (old.refused if old else ()) if r.source not in sources]
-    campaign = Campaign(tuple(members), (*earlier, *estimate.refused), digest, _record(out, recipe, members, old))
+    campaign = Campaign(tuple(members), (*earlier, *estimate.refused), digest, calculation_record(out, recipe, members, old))
     with at_work(out, "prepare"):
         campaign.save(out)
         with stage("write") as report:
@@ -235,57 +245,6 @@ def _write(
             left = tuple(m for m in members if m.name not in problems)
             campaign = replace(campaign, members=left, refused=(*campaign.refused, *lost))
             campaign.save(out)
-        submit = _write_lists(out, campaign, recipe)
+        submit = write_lists(out, campaign, recipe)
     added = 0 if old is None else len(campaign.members) - len(old.members)
     return Made(campaign, estimate, campaign.refused[len(earlier) :], submit, added)
-
-
-def _make(out: Path, size: int) -> None:
-    """Make the folder, where there is room for what is to come."""
-    try:
-        out.mkdir(parents=True, exist_ok=True)
-        free = shutil.disk_usage(out).free
-    except OSError as error:
-        raise DiskError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None
-    if size > free:
-        raise DiskError(f"needs about {size / 1e6:.0f} MB, and {free / 1e6:.0f} MB are free", out, "Make room first.")
-
-
-def _record(out: Path, recipe: Recipe, members: Sequence[Member], old: Campaign | None) -> dict[str, Any]:
-    if old is not None:
-        return old.calculation
-    if recipe.scheduler is None:
-        return {}
-    tag = checksum("".join(m.source_sha256 for m in members).encode())[:6]
-    return {
-        "scheduler": recipe.scheduler,
-        "site": kept_site(recipe.settings.site),
-        "job_name": job_name(out.resolve().name, tag, 1),
-    }
-
-
-def _write_lists(out: Path, campaign: Campaign, recipe: Recipe) -> str:
-    """Lists, and scripts where there is a scheduler, for the jobs that are on no list yet; what to type, or nothing."""
-    listed: set[str] = set()
-    count = 1
-    while (out / script_name(count)).exists():  # a list without its script was never submitted
-        listed |= set((out / list_name(count)).read_text(encoding="utf-8").split())
-        count += 1
-    every = [folder for member in campaign.members for folder in job_folders(out, member)]
-    fresh = [folder for folder in every if folder not in listed]
-    if not fresh:
-        return ""
-    if recipe.scheduler is None:
-        path, text = out / list_name(1), "".join(f"{folder}\n" for folder in every)
-        if not path.is_file() or path.read_text(encoding="utf-8") != text:
-            atomic_write(path, text)
-        return ""
-    site = recipe.settings.site
-    parts = arrays(fresh, recipe.scheduler, site)
-    stem = str(campaign.calculation["job_name"]).rpartition("-")[0]
-    for number, part in enumerate(parts, count):
-        (out / LOGS / str(number)).mkdir(parents=True, exist_ok=True)
-        title = f"campaign of {len(campaign.members)} crystals"
-        for name, text in many_files(recipe.scheduler, site, title, part, f"{stem}-{number}", number).items():
-            atomic_write(out / name, text)
-    return submit_command(recipe.scheduler, count, len(parts))

@@ -114,5 +114,7 @@ def names_of(paths: Sequence[Path], taken: Iterable[str] = ()) -> list[str]:
 
 def plain_name(path: Path) -> str:
     """Folder name after a cell's file, or after its folder where every file is called the same."""
-    text = crystal_name(path) if is_always_called(path) else path.name.removesuffix(path.suffix)
+    text = path.name.removesuffix(path.suffix)
+    if is_always_called(path) or crystal_name(path) == path.name:
+        text = crystal_name(path)
     return re.sub(r"[^A-Za-z0-9._-]+", "_", text).strip("._")[:80] or "crystal"

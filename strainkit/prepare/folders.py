@@ -1,4 +1,4 @@
-"""New folders that appear whole or not at all."""
+"""New folders: those that appear whole or not at all, and one that much will be written into."""
 
 from __future__ import annotations
 
@@ -10,7 +10,7 @@ from pathlib import Path
 
 from strainkit.errors import DiskError
 
-__all__ = ["write_folder"]
+__all__ = ["make_folder", "write_folder"]
 
 
 def write_folder(out: Path, files: Mapping[str, str], folders: Iterable[str] = ()) -> None:
@@ -37,3 +37,14 @@ def write_folder(out: Path, files: Mapping[str, str], folders: Iterable[str] = (
             raise
     except OSError as error:
         raise DiskError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None
+
+
+def make_folder(out: Path, size: int) -> None:
+    """Make the folder, where there is room for what is to come."""
+    try:
+        out.mkdir(parents=True, exist_ok=True)
+        free = shutil.disk_usage(out).free
+    except OSError as error:
+        raise DiskError(f"cannot be written ({error.strerror})", out, "Check free space and permissions.") from None
+    if size > free:
+        raise DiskError(f"needs about {size / 1e6:.0f} MB, and {free / 1e6:.0f} MB are free", out, "Make room first.")

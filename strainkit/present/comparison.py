@@ -96,7 +96,7 @@ def _planes(c: Comparison) -> list[str]:
     lines = []
     for i, m in enumerate(c.members):
         if m.moduli is None:
-            lines.append(f"  {i + 1} has no moduli: it is not stable")
+            lines.append(f"  {i + 1} has no moduli")
         else:
             lines.append(paragraph(f"{i + 1} shears most easily {softest_text(m)}", "  "))
     return lines

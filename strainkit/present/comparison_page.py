@@ -76,7 +76,7 @@ def _verdict(c: Comparison, names: list[str]) -> tuple[str, ...]:
 def _crystals(c: Comparison, names: list[str]) -> Section:
     rows = []
     for name, m in zip(names, c.members, strict=True):
-        softest = "unstable: no moduli" if m.moduli is None else f"shears most easily {softest_text(m)}"
+        softest = "no moduli" if m.moduli is None else f"shears most easily {softest_text(m)}"
         rows.append((name, clean(kind_text(m)), softest))
     return Section("crystals", "Crystals", (Facts(tuple(rows)),))
 

@@ -13,6 +13,7 @@ from strainkit.derive.elastic import ElasticCrystal
 from strainkit.derive.extremes import Extreme, ratio
 from strainkit.derive.planes import Along
 from strainkit.derive.spread import WithError
+from strainkit.fit.judge import undecided
 from strainkit.present.numbers import plain, uncertain
 from strainkit.present.planes import sheared_text
 from strainkit.present.rows import indices_text, near_text, row, value_text
@@ -42,7 +43,7 @@ def derived_text(derived: Derived, blind_spot: str = "") -> str:
         lines += _uneven(derived, derived.averages)
         lines += _sound(derived)
     else:
-        lines += ["Nothing else is derived: moduli of an unstable crystal have no meaning.", ""]
+        lines += ["Nothing else is derived: moduli need a stable tensor.", ""]
     return "\n".join([*lines, *_axes(e), "", findings_text(derived.findings)])
 
 
@@ -54,7 +55,10 @@ def _believed(derived: Derived, blind_spot: str) -> list[str]:
         chance = "probability above 99.9 %"
     else:
         chance = f"probability {100 * s.probability:.1f} %"
-    lines = [heading("Can it be believed"), row("stable", "yes" if s.stable else "NO", chance)]
+    lines = [
+        heading("Can it be believed"),
+        row("stable", "yes" if s.stable else "undecided" if undecided(e.moduli) else "NO", chance),
+    ]
     smallest = WithError(float(s.eigenvalues[0]), None if s.errors is None else float(s.errors[0]))
     lines.append(row("smallest eigenvalue, GPa", value_text(smallest), _softest(derived)))
     push = float(np.abs(np.linalg.eigvalsh(e.stress)).max())

@@ -12,6 +12,7 @@ from strainkit.derive.derived import Derived
 from strainkit.errors import counted
 from strainkit.findings import Finding, worst
 from strainkit.fit.finer import FinerChange
+from strainkit.fit.judge import undecided
 from strainkit.fit.result import Fit
 from strainkit.present.report_page import Tone
 from strainkit.tensors.arrays import FloatArray
@@ -76,6 +77,9 @@ def verdict(fit: Fit | None, derived: Derived | None, table: StressTable, why: s
     if not derived.stability.stable:
         smallest = f"{derived.stability.eigenvalues[0]:.3g} GPa"
         head = f"Not mechanically stable: the smallest eigenvalue of the stiffness is {smallest}. It has no moduli."
+        if undecided(derived.elastic.moduli):
+            words = f"{smallest}, and zero is within two of its standard errors. No moduli are derived"
+            head = f"Stability undecided: the smallest eigenvalue of the stiffness is {words}."
         return Verdict("bad", (head, *tail), percent)
     sentences = [*tail, _stable(derived)]
     if fit.relaxed is not None:

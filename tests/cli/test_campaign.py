@@ -106,14 +106,14 @@ def test_names_that_say_structure_are_taken_from_a_folder_and_others_are_named(c
     """POSCAR_NAME and CONTCAR-NAME are what people call such files (common practice, no source)."""
     cells = tmp_path / "cells"
     cells.mkdir()
-    for name in ("POSCAR_Si", "CONTCAR-x", "POSCAR_Si~", "Si.txt", "notes"):
+    for name in ("POSCAR_Si", "CONTCAR-x", "POSCAR.new", "POSCAR_Si~", "Si.txt", "notes"):
         (cells / name).write_text(SILICON)
     result = cli("prepare", cells, "--out", tmp_path / "out", "--json")
     assert result.code == 0
-    assert [m.name for m in load_campaign(tmp_path / "out").members] == ["CONTCAR-x", "POSCAR_Si"]
+    assert [m.name for m in load_campaign(tmp_path / "out").members] == ["CONTCAR-x", "POSCAR.new", "POSCAR_Si"]
     assert [Path(p).name for p in result.json["files_not_taken"]] == ["POSCAR_Si~", "Si.txt", "notes"]
     assert "3 files (POSCAR_Si~, Si.txt, notes)" in result.err
-    for name in ("POSCAR_Si", "CONTCAR-x"):
+    for name in ("POSCAR_Si", "CONTCAR-x", "POSCAR.new"):
         (cells / name).unlink()
     nothing = cli("prepare", cells, "--out", tmp_path / "none")
     assert nothing.code == 3

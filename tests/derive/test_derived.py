@@ -24,6 +24,7 @@ from strainkit.derive.elastic import from_fit, from_tensor_file
 from strainkit.errors import UsageError
 from strainkit.fit.result import fit_run
 from strainkit.prepare.runfolder import plan_run, write_run
+from strainkit.present.derived import derived_text
 from strainkit.run.files import dump_json
 from strainkit.tensors.averages import AVERAGES
 from strainkit.tensors.sixvectors import stiffness_to_voigt
@@ -277,6 +278,19 @@ def test_unstable_tensor_gives_its_stability_and_nothing_else():
     data = json.loads(dump_json(found.to_dict()))
     assert data["bulk_GPa"] is None
     assert data["stability"]["stable"] is False
+
+
+@pytest.mark.parametrize(("c12", "words"), [(11, "stability undecided"), (13, "the crystal is not stable")])
+def test_an_eigenvalue_within_its_error_of_zero_decides_nothing(c12, words):
+    """C11 - C12 is -1 or -3 GPa with an error of sqrt(0.7^2 + 0.7^2) = 0.99 GPa, by hand: one standard error or three."""
+    elastic = from_tensor_file(parse_tensor(f"laue m-3m\nC11 10 0.7\nC12 {c12} 0.7\nC44 3 0.1"))
+    found = derive_properties(elastic)
+    assert not found.stability.stable
+    assert [f.code for f in found.findings] == ["not-positive-definite"]
+    assert words in found.findings[0].message
+    assert ("-1 +- 0.99 GPa" in found.findings[0].message) == (c12 == 11)
+    row = next(line for line in derived_text(found).splitlines() if line.startswith("  stable "))
+    assert ("undecided" if c12 == 11 else "NO") in row
 
 
 def test_barely_stable_tensor_is_doubted():
