@@ -167,7 +167,8 @@ def derive_one(options: dict[str, Any], run: Path) -> Summary:
         fit = fit_with(plan, run, replace(last_options(run, plan), **options))
     except (InputError, NoTensorError) as error:
         return {"row": screening_row(plan, None, error.what), "problem": error.what, "exit": error.exit_code}
-    row = screening_row(plan, replace(fit, findings=(*_changed(run), *fit.findings)))
+    fit = replace(fit, findings=(*_changed(run), *fit.findings))
+    row = screening_row(plan, fit)
     return {"row": row, "problem": row["problem"], "findings": _codes(fit.findings)}
 
 
