@@ -5,7 +5,6 @@ This weighs changes to the stresses against each other; it is no fit, and its nu
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -96,22 +95,21 @@ class Group:
         worst = np.flatnonzero(gains > 0.9 * gains.max()).tolist()
         return worst, float(np.sqrt(max(whole - gains.max(), 0.0)) / typical)
 
-    def gains(self, cauchy: FloatArray, places: Sequence[tuple[int, ...]] | None = None) -> tuple[FloatArray, float, float]:
-        """What stresses, left free, take away of the sum of squares of a misfit, that sum (GPa^2), and the typical stress.
+    def gains(self, cauchy: FloatArray) -> tuple[FloatArray, float, float]:
+        """What each stress (jobs,), left free, takes away of the sum of squares of a misfit, that sum (GPa^2), typical stress.
 
-        For a set (jobs, 6), and each job or the jobs of each place together; negative work is not counted.
+        For a set (jobs, 6); negative work is not counted.
         """
         second = np.einsum("jab,jb->ja", self.to_second, cauchy)
         parts = [s @ p for s, p in zip(second, self.model.projections, strict=True)]
         rows = np.concatenate(parts)
         left = rows - self.basis @ (self.basis.T @ rows)
         outside = (second**2).sum(axis=1) - np.array([part @ part for part in parts])
-        sets = [(job,) for job in range(len(second))] if places is None else places
-        gains = np.zeros(len(sets))
-        for number, place in enumerate(sets):
-            mine = np.isin(self.model.job_of_row, place)
-            own = np.eye(int(mine.sum())) - self.basis[mine] @ self.basis[mine].T
-            gains[number] = left[mine] @ np.linalg.pinv(own, rcond=1e-6) @ left[mine] + outside[list(place)].sum()
+        gains = np.zeros(len(second))
+        for job, part in enumerate(parts):
+            mine = self.model.job_of_row == job
+            own = np.eye(len(part)) - self.basis[mine] @ self.basis[mine].T
+            gains[job] = left[mine] @ np.linalg.pinv(own, rcond=1e-6) @ left[mine] + outside[job]
         return gains, float(left @ left + outside.sum()), float(typical_change(second, self.rest))
 
     @cached_property

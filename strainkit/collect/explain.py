@@ -26,8 +26,6 @@ AGREES, AS_OTHERS = 0.06, 3.0
 CHANCE = 0.02
 #: misfit below this part of the typical stress is not looked into; below the second not for two faults at a time
 NOTABLE, NOTABLE_TWICE = 0.003, 0.03
-#: a misfit a job below this part of the typical stress is noise where no job takes so much of it away, no set of jobs so much
-NOISE, STANDS_OUT, ALL_OF_IT = 0.10, 0.3, 0.85
 #: jobs beyond which single jobs are not tried
 MANY = 150
 #: jobs of a table beyond which exchanged lines are not sought
@@ -71,8 +69,6 @@ def explain(group: Group, start: Attempt, choices: list[Mend]) -> tuple[Attempt,
     places = _places(group) if len(group.jobs) <= MANY else []
     frontier = [start]
     deepest = DEEPEST if start.misfit > NOTABLE_TWICE * len(group.jobs) ** 0.5 else 1
-    if start.misfit < NOISE * len(group.jobs) ** 0.5 and not _stand_out(group, places):
-        places, deepest = [], 1
     most = max(1, sum(bool(job.shape) for job in group.jobs) // 3)  # of a few jobs, two wrong ones prove nothing
     for depth in range(1, deepest + 1):
         tries = _Tries.of(group, frontier, choices, matrices, places, most)
@@ -97,12 +93,6 @@ def _places(group: Group) -> list[tuple[int, ...]]:
             groups.setdefault(tuple(job[k] for k in key), []).append(job[0])
         sets += [tuple(members) for members in groups.values() if 2 * len(members) <= len(strained)]
     return list(dict.fromkeys(sets))
-
-
-def _stand_out(group: Group, places: list[tuple[int, ...]]) -> bool:
-    """Does leaving out some place take away most of the misfit, or one job a good part of it?"""
-    gains, whole, _ = group.gains(group.cauchy, places)
-    return any(gain > (STANDS_OUT if len(place) == 1 else ALL_OF_IT) * whole for gain, place in zip(gains, places, strict=True))
 
 
 @dataclass(frozen=True)

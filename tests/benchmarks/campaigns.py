@@ -119,7 +119,7 @@ def bare_write(paths: list[Path], out: Path) -> float:
 def give_back(paths: list[Path], out: Path, rng: np.random.Generator) -> None:
     for path in paths:
         plan = load_plan(out / path.stem)
-        return_jobs(out / path.stem, plan, published_law(plan), rng)
+        return_jobs(out / path.stem, plan, published_law(plan), rng, noise=5e-4)
 
 
 def parse_all(runs: list[Path]) -> None:
