@@ -8,9 +8,9 @@ from pathlib import Path
 
 from strainkit.derive.comparison import Comparison
 from strainkit.derive.spread import WithError
-from strainkit.errors import InputError
 from strainkit.present.comparison_words import clean, share_text
 from strainkit.run.files import atomic_write
+from strainkit.run.outputs import check_output
 
 __all__ = ["comparison_csv", "save_csv"]
 
@@ -26,13 +26,10 @@ def save_csv(comparison: Comparison, path: Path, force: bool = False) -> None:
     Raises
     ------
     InputError
-        Such a file is there, and `force` is not given.
+        Such a file is there, and `force` is not given; or the place belongs to a run.
     """
     head = ",".join(_CSV)
-    if path.is_dir():
-        raise InputError("is a folder", path, "Name a file.")
-    if not force and path.exists() and not path.read_bytes().startswith(head.encode()):
-        raise InputError("exists and was not written by strainkit; left as it is", path, "Choose another place, or --force.")
+    check_output(path, lambda old: old.read_bytes().startswith(head.encode()), "a comparison", force)
     atomic_write(path, comparison_csv(comparison))
 
 
