@@ -15,7 +15,7 @@ from support.blind.sets import Output, StrainSet, synthetic_set
 from support.blind.text import editor
 from support.crystals import SPACE_GROUPS, random_rotation
 
-OUTPUTS = Path(__file__).parent.parent / "data" / "outputs"
+OUTPUTS = Path(__file__).parent.parent.parent / "data" / "outputs"
 #: outputs of other crystals by the same programs
 FOREIGN = {
     "qe": ("qe/relaxed.out", "qe/two-species.out"),
