@@ -4,11 +4,16 @@ One run folder with many small jobs (24 atoms, extended XYZ with forces: of all 
 The bare parse is `recognise` and `read_returned` on every file, with as many processes. Both are timed three times, in turn,
 and the fastest time counts. A second collection reads nothing.
 
+Then whole collections of real outputs (hexagonal silicon of Quantum ESPRESSO, tests/data/sets, nine jobs) as they are, and with
+one of their ionic steps printed more often, as in longer relaxations: CPU time over that of the bare parse of the same files.
+
 Run: python tests/benchmarks/collect_speed.py [JOBS] [PROCESSES]
 """
 
 from __future__ import annotations
 
+import lzma
+import re
 import resource
 import sys
 import tempfile
@@ -24,8 +29,10 @@ sys.path.insert(0, str(Path(__file__).parent.parent))
 
 from support.crystals import conventional
 from support.published import mandel
+from support.realsets import unpack
 from support.returned import linear_law
 
+from strainkit.cli.each import collect_one
 from strainkit.collect.gather import collect_run
 from strainkit.collect.readers import read_returned, recognise
 from strainkit.design.jobs import StrainJob
@@ -85,6 +92,36 @@ def parse_all(paths: list[Path], workers: int) -> None:
         list(pool.map(bare, [paths[i : i + 50] for i in range(0, len(paths), 50)]))
 
 
+def longer(text: str, more: int) -> str:
+    """An output of pw.x with its second ionic step printed `more` times more."""
+    first, second = (match.start() for match in list(re.finditer("     Self-consistent Calculation", text))[1:3])
+    return text[:first] + (more + 1) * text[first:second] + text[second:]
+
+
+def real(more: int, sets: int = 10) -> tuple[float, float]:
+    """Size of an output (kB), and CPU time of collecting some sets over that of parsing their files; the best of three."""
+    with tempfile.TemporaryDirectory() as folder:
+        runs = [Path(folder) / str(number) for number in range(sets)]
+        for run in runs:
+            unpack("hexagonal_silicon_qe", run)
+            for packed in run.glob("jobs/*/*.xz"):
+                packed.with_suffix("").write_text(longer(lzma.decompress(packed.read_bytes()).decode(), more))
+                packed.unlink()
+        paths = [path for run in runs for path in run.glob("jobs/*/*.out")]
+        parse = whole = float("inf")
+        for _ in range(3):
+            start = time.process_time()
+            bare(paths)
+            parse = min(parse, time.process_time() - start)
+            for run in runs:
+                (run / "stresses.json").unlink(missing_ok=True)  # so that every file is read again
+            start = time.process_time()
+            summaries = [collect_one(True, run) for run in runs]
+            whole = min(whole, time.process_time() - start)
+            assert all(summary["usable"] == 9 for summary in summaries)
+        return sum(path.stat().st_size for path in paths) / len(paths) / 1e3, whole / parse
+
+
 def main() -> None:
     jobs = int(sys.argv[1]) if len(sys.argv) > 1 else 10_000
     workers = int(sys.argv[2]) if len(sys.argv) > 2 else 2
@@ -112,6 +149,9 @@ def main() -> None:
         f"{jobs} jobs, {workers} processes: bare parse {parse:.2f} s, collect {first:.2f} s, ratio {first / parse:.2f}; "
         f"writing the table {save:.2f} s; again without changes {again:.2f} s; peak memory {peak:.0f} MB"
     )
+    for more in (0, 20, 80):
+        size, ratio = real(more)
+        print(f"real outputs of {size:.0f} kB: collect {ratio:.2f} times the bare parse")
 
 
 if __name__ == "__main__":
