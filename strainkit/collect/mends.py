@@ -78,7 +78,8 @@ def mends(records: list[StressRecord], lattices: FloatArray) -> list[Mend]:
     found = [Mend("stress-sign", "the sign is reversed", same(-np.eye(6)), factor=-1.0)]
     for factor in FACTORS:
         for by, word in ((1 / factor, "large"), (factor, "small")):
-            found.append(Mend("stress-unit", f"{factor:.4g} times too {word}", same(by * np.eye(6)), factor=by))
+            name = f"{factor:.4g} times too {word}{_mistaken(by)}"
+            found.append(Mend("stress-unit", name, same(by * np.eye(6)), factor=by))
     for order in ORDERS[1:]:
         move = np.zeros((6, 6))
         for place, component in enumerate(order):
@@ -100,6 +101,16 @@ def mends(records: list[StressRecord], lattices: FloatArray) -> list[Mend]:
         if np.abs(rotations - np.eye(3)).max() > 1e-3:
             found.append(Mend("stress-frame", f"the stress is {name}", rotation6(rotations)))
     return found
+
+
+def _mistaken(by: float) -> str:
+    """The unit that GPa was taken for, or that was taken for GPa, if a stress must be multiplied by a factor."""
+    for unit, size in STRESS_UNITS_IN_GPA.items():
+        if unit != "GPa" and abs(by / size - 1) < 0.03:
+            return f" ({unit} taken for GPa?)"
+        if unit != "GPa" and abs(by * size - 1) < 0.03:
+            return f" (GPa taken for {unit}?)"
+    return ""
 
 
 def _standard(lattices: FloatArray) -> FloatArray:
