@@ -61,7 +61,7 @@ def test_dry_ice_and_its_noise(cli, need, tmp_path):
 def test_monoclinic_molecular_crystal_the_same_however_it_is_written(cli, need, tmp_path):
     """13 constants from 8 strained jobs, positive definite; turned, permuted, in another basis: the same jobs and stresses.
 
-    Two of the nine jobs are computed again, for time; all nine, fitted, agreed within the error bars when run by hand.
+    One of the nine jobs is computed again, for time; all nine, fitted, agreed within the error bars when run by hand.
     """
     need("tblite")
     run = tmp_path / "first"
@@ -81,7 +81,7 @@ def test_monoclinic_molecular_crystal_the_same_however_it_is_written(cli, need, 
     before = {job.label: job for job in load_plan(run).jobs}
     assert [job.label for job in plan.jobs] == list(records)
     operations = turn @ crystal_operations(crystal, 1e-3).cartesian
-    for job in plan.jobs[:2]:
+    for job in plan.jobs[1:2]:
         mine = before[job.label]
         images = [r @ mine.gradient @ r.T for r in operations]
         image = np.argmin([np.abs(g - job.gradient).max() for g in images])
