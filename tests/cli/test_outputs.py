@@ -40,6 +40,7 @@ def test_a_relaxed_cell_replaces_no_input_of_a_job(cli, run, tmp_path):
     assert place.read_text() == "mine"
 
 
+@pytest.mark.slow
 def test_files_of_other_kinds_are_left_alone(cli, run, tmp_path):
     page, export, notes = tmp_path / "page.html", tmp_path / "all.extxyz", tmp_path / "notes.extxyz"
     notes.write_text("my strainkit notes\n")

@@ -94,7 +94,7 @@ def test_unconverged_job_is_marked_and_goes_on_from_where_it_stopped(run, monkey
     assert set(second.kept) == set(first.done)
 
 
-@pytest.mark.parametrize("stop", [signal.SIGINT, signal.SIGKILL])
+@pytest.mark.parametrize("stop", [pytest.param(signal.SIGINT, marks=pytest.mark.slow), signal.SIGKILL])
 def test_interrupting_loses_nothing_finished(tmp_path, stop):
     """A real process, a slow engine: stopped after the first results, then run again to the end."""
     crystal = read_crystal(write(tmp_path, "POSCAR", SILICON))

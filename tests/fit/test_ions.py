@@ -94,6 +94,7 @@ def test_clamped_without_displaced_cells_says_so(computed):
     assert all(job.kind != "displaced" for job in fixed.jobs)
 
 
+@pytest.mark.slow
 def test_errors_against_repeated_simulation():
     """An invented harmonic crystal, P2_1 and four atoms: spread of 40 simulated sets over the stated errors."""
     rng = np.random.default_rng(5)
