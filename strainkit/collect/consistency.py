@@ -76,6 +76,10 @@ class Group:
         spare = 6 * len(jobs) - factorise(model.matrix).rank
         return cls(records, jobs, cauchy, to_second, model, basis, rest, spare)
 
+    def second(self, cauchy: FloatArray) -> FloatArray:
+        """Second Piola-Kirchhoff stresses (jobs, 6) of Cauchy stresses (jobs, 6), both Mandel."""
+        return np.asarray(np.einsum("jab,jb->ja", self.to_second, cauchy))
+
     def misfits(self, cauchy: FloatArray) -> FloatArray:
         """Roots (k,) of the sums of squares of all that does not fit in sets (k, jobs, 6), in units of the typical stress."""
         second = cauchy.swapaxes(0, 1) @ self.to_second.swapaxes(1, 2)  # (jobs, k, 6)
@@ -100,7 +104,7 @@ class Group:
 
         For a set (jobs, 6); negative work is not counted.
         """
-        second = np.einsum("jab,jb->ja", self.to_second, cauchy)
+        second = self.second(cauchy)
         parts = [s @ p for s, p in zip(second, self.model.projections, strict=True)]
         rows = np.concatenate(parts)
         left = rows - self.basis @ (self.basis.T @ rows)

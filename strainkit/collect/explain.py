@@ -10,6 +10,7 @@ import numpy as np
 
 from strainkit.collect.consistency import Group, typical_change
 from strainkit.collect.mends import EXCHANGED, Mend
+from strainkit.collect.table import TABLE_PROGRAM
 from strainkit.tensors.arrays import FloatArray, IntArray
 
 __all__ = ["MANY", "Attempt", "explain", "unchanged"]
@@ -125,7 +126,7 @@ class _Tries:
         """All of them; at most so many jobs by themselves, or one set of several and nothing else."""
         # a factor common to all stresses leaves the misfit as it is
         common = np.array([n for n, mend in enumerate(choices) if mend.code != "stress-unit"], dtype=np.int64)
-        typed = all(record.program == "table" for record in group.records) and len(group.jobs) <= FEW
+        typed = all(record.program == TABLE_PROGRAM for record in group.records) and len(group.jobs) <= FEW
         swaps = list(combinations(range(len(group.jobs)), 2)) if typed else []
         inside = np.array([[job in place for job in range(len(group.jobs))] for place in places], dtype=bool)
         misfits, bases, mends, where = [], [], [], []
@@ -178,9 +179,7 @@ def _tells(group: Group, start: Attempt, found: Attempt) -> bool:
 
     Making a stress of noise smaller always helps, and beside a stress made larger every misfit is small.
     """
-    before, typical = (
-        float(typical_change(np.einsum("jab,jb->ja", group.to_second, a.cauchy), group.rest)) for a in (start, found)
-    )
+    before, typical = (float(typical_change(group.second(a.cauchy), group.rest)) for a in (start, found))
     if found.misfit * typical > LESS * start.misfit * before:
         return False
     size = len(group.jobs) ** 0.5

@@ -17,7 +17,7 @@ from strainkit.collect.consistency import Group
 from strainkit.collect.explain import Attempt, explain, unchanged
 from strainkit.collect.mends import FACTORS, Mend, mends, order_words, unit_words
 from strainkit.collect.paths import energy_ratios
-from strainkit.collect.table import StressRecord
+from strainkit.collect.table import TABLE_PROGRAM, StressRecord
 from strainkit.design.jobs import StrainJob
 from strainkit.findings import Finding, finding
 from strainkit.run.plan import Plan
@@ -105,7 +105,7 @@ def _words(group: Group, step: tuple[tuple[int, ...] | None, Mend]) -> str:
 
 def _remedy(group: Group, place: tuple[int, ...] | None, mend: Mend) -> str:
     record = group.records[0 if place is None else place[0]]
-    typed = record.program == "table"
+    typed = record.program == TABLE_PROGRAM
     if place is not None and len(place) > 1:
         return f"; mend {'these lines of the table' if typed else 'these outputs'}, not the others"
     if place is not None:
@@ -141,7 +141,7 @@ def _slope(plan: Plan, group: Group, cauchy: FloatArray) -> FloatArray:
     known = [index for index, record in enumerate(group.records) if record.energy is not None]
     if len(known) < 4:
         return np.zeros(0)
-    second = np.einsum("jab,jb->ja", group.to_second, cauchy)
+    second = group.second(cauchy)
     strains = to_mandel(np.array([job.strain for job in group.jobs]))
     work = plan.crystal.volume / EV_PER_A3_IN_GPA * 0.5 * (strains * (second + second.mean(axis=0))).sum(axis=1)[known]
     energies = np.array([group.records[index].energy for index in known], dtype=float)
@@ -181,7 +181,7 @@ def _common_factor(plan: Plan, group: Group, cauchy: FloatArray) -> list[Refused
     word = f"{10**-middle:.4g} times what" if middle < 0 else f"1/{10**middle:.4g} of what"
     text = f"the stresses are {word} the energies of the same jobs ask for (comparisons: {len(values)})"
     first = group.records[0]
-    text += _give(first.program == "table", unit_words(first, 10**nearest))
+    text += _give(first.program == TABLE_PROGRAM, unit_words(first, 10**nearest))
     if len(values) == 1:
         text += "; or the energy of the reference or of the strained jobs is of another minimum"
     atoms = len(plan.crystal.numbers)
