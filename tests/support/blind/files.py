@@ -30,7 +30,7 @@ def _text(work: StrainSet, label: str) -> tuple[str, str]:
 
 @fault("output truncated", CELLS)
 def truncated(work: StrainSet, rng: np.random.Generator, taken: frozenset[str]) -> Injected | None:
-    """The output cut anywhere, or a piece of it lost in the middle (a full disk)."""
+    """The output cut anywhere (a full disk, a job that was killed)."""
     label = pick(work, rng, taken)
     if label is None:
         return None

@@ -79,11 +79,16 @@ def _espresso_k_points(job: Espresso, rng: np.random.Generator) -> bool:
     return True
 
 
-def _espresso_cutoff(job: Espresso, rng: np.random.Generator) -> bool:
+def _scaled_cutoff(job: Espresso | Abinit, rng: np.random.Generator, patterns: tuple[str, ...]) -> bool:
     factor = float(rng.choice((0.75, 0.8, 0.9, 1.1, 1.25, 1.5, 2.0)))
-    for pattern in (r"(kinetic-energy cutoff +=)( +\S+)", r"(charge density cutoff +=)( +\S+)", r"( ecut=)( +\S+)"):
+    for pattern in patterns:
         job.swap(pattern, lambda m: m[1] + like(m[2], factor * float(m[2]), True), 0)
     return True
+
+
+def _espresso_cutoff(job: Espresso, rng: np.random.Generator) -> bool:
+    patterns = (r"(kinetic-energy cutoff +=)( +\S+)", r"(charge density cutoff +=)( +\S+)", r"( ecut=)( +\S+)")
+    return _scaled_cutoff(job, rng, patterns)
 
 
 def _espresso_functional(job: Espresso, rng: np.random.Generator) -> bool:
@@ -163,10 +168,7 @@ def _abinit_k_points(job: Abinit, rng: np.random.Generator) -> bool:
 
 
 def _abinit_cutoff(job: Abinit, rng: np.random.Generator) -> bool:
-    factor = float(rng.choice((0.75, 0.8, 0.9, 1.1, 1.25, 1.5, 2.0)))
-    for pattern in (r"( ecut +)(\S+)", r"(\{ecut:)( +[\d.]+)", r"(ecut\(hartree\)=)( +\S+)"):
-        job.swap(pattern, lambda m: m[1] + like(m[2], factor * float(m[2]), True), 0)
-    return True
+    return _scaled_cutoff(job, rng, (r"( ecut +)(\S+)", r"(\{ecut:)( +[\d.]+)", r"(ecut\(hartree\)=)( +\S+)"))
 
 
 def _abinit_functional(job: Abinit, rng: np.random.Generator) -> bool:
